@@ -1,0 +1,1 @@
+"""The way in: Prefect flows and the commands. No science here."""

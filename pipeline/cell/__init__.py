@@ -1,0 +1,1 @@
+"""From parsed records to the canonical crystal."""

@@ -1,0 +1,1 @@
+"""An invented collection to try the tool on."""

@@ -1,0 +1,1 @@
+"""Distance distributions of a crystal."""

@@ -1,0 +1,1 @@
+"""Which records are the same crystal: candidates, witnesses, families, groups."""

@@ -1,0 +1,1 @@
+"""From paths to rows of the store, in chunks that survive being killed."""

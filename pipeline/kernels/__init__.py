@@ -1,0 +1,1 @@
+"""Compiled kernels: arrays in, arrays out, no logging."""

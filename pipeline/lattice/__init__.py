@@ -1,0 +1,1 @@
+"""Mathematics of lattices in plain NumPy: no atoms, no compiled code."""

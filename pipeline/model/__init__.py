@@ -1,0 +1,1 @@
+"""What everything above speaks in: batches, species tokens, refusals, columns."""

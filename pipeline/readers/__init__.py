@@ -1,0 +1,1 @@
+"""From files to parsed records, one format a file."""
