@@ -63,7 +63,7 @@ class Settings(BaseModel):
         le=0.1,
     )
     overlap_distance: float = _setting(
-        _T.overlap_distance, "Sites closer than this are refused, angstrom.", "canonical", ge=0.2, le=2
+        _T.overlap_distance, "Sites closer than this are refused, angstrom.", "parse", ge=0.2, le=2
     )
     symmetry_tolerance: float = _setting(
         _T.symmetry_tolerance, "Distance for the space group, angstrom.", "canonical", gt=0, le=0.5
@@ -116,7 +116,11 @@ class Settings(BaseModel):
     @property
     def worker_count(self) -> int:
         """Number of worker processes."""
-        return self.workers or len(os.sched_getaffinity(0)) if hasattr(os, "sched_getaffinity") else os.cpu_count() or 1
+        if self.workers:
+            return self.workers
+        if hasattr(os, "sched_getaffinity"):
+            return len(os.sched_getaffinity(0))
+        return os.cpu_count() or 1
 
     def of_stage(self, stage: str) -> dict[str, Any]:
         """Names and values of the settings that decide the rows of a stage."""

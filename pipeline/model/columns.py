@@ -37,7 +37,7 @@ TABLES: dict[str, Table] = {
     ),
     "store_facts": _table(
         "Facts about the store itself.",
-        ("name", "VARCHAR", "store_id (made once), or publication (counts up with every publication)."),
+        ("name", "VARCHAR", "store_id (made once), publication (counts up with every publication), recomputing (plan of an unfinished one)."),
         ("value", "VARCHAR", "The value as text."),
     ),
     "stage_settings": _table(

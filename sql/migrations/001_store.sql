@@ -6,7 +6,7 @@ CREATE TABLE store_facts (
     value VARCHAR
 );
 COMMENT ON TABLE store_facts IS 'Facts about the store itself.';
-COMMENT ON COLUMN store_facts.name IS 'store_id (made once), or publication (counts up with every publication).';
+COMMENT ON COLUMN store_facts.name IS 'store_id (made once), publication (counts up with every publication), recomputing (plan of an unfinished one).';
 COMMENT ON COLUMN store_facts.value IS 'The value as text.';
 
 CREATE TABLE stage_settings (

@@ -1,0 +1,86 @@
+"""The steps of `ingest`, each a thin call; run directly or as tasks of a Prefect flow."""
+
+from __future__ import annotations
+
+import shutil
+from dataclasses import dataclass
+from pathlib import Path
+from typing import Any
+
+from lattice_census.grouping.exact import group_exact
+from lattice_census.ingest.ingest import (
+    IngestWork,
+    energies_without_unit,
+    ingest_counts,
+    prepare_ingest,
+    read_source,
+)
+from lattice_census.ingest.progress import Progress, Step
+from lattice_census.ingest.recompute import recompute_canonical
+from lattice_census.ingest.scan import IngestRequest
+from lattice_census.kernels import warm_up
+from lattice_census.settings import Settings
+from lattice_census.store.runs import end_run
+from lattice_census.store.stages import record_settings
+from lattice_census.store.workspace import Workspace
+
+
+@dataclass(frozen=True, slots=True)
+class IngestJob:
+    """Everything that `ingest` needs, and nothing open."""
+
+    store: Path
+    request: IngestRequest
+    settings: Settings
+    wait_seconds: float = 0.0
+    dry_run: bool = False
+
+
+def ingest(job: IngestJob, step: Step, progress: Progress, command: str = "ingest") -> dict[str, Any]:
+    """Run the job's steps and return the counts. A dry run does the same on a copy that is then thrown away."""
+    with Workspace(job.store, command, job.wait_seconds, scratch=job.dry_run) as workspace:
+        work = step("scan", prepare_ingest, workspace, job.request, job.settings, command)
+        if work is None:
+            counts: dict[str, Any] = {"nothing_new": True}
+        else:
+            step("compile kernels", _compile, progress)
+            if work.canonical_again:
+                step("reduce stored structures anew", recompute_canonical, workspace, job.settings, progress)
+            for source in work.plan.sources:
+                if source.stale:
+                    step(f"read {source.source}", read_source, workspace, work, source, progress)
+            counts = step("group exactly", _close, workspace, work)
+            counts["no_unit"] = energies_without_unit(workspace.connection, work.plan)
+        if not job.dry_run and workspace.ahead_of_published:
+            step("publish", workspace.publish)
+        if work is not None and not job.dry_run:
+            workspace.clear_parts()
+        return counts
+
+
+def _compile(progress: Progress) -> None:
+    seconds = warm_up()
+    if seconds > 2:
+        progress.note(f"Compiled the kernels in {seconds:.0f} s; later runs take them from the cache.")
+
+
+def _close(workspace: Workspace, work: IngestWork) -> dict[str, Any]:
+    """Exact groups, settings and the end of the run in one transaction."""
+    connection = workspace.connection
+    connection.execute("BEGIN")
+    try:
+        group_exact(connection, work.run.run_id)
+        record_settings(connection, work.settings, ("parse", "canonical"))
+        counts = ingest_counts(connection, work)
+        end_run(connection, work.run, counts)
+        connection.execute("COMMIT")
+    except BaseException:
+        connection.execute("ROLLBACK")
+        raise
+    return {"run": work.run.run_id, **counts}
+
+
+def remove_store(store: Path) -> None:
+    """Remove a store of the demo with its work folder."""
+    store.unlink(missing_ok=True)
+    shutil.rmtree(store.with_name(store.name + ".work"), ignore_errors=True)

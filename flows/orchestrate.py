@@ -1,0 +1,42 @@
+"""Prefect around the steps: one flow a command, one coarse task a step, nothing that Prefect would have to store.
+
+Prefect's own record is a convenience: what is done is what the store says is done.
+"""
+
+from __future__ import annotations
+
+import os
+from collections.abc import Callable
+from typing import Any, TypeVar
+
+R = TypeVar("R")
+
+# A temporary server needs longer than the default on a loaded machine, and nobody asked for analytics or log lines.
+for _name, _value in {
+    "PREFECT_SERVER_ANALYTICS_ENABLED": "false",
+    "PREFECT_SERVER_EPHEMERAL_STARTUP_TIMEOUT_SECONDS": "60",
+    "PREFECT_LOGGING_LEVEL": "WARNING",
+    "PREFECT_SERVER_LOGGING_LEVEL": "ERROR",
+}.items():
+    os.environ.setdefault(_name, _value)
+
+
+def task_step(name: str, work: Callable[..., R], *arguments: Any) -> R:
+    """The step as a Prefect task. The arguments stay in a closure: open stores and plans are not for Prefect to copy."""
+    from prefect import task
+    from prefect.cache_policies import NO_CACHE
+
+    def run() -> R:
+        return work(*arguments)
+
+    return task(run, name=name, cache_policy=NO_CACHE, persist_result=False)()
+
+
+def run_as_flow(name: str, body: Callable[[], R]) -> R:
+    """body() inside a Prefect flow of this name; its steps are the flow's tasks."""
+    from prefect import flow
+
+    def run() -> R:
+        return body()
+
+    return flow(run, name=name, persist_result=False, validate_parameters=False)()

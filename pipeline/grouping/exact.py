@@ -1,0 +1,41 @@
+"""Groups that need no comparison: records of equal content (`copy`) and of equal canonical form (`key`)."""
+
+from __future__ import annotations
+
+import duckdb
+
+GRADES = {"copy": "r.content_hash", "key": "x.crystal_key"}
+
+
+def group_exact(connection: duckdb.DuckDBPyConnection, run_id: int) -> None:
+    """Compute `members` of grades copy and key anew from the current records, and note every id that changed.
+
+    The kept record of a group is its smallest by (source, label), then record id: a pure function of the current
+    records. To be called inside a transaction.
+    """
+    connection.execute("DROP TABLE IF EXISTS temp.members_before")
+    connection.execute("CREATE TEMP TABLE members_before AS SELECT * FROM members WHERE grade IN ('copy', 'key')")
+    connection.execute("DELETE FROM members WHERE grade IN ('copy', 'key')")
+    for grade, column in GRADES.items():
+        connection.execute(
+            "INSERT INTO members "
+            "SELECT $1, first_value(r.record_id) OVER kept, min(r.record_id) OVER family, r.record_id, r.label, "
+            "r.source, row_number() OVER kept = 1, 0.0, 0.0 "
+            "FROM current_records r JOIN crystals x USING (record_id) "
+            f"WINDOW kept AS (PARTITION BY {column} ORDER BY r.source, r.label, r.record_id), "
+            f"family AS (PARTITION BY {column}) ORDER BY r.record_id",
+            [grade],
+        )
+    note_id_changes(connection, run_id)
+
+
+def note_id_changes(connection: duckdb.DuckDBPyConnection, run_id: int) -> None:
+    """Rows of `id_changes` for records of temp.members_before whose group or family id is another now, or none."""
+    connection.execute(
+        "INSERT INTO id_changes SELECT $1, b.grade, b.record_id, b.group_id, m.group_id, b.family_id, m.family_id "
+        "FROM members_before b LEFT JOIN members m USING (grade, record_id) "
+        "WHERE m.group_id IS DISTINCT FROM b.group_id OR m.family_id IS DISTINCT FROM b.family_id "
+        "ORDER BY b.grade, b.record_id",
+        [run_id],
+    )
+    connection.execute("DROP TABLE temp.members_before")

@@ -1,0 +1,154 @@
+"""One chunk's parts into the store, in one transaction with the note that the chunk is done."""
+
+from __future__ import annotations
+
+from dataclasses import dataclass
+from pathlib import Path
+
+import duckdb
+import polars as pl
+
+from ..model.columns import TABLES
+from .reduce import accepted_part, rejects_part
+from .split import RawChunk
+
+RECORD_COLUMNS = (
+    "label, file, position, reader, content_hash, raw_hash, formula, formula_anonymous, elements, composition, "
+    "sites_given, sites_primitive, periodicity, energy_ev_per_site, theory, split, record_date, properties"
+)
+FACT_COLUMNS = ("energy_ev_per_site", "theory", "split", "record_date", "properties")
+
+
+@dataclass(frozen=True, slots=True)
+class ChunkToCommit:
+    """What is known of a chunk when its parts are there."""
+
+    run_id: int
+    source: str
+    chunk: RawChunk
+    unchanged: pl.DataFrame
+    """record_id, position, file of raw records that the store holds just so: they were not worked on again."""
+
+    part: Path
+    recompute: bool
+    """Canonical rows of known records are replaced even where the content is equal."""
+
+
+def commit_chunk(connection: duckdb.DuckDBPyConnection, work: ChunkToCommit) -> dict[str, int]:
+    """Write the chunk; a chunk that is already written (same run, number and digest) is left alone.
+
+    Returns the counts of the chunk's row in `chunks`.
+    """
+    connection.execute("BEGIN")
+    try:
+        counts = _commit(connection, work)
+        connection.execute("COMMIT")
+    except BaseException:
+        connection.execute("ROLLBACK")
+        raise
+    return counts
+
+
+def is_committed(connection: duckdb.DuckDBPyConnection, run_id: int, source: str, chunk: RawChunk) -> bool:
+    """True where this very chunk was written earlier in the same run. Read-only."""
+    row = connection.execute(
+        "SELECT 1 FROM chunks WHERE run_id = ? AND source = ? AND chunk = ? AND digest = ?",
+        [run_id, source, chunk.number, chunk.digest],
+    ).fetchone()
+    return row is not None
+
+
+def _commit(connection: duckdb.DuckDBPyConnection, work: ChunkToCommit) -> dict[str, int]:
+    run, source = work.run_id, work.source
+    for name in ("incoming", "change"):
+        connection.execute(f"DROP TABLE IF EXISTS temp.{name}")
+    for file in work.chunk.begins:
+        connection.execute(
+            "DELETE FROM rejects WHERE source = $1 AND (file = $2 OR starts_with(file, $2 || '/'))", [source, file]
+        )
+    parquet = str(rejects_part(work.part))
+    connection.execute(
+        "INSERT INTO rejects SELECT ?, file, position, label, stage, reason, message, ? FROM read_parquet(?)",
+        [source, run, parquet],
+    )
+    rejected = _one(connection, "SELECT count(*) FROM read_parquet(?)", [parquet])
+    connection.execute("CREATE TEMP TABLE incoming AS SELECT * FROM read_parquet(?)", [str(accepted_part(work.part))])
+    counts = {"found": len(work.chunk.records), "rejected": rejected, "unchanged": len(work.unchanged)}
+    worked = {"new": 0, "amended": 0, "replaced": 0, "unchanged": 0}
+    if _one(connection, "SELECT count(*) FROM incoming", []):
+        worked = _commit_incoming(connection, work)
+    if len(work.unchanged):
+        connection.register("unchanged_frame", work.unchanged.to_arrow())
+        connection.execute(
+            "UPDATE records SET position = u.position, missing_since_run = NULL FROM unchanged_frame u "
+            "WHERE records.record_id = u.record_id "
+            "AND (records.position <> u.position OR records.missing_since_run IS NOT NULL)"
+        )
+        connection.execute("INSERT INTO seen SELECT ?, file, record_id FROM unchanged_frame", [source])
+        connection.unregister("unchanged_frame")
+    counts["unchanged"] += worked["unchanged"]
+    counts["new"], counts["amended"], counts["replaced"] = worked["new"], worked["amended"], worked["replaced"]
+    counts["accepted"] = counts["unchanged"] + counts["new"] + counts["amended"] + counts["replaced"]
+    connection.execute(
+        "INSERT INTO chunks VALUES (?, ?, ?, ?, ?, ?, ?, ?, ?, ?, ?)",
+        [run, source, work.chunk.number, work.chunk.digest]
+        + [counts[k] for k in ("found", "accepted", "rejected", "new", "amended", "replaced", "unchanged")],
+    )
+    return counts
+
+
+def _commit_incoming(connection: duckdb.DuckDBPyConnection, work: ChunkToCommit) -> dict[str, int]:
+    run, source = work.run_id, work.source
+    same_facts = " AND ".join(f"r.{c} IS NOT DISTINCT FROM i.{c}" for c in FACT_COLUMNS)
+    connection.execute(
+        "CREATE TEMP TABLE change AS SELECT i.record_id, "
+        "CASE WHEN r.record_id IS NULL THEN 'new' WHEN r.content_hash <> i.content_hash THEN 'replaced' "
+        f"WHEN NOT ({same_facts}) THEN 'amended' ELSE 'unchanged' END AS change, "
+        "coalesce(r.first_run, $1) AS first_run, "
+        "CASE WHEN r.content_hash = i.content_hash THEN r.content_run ELSE $1 END AS content_run "
+        "FROM incoming i LEFT JOIN records r USING (record_id)",
+        [run],
+    )
+    rows = connection.execute("SELECT change, count(*) FROM change GROUP BY change").fetchall()
+    counts = {"new": 0, "amended": 0, "replaced": 0, "unchanged": 0, **dict(rows)}
+    connection.execute(
+        "INSERT INTO record_versions SELECT r.record_id, "
+        "1 + (SELECT count(*) FROM record_versions v WHERE v.record_id = r.record_id), c.change, $1, r.content_hash, "
+        "x.crystal_key, r.energy_ev_per_site, r.theory, r.split, r.record_date, r.properties, s.cell_angstrom, "
+        "s.species, s.positions_fractional FROM records r JOIN change c USING (record_id) "
+        "JOIN structures s USING (record_id) JOIN crystals x USING (record_id) "
+        "WHERE c.change IN ('amended', 'replaced') ORDER BY r.file, r.position",
+        [run],
+    )
+    # A row of `records` is written anew whenever its record was worked on, the others only with new content.
+    written = "'new', 'replaced'" + (", 'amended', 'unchanged'" if work.recompute else "")
+    connection.execute("DELETE FROM records WHERE record_id IN (SELECT record_id FROM change WHERE change <> 'new')")
+    connection.execute(
+        f"INSERT INTO records (record_id, source, {RECORD_COLUMNS}, first_run, content_run, missing_since_run) "
+        f"SELECT i.record_id, $1, {RECORD_COLUMNS}, c.first_run, c.content_run, NULL "
+        "FROM incoming i JOIN change c USING (record_id) ORDER BY i.row",
+        [source],
+    )
+    for table in ("structures", "crystals"):
+        connection.execute(
+            f"DELETE FROM {table} WHERE record_id IN "
+            f"(SELECT record_id FROM change WHERE change <> 'new' AND change IN ({written}))"
+        )
+    connection.execute(
+        "INSERT INTO structures SELECT i.record_id, i.given_cell, i.given_species, i.given_positions "
+        f"FROM incoming i JOIN change c USING (record_id) WHERE c.change IN ({written}) ORDER BY i.row"
+    )
+    insert_crystals(connection, f"incoming i JOIN change c USING (record_id) WHERE c.change IN ({written})")
+    connection.execute("INSERT INTO seen SELECT ?, file, record_id FROM incoming", [source])
+    return counts
+
+
+def insert_crystals(connection: duckdb.DuckDBPyConnection, rows: str) -> None:
+    """Insert into `crystals` from a part's rows, given as the text after FROM, with the part under the name i."""
+    columns = ", ".join(f"i.{column.name}" for column in TABLES["crystals"].columns)
+    connection.execute(f"INSERT INTO crystals SELECT {columns} FROM {rows} ORDER BY i.row")
+
+
+def _one(connection: duckdb.DuckDBPyConnection, sql: str, values: list[object]) -> int:
+    row = connection.execute(sql, values).fetchone()
+    return int(row[0]) if row else 0

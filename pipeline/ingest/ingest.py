@@ -1,0 +1,151 @@
+"""The whole of `ingest`: scan, split, reduce, commit, finish, group exactly, publish."""
+
+from __future__ import annotations
+
+import json
+import logging
+from collections import Counter
+from collections.abc import Iterator
+from dataclasses import dataclass
+from typing import Any
+
+import duckdb
+import polars as pl
+
+from ..settings import Settings
+from ..store.runs import Run, begin_run
+from ..store.stages import changed_stages, record_settings, refuse_mixed, stored_settings
+from ..store.workspace import Workspace
+from .commit import ChunkToCommit, commit_chunk, is_committed
+from .finish import finish_source
+from .pool import ordered_results
+from .progress import Progress
+from .reduce import ReduceJob, accepted_part, part_name, reduce_chunk, rejects_part
+from .scan import IngestRequest, Plan, SourceToRead, scan
+from .split import RawChunk, raw_chunks
+
+log = logging.getLogger(__name__)
+
+
+@dataclass(frozen=True, slots=True)
+class IngestWork:
+    """An ingest that has something to do."""
+
+    run: Run
+    plan: Plan
+    settings: Settings
+    canonical_again: bool
+    """The canonical settings changed: all stored structures are to be reduced anew."""
+
+
+def prepare_ingest(workspace: Workspace, request: IngestRequest, settings: Settings, command: str) -> IngestWork | None:
+    """Scan, check the settings, and begin or resume the run; None where there is nothing to do."""
+    connection = workspace.connection
+    changed = changed_stages(connection, settings)
+    if not request.recompute:
+        refuse_mixed(connection, settings, ("parse", "canonical"))
+    plan = scan(connection, request, settings, read_all="parse" in changed)
+    unfinished = connection.execute(
+        "SELECT 1 FROM runs WHERE status = 'running' AND plan_hash = ?", [plan.hash]
+    ).fetchone()
+    if not unfinished and not request.recompute and not any(source.stale for source in plan.sources):
+        return None
+    run = begin_run(connection, command, plan.arguments, plan.hash, settings.model_dump(), request.recompute)
+    if run.resumed:
+        log.info("Run %d was interrupted; going on with it.", run.run_id)
+    if not stored_settings(connection):
+        connection.execute("BEGIN")
+        record_settings(connection, settings, ("parse", "canonical"))
+        connection.execute("COMMIT")
+    return IngestWork(run, plan, settings, request.recompute and "canonical" in changed)
+
+
+def read_source(workspace: Workspace, work: IngestWork, source: SourceToRead, progress: Progress) -> None:
+    """Read, reduce and commit all changed files of a source, chunk by chunk in order, then finish it."""
+    connection = workspace.connection
+    found: Counter[str] = Counter({f.file: 0 for f in source.files if f.changed})
+    progress.start(f"reading {source.source}", None)
+
+    waiting: dict[int, ChunkToCommit] = {}
+
+    def jobs() -> Iterator[ReduceJob]:
+        for chunk in raw_chunks(source, work.settings):
+            found.update(chunk.found)
+            if is_committed(connection, work.run.run_id, source.source, chunk):
+                progress.advance(len(chunk.records))
+                continue
+            yield _job(workspace, work, source, chunk, waiting)
+
+    for job, _ in ordered_results(reduce_chunk, jobs(), work.settings.worker_count):
+        todo = waiting.pop(job.number)
+        commit_chunk(connection, todo)
+        job.raw.unlink()
+        accepted_part(job.part).unlink()
+        rejects_part(job.part).unlink()
+        progress.advance(len(todo.chunk.records))
+    finish_source(connection, work.run.run_id, source, dict(found))
+
+
+def _job(
+    workspace: Workspace, work: IngestWork, source: SourceToRead, chunk: RawChunk, waiting: dict[int, ChunkToCommit]
+) -> ReduceJob:
+    """Leave out what the store holds just so, write the rest for a worker, and remember what to commit."""
+    unchanged = chunk.records.clear().select("record_id", "file", "position")
+    if not source.force:
+        unchanged = _unchanged(workspace.connection, chunk)
+    todo = chunk.records.join(unchanged, on="record_id", how="anti", maintain_order="left")
+    part = workspace.parts / part_name(chunk.digest, unchanged["record_id"].to_list(), work.settings, source.settings)
+    raw = part.with_name(part.name + ".raw.parquet")
+    todo.write_parquet(raw, compression="lz4")
+    light = RawChunk(
+        chunk.number, chunk.records.select("record_id"), chunk.begins, chunk.found, chunk.digest
+    )  # the texts are on disk now: do not hold them while the chunk is in flight
+    waiting[chunk.number] = ChunkToCommit(work.run.run_id, source.source, light, unchanged, part, source.force)
+    return ReduceJob(chunk.number, raw, part, work.settings, source.settings)
+
+
+def _unchanged(connection: duckdb.DuckDBPyConnection, chunk: RawChunk) -> pl.DataFrame:
+    connection.register("raw_frame", chunk.records.select("record_id", "file", "position", "raw_hash").to_arrow())
+    try:
+        return connection.sql(
+            "SELECT f.record_id, f.file, f.position FROM raw_frame f JOIN records r USING (record_id) "
+            "WHERE f.raw_hash = r.raw_hash ORDER BY f.file, f.position"
+        ).pl()
+    finally:
+        connection.unregister("raw_frame")
+
+
+def ingest_counts(connection: duckdb.DuckDBPyConnection, work: IngestWork) -> dict[str, Any]:
+    """What the run did, from what the store says: the same whether or not it was interrupted. Read-only."""
+    row = connection.execute(
+        "SELECT coalesce(sum(found), 0), coalesce(sum(accepted), 0), coalesce(sum(rejected), 0), "
+        "coalesce(sum(new_records), 0), coalesce(sum(amended), 0), coalesce(sum(replaced), 0), "
+        "coalesce(sum(unchanged), 0) FROM chunks WHERE run_id = ?",
+        [work.run.run_id],
+    ).fetchone()
+    names = ("found", "accepted", "rejected", "new", "amended", "replaced", "unchanged")
+    counts: dict[str, Any] = dict(zip(names, map(int, row or ()), strict=True))
+    for name, sql in {
+        "missing": "SELECT count(*) FROM records WHERE missing_since_run = ?",
+        "files_read": "SELECT count(*) FROM files WHERE last_run = ?",
+        "files_missing": "SELECT count(*) FROM files WHERE missing_since_run = ?",
+    }.items():
+        value = connection.execute(sql, [work.run.run_id]).fetchone()
+        counts[name] = int(value[0]) if value else 0
+    counts["files_unchanged"] = sum(len(s.files) for s in work.plan.sources) - counts["files_read"]
+    reasons = connection.execute(
+        "SELECT reason, count(*) FROM rejects WHERE run_id = ? GROUP BY reason ORDER BY reason", [work.run.run_id]
+    ).fetchall()
+    counts["reasons"] = dict(reasons)
+    return counts
+
+
+def energies_without_unit(connection: duckdb.DuckDBPyConnection, plan: Plan) -> list[str]:
+    """Sources with an energy column and no unit: their numbers stay in the properties, which is to be said once."""
+    out = []
+    for source in plan.sources:
+        row = connection.execute("SELECT settings FROM sources WHERE source = ?", [source.source]).fetchone()
+        stored = json.loads(row[0]) if row else {}
+        if stored.get("energy_column") and not stored.get("energy_unit"):
+            out.append(source.source)
+    return out

@@ -1,0 +1,223 @@
+"""The work on one chunk: raw records to parsed, canonical crystals, written as two Parquet parts.
+
+Runs in a worker; takes and returns paths and counts. A part is written to a temporary name, synced and renamed, so that
+a part that is there is whole; it is named by the digest of what it was made from.
+"""
+
+from __future__ import annotations
+
+import hashlib
+import os
+from collections import defaultdict
+from dataclasses import dataclass
+from pathlib import Path
+from typing import Any
+
+import numpy as np
+import polars as pl
+import pyarrow as pa
+import pyarrow.parquet as pq
+
+from ..cell.canonical import CanonicalBatch, canonicalise
+from ..model.batch import CrystalBatch, select
+from ..model.raw import ParseOptions
+from ..model.refusals import Refusal
+from ..model.species import formulas_of
+from ..readers import reader_named
+from ..settings import Settings, SourceSettings
+from .energies import RecordFacts, record_facts
+
+STAGE_VERSION = 1
+"""Counts up whenever the same input would give other rows: parts of an older version are never taken over."""
+
+
+@dataclass(frozen=True, slots=True)
+class ReduceJob:
+    """One chunk's work: paths and settings only."""
+
+    number: int
+    raw: Path
+    """Parquet of raw records (split.RAW_SCHEMA) that need work."""
+
+    part: Path
+    """Stem of the parts to write: PART.accepted.parquet and PART.rejects.parquet."""
+
+    settings: Settings
+    source: SourceSettings
+
+
+def part_name(digest: str, left_out: list[str], settings: Settings, source: SourceSettings) -> str:
+    """Name of a chunk's parts: digest of its raw records, of those left out as unchanged, and of the settings."""
+    h = hashlib.sha256(f"{STAGE_VERSION}\0{digest}\0{settings.of_stage('parse')}\0".encode())
+    h.update(f"{settings.of_stage('canonical')}\0{source.model_dump()}\0".encode())
+    h.update("\0".join(left_out).encode())
+    return h.hexdigest()[:32]
+
+
+def accepted_part(part: Path) -> Path:
+    """The part of accepted records; written last, so its presence says that both are there."""
+    return part.with_name(part.name + ".accepted.parquet")
+
+
+def rejects_part(part: Path) -> Path:
+    """The part of refused records."""
+    return part.with_name(part.name + ".rejects.parquet")
+
+
+def reduce_chunk(job: ReduceJob) -> int:
+    """Do the work unless its parts are there already; returns the number of raw records."""
+    raw = pl.read_parquet(job.raw).with_row_index("row")
+    if accepted_part(job.part).exists():
+        return len(raw)
+    rejects: list[tuple[int, Refusal]] = []
+    accepted: list[pa.Table] = []
+    refused = raw["reason"].to_list()
+    readers = raw["reader"].to_list()
+    by_reader: dict[str, list[int]] = defaultdict(list)
+    for i, reason in enumerate(refused):
+        if reason is not None:
+            rejects.append((i, Refusal(reason, raw["message"][i], "read")))
+        else:
+            by_reader[readers[i]].append(i)
+    texts = raw["text"].to_list()
+    for name in sorted(by_reader):
+        rows = by_reader[name]
+        present = [i for i in rows if texts[i] is not None]
+        rejects += [(i, Refusal("text_missing", "the structure column is empty")) for i in rows if texts[i] is None]
+        parsed = reader_named(name).parse([texts[i] for i in present], ParseOptions(job.settings.max_sites))
+        rejects += [(present[r], refusal) for r, refusal in parsed.refusals]
+        canonical = canonicalise(parsed.batch, job.settings.tolerances)
+        origin = [present[r] for r in parsed.rows]
+        rejects += [(origin[r], refusal) for r, refusal in canonical.refusals]
+        kept = [origin[r] for r in canonical.rows]
+        if kept:
+            given = select(parsed.batch, canonical.rows)
+            facts = record_facts(
+                raw["properties"].gather(kept).to_list(),
+                [parsed.properties[r] for r in canonical.rows],
+                np.diff(given.offsets),
+                job.source,
+            )
+            accepted.append(_table(raw[kept], given, canonical, facts))
+    rejects.sort(key=lambda r: r[0])
+    where = raw.select("record_id", "file", "position", "label")
+    write_part(_rejects_table(where, rejects), rejects_part(job.part))
+    table = pa.concat_tables(accepted).sort_by("row") if accepted else None
+    write_part(table if table is not None else pa.table({"row": pa.array([], pa.uint32())}), accepted_part(job.part))
+    return len(raw)
+
+
+def content_hashes(batch: CrystalBatch) -> list[str]:
+    """SHA-256 of each crystal's cell, species, occupancies and positions as parsed, in order."""
+    cells, positions = batch.cells + 0.0, batch.positions + 0.0  # -0.0 is 0.0
+    out = []
+    for i in range(len(batch)):
+        h = hashlib.sha256(bytes([int(batch.periodicity[i])]))
+        h.update(cells[i].tobytes())
+        h.update("\0".join(batch.tokens_of(i)).encode())
+        h.update(positions[batch.sites(i)].tobytes())
+        out.append(h.hexdigest())
+    return out
+
+
+def _table(raw: pl.DataFrame, given: CrystalBatch, canonical: CanonicalBatch, facts: list[RecordFacts]) -> pa.Table:
+    """One row a record, with every column of `records`, `structures` (given_*) and `crystals`."""
+    described = formulas_of(given)
+    columns: dict[str, Any] = {
+        "row": raw["row"].to_arrow(),
+        "record_id": raw["record_id"].to_arrow(),
+        "file": raw["file"].to_arrow(),
+        "position": raw["position"].to_arrow(),
+        "label": raw["label"].to_arrow(),
+        "reader": raw["reader"].to_arrow(),
+        "raw_hash": raw["raw_hash"].to_arrow(),
+        "content_hash": pa.array(content_hashes(given)),
+        "formula": pa.array([d.formula for d in described]),
+        "formula_anonymous": pa.array([d.formula_anonymous for d in described]),
+        "elements": pa.array([list(d.elements) for d in described], pa.list_(pa.string())),
+        "composition": pa.array([d.composition for d in described]),
+        "sites_given": pa.array(np.diff(given.offsets).astype(np.int32)),
+        "periodicity": pa.array(given.periodicity),
+        "energy_ev_per_site": pa.array([f.energy_ev_per_site for f in facts], pa.float64()),
+        "theory": pa.array([f.theory for f in facts], pa.string()),
+        "split": pa.array([f.split for f in facts], pa.string()),
+        "record_date": pa.array([f.record_date for f in facts], pa.timestamp("us")),
+        "properties": pa.array([f.properties for f in facts], pa.string()),
+        "given_cell": _fixed(given.cells),
+        "given_species": _tokens(given),
+        "given_positions": _ragged(given.positions, given.offsets, 3),
+        **crystal_columns(given, canonical),
+    }
+    return pa.table(columns)
+
+
+def crystal_columns(given: CrystalBatch, canonical: CanonicalBatch) -> dict[str, Any]:
+    """The columns of `crystals`, and sites_primitive; `given` holds the accepted crystals alone."""
+    crystal = canonical.crystals
+    cells = crystal.cells
+    edges = np.linalg.norm(cells, axis=2)
+    columns: dict[str, Any] = {
+        "sites_primitive": pa.array(np.diff(crystal.offsets).astype(np.int32)),
+        "crystal_key": pa.array(canonical.crystal_key),
+        "volume_angstrom3_per_site": pa.array(crystal.volumes / np.diff(crystal.offsets)),
+        "supercell_index": pa.array(canonical.supercell_index.astype(np.int32)),
+        "residual_angstrom": pa.array(canonical.residual),
+        "pseudo_index": pa.array(canonical.pseudo_index.astype(np.int32)),
+        "pseudo_residual_angstrom": pa.array(canonical.pseudo_residual),
+        "cell_angstrom": _fixed(cells),
+        "species": _tokens(crystal),
+        "positions_fractional": _ragged(crystal.positions, crystal.offsets, 3),
+        "matrix": _fixed(canonical.multiplicity_matrix.astype(np.int32)),
+        "rotation": _fixed(canonical.rotation),
+        "origin_fractional": _fixed(canonical.origin),
+        "site_map": _ragged(canonical.site_map, given.offsets, 1),
+        "site_shift": _ragged(canonical.site_shift, given.offsets, 3),
+        "pseudo_matrix": _fixed(canonical.pseudo_matrix.astype(np.int32)),
+    }
+    for i, name in enumerate("abc"):
+        columns[f"{name}_angstrom"] = pa.array(edges[:, i])
+    for name, i, j in (("alpha", 1, 2), ("beta", 0, 2), ("gamma", 0, 1)):
+        cosine = np.einsum("nx,nx->n", cells[:, i], cells[:, j]) / (edges[:, i] * edges[:, j])
+        columns[f"{name}_deg"] = pa.array(np.degrees(np.arccos(np.clip(cosine, -1, 1))))
+    return columns
+
+
+def _fixed(values: np.ndarray[Any, Any]) -> pa.Array:
+    """(n, ...) as a fixed-size list column."""
+    flat = np.ascontiguousarray(values).reshape(-1)
+    return pa.FixedSizeListArray.from_arrays(pa.array(flat), int(np.prod(values.shape[1:])))
+
+
+def _ragged(values: np.ndarray[Any, Any], offsets: np.ndarray[Any, Any], width: int) -> pa.Array:
+    """(m,) or (m, width) by crystal as a list column."""
+    flat = np.ascontiguousarray(values).reshape(-1)
+    return pa.LargeListArray.from_arrays(pa.array(offsets * width), pa.array(flat))
+
+
+def _tokens(batch: CrystalBatch) -> pa.Array:
+    words = pa.DictionaryArray.from_arrays(pa.array(np.asarray(batch.species)), pa.array(batch.tokens, pa.string()))
+    return pa.LargeListArray.from_arrays(pa.array(np.asarray(batch.offsets)), words.dictionary_decode())
+
+
+def _rejects_table(where: pl.DataFrame, rejects: list[tuple[int, Refusal]]) -> pa.Table:
+    rows = [i for i, _ in rejects]
+    picked = where[rows]
+    return pa.table(
+        {
+            "file": picked["file"].to_arrow(),
+            "position": picked["position"].to_arrow(),
+            "label": picked["label"].to_arrow(),
+            "stage": pa.array([r.stage for _, r in rejects], pa.string()),
+            "reason": pa.array([r.reason for _, r in rejects], pa.string()),
+            "message": pa.array([r.message for _, r in rejects], pa.string()),
+        }
+    )
+
+
+def write_part(table: pa.Table, path: Path) -> None:
+    """Write a part whole or not at all."""
+    temporary = path.with_name(f"{path.name}.{os.getpid()}.new")
+    pq.write_table(table, temporary, compression="zstd")
+    with temporary.open("rb") as f:
+        os.fsync(f.fileno())
+    temporary.replace(path)

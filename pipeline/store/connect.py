@@ -1,0 +1,53 @@
+"""Opening a DuckDB file, with errors that say what to do."""
+
+from __future__ import annotations
+
+import re
+from pathlib import Path
+
+import duckdb
+
+from ..errors import StoreError
+from .schema import known_version, stored_version
+
+
+def open_for_reading(path: Path) -> duckdb.DuckDBPyConnection:
+    """The published store, read-only. Raises StoreError (missing, held by a writer, damaged, newer, or no store)."""
+    if not path.exists():
+        raise StoreError(f"There is no store at {path}. Make one with: lattice-census ingest PATH --store {path}")
+    connection = _connect(path, read_only=True)
+    _check_version(connection, path)
+    return connection
+
+
+def open_for_writing(path: Path) -> duckdb.DuckDBPyConnection:
+    """A work store that this process alone holds; made when missing. Raises StoreError."""
+    connection = _connect(path, read_only=False)
+    if stored_version(connection) is not None:
+        _check_version(connection, path)
+    return connection
+
+
+def _connect(path: Path, read_only: bool) -> duckdb.DuckDBPyConnection:
+    try:
+        return duckdb.connect(str(path), read_only=read_only)
+    except duckdb.Error as error:
+        text = str(error)
+        if "lock" in text.lower() and "conflicting" in text.lower():
+            holder = re.search(r"PID (\d+)", text)
+            who = f"process {holder[1]}" if holder else "another process"
+            raise StoreError(f"{path} is held open for writing by {who}. Close it there and try again.") from error
+        raise StoreError(f"{path} cannot be opened as a store: {text.splitlines()[0]}") from error
+
+
+def _check_version(connection: duckdb.DuckDBPyConnection, path: Path) -> None:
+    version = stored_version(connection)
+    if version is None:
+        connection.close()
+        raise StoreError(f"{path} is a DuckDB file, but not a store of lattice-census. Give another --store.")
+    if version > known_version():
+        connection.close()
+        raise StoreError(
+            f"{path} was written by a newer lattice-census (schema {version}, this one knows {known_version()}). "
+            "Update lattice-census."
+        )

@@ -1,0 +1,177 @@
+"""The work folder of a store: lock, work store, parts; and the way back to the published file."""
+
+from __future__ import annotations
+
+import json
+import os
+import shutil
+import uuid
+from contextlib import suppress
+from pathlib import Path
+from types import TracebackType
+from typing import Any
+
+import duckdb
+
+from ..errors import StoreError
+from .connect import open_for_reading, open_for_writing
+from .lock import WriterLock
+from .publish import mark_of, publish
+from .schema import migrate
+
+
+class Workspace:
+    """The right to write to a store. Use as a context; nothing is visible to readers before `publish`.
+
+    The folder FILE.work/ holds `work.duckdb` (the store that is worked on), `parts/` (results of chunks on their way),
+    `lock`, and `published.json` (how the published file looked when it was last put in place).
+    """
+
+    def __init__(self, published: Path, command: str, wait_seconds: float = 0.0, scratch: bool = False) -> None:
+        """scratch: work on a copy that is thrown away at the end (a dry run)."""
+        self.published = published.absolute()
+        self.folder = self.published.with_name(self.published.name + ".work")
+        self.work_file = self.folder / "work.duckdb"
+        self.parts = self.folder / "parts"
+        self._scratch = scratch
+        self._lock = WriterLock(self.folder / "lock", command, wait_seconds)
+        self._connection: duckdb.DuckDBPyConnection | None = None
+
+    def __enter__(self) -> Workspace:
+        if self.published.is_dir():
+            raise StoreError(f"{self.published} is a folder; --store names a file.")
+        try:
+            self._lock.__enter__()
+        except OSError as error:
+            raise StoreError(f"The work folder {self.folder} cannot be written: {error.strerror}.") from error
+        try:
+            self._settle_which_store()
+            if self._scratch:
+                self._work_on_a_copy()
+            self.parts.mkdir(exist_ok=True)
+            self._connection = open_for_writing(self.work_file)
+            migrate(self._connection)
+            self._connection.execute(
+                "INSERT INTO store_facts SELECT 'store_id', ? "
+                "WHERE NOT EXISTS (SELECT 1 FROM store_facts WHERE name = 'store_id')",
+                [uuid.uuid4().hex],
+            )
+            self._connection.execute("SET preserve_insertion_order = true")
+        except BaseException:
+            self.__exit__(None, None, None)
+            raise
+        return self
+
+    def __exit__(self, kind: type[BaseException] | None, error: BaseException | None, at: TracebackType | None) -> None:
+        if self._connection is not None:
+            with suppress(duckdb.Error):
+                self._connection.close()
+            self._connection = None
+        if self._scratch:
+            shutil.rmtree(self.folder / "scratch", ignore_errors=True)
+        self._lock.__exit__(None, None, None)
+
+    @property
+    def connection(self) -> duckdb.DuckDBPyConnection:
+        """The one connection to the work store; for use in the thread that drives the run."""
+        if self._connection is None:
+            raise RuntimeError("the workspace is not open")
+        return self._connection
+
+    @property
+    def ahead_of_published(self) -> bool:
+        """True where the work store holds runs that the published file does not."""
+        marked = self._published_facts()
+        row = self.connection.execute("SELECT coalesce(max(run_id), 0) FROM runs").fetchone()
+        newest = int(row[0]) if row else 0
+        return marked.get("mark") != mark_of(self.published) or marked.get("run") != newest
+
+    def publish(self) -> None:
+        """Count the publication, checkpoint, and put a copy in the place of the published file."""
+        connection = self.connection
+        connection.execute("BEGIN")
+        row = connection.execute("SELECT value FROM store_facts WHERE name = 'publication'").fetchone()
+        number = int(row[0]) + 1 if row else 1
+        connection.execute("DELETE FROM store_facts WHERE name = 'publication'")
+        connection.execute("INSERT INTO store_facts VALUES ('publication', ?)", [str(number)])
+        connection.execute("COMMIT")
+        newest = connection.execute("SELECT coalesce(max(run_id), 0) FROM runs").fetchone()
+        connection.execute("CHECKPOINT")
+        connection.close()
+        self._connection = None
+        publish(self.work_file, self.published)
+        temporary = self.folder / "published.json.new"
+        facts = {"mark": mark_of(self.published), "run": int(newest[0]) if newest else 0}
+        temporary.write_text(json.dumps(facts), encoding="utf-8")
+        temporary.replace(self.folder / "published.json")
+        self._connection = open_for_writing(self.work_file)
+
+    def clear_parts(self) -> None:
+        """Remove the results of chunks that are all in the store by now."""
+        shutil.rmtree(self.parts, ignore_errors=True)
+        self.parts.mkdir(exist_ok=True)
+
+    def _settle_which_store(self) -> None:
+        """Go on from the work store, or from the published file where only that is there.
+
+        A published file that another program or a restored backup put in place is told by its mark and then by the
+        identity inside it, read from a copy, since a reader elsewhere may hold a lock on the file itself.
+        """
+        mark = mark_of(self.published)
+        if not self.work_file.exists():
+            if mark is not None:
+                self._copy_published_to(self.work_file)
+            return
+        if mark is None or mark == self._published_facts().get("mark"):
+            return
+        copy = self.folder / "published-copy.duckdb"
+        try:
+            self._copy_published_to(copy)
+            theirs, ours = _identity(copy), _identity(self.work_file)
+        finally:
+            copy.unlink(missing_ok=True)
+        if theirs[0] != ours[0] or theirs[1] > ours[1] or theirs[1] < ours[1] - 1:
+            raise StoreError(
+                f"{self.published} is not the file that the work folder {self.folder} last published (it is "
+                f"publication {theirs[1]} of store {theirs[0][:8]}, the folder holds {ours[1]} of {ours[0][:8]}). "
+                "To go on from the file, move the folder away; to go on from the folder, move the file away."
+            )
+
+    def _published_facts(self) -> dict[str, Any]:
+        try:
+            facts = json.loads((self.folder / "published.json").read_text(encoding="utf-8"))
+        except (OSError, ValueError):
+            return {}
+        return facts if isinstance(facts, dict) else {}
+
+    def _work_on_a_copy(self) -> None:
+        scratch = self.folder / "scratch"
+        shutil.rmtree(scratch, ignore_errors=True)
+        scratch.mkdir()
+        if self.work_file.exists():
+            # Opened and closed first, so that a write-ahead log left by a kill is in the file that is copied.
+            open_for_writing(self.work_file).close()
+            shutil.copyfile(self.work_file, scratch / "work.duckdb")
+        self.work_file = scratch / "work.duckdb"
+        self.parts = scratch / "parts"
+
+    def _copy_published_to(self, target: Path) -> None:
+        temporary = target.with_name(f"{target.name}.{os.getpid()}.new")
+        try:
+            shutil.copyfile(self.published, temporary)
+            open_for_reading(temporary).close()
+            temporary.replace(target)
+        except StoreError as error:
+            raise StoreError(str(error).replace(str(temporary), str(self.published))) from error
+        finally:
+            temporary.unlink(missing_ok=True)
+
+
+def _identity(path: Path) -> tuple[str, int]:
+    """(store_id, publication) of a store file."""
+    connection = open_for_reading(path)
+    try:
+        facts = dict(connection.execute("SELECT name, value FROM store_facts").fetchall())
+        return facts.get("store_id", ""), int(facts.get("publication", "0"))
+    finally:
+        connection.close()
