@@ -87,6 +87,6 @@ class Reader(Protocol):
         """
         ...
 
-    def parse(self, texts: Sequence[str], options: ParseOptions) -> Parsed:
-        """Crystals of structure texts of this format. Never raises for a bad text."""
+    def parse(self, texts: Sequence[str | None], options: ParseOptions) -> Parsed:
+        """Crystals of structure texts of this format; None is refused as text_missing. Never raises for a bad text."""
         ...
