@@ -22,7 +22,7 @@ for _name, _value in {
 
 
 def task_step(name: str, work: Callable[..., R], *arguments: Any) -> R:
-    """The step as a Prefect task. The arguments stay in a closure: open stores and plans are not for Prefect to copy."""
+    """The step as a Prefect task. The arguments stay in a closure: an open store is not for Prefect to copy."""
     from prefect import task
     from prefect.cache_policies import NO_CACHE
 

@@ -21,7 +21,7 @@ def group_exact(connection: duckdb.DuckDBPyConnection, run_id: int) -> None:
             "INSERT INTO members "
             "SELECT $1, first_value(r.record_id) OVER kept, min(r.record_id) OVER family, r.record_id, r.label, "
             "r.source, row_number() OVER kept = 1, 0.0, 0.0 "
-            "FROM current_records r JOIN crystals x USING (record_id) "
+            "FROM current_records r JOIN canonical_forms x USING (record_id) "
             f"WINDOW kept AS (PARTITION BY {column} ORDER BY r.source, r.label, r.record_id), "
             f"family AS (PARTITION BY {column}) ORDER BY r.record_id",
             [grade],

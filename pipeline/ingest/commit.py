@@ -116,7 +116,7 @@ def _commit_incoming(connection: duckdb.DuckDBPyConnection, work: ChunkToCommit)
         "1 + (SELECT count(*) FROM record_versions v WHERE v.record_id = r.record_id), c.change, $1, r.content_hash, "
         "x.crystal_key, r.energy_ev_per_site, r.theory, r.split, r.record_date, r.properties, s.cell_angstrom, "
         "s.species, s.positions_fractional FROM records r JOIN change c USING (record_id) "
-        "JOIN structures s USING (record_id) JOIN crystals x USING (record_id) "
+        "JOIN structures s USING (record_id) JOIN canonical_forms x USING (record_id) "
         "WHERE c.change IN ('amended', 'replaced') ORDER BY r.file, r.position",
         [run],
     )
@@ -129,7 +129,7 @@ def _commit_incoming(connection: duckdb.DuckDBPyConnection, work: ChunkToCommit)
         "FROM incoming i JOIN change c USING (record_id) ORDER BY i.row",
         [source],
     )
-    for table in ("structures", "crystals"):
+    for table in ("structures", "canonical_forms"):
         connection.execute(
             f"DELETE FROM {table} WHERE record_id IN "
             f"(SELECT record_id FROM change WHERE change <> 'new' AND change IN ({written}))"
@@ -138,15 +138,15 @@ def _commit_incoming(connection: duckdb.DuckDBPyConnection, work: ChunkToCommit)
         "INSERT INTO structures SELECT i.record_id, i.given_cell, i.given_species, i.given_positions "
         f"FROM incoming i JOIN change c USING (record_id) WHERE c.change IN ({written}) ORDER BY i.row"
     )
-    insert_crystals(connection, f"incoming i JOIN change c USING (record_id) WHERE c.change IN ({written})")
+    insert_canonical_forms(connection, f"incoming i JOIN change c USING (record_id) WHERE c.change IN ({written})")
     connection.execute("INSERT INTO seen SELECT ?, file, record_id FROM incoming", [source])
     return counts
 
 
-def insert_crystals(connection: duckdb.DuckDBPyConnection, rows: str) -> None:
-    """Insert into `crystals` from a part's rows, given as the text after FROM, with the part under the name i."""
-    columns = ", ".join(f"i.{column.name}" for column in TABLES["crystals"].columns)
-    connection.execute(f"INSERT INTO crystals SELECT {columns} FROM {rows} ORDER BY i.row")
+def insert_canonical_forms(connection: duckdb.DuckDBPyConnection, rows: str) -> None:
+    """Insert into `canonical_forms` from a part's rows, given as the text after FROM, with the part under the name i."""
+    columns = ", ".join(f"i.{column.name}" for column in TABLES["canonical_forms"].columns)
+    connection.execute(f"INSERT INTO canonical_forms SELECT {columns} FROM {rows} ORDER BY i.row")
 
 
 def _one(connection: duckdb.DuckDBPyConnection, sql: str, values: list[object]) -> int:

@@ -16,14 +16,14 @@ from ..errors import NumericsError
 from ..model.batch import CrystalBatch
 from ..settings import Settings, SourceSettings
 from ..store.workspace import Workspace
-from .commit import insert_crystals
+from .commit import insert_canonical_forms
 from .pool import ordered_results
 from .progress import Progress
 from .reduce import ReduceJob, accepted_part, crystal_columns, write_part
 
 
 def recompute_canonical(workspace: Workspace, settings: Settings, progress: Progress) -> int:
-    """Reduce every stored structure anew and replace the rows of `crystals`; returns their number.
+    """Reduce every stored structure anew and replace the rows of `canonical_forms`; returns their number.
 
     Chunks already replaced are replaced again after a kill: the result is the same.
     """
@@ -93,8 +93,8 @@ def _replace(connection: duckdb.DuckDBPyConnection, part: Path) -> None:
     connection.execute("BEGIN")
     try:
         connection.execute("CREATE OR REPLACE TEMP TABLE again AS SELECT * FROM read_parquet(?)", [str(part)])
-        connection.execute("DELETE FROM crystals WHERE record_id IN (SELECT record_id FROM again)")
-        insert_crystals(connection, "again i")
+        connection.execute("DELETE FROM canonical_forms WHERE record_id IN (SELECT record_id FROM again)")
+        insert_canonical_forms(connection, "again i")
         connection.execute(
             "UPDATE records SET sites_primitive = again.sites_primitive FROM again "
             "WHERE records.record_id = again.record_id AND records.sites_primitive <> again.sites_primitive"

@@ -121,7 +121,7 @@ def content_hashes(batch: CrystalBatch) -> list[str]:
 
 
 def _table(raw: pl.DataFrame, given: CrystalBatch, canonical: CanonicalBatch, facts: list[RecordFacts]) -> pa.Table:
-    """One row a record, with every column of `records`, `structures` (given_*) and `crystals`."""
+    """One row a record, with every column of `records`, `structures` (given_*) and `canonical_forms`."""
     described = formulas_of(given)
     columns: dict[str, Any] = {
         "row": raw["row"].to_arrow(),
@@ -152,7 +152,7 @@ def _table(raw: pl.DataFrame, given: CrystalBatch, canonical: CanonicalBatch, fa
 
 
 def crystal_columns(given: CrystalBatch, canonical: CanonicalBatch) -> dict[str, Any]:
-    """The columns of `crystals`, and sites_primitive; `given` holds the accepted crystals alone."""
+    """The columns of `canonical_forms`, and sites_primitive; `given` holds the accepted crystals alone."""
     crystal = canonical.crystals
     cells = crystal.cells
     edges = np.linalg.norm(cells, axis=2)

@@ -37,7 +37,11 @@ TABLES: dict[str, Table] = {
     ),
     "store_facts": _table(
         "Facts about the store itself.",
-        ("name", "VARCHAR", "store_id (made once), publication (counts up with every publication), recomputing (plan of an unfinished one)."),
+        (
+            "name",
+            "VARCHAR",
+            "store_id (made once), publication (counts up with every publication), recomputing (plan of an unfinished one).",
+        ),
         ("value", "VARCHAR", "The value as text."),
     ),
     "stage_settings": _table(
@@ -150,7 +154,7 @@ TABLES: dict[str, Table] = {
         ("species", "VARCHAR[]", "Species tokens in the order given."),
         ("positions_fractional", "DOUBLE[]", "Given positions, x y z a site, fractional."),
     ),
-    "crystals": _table(
+    "canonical_forms": _table(
         "One row a record: its canonical form, and how the given cell is rebuilt from it "
         "(given cell = matrix . canonical cell . rotation).",
         ("record_id", "VARCHAR", "The record."),
@@ -228,6 +232,7 @@ TABLES: dict[str, Table] = {
 }
 
 VIEWS: dict[str, str] = {
+    "crystals": "Canonical form of each record: what queries on lattices are put to.",
     "current_records": "Records that take part in results: neither missing from their file nor withdrawn.",
     "withdrawn_records": "Records that an open withdrawal takes out of every result, with the reason.",
 }

@@ -14,10 +14,15 @@ from .schema import known_version, stored_version
 def open_for_reading(path: Path) -> duckdb.DuckDBPyConnection:
     """The published store, read-only. Raises StoreError (missing, held by a writer, damaged, newer, or no store)."""
     if not path.exists():
-        raise StoreError(f"There is no store at {path}. Make one with: lattice-census ingest PATH --store {path}")
+        raise no_store(path)
     connection = _connect(path, read_only=True)
     _check_version(connection, path)
     return connection
+
+
+def no_store(path: Path) -> StoreError:
+    """The error for a store that is not there."""
+    return StoreError(f"There is no store at {path}. Make one with: lattice-census ingest PATH --store {path}")
 
 
 def open_for_writing(path: Path) -> duckdb.DuckDBPyConnection:

@@ -3,12 +3,14 @@
 from __future__ import annotations
 
 import json
+from pathlib import Path
 from typing import Any
 
 import duckdb
 
-from ..errors import UsageError
+from ..errors import StoreError, UsageError
 from ..settings import STAGES, Settings
+from .connect import open_for_reading
 
 
 def stored_settings(connection: duckdb.DuckDBPyConnection) -> dict[str, Any]:
@@ -52,3 +54,25 @@ def record_settings(connection: duckdb.DuckDBPyConnection, settings: Settings, s
         connection.execute("DELETE FROM stage_settings WHERE stage = ?", [stage])
         for name, value in settings.of_stage(stage).items():
             connection.execute("INSERT INTO stage_settings VALUES (?, ?, ?)", [stage, name, json.dumps(value)])
+
+
+def settings_of_store(published: Path) -> dict[str, Any]:
+    """The stage settings of a store by its published file, {} where there is none yet. Read-only.
+
+    They stand in `settings.json` of the work folder too, so that they are known while a reader elsewhere has the file
+    locked.
+    """
+    beside = published.with_name(published.name + ".work") / "settings.json"
+    if beside.exists():
+        try:
+            found = json.loads(beside.read_text(encoding="utf-8"))
+        except ValueError as error:
+            raise StoreError(f"{beside} is damaged: remove it and give the command again.") from error
+        return dict(found)
+    if not published.exists():
+        return {}
+    connection = open_for_reading(published)
+    try:
+        return stored_settings(connection)
+    finally:
+        connection.close()

@@ -14,10 +14,11 @@ from typing import Any
 import duckdb
 
 from ..errors import StoreError
-from .connect import open_for_reading, open_for_writing
+from .connect import no_store, open_for_reading, open_for_writing
 from .lock import WriterLock
 from .publish import mark_of, publish
 from .schema import migrate
+from .stages import stored_settings
 
 
 class Workspace:
@@ -27,19 +28,29 @@ class Workspace:
     `lock`, and `published.json` (how the published file looked when it was last put in place).
     """
 
-    def __init__(self, published: Path, command: str, wait_seconds: float = 0.0, scratch: bool = False) -> None:
-        """scratch: work on a copy that is thrown away at the end (a dry run)."""
+    def __init__(
+        self,
+        published: Path,
+        command: str,
+        wait_seconds: float = 0.0,
+        scratch: bool = False,
+        must_exist: bool = False,
+    ) -> None:
+        """scratch: work on a copy that is thrown away at the end (a dry run). must_exist: make no new store."""
         self.published = published.absolute()
         self.folder = self.published.with_name(self.published.name + ".work")
         self.work_file = self.folder / "work.duckdb"
         self.parts = self.folder / "parts"
         self._scratch = scratch
+        self._must_exist = must_exist
         self._lock = WriterLock(self.folder / "lock", command, wait_seconds)
         self._connection: duckdb.DuckDBPyConnection | None = None
 
     def __enter__(self) -> Workspace:
         if self.published.is_dir():
             raise StoreError(f"{self.published} is a folder; --store names a file.")
+        if self._must_exist and not self.published.exists() and not self.work_file.exists():
+            raise no_store(self.published)
         try:
             self._lock.__enter__()
         except OSError as error:
@@ -96,14 +107,13 @@ class Workspace:
         connection.execute("INSERT INTO store_facts VALUES ('publication', ?)", [str(number)])
         connection.execute("COMMIT")
         newest = connection.execute("SELECT coalesce(max(run_id), 0) FROM runs").fetchone()
+        settings = stored_settings(connection)
         connection.execute("CHECKPOINT")
         connection.close()
         self._connection = None
         publish(self.work_file, self.published)
-        temporary = self.folder / "published.json.new"
-        facts = {"mark": mark_of(self.published), "run": int(newest[0]) if newest else 0}
-        temporary.write_text(json.dumps(facts), encoding="utf-8")
-        temporary.replace(self.folder / "published.json")
+        self._write("settings.json", settings)
+        self._write("published.json", {"mark": mark_of(self.published), "run": int(newest[0]) if newest else 0})
         self._connection = open_for_writing(self.work_file)
 
     def clear_parts(self) -> None:
@@ -136,6 +146,11 @@ class Workspace:
                 f"publication {theirs[1]} of store {theirs[0][:8]}, the folder holds {ours[1]} of {ours[0][:8]}). "
                 "To go on from the file, move the folder away; to go on from the folder, move the file away."
             )
+
+    def _write(self, name: str, facts: dict[str, Any]) -> None:
+        temporary = self.folder / f"{name}.new"
+        temporary.write_text(json.dumps(facts), encoding="utf-8")
+        temporary.replace(self.folder / name)
 
     def _published_facts(self) -> dict[str, Any]:
         try:

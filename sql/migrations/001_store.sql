@@ -211,7 +211,7 @@ COMMENT ON COLUMN structures.cell_angstrom IS 'Given cell, rows a, b, c, Cartesi
 COMMENT ON COLUMN structures.species IS 'Species tokens in the order given.';
 COMMENT ON COLUMN structures.positions_fractional IS 'Given positions, x y z a site, fractional.';
 
-CREATE TABLE crystals (
+CREATE TABLE canonical_forms (
     record_id VARCHAR,
     crystal_key VARCHAR,
     a_angstrom DOUBLE,
@@ -235,29 +235,29 @@ CREATE TABLE crystals (
     site_shift INTEGER[],
     pseudo_matrix INTEGER[9]
 );
-COMMENT ON TABLE crystals IS 'One row a record: its canonical form, and how the given cell is rebuilt from it (given cell = matrix . canonical cell . rotation).';
-COMMENT ON COLUMN crystals.record_id IS 'The record.';
-COMMENT ON COLUMN crystals.crystal_key IS 'SHA-256 of the canonical integers: equal keys prove one crystal.';
-COMMENT ON COLUMN crystals.a_angstrom IS 'Edge a of the reduced cell, angstrom.';
-COMMENT ON COLUMN crystals.b_angstrom IS 'Edge b of the reduced cell, angstrom.';
-COMMENT ON COLUMN crystals.c_angstrom IS 'Edge c of the reduced cell, angstrom.';
-COMMENT ON COLUMN crystals.alpha_deg IS 'Angle alpha of the reduced cell, degrees.';
-COMMENT ON COLUMN crystals.beta_deg IS 'Angle beta of the reduced cell, degrees.';
-COMMENT ON COLUMN crystals.gamma_deg IS 'Angle gamma of the reduced cell, degrees.';
-COMMENT ON COLUMN crystals.volume_angstrom3_per_site IS 'Volume per site, cubic angstrom.';
-COMMENT ON COLUMN crystals.supercell_index IS 'How many primitive cells the given cell holds.';
-COMMENT ON COLUMN crystals.residual_angstrom IS 'Largest distance of a given site from its canonical place, angstrom.';
-COMMENT ON COLUMN crystals.pseudo_index IS 'How many approximate primitive cells the primitive cell holds; 1 if none.';
-COMMENT ON COLUMN crystals.pseudo_residual_angstrom IS 'Largest distance of a site from the mean of its approximate images.';
-COMMENT ON COLUMN crystals.cell_angstrom IS 'Reduced cell, rows a, b, c; a along x, b in the xy plane; angstrom.';
-COMMENT ON COLUMN crystals.species IS 'Species tokens of the sorted basis.';
-COMMENT ON COLUMN crystals.positions_fractional IS 'Sorted basis, x y z a site, fractional in the reduced cell.';
-COMMENT ON COLUMN crystals.matrix IS 'Integer matrix: given cell = matrix . reduced cell . rotation.';
-COMMENT ON COLUMN crystals.rotation IS 'Proper rotation that turns the reduced cell into the given frame (row vectors).';
-COMMENT ON COLUMN crystals.origin_fractional IS 'Origin of the sorted basis in the given structure, in the reduced cell.';
-COMMENT ON COLUMN crystals.site_map IS 'For each given site, the canonical site it is an image of, from 0.';
-COMMENT ON COLUMN crystals.site_shift IS 'For each given site, the lattice translation to it, x y z a site.';
-COMMENT ON COLUMN crystals.pseudo_matrix IS 'Integer matrix: reduced cell = pseudo_matrix . approximate primitive cell.';
+COMMENT ON TABLE canonical_forms IS 'One row a record: its canonical form, and how the given cell is rebuilt from it (given cell = matrix . canonical cell . rotation).';
+COMMENT ON COLUMN canonical_forms.record_id IS 'The record.';
+COMMENT ON COLUMN canonical_forms.crystal_key IS 'SHA-256 of the canonical integers: equal keys prove one crystal.';
+COMMENT ON COLUMN canonical_forms.a_angstrom IS 'Edge a of the reduced cell, angstrom.';
+COMMENT ON COLUMN canonical_forms.b_angstrom IS 'Edge b of the reduced cell, angstrom.';
+COMMENT ON COLUMN canonical_forms.c_angstrom IS 'Edge c of the reduced cell, angstrom.';
+COMMENT ON COLUMN canonical_forms.alpha_deg IS 'Angle alpha of the reduced cell, degrees.';
+COMMENT ON COLUMN canonical_forms.beta_deg IS 'Angle beta of the reduced cell, degrees.';
+COMMENT ON COLUMN canonical_forms.gamma_deg IS 'Angle gamma of the reduced cell, degrees.';
+COMMENT ON COLUMN canonical_forms.volume_angstrom3_per_site IS 'Volume per site, cubic angstrom.';
+COMMENT ON COLUMN canonical_forms.supercell_index IS 'How many primitive cells the given cell holds.';
+COMMENT ON COLUMN canonical_forms.residual_angstrom IS 'Largest distance of a given site from its canonical place, angstrom.';
+COMMENT ON COLUMN canonical_forms.pseudo_index IS 'How many approximate primitive cells the primitive cell holds; 1 if none.';
+COMMENT ON COLUMN canonical_forms.pseudo_residual_angstrom IS 'Largest distance of a site from the mean of its approximate images.';
+COMMENT ON COLUMN canonical_forms.cell_angstrom IS 'Reduced cell, rows a, b, c; a along x, b in the xy plane; angstrom.';
+COMMENT ON COLUMN canonical_forms.species IS 'Species tokens of the sorted basis.';
+COMMENT ON COLUMN canonical_forms.positions_fractional IS 'Sorted basis, x y z a site, fractional in the reduced cell.';
+COMMENT ON COLUMN canonical_forms.matrix IS 'Integer matrix: given cell = matrix . reduced cell . rotation.';
+COMMENT ON COLUMN canonical_forms.rotation IS 'Proper rotation that turns the reduced cell into the given frame (row vectors).';
+COMMENT ON COLUMN canonical_forms.origin_fractional IS 'Origin of the sorted basis in the given structure, in the reduced cell.';
+COMMENT ON COLUMN canonical_forms.site_map IS 'For each given site, the canonical site it is an image of, from 0.';
+COMMENT ON COLUMN canonical_forms.site_shift IS 'For each given site, the lattice translation to it, x y z a site.';
+COMMENT ON COLUMN canonical_forms.pseudo_matrix IS 'Integer matrix: reduced cell = pseudo_matrix . approximate primitive cell.';
 
 CREATE TABLE rejects (
     source VARCHAR,
@@ -338,6 +338,9 @@ COMMENT ON COLUMN id_changes.group_before IS 'Group id before; NULL where it had
 COMMENT ON COLUMN id_changes.group_after IS 'Group id after; NULL where it has none.';
 COMMENT ON COLUMN id_changes.family_before IS 'Family id before; NULL where it had none.';
 COMMENT ON COLUMN id_changes.family_after IS 'Family id after; NULL where it has none.';
+
+CREATE VIEW crystals AS SELECT * FROM canonical_forms;
+COMMENT ON VIEW crystals IS 'Canonical form of each record: what queries on lattices are put to.';
 
 CREATE VIEW withdrawn_records AS
 SELECT r.record_id, r.source, r.label, min(w.withdrawal_id) AS withdrawal_id, min_by(w.reason, w.withdrawal_id) AS reason

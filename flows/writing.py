@@ -1,0 +1,230 @@
+"""Commands that write to a store: ingest, withdraw, undo, run, demo."""
+
+from __future__ import annotations
+
+import json
+from pathlib import Path
+from typing import TYPE_CHECKING, Annotated, Any
+
+import typer
+
+from .options import (
+    DEFAULT_STORE,
+    DirectOption,
+    FailOnOption,
+    JsonOption,
+    QuietOption,
+    SetOption,
+    SettingsOption,
+    StoreOption,
+    WaitOption,
+    WorkersOption,
+    fail_on,
+    settings_from,
+)
+
+if TYPE_CHECKING:
+    from lattice_census.ingest.scan import IngestRequest
+
+PathsArgument = Annotated[list[Path], typer.Argument(metavar="PATH...", help="Files or folders of structures.")]
+SourceOption = Annotated[str | None, typer.Option("--source", help="Name of the source [default: the PATH's own].")]
+IdColumn = Annotated[str | None, typer.Option("--id-column", help="Column of the label.")]
+StructureColumn = Annotated[str | None, typer.Option("--structure-column", help="Column of the structure text.")]
+EnergyColumn = Annotated[str | None, typer.Option("--energy-column", help="Column or key of the energy.")]
+EnergyUnit = Annotated[
+    str | None, typer.Option("--energy-unit", help="eV, Ha, Ry, kJ/mol (of the given cell) or eV/site.")
+]
+Theory = Annotated[str | None, typer.Option("--theory", help="Level of theory of all records.")]
+TheoryColumn = Annotated[str | None, typer.Option("--theory-column", help="Column or key of the level of theory.")]
+SplitColumn = Annotated[str | None, typer.Option("--split-column", help="Column or key of the set (train, test ...).")]
+DateColumn = Annotated[str | None, typer.Option("--date-column", help="Column or key of the record's own date.")]
+RecomputeOption = Annotated[
+    bool, typer.Option("--recompute", help="Compute anew what a changed setting makes out of date.")
+]
+DryRunOption = Annotated[bool, typer.Option("--dry-run", help="Print the counts alone; change nothing.")]
+
+
+def register(app: typer.Typer) -> None:
+    """Add the commands of this module."""
+    app.command("ingest")(ingest)
+    app.command("run")(run)
+    app.command("withdraw")(withdraw)
+    app.command("undo")(undo)
+    app.command("demo")(demo)
+
+
+def ingest(
+    paths: PathsArgument,
+    store: StoreOption = DEFAULT_STORE,
+    source: SourceOption = None,
+    id_column: IdColumn = None,
+    structure_column: StructureColumn = None,
+    energy_column: EnergyColumn = None,
+    energy_unit: EnergyUnit = None,
+    theory: Theory = None,
+    theory_column: TheoryColumn = None,
+    split_column: SplitColumn = None,
+    date_column: DateColumn = None,
+    recompute: RecomputeOption = False,
+    dry_run: DryRunOption = False,
+    direct: DirectOption = False,
+    workers: WorkersOption = None,
+    wait: WaitOption = 0.0,
+    settings: SettingsOption = None,
+    assignments: SetOption = None,
+    as_json: JsonOption = False,
+    quiet: QuietOption = False,
+    fails: FailOnOption = None,
+) -> int:
+    """Read structures into the store, each in its canonical cell; refuse what cannot be read, by name."""
+    failing = fail_on(fails, ("rejects",))
+    request = _request(
+        paths, source, recompute, id_column=id_column, structure_column=structure_column, energy_column=energy_column,
+        energy_unit=energy_unit, theory=theory, theory_column=theory_column, split_column=split_column,
+        date_column=date_column,
+    )  # fmt: skip
+    counts = _ingest("ingest", request, store, dry_run, direct, workers, wait, settings, assignments, quiet)
+    typer.echo(json.dumps(counts) if as_json else ingest_text(counts, dry_run))
+    return 1 if "rejects" in failing and counts.get("rejected") else 0
+
+
+def run(
+    paths: PathsArgument,
+    store: StoreOption = DEFAULT_STORE,
+    source: SourceOption = None,
+    export: Annotated[
+        Path | None, typer.Option("--export", metavar="DIR", help="Export the kept records into this new folder.")
+    ] = None,
+    recompute: RecomputeOption = False,
+    direct: DirectOption = False,
+    workers: WorkersOption = None,
+    wait: WaitOption = 0.0,
+    settings: SettingsOption = None,
+    assignments: SetOption = None,
+    as_json: JsonOption = False,
+    quiet: QuietOption = False,
+    fails: FailOnOption = None,
+) -> int:
+    """What a night does: ingest, group, and, where a folder is given, export."""
+    from lattice_census.output.export import export as export_to
+    from lattice_census.store.connect import open_for_reading
+
+    failing = fail_on(fails, ("rejects",))
+    request = _request(paths, source, recompute)
+    counts = _ingest("run", request, store, False, direct, workers, wait, settings, assignments, quiet)
+    exported = None
+    if export is not None:
+        connection = open_for_reading(store)
+        try:
+            exported = export_to(connection, export, "key", "cif")
+        finally:
+            connection.close()
+    if as_json:
+        told = {"kept": exported.kept, "set_aside": exported.set_aside, "folder": str(export)} if exported else None
+        typer.echo(json.dumps({"ingest": counts, "export": told}))
+    else:
+        typer.echo(ingest_text(counts, False))
+        if exported:
+            typer.echo(f"Exported to {export}: {exported.kept:,} kept, {exported.set_aside:,} set aside.")
+    return 1 if "rejects" in failing and counts.get("rejected") else 0
+
+
+def _request(paths: list[Path], source: str | None, recompute: bool, **source_settings: Any) -> IngestRequest:
+    from lattice_census.errors import UsageError
+    from lattice_census.ingest.scan import IngestRequest
+    from lattice_census.settings import SourceSettings
+    from pydantic import ValidationError
+
+    given = {name: value for name, value in source_settings.items() if value is not None}
+    try:
+        SourceSettings.model_validate(given)
+    except ValidationError as error:
+        first = error.errors()[0]
+        option = "--" + str(first["loc"][0]).replace("_", "-")
+        raise UsageError(f"{option} {first['input']}: {first['msg']}.") from error
+    return IngestRequest(tuple(paths), source, given, recompute)
+
+
+def _ingest(
+    command: str, request: IngestRequest, store: Path, dry_run: bool, direct: bool, workers: int | None, wait: float,
+    settings: Path | None, assignments: list[str] | None, quiet: bool,
+) -> dict[str, Any]:  # fmt: skip
+    from .ingest import IngestJob
+    from .ingest import ingest as steps
+    from .progress import progress_for
+
+    options = {"workers": workers, "orchestrator": "direct" if direct else None}
+    resolved = settings_from(settings, assignments, store, options)
+    job = IngestJob(store, request, resolved, wait, dry_run)
+    with progress_for(quiet) as progress:
+        if resolved.orchestrator == "direct":
+            from lattice_census.ingest.progress import call_directly
+
+            return steps(job, call_directly, progress, command)
+        from .orchestrate import run_as_flow, task_step
+
+        return run_as_flow(command, lambda: steps(job, task_step, progress, command))
+
+
+def ingest_text(counts: dict[str, Any], dry_run: bool) -> str:
+    """The counts of an ingest in sentences."""
+    if counts.get("nothing_new"):
+        return "Nothing new: every file is as it was read before."
+    lines = [
+        ("A dry run; nothing was changed. It would be:\n" if dry_run else f"Run {counts['run']}: ")
+        + f"{counts['found']:,} records found in {counts['files_read']:,} files = "
+        f"{counts['accepted']:,} accepted + {counts['rejected']:,} refused; "
+        f"{counts['files_unchanged']:,} files unchanged.",
+        f"Of the accepted {counts['new']:,} new, {counts['amended']:,} amended, {counts['replaced']:,} replaced, "
+        f"{counts['unchanged']:,} unchanged; {counts['missing']:,} missing from their files.",
+    ]
+    if counts["reasons"]:
+        told = ", ".join(f"{reason} {number:,}" for reason, number in counts["reasons"].items())
+        lines.append(f"Refused: {told}.")
+    for source in counts["no_unit"]:
+        lines.append(
+            f"The energies of {source} have no unit and stay in `properties`; give --energy-unit to compare them."
+        )
+    return "\n".join(lines)
+
+
+def withdraw(
+    what: Annotated[str, typer.Argument(metavar="SOURCE|RECORD", help="A source, a record id, or SOURCE:LABEL.")],
+    reason: Annotated[str, typer.Option("--reason", help="Why, for those who come after.")],
+    store: StoreOption = DEFAULT_STORE,
+    wait: WaitOption = 0.0,
+    as_json: JsonOption = False,
+) -> None:
+    """Take a source or a record out of every later result; `undo` takes that back. Nothing is deleted."""
+    from .deciding import withdraw as act
+
+    done = act(store, what, reason, wait)
+    word = "record" if done["withdrawn"] == 1 else "records"
+    typer.echo(json.dumps(done) if as_json else f"Run {done['run']}: withdrew {done['withdrawn']:,} {word}.")
+
+
+def undo(
+    what: Annotated[str, typer.Argument(metavar="RUN|RECORD", help="A run's number, a record, or a source.")],
+    store: StoreOption = DEFAULT_STORE,
+    wait: WaitOption = 0.0,
+    as_json: JsonOption = False,
+) -> None:
+    """Take back the withdrawals of a run, a record or a source."""
+    from .deciding import undo as act
+
+    done = act(store, what, wait)
+    typer.echo(json.dumps(done) if as_json else f"Run {done['run']}: restored {', '.join(done['restored'])}.")
+
+
+def demo(
+    folder: Annotated[Path, typer.Argument(metavar="DIR", help="New folder for the demo.")] = Path(
+        "lattice-census-demo"
+    ),
+    direct: DirectOption = False,
+    workers: WorkersOption = None,
+    quiet: QuietOption = False,
+) -> int:
+    """Make a small invented collection and run everything on it."""
+    from .demo import run_demo
+
+    return run_demo(folder, direct, workers, quiet)

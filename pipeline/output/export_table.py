@@ -1,0 +1,97 @@
+"""The kept records as one table: the input's own columns where they can still be read, ours prefixed `census_`."""
+
+from __future__ import annotations
+
+import hashlib
+import json
+from pathlib import Path
+from typing import Literal
+
+import duckdb
+import polars as pl
+
+from .cif import cif_text
+from .structures import given_structures
+
+OURS = (
+    "record_id", "source", "label", "formula", "sites_given", "sites_primitive", "crystal_key",
+    "volume_angstrom3_per_site", "energy_ev_per_site", "theory", "split", "group_size",
+)  # fmt: skip
+
+
+def write_table(
+    connection: duckdb.DuckDBPyConnection, kept: pl.DataFrame, path: Path, form: Literal["csv", "parquet"]
+) -> list[str]:
+    """Write the table of the kept records; returns sentences about rows that could not be taken from their input.
+
+    kept: rows of export.KEPT. A record of a CSV, Parquet or JSON-lines file whose bytes are still those that were read
+    keeps all its input columns as they stand there; any other record gets `label`, its properties, and `cif` written
+    from the store (the structure as it came).
+    """
+    parts, notes = [], []
+    for (source, file), rows in kept.group_by(["source", "file"], maintain_order=True):
+        original = _original(connection, str(source), str(file), rows)
+        if original is None:
+            original = _from_store(connection, rows)
+            if Path(str(file)).suffix in (".csv", ".parquet", ".jsonl"):
+                notes.append(f"{source}: {file} is not the file that was read; its records are written from the store.")
+        ours = rows.select(OURS).rename({name: f"census_{name}" for name in OURS})
+        parts.append(pl.concat([original, ours], how="horizontal"))
+    table = pl.concat(parts, how="diagonal_relaxed") if parts else pl.DataFrame()
+    if form == "csv":
+        table.write_csv(path)
+    else:
+        table.write_parquet(path)
+    return notes
+
+
+def _original(connection: duckdb.DuckDBPyConnection, source: str, file: str, rows: pl.DataFrame) -> pl.DataFrame | None:
+    """The input's own columns of these rows, by place in the file; None where the file is no table or has changed."""
+    fact = connection.execute(
+        "SELECT s.root, s.kind, f.sha256 FROM sources s JOIN files f USING (source) WHERE s.source = ? AND f.file = ?",
+        [source, file],
+    ).fetchone()
+    if fact is None:
+        return None
+    path = Path(fact[0]) if fact[1] == "file" else Path(fact[0]) / file
+    readers = {".csv": _scan_csv, ".parquet": pl.scan_parquet, ".jsonl": pl.scan_ndjson}
+    scan = readers.get(path.suffix)
+    if scan is None or not path.is_file():
+        return None
+    with path.open("rb") as f:
+        if hashlib.file_digest(f, "sha256").hexdigest() != fact[2]:
+            return None
+    places = rows.select(pl.col("position").cast(pl.Int64).alias("census_place"))
+    frame = scan(path).with_row_index("census_place").with_columns(pl.col("census_place").cast(pl.Int64))
+    return (
+        places.lazy().join(frame, on="census_place", how="left", maintain_order="left").drop("census_place").collect()
+    )
+
+
+def _scan_csv(path: Path) -> pl.LazyFrame:
+    """Every column as the text that stands in the file, so that numbers keep their digits."""
+    return pl.scan_csv(path, infer_schema=False)
+
+
+def _from_store(connection: duckdb.DuckDBPyConnection, rows: pl.DataFrame) -> pl.DataFrame:
+    connection.register("wanted", rows.select("record_id").with_row_index("place").to_arrow())
+    try:
+        texts = connection.sql(
+            "SELECT r.properties FROM wanted w JOIN records r USING (record_id) ORDER BY w.place"
+        ).fetchall()
+    finally:
+        connection.unregister("wanted")
+    properties = [{k: _plain(v) for k, v in json.loads(text).items()} for (text,) in texts]
+    cifs = [
+        cif_text(cell, positions, species, name=label)
+        for label, (cell, species, positions) in zip(rows["label"], given_structures(connection, rows), strict=True)
+    ]
+    frame = pl.DataFrame({"label": rows["label"], "cif": pl.Series(cifs, dtype=pl.String)})
+    if not any(properties):
+        return frame
+    extra = pl.from_dicts(properties, infer_schema_length=None, strict=False)
+    return pl.concat([frame, extra.select(c for c in extra.columns if c not in ("label", "cif"))], how="horizontal")
+
+
+def _plain(value: object) -> object:
+    return value if value is None or isinstance(value, bool | int | float | str) else json.dumps(value)

@@ -1,0 +1,36 @@
+"""Fixtures that several test modules use."""
+
+from __future__ import annotations
+
+from collections.abc import Callable
+from pathlib import Path
+from typing import Any
+
+import pytest
+
+from lattice_census.ingest.progress import Silent, call_directly
+
+
+@pytest.fixture
+def ingest(tmp_path: Path) -> Callable[..., dict[str, Any]]:
+    """Run an ingest into tmp_path/census.duckdb without an orchestrator; returns its counts."""
+    from lattice_census.flows.ingest import IngestJob
+    from lattice_census.flows.ingest import ingest as steps
+    from lattice_census.ingest.scan import IngestRequest
+    from lattice_census.settings import resolve_settings
+
+    def run(
+        *paths: Path,
+        store: Path | None = None,
+        source: str | None = None,
+        recompute: bool = False,
+        dry_run: bool = False,
+        of_source: dict[str, Any] | None = None,
+        **settings: Any,
+    ) -> dict[str, Any]:
+        options = {"workers": 1, "orchestrator": "direct", **settings}
+        request = IngestRequest(tuple(paths), source, of_source or {}, recompute)
+        job = IngestJob(store or tmp_path / "census.duckdb", request, resolve_settings(options, {}), 0.0, dry_run)
+        return steps(job, call_directly, Silent())
+
+    return run
