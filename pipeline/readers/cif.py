@@ -30,7 +30,7 @@ from .sites import (
     parse_each,
 )
 from .space_group_names import operations_of_names
-from .streams import blocks_of, clean_text
+from .streams import blocks_of, clean_text, decoded
 from .symmetry import Operations, expand, operations_of
 
 _LENGTHS = tuple(f"_cell_{part}" for part in ("length_a", "length_b", "length_c"))
@@ -157,22 +157,14 @@ class _Block:
         if self._size > self._limit:
             message = f"the data block has {self._size} bytes; the setting max_text_bytes allows {self._limit}"
             return RawRecord(label, None, {}, Refusal("text_too_long", message))
-        text = _decoded(b"".join(self._pieces))
+        text = decoded(b"".join(self._pieces))
         if not text.strip():
             return RawRecord(label, None, {}, Refusal("text_unreadable", "the file holds no data block"))
         return RawRecord(label, text, {})
 
 
 def _block_name(raw: bytes) -> str:
-    return clean_text(_decoded(raw))
-
-
-def _decoded(raw: bytes) -> str:
-    """UTF-8, or ISO 8859-1 where it is not: numbers and symbols are ASCII in both, only prose may differ."""
-    try:
-        return raw.decode()
-    except UnicodeDecodeError:
-        return raw.decode("latin-1")
+    return clean_text(decoded(raw))
 
 
 def _parse_one(builder: BatchBuilder, row: int, text: str, max_sites: int) -> None:

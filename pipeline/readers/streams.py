@@ -62,6 +62,14 @@ def _lines(block: bytes) -> Iterator[bytes]:
         yield block[start:]
 
 
+def decoded(raw: bytes) -> str:
+    """UTF-8, or ISO 8859-1 where it is not: numbers and symbols are ASCII in both, only prose may differ."""
+    try:
+        return raw.decode()
+    except UnicodeDecodeError:
+        return raw.decode("latin-1")
+
+
 def clean_text(text: str) -> str:
     """A label or name that can be stored as UTF-8 and joined by NUL: control characters and lone surrogates replaced.
 

@@ -1,0 +1,353 @@
+"""Files as they stand on disk: plain, compressed, or archives, opened as streams of members and of raw records.
+
+Archives are streamed: nothing is unpacked to disk (but for a temporary file where a format must be read from its end),
+and every limit is held by counting the bytes that really come out, not those that a header claims.
+"""
+
+from __future__ import annotations
+
+import bz2
+import gzip
+import io
+import lzma
+import re
+import stat
+import tarfile
+import zipfile
+import zlib
+from collections.abc import Callable, Iterator
+from dataclasses import dataclass
+from pathlib import Path
+from typing import IO, BinaryIO, cast
+
+from ..model.raw import FileRefused, RawRecord, Reader, SplitOptions
+from ..model.refusals import Refusal
+from . import reader_for
+from .detect import COMPRESSIONS, base_name, stem_of
+from .streams import CHUNK, clean_text
+
+_TAR = re.compile(r".*\.(?:tar|tgz|tbz2?|txz|tar\.(?:gz|bz2|xz))", re.IGNORECASE)
+_ARCHIVE = re.compile(r".*\.(?:zip|7z|rar|tar|tgz|tbz2?|txz|tar\.(?:gz|bz2|xz|zst))", re.IGNORECASE)
+_FAULTS = (
+    OSError,
+    EOFError,
+    zlib.error,
+    lzma.LZMAError,
+    zipfile.BadZipFile,
+    tarfile.TarError,
+    ValueError,
+    RuntimeError,
+)
+_BLOCK = 512
+
+
+@dataclass(frozen=True, slots=True)
+class ArchiveLimits:
+    """What an archive or a compressed file may come to."""
+
+    member_bytes: int = 8 << 30
+    """Bytes of one member."""
+
+    total_bytes: int = 64 << 30
+    """Bytes of all members."""
+
+    ratio: float = 500.0
+    """Bytes that come out over bytes that go in, once `ratio_after` bytes are out."""
+
+    ratio_after: int = 32 << 20
+
+    members: int = 1_000_000
+
+
+@dataclass(frozen=True, slots=True)
+class Member:
+    """One file, or one member of an archive; read its stream before asking for the next."""
+
+    file: str
+    """The name of the file, and for a member of an archive its path inside: `archive.zip/inner/a.cif`."""
+
+    stem: str
+    reader: Reader | None = None
+    """None where the format is not known (the member is ignored), or where it is refused."""
+
+    stream: BinaryIO | None = None
+    refusal: Refusal | None = None
+
+
+@dataclass(frozen=True, slots=True)
+class FoundRecord:
+    """A raw record and where it was found."""
+
+    file: str
+    reader: str
+    """The reader's name; empty where the file was refused before one was chosen."""
+
+    record: RawRecord
+
+
+def open_records(
+    path: Path, file: str, options: SplitOptions, limits: ArchiveLimits | None = None, explicit: bool = False
+) -> Iterator[FoundRecord]:
+    """The raw records of a file, in order, whatever it is packed in.
+
+    What cannot be read is one record more, with a refusal and the stem as its label: what was read before stays. A file
+    of no known format has no records, unless it was named (`explicit`): then it is refused.
+    """
+    for member in open_members(path, file, limits, explicit):
+        name = member.reader.name if member.reader is not None else ""
+        refusal = member.refusal
+        if member.reader is not None and member.stream is not None:
+            try:
+                for record in member.reader.split(member.stream, member.stem, options):
+                    yield FoundRecord(member.file, name, record)
+            except FileRefused as refused:
+                refusal = refused.refusal
+            except OSError as error:
+                refusal = _unreadable(error)
+        if refusal is not None:
+            yield FoundRecord(member.file, name, RawRecord(member.stem, None, {}, refusal))
+
+
+def open_members(
+    path: Path, file: str, limits: ArchiveLimits | None = None, explicit: bool = False
+) -> Iterator[Member]:
+    """The members of a file: one for a plain or compressed file, those of an archive in its order.
+
+    A member without reader and refusal is of no known format (or hidden) and is ignored. A member that is not safe or
+    not readable has a refusal; the others go on, as far as the archive can be followed.
+    """
+    limits = limits or ArchiveLimits()
+    try:
+        if zipfile_named(path.name):
+            yield from _zip_members(path, file, limits)
+        elif _TAR.fullmatch(path.name):
+            with path.open("rb") as raw:
+                yield from _tar_members(_compressed_stream(raw, path.name, limits, tar=True), file, limits)
+        else:
+            with path.open("rb") as raw:
+                packed = path.name.lower().endswith(COMPRESSIONS)
+                stream = _compressed_stream(raw, path.name, limits) if packed else raw
+                yield _member(stream, file, path.name, by_content=explicit, explicit=explicit)
+    except FileRefused as refused:
+        yield Member(file, stem_of(path.name), refusal=refused.refusal)
+    except _FAULTS as error:
+        yield Member(file, stem_of(path.name), refusal=_unreadable(error))
+
+
+def zipfile_named(name: str) -> bool:
+    """Whether the name is that of a zip archive."""
+    return name.lower().endswith(".zip")
+
+
+def _unreadable(error: BaseException) -> Refusal:
+    shown = error.strerror if isinstance(error, OSError) and error.strerror else str(error) or type(error).__name__
+    return Refusal("file_unreadable", shown, "read")
+
+
+def _unsafe(message: str) -> Refusal:
+    return Refusal("archive_unsafe", message, "read")
+
+
+def _member(stream: BinaryIO, file: str, name: str, by_content: bool = False, explicit: bool = False) -> Member:
+    try:
+        peek = getattr(stream, "peek", None)
+        head: bytes = peek(CHUNK) if peek is not None else b""
+    except FileRefused as refused:
+        return Member(file, stem_of(name), refusal=refused.refusal)
+    reader = reader_for(base_name(name), head, by_content)
+    if reader is None and explicit:
+        message = "neither the name nor the content shows a format that is known"
+        return Member(file, stem_of(name), refusal=Refusal("file_unreadable", message, "read"))
+    return Member(file, stem_of(name), reader, stream)
+
+
+class _Guarded(io.RawIOBase):
+    """A stream that counts what comes out of it, holds limits, and turns every fault into FileRefused."""
+
+    def __init__(self, source: IO[bytes], limit: int, ratio: Callable[[int], str | None], total: _Total) -> None:
+        self._read: Callable[[int], bytes] = getattr(source, "read1", source.read)
+        self._limit = limit
+        self._ratio = ratio
+        self._total = total
+        self._out = 0
+
+    def readable(self) -> bool:
+        return True
+
+    def readinto(self, buffer: bytearray | memoryview) -> int:  # type: ignore[override]
+        try:
+            data = self._read(len(buffer))
+        except FileRefused:
+            raise
+        except _FAULTS as error:
+            raise FileRefused(_unreadable(error)) from None
+        self._out += len(data)
+        self._total.out += len(data)
+        if self._out > self._limit:
+            raise FileRefused(_unsafe(f"more than {self._limit} bytes come out of it"))
+        if self._total.out > self._total.limit:
+            raise FileRefused(_unsafe(f"more than {self._total.limit} bytes come out of the archive"))
+        excess = self._ratio(self._out)
+        if excess is not None:
+            raise FileRefused(_unsafe(excess))
+        buffer[: len(data)] = data
+        return len(data)
+
+
+class _Total:
+    """Bytes that came out of all members of one archive."""
+
+    def __init__(self, limit: int) -> None:
+        self.limit = limit
+        self.out = 0
+
+
+def _buffered(guarded: _Guarded) -> BinaryIO:
+    return cast(BinaryIO, io.BufferedReader(guarded, CHUNK))
+
+
+def _ratio_check(limits: ArchiveLimits, went_in: Callable[[], int]) -> Callable[[int], str | None]:
+    def check(out: int) -> str | None:
+        if out > limits.ratio_after and out > limits.ratio * max(went_in(), 1):
+            return f"{out} bytes come out of {went_in()}: more than {limits.ratio:g} to 1"
+        return None
+
+    return check
+
+
+def _compressed_stream(raw: BinaryIO, name: str, limits: ArchiveLimits, tar: bool = False) -> BinaryIO:
+    """The decompressed content of an open file or member, guarded."""
+    went_in = _Counted(raw)
+    source = _decompressor(went_in, name)
+    limit = limits.total_bytes if tar else limits.member_bytes
+    return _buffered(_Guarded(source, limit, _ratio_check(limits, lambda: went_in.count), _Total(limits.total_bytes)))
+
+
+class _Counted(io.RawIOBase):
+    """Counts what is taken from a compressed stream."""
+
+    def __init__(self, source: BinaryIO) -> None:
+        self._source = source
+        self.count = 0
+
+    def readable(self) -> bool:
+        return True
+
+    def readinto(self, buffer: bytearray | memoryview) -> int:  # type: ignore[override]
+        data = self._source.read(min(len(buffer), 1 << 14))
+        self.count += len(data)
+        buffer[: len(data)] = data
+        return len(data)
+
+
+def _decompressor(raw: io.RawIOBase, name: str) -> IO[bytes]:
+    lower = name.lower()
+    if lower.endswith((".gz", ".tgz")):
+        return cast(IO[bytes], gzip.GzipFile(fileobj=raw, mode="rb"))
+    if lower.endswith((".bz2", ".tbz", ".tbz2")):
+        return cast(IO[bytes], bz2.BZ2File(raw))  # type: ignore[call-overload]
+    if lower.endswith((".xz", ".txz")):
+        return cast(IO[bytes], lzma.LZMAFile(raw))
+    return cast(IO[bytes], raw)
+
+
+def _refused_name(name: str) -> str | None:
+    """Why a member's path cannot be taken, or None."""
+    if not name or "\0" in name or any(ord(c) < 32 for c in name):
+        return "a path that is empty or has control characters"
+    if name.startswith(("/", "\\")) or re.match(r"[A-Za-z]:", name):
+        return "an absolute path"
+    if ".." in re.split(r"[/\\]", name):
+        return "a path that leads outside the archive"
+    return None
+
+
+def _inner(name: str) -> str:
+    """A member's path without `.` parts."""
+    return "/".join(p for p in re.split(r"[/\\]", name) if p not in ("", "."))
+
+
+def _is_hidden(inner: str) -> bool:
+    return any(part.startswith(".") or part == "__MACOSX" for part in inner.split("/"))
+
+
+def _archive_member(
+    name: str, file: str, unsafe: str | None, opened: Callable[[], BinaryIO], limits: ArchiveLimits
+) -> Member:
+    """The member of an archive by its own name; `opened` gives its guarded stream."""
+    unsafe = _refused_name(name) or unsafe
+    inner = clean_text(_inner(name))
+    full, stem = f"{file}/{inner}", stem_of(inner)
+    if unsafe is not None:
+        return Member(full, stem, refusal=_unsafe(f"{clean_text(name)}: {unsafe}"))
+    if _is_hidden(inner):
+        return Member(full, stem)
+    if _ARCHIVE.fullmatch(inner):
+        return Member(full, stem, refusal=_unsafe("an archive inside an archive is not opened"))
+    try:
+        stream = opened()
+        if inner.lower().endswith(COMPRESSIONS):
+            stream = _compressed_stream(stream, inner, limits)
+        return _member(stream, full, inner)
+    except FileRefused as refused:
+        return Member(full, stem, refusal=refused.refusal)
+    except (*_FAULTS, NotImplementedError) as error:
+        return Member(full, stem, refusal=_unreadable(error))
+
+
+def _zip_members(path: Path, file: str, limits: ArchiveLimits) -> Iterator[Member]:
+    total = _Total(limits.total_bytes)
+    with zipfile.ZipFile(path) as archive:
+        for number, info in enumerate(archive.infolist(), 1):
+            if number > limits.members:
+                raise FileRefused(_unsafe(f"more than {limits.members} members"))
+            if info.is_dir():
+                continue
+            mode = info.external_attr >> 16
+            # orig_filename keeps what zipfile.ZipInfo cuts off or rewrites.
+            unsafe = "a link" if stat.S_ISLNK(mode) else None
+            if total.out > total.limit:
+                raise FileRefused(_unsafe(f"more than {total.limit} bytes come out of the archive"))
+
+            def opened(info: zipfile.ZipInfo = info) -> BinaryIO:
+                ratio = _ratio_check(limits, lambda: info.compress_size)
+                return _buffered(_Guarded(archive.open(info), limits.member_bytes, ratio, total))
+
+            yield _archive_member(info.orig_filename, file, unsafe, opened, limits)
+
+
+class _Recorder:
+    """Hands a stream to tarfile block by block and remembers the last one, to tell an end mark from a broken header."""
+
+    def __init__(self, stream: BinaryIO) -> None:
+        self._stream = stream
+        self.last = b""
+
+    def read(self, size: int) -> bytes:
+        self.last = self._stream.read(size)
+        return self.last
+
+
+def _tar_members(stream: BinaryIO, file: str, limits: ArchiveLimits) -> Iterator[Member]:
+    blocks = _Recorder(stream)
+    total = _Total(limits.total_bytes)
+    with tarfile.open(fileobj=blocks, mode="r|", bufsize=_BLOCK) as archive:  # type: ignore[call-overload]
+        number = 0
+        while (info := archive.next()) is not None:
+            # tarfile would keep every header it has met.
+            archive.members = []
+            number += 1
+            if number > limits.members:
+                raise FileRefused(_unsafe(f"more than {limits.members} members"))
+            if info.isdir():
+                continue
+            unsafe = None if info.isreg() else "a link" if info.issym() or info.islnk() else "no regular file"
+
+            def opened(info: tarfile.TarInfo = info) -> BinaryIO:
+                content = archive.extractfile(info)
+                assert content is not None
+                return _buffered(_Guarded(content, limits.member_bytes, lambda out: None, total))
+
+            yield _archive_member(info.name, file, unsafe, opened, limits)
+        if len(blocks.last) < _BLOCK or blocks.last.strip(b"\0"):
+            raise FileRefused(Refusal("file_unreadable", f"the archive breaks off after {number} members", "read"))
