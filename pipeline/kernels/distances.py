@@ -11,8 +11,9 @@ from __future__ import annotations
 import math
 
 import numpy as np
-from numba import njit
 from numpy.typing import NDArray
+
+from .compiled import kernel
 
 SPHERE_SURPLUS = 1.3
 """Expected points in the first ball over k: few sites then need a second, larger one."""
@@ -21,7 +22,7 @@ RADIUS_GROWTH = 1.15
 """Factor on the radius while the ball holds fewer than k points."""
 
 
-@njit(cache=True, nogil=True)  # type: ignore[untyped-decorator]
+@kernel
 def lower_triangle(cell: NDArray[np.float64]) -> NDArray[np.float64]:
     """The lower-triangular cell of equal metric with positive diagonal: Gram-Schmidt on the rows of `cell` (3, 3)."""
     out = np.zeros((3, 3))
@@ -41,7 +42,7 @@ def lower_triangle(cell: NDArray[np.float64]) -> NDArray[np.float64]:
     return out
 
 
-@njit(cache=True, nogil=True)  # type: ignore[untyped-decorator]
+@kernel
 def _ball(
     low: NDArray[np.float64],
     f0: float,
@@ -93,7 +94,7 @@ def _ball(
     return used
 
 
-@njit(cache=True, nogil=True)  # type: ignore[untyped-decorator]
+@kernel
 def _sort_ball(
     values: NDArray[np.float64], lo: int, hi: int, radius2: float, scratch: NDArray[np.float64], ends: NDArray[np.int64]
 ) -> None:
@@ -124,7 +125,7 @@ def _sort_ball(
         values[u + 1] = v
 
 
-@njit(cache=True, nogil=True)  # type: ignore[untyped-decorator]
+@kernel
 def species_means(
     total: NDArray[np.float64], offsets: NDArray[np.int64], ranks: NDArray[np.int64], firsts: NDArray[np.int64]
 ) -> NDArray[np.float32]:
@@ -149,7 +150,7 @@ def species_means(
     return means
 
 
-@njit(cache=True, nogil=True)  # type: ignore[untyped-decorator]
+@kernel
 def neighbour_distances(
     cells: NDArray[np.float64],
     offsets: NDArray[np.int64],

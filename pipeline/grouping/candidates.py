@@ -1,0 +1,130 @@
+"""Candidates: every pair of one composition that a bound on distances cannot rule out.
+
+The bound. Let A and B match with largest shift D and strain s, in the mean metric G = (G_A + G_B) / 2. For paired sites p
+and q and any other paired sites p' and q', the vector q' - q is the image of p' - p under the lattice map plus the
+difference of two shifts. The map changes lengths by a factor of at most exp(s). Since G_A >= exp(-2s) G_B,
+G >= (1 + exp(-2s)) / 2 G_B >= exp(-s) G_B, so a shift of length D in G is at most exp(s/2) D long in G_B. Hence
+|q' - q| <= exp(s) |p' - p| + c with c = 2 exp(s/2) D. The pairing is one to one and keeps species, so the k sites nearest
+to p give k sites (of the same species each) within exp(s) d_k(p) + c of q:
+
+    d_k(q) <= exp(s) d_k(p) + c,  and likewise with p and q exchanged,
+
+for all neighbours and for the neighbours of one species. With y = ln(d + c / (exp(s) - 1)) this reads
+|y_k(p) - y_k(q)| <= s, because exp(s) d + c + c / (exp(s) - 1) = exp(s) (d + c / (exp(s) - 1)).
+
+What follows, in the order of the steps below; nothing that matches is lost in any:
+1. the common cell has 1/n of the sites of every species per site of the crystal on either side, so means over the sites of
+   a species are means over the common cell, whatever the two cells are. The bound is linear in d: it holds for the means;
+2. the volumes per site differ by at most the sum of three logarithms of stretches: |ln(V_A / V_B)| <= 3 s, so ln(V) / 3
+   is one coordinate more of the same Chebyshev ball;
+3. sorting two columns of numbers paired within s leaves them within s, place by place;
+4. every site has a partner whose row agrees, over all neighbours and by species.
+Means are stored in float32 and rows are transformed to float32: the slack holds the rounding of both sides.
+
+On crystals scaled to equal volume (`rescaled`, `isotypic`) the strain is shape strain and the same bound holds with the
+window's own s; c is in the units of the scale. For a pair scaled to the geometric mean of its volumes per site, with D in
+angstrom, everything is divided by that length. (A pair that matches within s as it is has strain at most 4 s / 3 there,
+(s, -s, -s) less its mean; it is found by the search that does not scale.)
+"""
+
+from __future__ import annotations
+
+import math
+from dataclasses import dataclass
+
+import numpy as np
+from numpy.typing import NDArray
+from scipy.spatial import cKDTree
+
+from ..kernels.rows_filter import pairs_allowed, sort_columns
+from ..model.batch import Floats, Ints
+from .preparation import Prepared, transform, transform_slack
+from .window import Window
+
+TREE_COLUMNS = (0, 3, 7, 12, 18, 25, 33, 42, 52, 63)
+"""Columns of the means that the tree holds (neighbouring columns say nearly the same); all of them are tested after."""
+
+BLOCK = 2_000_000
+"""Pairs handled at a time."""
+
+
+@dataclass(frozen=True, slots=True)
+class Candidates:
+    """Pairs left, with what each step left of them."""
+
+    pairs: Ints
+    """(p, 2) int64, first < second, ascending."""
+
+    steps: dict[str, int]
+    """Pairs after each step: volumes and tree, means, sorted columns, rows."""
+
+
+def mean_coordinates(means: NDArray[np.float32], volumes: Floats, window: Window) -> Floats:
+    """(n, 1 + r k): ln(V)/3 and the transformed means; two crystals of a match differ by at most the slack in each.
+
+    means (n, r, k): column means of each species of the centre, angstrom (or units of the scale); volumes (n,): per site.
+    """
+    n = len(means)
+    y = transform(means.astype(np.float64), window.shift, window.strain).reshape(n, -1)
+    return np.concatenate([np.log(volumes)[:, None] / 3.0, y], axis=1)
+
+
+def tree_columns(width: int, k: int) -> Ints:
+    """Which of the coordinates of `mean_coordinates` the tree holds: the volume and TREE_COLUMNS of each species."""
+    chosen = [0]
+    for start in range(1, width, k):
+        chosen += [start + c for c in TREE_COLUMNS if c < k]
+    return np.array(chosen, dtype=np.int64)
+
+
+def mean_pairs(coordinates: Floats, k: int, slack: float) -> tuple[Ints, dict[str, int]]:
+    """Pairs (p, 2) of rows whose coordinates all agree to the slack, ascending, and the counts of the steps."""
+    columns = tree_columns(coordinates.shape[1], k)
+    tree = cKDTree(coordinates[:, columns])
+    pairs = tree.query_pairs(slack, p=np.inf, output_type="ndarray").astype(np.int64).reshape(-1, 2)
+    kept = [
+        part[_all_close(coordinates, part, slack)]
+        for part in (pairs[i : i + BLOCK] for i in range(0, len(pairs), BLOCK))
+    ]
+    left = np.concatenate(kept) if kept else pairs
+    return left[np.lexsort((left[:, 1], left[:, 0]))], {"tree": len(pairs), "means": len(left)}
+
+
+def _all_close(coordinates: Floats, pairs: Ints, slack: float) -> NDArray[np.bool_]:
+    """Which pairs agree to the slack in every column, column by column so that most fall out early."""
+    alive = np.arange(len(pairs))
+    for column in range(coordinates.shape[1]):
+        if not len(alive):
+            break
+        values = coordinates[:, column]
+        alive = alive[np.abs(values[pairs[alive, 0]] - values[pairs[alive, 1]]) <= slack]
+    out = np.zeros(len(pairs), bool)
+    out[alive] = True
+    return out
+
+
+def candidate_pairs(prepared: Prepared, means: NDArray[np.float32], window: Window) -> Candidates:
+    """Every pair of a prepared batch of one composition that could match within the window.
+
+    means (n, r, k) float32: column means of the batch at the scale it was prepared at.
+    """
+    slack = transform_slack(window.strain)
+    pairs, steps = mean_pairs(mean_coordinates(means, prepared.volumes, window), means.shape[2], slack)
+    allowed, columns = allowed_pairs(prepared, pairs)
+    return Candidates(pairs[allowed], {**steps, "columns": columns, "rows": int(allowed.sum())})
+
+
+def allowed_pairs(prepared: Prepared, pairs: Ints) -> tuple[NDArray[np.bool_], int]:
+    """Which of the pairs the sorted columns and the rows cannot rule out, and how many the columns left."""
+    c = prepared.crystals
+    ordered = sort_columns(c.rows, c.blocks)
+    allowed, columns = pairs_allowed(pairs, c.blocks, c.rows, ordered, prepared.grouped, prepared.counts, c.slack)
+    return allowed, int(columns)
+
+
+def rescaled_shift(window: Window, volumes: Floats) -> float:
+    """Largest shift of a match in units of (V/site)^(1/3), for pairs scaled to the geometric mean of their volumes.
+
+    The smallest scale of the batch is taken for all, which only lets more through.
+    """
+    return window.shift / math.exp(float(np.log(volumes).min()) / 3.0)
