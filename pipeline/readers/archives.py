@@ -241,14 +241,14 @@ class _Counted(io.RawIOBase):
 
 
 def _decompressor(raw: io.RawIOBase, name: str) -> IO[bytes]:
-    lower = name.lower()
+    lower, source = name.lower(), cast(IO[bytes], raw)
     if lower.endswith((".gz", ".tgz")):
-        return cast(IO[bytes], gzip.GzipFile(fileobj=raw, mode="rb"))
+        return cast(IO[bytes], gzip.GzipFile(fileobj=source, mode="rb"))
     if lower.endswith((".bz2", ".tbz", ".tbz2")):
-        return cast(IO[bytes], bz2.BZ2File(raw))  # type: ignore[call-overload]
+        return cast(IO[bytes], bz2.BZ2File(source))
     if lower.endswith((".xz", ".txz")):
-        return cast(IO[bytes], lzma.LZMAFile(raw))
-    return cast(IO[bytes], raw)
+        return cast(IO[bytes], lzma.LZMAFile(source))
+    return source
 
 
 def _refused_name(name: str) -> str | None:
