@@ -1,4 +1,4 @@
-"""Species tokens and formulas, by the conventions of the OPTIMADE specification (chemical_formula_reduced, _anonymous)."""
+"""Species tokens and formulas; the conventions are those of the OPTIMADE specification."""
 
 import numpy as np
 import pytest

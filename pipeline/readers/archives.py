@@ -328,6 +328,33 @@ class _Recorder:
         return self.last
 
 
+class _TarContent:
+    """The content of a tar member, read block by block: tarfile would drop all of a read in which the archive ends."""
+
+    def __init__(self, content: IO[bytes]) -> None:
+        self._raw = getattr(content, "raw", content)
+        self._fault: BaseException | None = None
+
+    def read(self, size: int) -> bytes:
+        if self._fault is not None:
+            raise self._fault
+        pieces: list[bytes] = []
+        left = size
+        while left > 0:
+            try:
+                piece: bytes = self._raw.read(min(left, _BLOCK))
+            except (FileRefused, *_FAULTS) as fault:
+                if not pieces:
+                    raise
+                self._fault = fault
+                break
+            if not piece:
+                break
+            pieces.append(piece)
+            left -= len(piece)
+        return b"".join(pieces)
+
+
 def _tar_members(stream: BinaryIO, file: str, limits: ArchiveLimits) -> Iterator[Member]:
     blocks = _Recorder(stream)
     total = _Total(limits.total_bytes)
@@ -346,7 +373,9 @@ def _tar_members(stream: BinaryIO, file: str, limits: ArchiveLimits) -> Iterator
             def opened(info: tarfile.TarInfo = info) -> BinaryIO:
                 content = archive.extractfile(info)
                 assert content is not None
-                return _buffered(_Guarded(content, limits.member_bytes, lambda out: None, total))
+                return _buffered(
+                    _Guarded(cast(IO[bytes], _TarContent(content)), limits.member_bytes, lambda out: None, total)
+                )
 
             yield _archive_member(info.name, file, unsafe, opened, limits)
         if len(blocks.last) < _BLOCK or blocks.last.strip(b"\0"):

@@ -1,6 +1,6 @@
 """Crystallographic information files: cut at their data blocks, and parsed with the symmetry expanded.
 
-`split` streams and never holds more than two blocks. `parse` takes the grammar from gemmi and the meaning
+`split` streams and never holds more than one block. `parse` takes the grammar from gemmi and the meaning
 from the core dictionary of the IUCr (Hall, Allen & Brown 1991): listed operations are authoritative, else the Hall
 symbol, the Hermann-Mauguin name and the number, in that order; where nothing is stated there is no symmetry to add.
 """
@@ -85,7 +85,6 @@ class CifReader:
 
         A file in which no block has any is one record, to be refused.
         """
-        held: _Block | None = None
         blocks, given = 0, 0
         current = _Block("", options.max_text_bytes)
         in_text_field = False
@@ -101,20 +100,15 @@ class CifReader:
                 start = match.start()
                 blocks += 1
                 if blocks > 1:
-                    if held is not None:
-                        yield held.record(stem, True)
-                        given, held = given + 1, None
                     if current.structural:
-                        held = current
+                        yield current.record(stem, True)
+                        given += 1
                     current = _Block(_block_name(match[2]) or str(blocks), options.max_text_bytes)
                 else:
                     if current.only_comments:
                         current = _Block("", options.max_text_bytes)
                     current.name = _block_name(match[2]) or "1"
             current.take(piece[start:])
-        if held is not None:
-            yield held.record(stem, True)
-            given += 1
         if current.structural or not given:
             yield current.record(stem, blocks > 1)
 

@@ -113,7 +113,9 @@ def _frame(
     if met < count:
         message = f"frame {number} claims {count} sites and has {met}"
         return _broken(label, "text_unreadable", message), after
-    if after is not None and not _is_count(after):
+    # A line of a site where the count of the next frame should stand belongs to this frame; any other is the beginning
+    # of a broken frame.
+    if after is not None and len(after.split()) >= 4:
         message = f"frame {number} claims {count} sites and more lines follow"
         return _broken(label, "text_unreadable", message), _next_count(lines)
     words = any("=" in part for part in decoded(comment).split())

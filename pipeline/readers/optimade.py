@@ -7,7 +7,8 @@ vectors, positions, species) is refused by name.
 from __future__ import annotations
 
 import json
-from collections.abc import Iterable, Iterator, Sequence
+from collections.abc import Iterator, Sequence
+from itertools import chain, islice
 from typing import BinaryIO
 
 from ..model.raw import FileRefused, Parsed, ParseOptions, RawRecord, SplitOptions
@@ -55,9 +56,9 @@ class OptimadeReader:
         """
         lines = lines_of(stream, DOCUMENT_BYTES)
         number = 0
-        first = next((line for line in lines if line.strip()), b"")
-        if first.lstrip()[:1] == b"{" and first.rstrip()[-1:] == b"}":
-            for line in _and_then(first, lines):
+        begin = list(islice((line for line in lines if line.strip()), 2))
+        if any(map(_is_json, begin)) and begin[0].rstrip()[-1:] == b"}":
+            for line in chain(begin, lines):
                 if not line.strip():
                     continue
                 try:
@@ -71,7 +72,7 @@ class OptimadeReader:
                     number += 1
                     yield _record(entry, number, options.max_text_bytes)
             return
-        held, size = [first], len(first)
+        held, size = begin, sum(map(len, begin))
         for line in lines:
             size += len(line)
             if size > DOCUMENT_BYTES:
@@ -91,9 +92,12 @@ class OptimadeReader:
         return parse_each(texts, lambda builder, row, text: _parse_one(builder, row, text, options.max_sites))
 
 
-def _and_then(first: bytes, rest: Iterable[bytes]) -> Iterator[bytes]:
-    yield first
-    yield from rest
+def _is_json(line: bytes) -> bool:
+    try:
+        json.loads(line)
+    except (ValueError, RecursionError):
+        return False
+    return True
 
 
 def _entries(document: object) -> Iterator[object]:
