@@ -21,22 +21,22 @@ for _name, _value in {
     os.environ.setdefault(_name, _value)
 
 
+def decorated(decorator: Callable[..., Any], work: Callable[[], R]) -> R:
+    """Call the work under a decorator of Prefect, whose overloads lose the type of what comes back."""
+    result: R = decorator(work)()
+    return result
+
+
 def task_step(name: str, work: Callable[..., R], *arguments: Any) -> R:
     """The step as a Prefect task. The arguments stay in a closure: an open store is not for Prefect to copy."""
     from prefect import task
     from prefect.cache_policies import NO_CACHE
 
-    def run() -> R:
-        return work(*arguments)
-
-    return task(run, name=name, cache_policy=NO_CACHE, persist_result=False)()
+    return decorated(task(name=name, cache_policy=NO_CACHE, persist_result=False), lambda: work(*arguments))
 
 
 def run_as_flow(name: str, body: Callable[[], R]) -> R:
     """body() inside a Prefect flow of this name; its steps are the flow's tasks."""
     from prefect import flow
 
-    def run() -> R:
-        return body()
-
-    return flow(run, name=name, persist_result=False, validate_parameters=False)()
+    return decorated(flow(name=name, persist_result=False, validate_parameters=False), body)

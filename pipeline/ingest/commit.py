@@ -9,6 +9,7 @@ import duckdb
 import polars as pl
 
 from ..model.columns import TABLES
+from ..store.rows import one_number, one_row
 from .reduce import accepted_part, rejects_part
 from .split import RawChunk
 
@@ -51,10 +52,11 @@ def commit_chunk(connection: duckdb.DuckDBPyConnection, work: ChunkToCommit) -> 
 
 def is_committed(connection: duckdb.DuckDBPyConnection, run_id: int, source: str, chunk: RawChunk) -> bool:
     """True where this very chunk was written earlier in the same run. Read-only."""
-    row = connection.execute(
+    row = one_row(
+        connection,
         "SELECT 1 FROM chunks WHERE run_id = ? AND source = ? AND chunk = ? AND digest = ?",
         [run_id, source, chunk.number, chunk.digest],
-    ).fetchone()
+    )
     return row is not None
 
 
@@ -71,11 +73,11 @@ def _commit(connection: duckdb.DuckDBPyConnection, work: ChunkToCommit) -> dict[
         "INSERT INTO rejects SELECT ?, file, position, label, stage, reason, message, ? FROM read_parquet(?)",
         [source, run, parquet],
     )
-    rejected = _one(connection, "SELECT count(*) FROM read_parquet(?)", [parquet])
+    rejected = one_number(connection, "SELECT count(*) FROM read_parquet(?)", [parquet])
     connection.execute("CREATE TEMP TABLE incoming AS SELECT * FROM read_parquet(?)", [str(accepted_part(work.part))])
     counts = {"found": len(work.chunk.records), "rejected": rejected, "unchanged": len(work.unchanged)}
     worked = {"new": 0, "amended": 0, "replaced": 0, "unchanged": 0}
-    if _one(connection, "SELECT count(*) FROM incoming", []):
+    if one_number(connection, "SELECT count(*) FROM incoming", []):
         worked = _commit_incoming(connection, work)
     if len(work.unchanged):
         connection.register("unchanged_frame", work.unchanged.to_arrow())
@@ -144,11 +146,6 @@ def _commit_incoming(connection: duckdb.DuckDBPyConnection, work: ChunkToCommit)
 
 
 def insert_canonical_forms(connection: duckdb.DuckDBPyConnection, rows: str) -> None:
-    """Insert into `canonical_forms` from a part's rows, given as the text after FROM, with the part under the name i."""
+    """Insert into `canonical_forms` from a part's rows: the text after FROM, with the part under the name i."""
     columns = ", ".join(f"i.{column.name}" for column in TABLES["canonical_forms"].columns)
     connection.execute(f"INSERT INTO canonical_forms SELECT {columns} FROM {rows} ORDER BY i.row")
-
-
-def _one(connection: duckdb.DuckDBPyConnection, sql: str, values: list[object]) -> int:
-    row = connection.execute(sql, values).fetchone()
-    return int(row[0]) if row else 0

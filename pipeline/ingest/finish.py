@@ -7,6 +7,7 @@ import json
 import duckdb
 
 from ..errors import WorkError
+from ..store.rows import one_number, one_row
 from .scan import SourceToRead
 
 
@@ -24,11 +25,12 @@ def finish_source(
             if not file.changed:
                 continue
             inside = "(file = $2 OR starts_with(file, $2 || '/'))"
-            counts = [
-                connection.execute(f"SELECT count(*) FROM {table} WHERE source = $1 AND {inside}", [name, file.file])
+            accepted, rejected = (
+                one_number(
+                    connection, f"SELECT count(*) FROM {table} WHERE source = $1 AND {inside}", [name, file.file]
+                )
                 for table in ("seen", "rejects")
-            ]
-            accepted, rejected = (int(row[0]) for row in (c.fetchone() for c in counts) if row)
+            )
             if accepted + rejected != found[file.file]:
                 raise WorkError(
                     f"{file.path}: {found[file.file]} records found, but {accepted} accepted and {rejected} refused. "
@@ -57,7 +59,7 @@ def finish_source(
                 "UPDATE files SET missing_since_run = ? WHERE source = ? AND file = ?", [run_id, name, gone]
             )
         connection.execute("DELETE FROM seen WHERE source = ?", [name])
-        first = connection.execute("SELECT first_run FROM sources WHERE source = ?", [name]).fetchone()
+        first = one_row(connection, "SELECT first_run FROM sources WHERE source = ?", [name])
         connection.execute("DELETE FROM sources WHERE source = ?", [name])
         connection.execute(
             "INSERT INTO sources VALUES (?, ?, ?, ?, ?, ?)",

@@ -13,6 +13,7 @@ import duckdb
 import polars as pl
 
 from ..settings import Settings
+from ..store.rows import one_number, one_row
 from ..store.runs import Run, begin_run
 from ..store.stages import changed_stages, record_settings, refuse_mixed, stored_settings
 from ..store.workspace import Workspace
@@ -45,9 +46,11 @@ def prepare_ingest(workspace: Workspace, request: IngestRequest, settings: Setti
     if not request.recompute:
         refuse_mixed(connection, settings, ("parse", "canonical"))
     plan = scan(connection, request, settings, read_all="parse" in changed)
-    unfinished = connection.execute(
-        "SELECT 1 FROM runs WHERE status = 'running' AND plan_hash = ?", [plan.hash]
-    ).fetchone()
+    unfinished = one_row(
+        connection,
+        "SELECT 1 FROM runs WHERE status = 'running' AND plan_hash = ?",
+        [plan.hash],
+    )
     if not unfinished and not request.recompute and not any(source.stale for source in plan.sources):
         return None
     run = begin_run(connection, command, plan.arguments, plan.hash, settings.model_dump(), request.recompute)
@@ -107,22 +110,24 @@ def _job(
 def _unchanged(connection: duckdb.DuckDBPyConnection, chunk: RawChunk) -> pl.DataFrame:
     connection.register("raw_frame", chunk.records.select("record_id", "file", "position", "raw_hash").to_arrow())
     try:
-        return connection.sql(
+        found: pl.DataFrame = connection.sql(
             "SELECT f.record_id, f.file, f.position FROM raw_frame f JOIN records r USING (record_id) "
             "WHERE f.raw_hash = r.raw_hash ORDER BY f.file, f.position"
         ).pl()
+        return found
     finally:
         connection.unregister("raw_frame")
 
 
 def ingest_counts(connection: duckdb.DuckDBPyConnection, work: IngestWork) -> dict[str, Any]:
     """What the run did, from what the store says: the same whether or not it was interrupted. Read-only."""
-    row = connection.execute(
+    row = one_row(
+        connection,
         "SELECT coalesce(sum(found), 0), coalesce(sum(accepted), 0), coalesce(sum(rejected), 0), "
         "coalesce(sum(new_records), 0), coalesce(sum(amended), 0), coalesce(sum(replaced), 0), "
         "coalesce(sum(unchanged), 0) FROM chunks WHERE run_id = ?",
         [work.run.run_id],
-    ).fetchone()
+    )
     names = ("found", "accepted", "rejected", "new", "amended", "replaced", "unchanged")
     counts: dict[str, Any] = dict(zip(names, map(int, row or ()), strict=True))
     for name, sql in {
@@ -130,8 +135,7 @@ def ingest_counts(connection: duckdb.DuckDBPyConnection, work: IngestWork) -> di
         "files_read": "SELECT count(*) FROM files WHERE last_run = ?",
         "files_missing": "SELECT count(*) FROM files WHERE missing_since_run = ?",
     }.items():
-        value = connection.execute(sql, [work.run.run_id]).fetchone()
-        counts[name] = int(value[0]) if value else 0
+        counts[name] = one_number(connection, sql, [work.run.run_id])
     counts["files_unchanged"] = sum(len(s.files) for s in work.plan.sources) - counts["files_read"]
     reasons = connection.execute(
         "SELECT reason, count(*) FROM rejects WHERE run_id = ? GROUP BY reason ORDER BY reason", [work.run.run_id]
@@ -144,7 +148,7 @@ def energies_without_unit(connection: duckdb.DuckDBPyConnection, plan: Plan) -> 
     """Sources with an energy column and no unit: their numbers stay in the properties, which is to be said once."""
     out = []
     for source in plan.sources:
-        row = connection.execute("SELECT settings FROM sources WHERE source = ?", [source.source]).fetchone()
+        row = one_row(connection, "SELECT settings FROM sources WHERE source = ?", [source.source])
         stored = json.loads(row[0]) if row else {}
         if stored.get("energy_column") and not stored.get("energy_unit"):
             out.append(source.source)

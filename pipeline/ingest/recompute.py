@@ -15,6 +15,7 @@ from ..cell.canonical import canonicalise
 from ..errors import NumericsError
 from ..model.batch import CrystalBatch
 from ..settings import Settings, SourceSettings
+from ..store.rows import one_number
 from ..store.workspace import Workspace
 from .commit import insert_canonical_forms
 from .pool import ordered_results
@@ -28,8 +29,7 @@ def recompute_canonical(workspace: Workspace, settings: Settings, progress: Prog
     Chunks already replaced are replaced again after a kill: the result is the same.
     """
     connection = workspace.connection
-    row = connection.execute("SELECT count(*) FROM structures").fetchone()
-    total = int(row[0]) if row else 0
+    total = one_number(connection, "SELECT count(*) FROM structures")
     progress.start("reducing stored structures anew", total)
     done = 0
     for job, count in ordered_results(_reduce_stored, _jobs(workspace, settings, total), settings.worker_count):

@@ -69,7 +69,7 @@ def raw_chunks(source: SourceToRead, settings: Settings) -> Iterator[RawChunk]:
             for column, value in zip(rows.values(), row, strict=True):
                 column.append(value)
             found[file.file] += 1
-            size += len(row[5] or "") + len(row[6])
+            size += len(str(row[5] or "")) + len(str(row[6]))
             if len(rows["label"]) >= settings.chunk_records or size >= CHUNK_BYTES:
                 yield _chunk(number, rows, begins, found)
                 number, rows, size, begins, found = number + 1, _empty(), 0, [], {file.file: 0}
@@ -81,7 +81,7 @@ def raw_chunks(source: SourceToRead, settings: Settings) -> Iterator[RawChunk]:
 def _file_rows(source: SourceToRead, file: FileToRead, options: SplitOptions) -> Iterator[tuple[object, ...]]:
     used: dict[str, int] = {}
     inner, position = file.file, 0
-    for member in open_records(file.path, file.file, options):
+    for member in open_records(file.path, file.file, options, explicit=source.kind == "file"):
         if member.file != inner:
             used, inner, position = {}, member.file, 0
         record = member.record

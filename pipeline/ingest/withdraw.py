@@ -9,6 +9,7 @@ import duckdb
 
 from ..errors import UsageError
 from ..store.find import find_record
+from ..store.rows import one_number, one_row
 
 
 def withdraw(connection: duckdb.DuckDBPyConnection, run_id: int, what: str, reason: str) -> dict[str, Any]:
@@ -18,14 +19,15 @@ def withdraw(connection: duckdb.DuckDBPyConnection, run_id: int, what: str, reas
     """
     if not reason.strip():
         raise UsageError("A withdrawal needs a reason: give --reason TEXT.")
-    is_source = connection.execute("SELECT 1 FROM sources WHERE source = ?", [what]).fetchone() is not None
+    is_source = one_row(connection, "SELECT 1 FROM sources WHERE source = ?", [what]) is not None
     source = what if is_source else None
     record = None if is_source else find_record(connection, what)
-    held = connection.execute(
+    held = one_row(
+        connection,
         "SELECT withdrawal_id, reason FROM withdrawals WHERE undone_by_run IS NULL "
         "AND source IS NOT DISTINCT FROM ? AND record_id IS NOT DISTINCT FROM ?",
         [source, record],
-    ).fetchone()
+    )
     if held is not None:
         raise UsageError(f"{what} is withdrawn already ({held[1]}).")
     connection.execute(
@@ -33,10 +35,8 @@ def withdraw(connection: duckdb.DuckDBPyConnection, run_id: int, what: str, reas
         "NULL FROM withdrawals",
         [source, record, reason, run_id, user_name()],
     )
-    row = connection.execute(
-        "SELECT count(*) FROM records WHERE source = ? OR record_id = ?", [source, record]
-    ).fetchone()
-    return {"withdrawn": int(row[0]) if row else 0, "source": source, "record": record, "reason": reason}
+    count = one_number(connection, "SELECT count(*) FROM records WHERE source = ? OR record_id = ?", [source, record])
+    return {"withdrawn": count, "source": source, "record": record, "reason": reason}
 
 
 def undo_withdrawals(connection: duckdb.DuckDBPyConnection, run_id: int, what: str) -> dict[str, Any]:
@@ -45,8 +45,8 @@ def undo_withdrawals(connection: duckdb.DuckDBPyConnection, run_id: int, what: s
     Raises UsageError where there is nothing to take back.
     """
     if what.isdigit() and len(what) < 20:
-        condition, value = "run_id = ?", int(what)
-    elif connection.execute("SELECT 1 FROM sources WHERE source = ?", [what]).fetchone():
+        condition, value = "run_id = ?", what
+    elif one_row(connection, "SELECT 1 FROM sources WHERE source = ?", [what]):
         condition, value = "source = ?", what
     else:
         condition, value = "record_id = ?", find_record(connection, what)

@@ -17,6 +17,7 @@ import polars as pl
 
 from .. import __version__
 from ..errors import UsageError
+from ..store.rows import one_row
 from .cif import cif_text
 from .structures import given_structures
 
@@ -69,7 +70,7 @@ def export(connection: duckdb.DuckDBPyConnection, folder: Path, grade: str, form
     """
     if folder.exists():
         raise UsageError(f"{folder} exists already: export writes into a new folder.")
-    if not connection.execute("SELECT 1 FROM members WHERE grade = ?", [grade]).fetchone():
+    if not one_row(connection, "SELECT 1 FROM members WHERE grade = ?", [grade]):
         grades = [g for (g,) in connection.execute("SELECT DISTINCT grade FROM members ORDER BY grade").fetchall()]
         raise UsageError(f"The store has no groups of grade {grade!r}; it has: {', '.join(grades) or 'none'}.")
     kept = _frame(connection, KEPT, grade)
@@ -107,7 +108,8 @@ def export(connection: duckdb.DuckDBPyConnection, folder: Path, grade: str, form
 
 
 def _frame(connection: duckdb.DuckDBPyConnection, sql: str, grade: str) -> pl.DataFrame:
-    return connection.sql(sql, params=[grade]).pl()
+    frame: pl.DataFrame = connection.sql(sql, params=[grade]).pl()
+    return frame
 
 
 def _settings(connection: duckdb.DuckDBPyConnection) -> dict[str, Any]:

@@ -4,12 +4,14 @@ from __future__ import annotations
 
 import hashlib
 import json
+from collections.abc import Callable
 from pathlib import Path
 from typing import Literal
 
 import duckdb
 import polars as pl
 
+from ..store.rows import one_row
 from .cif import cif_text
 from .structures import given_structures
 
@@ -47,14 +49,19 @@ def write_table(
 
 def _original(connection: duckdb.DuckDBPyConnection, source: str, file: str, rows: pl.DataFrame) -> pl.DataFrame | None:
     """The input's own columns of these rows, by place in the file; None where the file is no table or has changed."""
-    fact = connection.execute(
+    fact = one_row(
+        connection,
         "SELECT s.root, s.kind, f.sha256 FROM sources s JOIN files f USING (source) WHERE s.source = ? AND f.file = ?",
         [source, file],
-    ).fetchone()
+    )
     if fact is None:
         return None
     path = Path(fact[0]) if fact[1] == "file" else Path(fact[0]) / file
-    readers = {".csv": _scan_csv, ".parquet": pl.scan_parquet, ".jsonl": pl.scan_ndjson}
+    readers: dict[str, Callable[[Path], pl.LazyFrame]] = {
+        ".csv": _scan_csv,
+        ".parquet": pl.scan_parquet,
+        ".jsonl": pl.scan_ndjson,
+    }
     scan = readers.get(path.suffix)
     if scan is None or not path.is_file():
         return None

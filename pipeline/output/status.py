@@ -7,15 +7,18 @@ from typing import Any
 
 import duckdb
 
+from ..store.rows import one_row
+
 
 def status(connection: duckdb.DuckDBPyConnection) -> dict[str, Any]:
     """Counts of records, crystals, groups and refusals, the sources, and the last runs; ready for JSON."""
-    row = connection.execute(
+    row = one_row(
+        connection,
         "SELECT (SELECT count(*) FROM records), (SELECT count(*) FROM current_records), "
         "(SELECT count(*) FROM records WHERE missing_since_run IS NOT NULL), "
         "(SELECT count(*) FROM withdrawn_records), (SELECT count(*) FROM rejects), "
-        "(SELECT count(DISTINCT formula) FROM current_records)"
-    ).fetchone()
+        "(SELECT count(DISTINCT formula) FROM current_records)",
+    )
     names = ("records", "current", "missing", "withdrawn", "rejected", "formulas")
     out: dict[str, Any] = dict(zip(names, map(int, row or ()), strict=True))
     out["groups"] = [

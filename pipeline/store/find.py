@@ -7,12 +7,13 @@ import re
 import duckdb
 
 from ..errors import UsageError
+from .rows import one_row
 
 
 def find_record(connection: duckdb.DuckDBPyConnection, text: str) -> str:
     """The record id that `text` names. Read-only. Raises UsageError; an ambiguous text lists the candidates."""
     if re.fullmatch(r"[0-9a-f]{20}", text):
-        if connection.execute("SELECT 1 FROM records WHERE record_id = ?", [text]).fetchone():
+        if one_row(connection, "SELECT 1 FROM records WHERE record_id = ?", [text]):
             return text
         raise UsageError(f"The store has no record with the id {text}.")
     source, colon, label = text.partition(":")
@@ -23,7 +24,7 @@ def find_record(connection: duckdb.DuckDBPyConnection, text: str) -> str:
         [source, label],
     ).fetchall()
     if not rows:
-        known = connection.execute("SELECT 1 FROM sources WHERE source = ?", [source]).fetchone()
+        known = one_row(connection, "SELECT 1 FROM sources WHERE source = ?", [source])
         where = f"The source {source!r} has no record {label!r}." if known else f"The store has no source {source!r}."
         raise UsageError(where)
     if len(rows) > 1:

@@ -10,6 +10,7 @@ import duckdb
 
 from .. import __version__
 from ..errors import UsageError
+from .rows import one_number, one_row
 
 
 @dataclass(frozen=True, slots=True)
@@ -35,23 +36,22 @@ def begin_run(
     up and ended (UsageError).
     """
     connection.execute("BEGIN")
-    halfway = connection.execute("SELECT value FROM store_facts WHERE name = 'recomputing'").fetchone()
+    halfway = one_row(connection, "SELECT value FROM store_facts WHERE name = 'recomputing'")
     if halfway is not None and halfway[0] != plan_hash:
         connection.execute("ROLLBACK")
         raise UsageError(
             "A recomputation of this store was interrupted, and its rows are of two settings until it is done. Give "
             "the same command with the same settings and --recompute again."
         )
-    open_run = connection.execute(
-        "SELECT run_id, plan_hash FROM runs WHERE status = 'running' ORDER BY run_id DESC LIMIT 1"
-    ).fetchone()
+    open_run = one_row(
+        connection, "SELECT run_id, plan_hash FROM runs WHERE status = 'running' ORDER BY run_id DESC LIMIT 1"
+    )
     if open_run is not None and open_run[1] == plan_hash:
         connection.execute("COMMIT")
         return Run(int(open_run[0]), True)
     connection.execute("UPDATE runs SET status = 'interrupted' WHERE status = 'running'")
     connection.execute("DELETE FROM seen")
-    row = connection.execute("SELECT coalesce(max(run_id), 0) + 1 FROM runs").fetchone()
-    run_id = int(row[0]) if row else 1
+    run_id = 1 + one_number(connection, "SELECT max(run_id) FROM runs")
     connection.execute(
         "INSERT INTO runs VALUES (?, ?, ?, ?, 'running', now() AT TIME ZONE 'UTC', NULL, ?, ?, NULL)",
         [run_id, command, json.dumps(arguments, sort_keys=True), plan_hash, __version__,

@@ -7,6 +7,8 @@ from importlib.resources import files
 
 import duckdb
 
+from .rows import one_number
+
 
 @cache
 def migrations() -> tuple[tuple[int, str, str], ...]:
@@ -28,13 +30,10 @@ def known_version() -> int:
 
 def stored_version(connection: duckdb.DuckDBPyConnection) -> int | None:
     """The newest step applied to a store; None where the file is no store. Read-only."""
-    present = connection.execute(
-        "SELECT count(*) FROM duckdb_tables() WHERE table_name = 'schema_migrations' AND NOT internal"
-    ).fetchone()
-    if not present or not present[0]:
-        return None
-    row = connection.execute("SELECT max(version) FROM schema_migrations").fetchone()
-    return int(row[0]) if row and row[0] is not None else 0
+    present = one_number(
+        connection, "SELECT count(*) FROM duckdb_tables() WHERE table_name = 'schema_migrations' AND NOT internal"
+    )
+    return one_number(connection, "SELECT max(version) FROM schema_migrations") if present else None
 
 
 def migrate(connection: duckdb.DuckDBPyConnection) -> int:

@@ -17,6 +17,7 @@ from ..errors import StoreError
 from .connect import no_store, open_for_reading, open_for_writing
 from .lock import WriterLock
 from .publish import mark_of, publish
+from .rows import one_number
 from .schema import migrate
 from .stages import stored_settings
 
@@ -93,27 +94,25 @@ class Workspace:
     def ahead_of_published(self) -> bool:
         """True where the work store holds runs that the published file does not."""
         marked = self._published_facts()
-        row = self.connection.execute("SELECT coalesce(max(run_id), 0) FROM runs").fetchone()
-        newest = int(row[0]) if row else 0
+        newest = one_number(self.connection, "SELECT max(run_id) FROM runs")
         return marked.get("mark") != mark_of(self.published) or marked.get("run") != newest
 
     def publish(self) -> None:
         """Count the publication, checkpoint, and put a copy in the place of the published file."""
         connection = self.connection
         connection.execute("BEGIN")
-        row = connection.execute("SELECT value FROM store_facts WHERE name = 'publication'").fetchone()
-        number = int(row[0]) + 1 if row else 1
+        number = 1 + one_number(connection, "SELECT value FROM store_facts WHERE name = 'publication'")
         connection.execute("DELETE FROM store_facts WHERE name = 'publication'")
         connection.execute("INSERT INTO store_facts VALUES ('publication', ?)", [str(number)])
         connection.execute("COMMIT")
-        newest = connection.execute("SELECT coalesce(max(run_id), 0) FROM runs").fetchone()
+        newest = one_number(connection, "SELECT max(run_id) FROM runs")
         settings = stored_settings(connection)
         connection.execute("CHECKPOINT")
         connection.close()
         self._connection = None
         publish(self.work_file, self.published)
         self._write("settings.json", settings)
-        self._write("published.json", {"mark": mark_of(self.published), "run": int(newest[0]) if newest else 0})
+        self._write("published.json", {"mark": mark_of(self.published), "run": newest})
         self._connection = open_for_writing(self.work_file)
 
     def clear_parts(self) -> None:
