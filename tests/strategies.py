@@ -10,10 +10,11 @@ import itertools
 from functools import cache
 
 import numpy as np
+from lattice_census.demo.disguises import Crystal, hermite_matrices, mirror, rotation, supercell, unimodular
 from lattice_census.demo.structure_types import structure_types
 from lattice_census.model.batch import CrystalBatch, batch_from_lists
 
-Crystal = tuple[np.ndarray, np.ndarray, list[str]]
+__all__ = ["Crystal", "hermite_matrices", "mirror", "rotation", "supercell", "unimodular"]
 
 LATTICE_TYPES = ("aP", "mP", "mS", "oP", "oS", "oI", "oF", "tP", "tI", "hR", "hP", "cP", "cI", "cF")
 
@@ -110,61 +111,6 @@ def reduced(cell: np.ndarray) -> np.ndarray:
         if not changed:
             return cell
         cell = cell[np.argsort((cell**2).sum(1))]
-
-
-def unimodular(rng: np.random.Generator, largest: int = 5, sign: int | None = None) -> np.ndarray:
-    """A random integer matrix of determinant +-1 (or `sign`) with entries up to `largest`."""
-    while True:
-        m = np.eye(3, dtype=int)[rng.permutation(3)] * rng.choice([-1, 1], 3)
-        for _ in range(rng.integers(1, 8)):
-            i, j = rng.permutation(3)[:2]
-            m[i] += rng.integers(-2, 3) * m[j]
-        if abs(m).max() <= largest and (sign is None or round(np.linalg.det(m)) == sign):
-            return m
-
-
-def hermite_matrices(index: int) -> list[np.ndarray]:
-    """All row Hermite normal forms of a determinant: one a superlattice."""
-    out = []
-    for a in range(1, index + 1):
-        for b in range(1, index // a + 1):
-            if index % (a * b) == 0:
-                c = index // (a * b)
-                for p, q, r in itertools.product(range(b), range(c), range(c)):
-                    out.append(np.array([[a, p, q], [0, b, r], [0, 0, c]]))
-    return out
-
-
-def supercell(crystal: Crystal, matrix: np.ndarray) -> Crystal:
-    """The same crystal in the cell matrix @ cell, with |det| times the sites."""
-    cell, positions, tokens = crystal
-    inverse = np.linalg.inv(matrix)
-    n = round(abs(np.linalg.det(matrix)))
-    reach = abs(matrix).sum(axis=0)
-    found: list[np.ndarray] = []
-    for shift in itertools.product(*(range(-r, r + 1) for r in reach)):
-        f = np.array(shift) @ inverse
-        f = f - np.floor(f + 1e-9)
-        if all(np.abs(f - g - np.round(f - g)).max() > 1e-6 for g in found):
-            found.append(f)
-            if len(found) == n:
-                break
-    assert len(found) == n
-    new = (positions @ inverse)[:, None] + np.array(found)[None]
-    return matrix @ cell, new.reshape(-1, 3), [t for t in tokens for _ in range(n)]
-
-
-def rotation(rng: np.random.Generator) -> np.ndarray:
-    """A random proper rotation; row vectors are turned by v @ R."""
-    q, r = np.linalg.qr(rng.normal(size=(3, 3)))
-    q = q * np.sign(np.diag(r))
-    return q if np.linalg.det(q) > 0 else -q
-
-
-def mirror(crystal: Crystal) -> Crystal:
-    """The mirror image (inverted through the origin)."""
-    cell, positions, tokens = crystal
-    return cell, -positions, list(tokens)
 
 
 def disguise(

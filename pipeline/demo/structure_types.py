@@ -40,6 +40,12 @@ class StructureType:
 
     sites_primitive: int
 
+    asymmetric_unit: tuple[tuple[str, tuple[float, float, float]], ...]
+    """(element, fractional position) of one site an orbit."""
+
+    operations: tuple[str, ...]
+    """Symmetry operations of the conventional cell as triplets `x,y,z`, centring included."""
+
 
 def _group(number: int, origin: int) -> gemmi.SpaceGroup:
     """The space group in the setting of the table: hexagonal axes for R, the origin choice named."""
@@ -60,14 +66,16 @@ def structure_types() -> list[StructureType]:
             operations = _group(int(row["space_group"]), int(row["origin_setting"])).operations()
             positions: list[Floats] = []
             species: list[str] = []
+            unit: list[tuple[str, tuple[float, float, float]]] = []
             orth = np.array(cell.orth.mat.tolist()).T
             for site in row["basis (element x y z)"].split(";"):
                 element, *xyz = site.split()
                 # The table gives thirds to five digits; the special position is meant.
                 start = np.array([_third(float(x)) for x in xyz])
+                unit.append((element, (float(start[0]), float(start[1]), float(start[2]))))
                 found: list[Floats] = []
                 for op in operations:
-                    x = np.array(op.apply_to_xyz(start.tolist())) % 1.0
+                    x = _image(op, start)
                     if all(_distance(x - y, orth) > 0.05 for y in found):
                         found.append(x)
                 positions += found
@@ -83,9 +91,19 @@ def structure_types() -> list[StructureType]:
                     np.array(positions),
                     tuple(species),
                     int(row["n_atoms_primitive"]),
+                    tuple(unit),
+                    tuple(op.triplet() for op in operations),
                 )
             )
     return out
+
+
+def _image(op: gemmi.Op, at: Floats) -> Floats:
+    """The image of a position, inside the cell; term by term, so that it has the same bits on every machine."""
+    x, y, z = at.tolist()
+    rows = zip(op.rot, op.tran, strict=True)
+    image = [(r[0] // op.DEN * x + r[1] // op.DEN * y + r[2] // op.DEN * z) + t / op.DEN for r, t in rows]
+    return np.array(image) % 1.0
 
 
 def _third(x: float) -> float:

@@ -1,0 +1,79 @@
+"""The command `demo`: an invented collection, read into a store, and a clean one taken out of it."""
+
+from __future__ import annotations
+
+from pathlib import Path
+
+import typer
+
+from lattice_census.demo.collection import SETTINGS, make_collection, sources_of
+from lattice_census.errors import UsageError
+from lattice_census.ingest.progress import call_directly
+from lattice_census.ingest.scan import IngestRequest
+from lattice_census.output.export import export
+from lattice_census.output.status import status
+from lattice_census.settings import resolve_settings
+from lattice_census.store.connect import open_for_reading
+
+from .ingest import IngestJob, ingest
+from .progress import progress_for
+
+
+def run_demo(folder: Path, direct: bool, workers: int | None, quiet: bool) -> int:
+    """Make the collection, ingest all its sources in one run, export the kept records, and say what to try next.
+
+    The folder gets collection/, manifest.json, demo.toml, census.duckdb and clean/. Raises UsageError where it is there
+    already and not empty, or is a file.
+    """
+    if folder.exists() and (not folder.is_dir() or any(folder.iterdir())):
+        raise UsageError(f"{folder} is there already and not an empty folder: the demo makes a new one. Name another.")
+    collection, settings_file, store = folder / "collection", folder / "demo.toml", folder / "census.duckdb"
+    collection.mkdir(parents=True, exist_ok=True)
+    manifest = make_collection(collection)
+    manifest.write(folder / "manifest.json")
+    settings_file.write_text(SETTINGS, encoding="utf-8")
+    typer.echo(
+        f"Made {collection}: {len(manifest.records)} records of an invented survey in {len(sources_of(collection))} "
+        f"sources; what they are stands in {folder / 'manifest.json'}. No number in it is real."
+    )
+
+    options = {"workers": workers, "orchestrator": "direct" if direct else None}
+    settings = resolve_settings(options, file=settings_file)
+    job = IngestJob(store, IngestRequest(sources_of(collection)), settings)
+    with progress_for(quiet) as progress:
+        if settings.orchestrator == "direct":
+            counts = ingest(job, call_directly, progress, "demo")
+        else:
+            from .orchestrate import run_as_flow, task_step
+
+            counts = run_as_flow("demo", lambda: ingest(job, task_step, progress, "demo"))
+    typer.echo(
+        f"Read {counts['found']} records: {counts['accepted']} accepted, "
+        f"{counts['rejected']} refused with a reason each."
+    )
+
+    clean = folder / "clean"
+    connection = open_for_reading(store)
+    try:
+        for found in status(connection)["groups"]:
+            typer.echo(
+                f"Grade {found['grade']}: {found['groups']} groups, {found['set_aside']} records repeat another."
+            )
+        exported = export(connection, clean, "key", "cif")
+    finally:
+        connection.close()
+    typer.echo(f"Exported {clean}: {exported.kept} structures, and set_aside.csv with {exported.set_aside} rows.")
+    typer.echo(_next_steps(folder, store, settings_file))
+    return 0
+
+
+def _next_steps(folder: Path, store: Path, settings_file: Path) -> str:
+    """Three commands that show more of the store."""
+    return "\n".join(
+        (
+            "Try next:",
+            f"  lattice-census status --store {store}",
+            f"  lattice-census run {folder / 'collection'}/* --store {store} --settings {settings_file}",
+            f"  lattice-census export {folder / 'table'} --form csv --store {store}",
+        )
+    )
