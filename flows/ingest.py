@@ -8,6 +8,7 @@ from pathlib import Path
 from typing import Any
 
 from lattice_census.grouping.exact import group_exact
+from lattice_census.ingest.classify import classify_keys
 from lattice_census.ingest.ingest import (
     IngestWork,
     energies_without_unit,
@@ -49,6 +50,7 @@ def ingest(job: IngestJob, step: Step, progress: Progress, command: str = "inges
             for source in work.plan.sources:
                 if source.stale:
                     step(f"read {source.source}", read_source, workspace, work, source, progress)
+            step("classify", classify_keys, workspace, job.settings, progress)
             counts = step("group exactly", _close, workspace, work)
             counts["no_unit"] = energies_without_unit(workspace.connection, work.plan)
         if not job.dry_run and workspace.ahead_of_published:

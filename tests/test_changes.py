@@ -172,6 +172,12 @@ def test_a_changed_setting_is_never_mixed_with_old_rows(tmp_path: Path, ingest):
     ingest(other, recompute=True, exact_tolerance=0.002)
     assert query(store, "SELECT value FROM stage_settings WHERE name = 'exact_tolerance'") == [("0.002",)]
     assert set(keys) <= set(query(store, "SELECT record_id, crystal_key FROM crystals"))
+    types = "SELECT record_id, lattice_type FROM crystals ORDER BY ALL"
+    before = query(store, types)
+    ingest(other, recompute=True, exact_tolerance=0.002, lattice_strain_tolerance=0.05)
+    after = query(store, types)
+    assert [r for r, _ in after] == [r for r, _ in before] and after != before
+    assert query(store, "SELECT count(*) FROM crystals WHERE lattice_type IS NULL") == [(0,)]
 
 
 def test_a_table_read_in_several_chunks_is_the_same_store(tmp_path: Path, ingest):

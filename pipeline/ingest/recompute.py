@@ -24,7 +24,7 @@ from .reduce import ReduceJob, accepted_part, crystal_columns, write_part
 
 
 def recompute_canonical(workspace: Workspace, settings: Settings, progress: Progress) -> int:
-    """Reduce every stored structure anew and replace the rows of `canonical_forms`; returns their number.
+    """Reduce every stored structure anew, replace the rows of `canonical_forms` and drop `crystal_types`; their number.
 
     Chunks already replaced are replaced again after a kill: the result is the same.
     """
@@ -38,6 +38,7 @@ def recompute_canonical(workspace: Workspace, settings: Settings, progress: Prog
         accepted_part(job.part).unlink()
         progress.advance(count)
         done += count
+    connection.execute("DELETE FROM crystal_types")  # their tolerances may be the ones that changed
     return done
 
 

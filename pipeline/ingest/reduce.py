@@ -143,9 +143,9 @@ def _table(raw: pl.DataFrame, given: CrystalBatch, canonical: CanonicalBatch, fa
         "split": pa.array([f.split for f in facts], pa.string()),
         "record_date": pa.array([f.record_date for f in facts], pa.timestamp("us")),
         "properties": pa.array([f.properties for f in facts], pa.string()),
-        "given_cell": _fixed(given.cells),
-        "given_species": _tokens(given),
-        "given_positions": _ragged(given.positions, given.offsets, 3),
+        "given_cell": fixed(given.cells),
+        "given_species": token_lists(given),
+        "given_positions": ragged(given.positions, given.offsets, 3),
         **crystal_columns(given, canonical),
     }
     return pa.table(columns)
@@ -164,15 +164,15 @@ def crystal_columns(given: CrystalBatch, canonical: CanonicalBatch) -> dict[str,
         "residual_angstrom": pa.array(canonical.residual),
         "pseudo_index": pa.array(canonical.pseudo_index.astype(np.int32)),
         "pseudo_residual_angstrom": pa.array(canonical.pseudo_residual),
-        "cell_angstrom": _fixed(cells),
-        "species": _tokens(crystal),
-        "positions_fractional": _ragged(crystal.positions, crystal.offsets, 3),
-        "matrix": _fixed(canonical.multiplicity_matrix.astype(np.int32)),
-        "rotation": _fixed(canonical.rotation),
-        "origin_fractional": _fixed(canonical.origin),
-        "site_map": _ragged(canonical.site_map, given.offsets, 1),
-        "site_shift": _ragged(canonical.site_shift, given.offsets, 3),
-        "pseudo_matrix": _fixed(canonical.pseudo_matrix.astype(np.int32)),
+        "cell_angstrom": fixed(cells),
+        "species": token_lists(crystal),
+        "positions_fractional": ragged(crystal.positions, crystal.offsets, 3),
+        "matrix": fixed(canonical.multiplicity_matrix.astype(np.int32)),
+        "rotation": fixed(canonical.rotation),
+        "origin_fractional": fixed(canonical.origin),
+        "site_map": ragged(canonical.site_map, given.offsets, 1),
+        "site_shift": ragged(canonical.site_shift, given.offsets, 3),
+        "pseudo_matrix": fixed(canonical.pseudo_matrix.astype(np.int32)),
     }
     for i, name in enumerate("abc"):
         columns[f"{name}_angstrom"] = pa.array(edges[:, i])
@@ -182,19 +182,20 @@ def crystal_columns(given: CrystalBatch, canonical: CanonicalBatch) -> dict[str,
     return columns
 
 
-def _fixed(values: np.ndarray[Any, Any]) -> pa.Array:
+def fixed(values: np.ndarray[Any, Any]) -> pa.Array:
     """(n, ...) as a fixed-size list column."""
     flat = np.ascontiguousarray(values).reshape(-1)
     return pa.FixedSizeListArray.from_arrays(pa.array(flat), int(np.prod(values.shape[1:])))
 
 
-def _ragged(values: np.ndarray[Any, Any], offsets: np.ndarray[Any, Any], width: int) -> pa.Array:
+def ragged(values: np.ndarray[Any, Any], offsets: np.ndarray[Any, Any], width: int) -> pa.Array:
     """(m,) or (m, width) by crystal as a list column."""
     flat = np.ascontiguousarray(values).reshape(-1)
     return pa.LargeListArray.from_arrays(pa.array(offsets * width), pa.array(flat))
 
 
-def _tokens(batch: CrystalBatch) -> pa.Array:
+def token_lists(batch: CrystalBatch) -> pa.Array:
+    """The species tokens of each crystal as a list column."""
     words = pa.DictionaryArray.from_arrays(pa.array(np.asarray(batch.species)), pa.array(batch.tokens, pa.string()))
     return pa.LargeListArray.from_arrays(pa.array(np.asarray(batch.offsets)), words.dictionary_decode())
 

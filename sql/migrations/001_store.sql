@@ -339,9 +339,6 @@ COMMENT ON COLUMN id_changes.group_after IS 'Group id after; NULL where it has n
 COMMENT ON COLUMN id_changes.family_before IS 'Family id before; NULL where it had none.';
 COMMENT ON COLUMN id_changes.family_after IS 'Family id after; NULL where it has none.';
 
-CREATE VIEW crystals AS SELECT * FROM canonical_forms;
-COMMENT ON VIEW crystals IS 'Canonical form of each record: what queries on lattices are put to.';
-
 CREATE VIEW withdrawn_records AS
 SELECT r.record_id, r.source, r.label, min(w.withdrawal_id) AS withdrawal_id, min_by(w.reason, w.withdrawal_id) AS reason
 FROM records r

@@ -1,0 +1,128 @@
+"""Types of lattice and crystal, once a distinct key, after all chunks of a run are in the store."""
+
+from __future__ import annotations
+
+import hashlib
+from collections.abc import Iterator
+
+import duckdb
+import numpy as np
+import polars as pl
+
+from ..cell.crystal_type import classify_crystals
+from ..cell.lattice_type import classify_lattices
+from ..model.columns import TABLES
+from ..settings import Settings, SourceSettings
+from ..store.rows import one_number
+from ..store.workspace import Workspace
+from .pool import ordered_results
+from .progress import Progress
+from .recompute import stored_batch
+from .reduce import ReduceJob, accepted_part, fixed, ragged, token_lists, write_part
+
+# The record with the smallest id of each key, where the types of that key are missing or came from another record: so
+# the types are a function of the records that are there, whatever order they came in.
+TO_CLASSIFY = (
+    "SELECT f.crystal_key, f.record_id FROM "
+    "(SELECT crystal_key, min(record_id) AS record_id FROM canonical_forms GROUP BY crystal_key) f "
+    "LEFT JOIN crystal_types t USING (crystal_key) WHERE t.typed_record_id IS DISTINCT FROM f.record_id"
+)
+
+
+def classify_keys(workspace: Workspace, settings: Settings, progress: Progress) -> int:
+    """Classify every key that needs it, and drop the types of keys that no record has any more; returns how many.
+
+    Each chunk is committed by itself; after a kill what is missing is found again.
+    """
+    connection = workspace.connection
+    connection.execute("DELETE FROM crystal_types WHERE crystal_key NOT IN (SELECT crystal_key FROM canonical_forms)")
+    connection.execute(f"CREATE OR REPLACE TEMP TABLE to_classify AS {TO_CLASSIFY} ORDER BY f.crystal_key")
+    total = one_number(connection, "SELECT count(*) FROM to_classify")
+    if not total:
+        return 0
+    progress.start("lattice types and space groups", total)
+    for job, count in ordered_results(_classify, _jobs(workspace, settings, total), settings.worker_count):
+        _commit(connection, str(accepted_part(job.part)))
+        job.raw.unlink()
+        accepted_part(job.part).unlink()
+        progress.advance(count)
+    return total
+
+
+def _jobs(workspace: Workspace, settings: Settings, total: int) -> Iterator[ReduceJob]:
+    for number, start in enumerate(range(0, total, settings.chunk_records)):
+        frame = workspace.connection.sql(
+            "SELECT f.crystal_key, f.record_id, f.cell_angstrom, f.species, f.positions_fractional, r.periodicity "
+            "FROM (SELECT record_id, crystal_key FROM to_classify ORDER BY crystal_key "
+            f"LIMIT {settings.chunk_records} OFFSET {start}) w "
+            "JOIN canonical_forms f USING (record_id) JOIN records r USING (record_id) ORDER BY f.crystal_key"
+        ).pl()
+        digest = hashlib.sha256("\0".join(frame["record_id"]).encode() + repr(settings).encode()).hexdigest()[:32]
+        part = workspace.parts / f"types-{digest}"
+        raw = part.with_name(part.name + ".raw.parquet")
+        frame.write_parquet(raw, compression="lz4")
+        yield ReduceJob(number, raw, part, settings, SourceSettings())
+
+
+def _classify(job: ReduceJob) -> int:
+    """One chunk's types, as a part with the columns of `crystal_types`."""
+    frame = pl.read_parquet(job.raw)
+    batch = stored_batch(frame)
+    tolerances = job.settings.tolerances
+    lattices = classify_lattices(batch.cells, tolerances, batch.periodicity)
+    crystals = classify_crystals(batch, lattices, tolerances)
+    ladder = lattices.frame()
+    found = crystals.frame()
+    standard = pl.DataFrame(
+        {
+            "row": crystals.rows,
+            "standard_cell_angstrom": pl.Series(pl.from_arrow(fixed(crystals.standard.cells))),
+            "standard_species": pl.Series(pl.from_arrow(token_lists(crystals.standard))),
+            "standard_positions_fractional": pl.Series(
+                pl.from_arrow(ragged(crystals.standard.positions, crystals.standard.offsets, 3))
+            ),
+        }
+    )
+    failures = pl.DataFrame(
+        {
+            "row": pl.Series([row for row, _, _ in crystals.failures], dtype=pl.Int64),
+            "symmetry_failure": pl.Series([message for _, _, message in crystals.failures], dtype=pl.String),
+        }
+    )
+    planes = ("op", "oc", "tp", "hp")
+    types = (
+        frame.select("crystal_key", pl.col("record_id").alias("typed_record_id"))
+        .with_columns(
+            pl.Series("row", np.arange(len(frame))),
+            pl.Series("conventional_matrix", pl.from_arrow(fixed(lattices.matrices.astype(np.int32)))),
+        )
+        .hstack(
+            ladder.rename(
+                {
+                    c: ("plane_strain_to_" if c[7:] in planes else "strain_to_") + c[7:]
+                    for c in ladder.columns
+                    if c.startswith("ladder_") and c != "ladder_reach"
+                }
+                | {"ladder_reach": "ladder_reach_strain"}
+            )
+        )
+        .join(found.rename({"group_symbol": "space_group_symbol"}), on="row", how="left")
+        .join(standard, on="row", how="left")
+        .join(failures, on="row", how="left")
+        .sort("row")
+    )
+    write_part(types.select(c.name for c in TABLES["crystal_types"].columns).to_arrow(), accepted_part(job.part))
+    return len(frame)
+
+
+def _commit(connection: duckdb.DuckDBPyConnection, part: str) -> None:
+    connection.execute("BEGIN")
+    try:
+        connection.execute(
+            "DELETE FROM crystal_types WHERE crystal_key IN (SELECT crystal_key FROM read_parquet(?))", [part]
+        )
+        connection.execute("INSERT INTO crystal_types SELECT * FROM read_parquet(?)", [part])
+        connection.execute("COMMIT")
+    except BaseException:
+        connection.execute("ROLLBACK")
+        raise
