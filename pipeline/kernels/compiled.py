@@ -8,10 +8,13 @@ argument does not make numba build the function anew (it would, for each value).
 from __future__ import annotations
 
 from collections.abc import Callable
+from pathlib import Path
 from typing import Any, ParamSpec, TypeVar, cast
 
 import numba
 from numba.core.types import unliteral
+
+from .cache import folder
 
 P = ParamSpec("P")
 T = TypeVar("T")
@@ -19,6 +22,7 @@ T = TypeVar("T")
 # No fastmath and no threads: results feed keys. Division by zero follows NumPy; kernels exclude it themselves.
 _STRICT: dict[str, Any] = {"nogil": True, "fastmath": False, "error_model": "numpy"}
 _INNER: dict[str, Any] = {**_STRICT, "no_cpython_wrapper": True, "no_cfunc_wrapper": True}
+_config: Any = numba.config
 _widen: Callable[[Any], Any] = unliteral
 
 
@@ -41,7 +45,13 @@ def kernel(function: Callable[P, T]) -> Callable[P, T]:
 
     The plain function stays reachable as `.py_func`.
     """
-    return cast(Callable[P, T], _without_constants(numba.njit(cache=True, **_STRICT)(function)))
+    # numba asks for the folder of the cache when it decorates.
+    before = _config.CACHE_DIR
+    _config.CACHE_DIR = str(folder(Path(function.__code__.co_filename)))
+    try:
+        return cast(Callable[P, T], _without_constants(numba.njit(cache=True, **_STRICT)(function)))
+    finally:
+        _config.CACHE_DIR = before
 
 
 def inner(function: Callable[P, T]) -> Callable[P, T]:
