@@ -12,6 +12,7 @@ import io
 import lzma
 import re
 import stat
+import sys
 import tarfile
 import zipfile
 import zlib
@@ -219,8 +220,9 @@ def _compressed_stream(raw: BinaryIO, name: str, limits: ArchiveLimits, tar: boo
     """The decompressed content of an open file or member, guarded."""
     went_in = _Counted(raw)
     source = _decompressor(went_in, name)
-    limit = limits.total_bytes if tar else limits.member_bytes
-    return _buffered(_Guarded(source, limit, _ratio_check(limits, lambda: went_in.count), _Total(limits.total_bytes)))
+    # What comes out of a plain tar is as long as the file; its members are counted one by one.
+    limit = (sys.maxsize if name.lower().endswith(".tar") else limits.total_bytes) if tar else limits.member_bytes
+    return _buffered(_Guarded(source, limit, _ratio_check(limits, lambda: went_in.count), _Total(limit)))
 
 
 class _Counted(io.RawIOBase):
@@ -295,19 +297,23 @@ def _archive_member(
         return Member(full, stem, refusal=_unreadable(error))
 
 
+def _check_total(number: int, total: _Total, limits: ArchiveLimits) -> None:
+    if number > limits.members:
+        raise FileRefused(_unsafe(f"more than {limits.members} members"))
+    if total.out > total.limit:
+        raise FileRefused(_unsafe(f"more than {total.limit} bytes come out of the archive"))
+
+
 def _zip_members(path: Path, file: str, limits: ArchiveLimits) -> Iterator[Member]:
     total = _Total(limits.total_bytes)
     with zipfile.ZipFile(path) as archive:
         for number, info in enumerate(archive.infolist(), 1):
-            if number > limits.members:
-                raise FileRefused(_unsafe(f"more than {limits.members} members"))
+            _check_total(number, total, limits)
             if info.is_dir():
                 continue
             mode = info.external_attr >> 16
             # orig_filename keeps what zipfile.ZipInfo cuts off or rewrites.
             unsafe = "a link" if stat.S_ISLNK(mode) else None
-            if total.out > total.limit:
-                raise FileRefused(_unsafe(f"more than {total.limit} bytes come out of the archive"))
 
             def opened(info: zipfile.ZipInfo = info) -> BinaryIO:
                 ratio = _ratio_check(limits, lambda: info.compress_size)
@@ -364,8 +370,7 @@ def _tar_members(stream: BinaryIO, file: str, limits: ArchiveLimits) -> Iterator
             # tarfile would keep every header it has met.
             archive.members = []
             number += 1
-            if number > limits.members:
-                raise FileRefused(_unsafe(f"more than {limits.members} members"))
+            _check_total(number, total, limits)
             if info.isdir():
                 continue
             unsafe = None if info.isreg() else "a link" if info.issym() or info.islnk() else "no regular file"

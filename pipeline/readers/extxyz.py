@@ -2,7 +2,9 @@
 
 from __future__ import annotations
 
+import re
 from collections.abc import Iterator, Sequence
+from itertools import islice
 from typing import BinaryIO
 
 from ..model.raw import Parsed, ParseOptions, RawRecord, SplitOptions
@@ -26,6 +28,8 @@ LABEL_KEYS = ("label", "id", "name", "config_name")
 """Keys of the comment line that name a frame, the first that is there counts."""
 
 _OWN_KEYS = frozenset({"lattice", "properties", "pbc"})
+_BARE_COUNT = re.compile(rb"^[ \t]*\d+[ \t\r]*$", re.MULTILINE)
+_LINES_AT_ONCE = 4096
 _SHORTEST_LINE = 8
 """Bytes of the shortest line of a site: `H 0 0 0` and its line end."""
 
@@ -41,95 +45,132 @@ class ExtendedXyzReader:
         A frame whose count and lines do not agree is refused alone: reading goes on at the next line that holds nothing
         but a count, which no line of a site does.
         """
-        lines = lines_of(stream, options.max_text_bytes)
+        lines = _Lines(lines_of(stream, options.max_text_bytes))
         number = 0
-        line = next(lines, None)
-        while line is not None:
-            if not line.strip():
-                line = next(lines, None)
-                continue
+        while (line := lines.next_filled()) is not None:
             number += 1
             label = f"{stem}/{number}"
             if not _is_count(line):
                 shown = decoded(line[:60]).strip()
                 yield _broken(label, "text_unreadable", f"frame {number} begins with {shown!r}, not with a count")
-                line = _next_count(lines)
+                lines.to_next_count()
                 continue
-            count = int(line)
+            count = _count(line)
             if count * _SHORTEST_LINE > options.max_text_bytes:
                 message = f"frame {number} claims {count} sites, more than max_text_bytes can hold"
                 yield _broken(label, "sites_too_many", message)
-                line = _next_count(lines)
+                lines.to_next_count()
                 continue
-            record, line = _frame(lines, line, count, number, label, options.max_text_bytes)
-            yield record
+            yield _frame(lines, line, count, number, label, options.max_text_bytes)
 
     def parse(self, texts: Sequence[str | None], options: ParseOptions) -> Parsed:
         """Crystals of texts with one frame each."""
         return parse_each(texts, lambda builder, row, text: _parse_one(builder, row, text, options.max_sites))
 
 
+class _Lines:
+    """Lines that can be given back."""
+
+    def __init__(self, lines: Iterator[bytes]) -> None:
+        self._lines = lines
+        self._back: list[bytes] = []
+        """Lines that come next, the last one first."""
+
+    def _next(self) -> bytes | None:
+        return self._back.pop() if self._back else next(self._lines, None)
+
+    def next_filled(self) -> bytes | None:
+        """The next line that is not blank."""
+        while (line := self._next()) is not None and not line.strip():
+            pass
+        return line
+
+    def take(self, number: int) -> list[bytes]:
+        """Up to so many lines; none at the end."""
+        taken = [self._back.pop() for _ in range(min(number, len(self._back)))]
+        taken.extend(islice(self._lines, number - len(taken)))
+        return taken
+
+    def give_back(self, lines: list[bytes]) -> None:
+        """Have these lines come next."""
+        self._back.extend(reversed(lines))
+
+    def to_next_count(self) -> None:
+        """Pass over lines until the next is nothing but a count."""
+        while (line := self._next()) is not None:
+            if _is_count(line):
+                self.give_back([line])
+                return
+
+
 def _is_count(line: bytes) -> bool:
     return line.strip().isdigit()
 
 
-def _next_count(lines: Iterator[bytes]) -> bytes | None:
-    return next((line for line in lines if _is_count(line)), None)
+def _count(line: bytes) -> int:
+    """The number on a line, or 10^18 where it is longer than any number that is meant."""
+    digits = line.strip()
+    return int(digits) if len(digits) <= 18 else 10**18
 
 
 def _broken(label: str, reason: str, message: str) -> RawRecord:
     return RawRecord(label, None, {}, Refusal(reason, message))
 
 
-def _frame(
-    lines: Iterator[bytes], first: bytes, count: int, number: int, label: str, limit: int
-) -> tuple[RawRecord, bytes | None]:
-    """The record of a frame and the line after it (None at the end of the file)."""
-    comment = next(lines, b"")
+def _frame(lines: _Lines, first: bytes, count: int, number: int, label: str, limit: int) -> RawRecord:
+    """The record of the frame that begins with the line `first`."""
+    comment = b"".join(lines.take(1))
     held, size, met = [first, comment], len(first) + len(comment), 0
-    after: bytes | None = None
-    for line in lines:
-        if met == count and not line.strip():
-            continue
-        if met == count or _is_count(line):
-            after = line
-            break
-        met += 1
-        size += len(line)
+    while met < count:
+        part = lines.take(min(count - met, _LINES_AT_ONCE))
+        text = b"".join(part)
+        if early := _BARE_COUNT.search(text):
+            # The next frame begins before this one is full.
+            begin = text.count(b"\n", 0, early.start())
+            lines.give_back(part[begin:])
+            part, text = part[:begin], text[: early.start()]
+        met += len(part)
+        size += len(text)
         if size <= limit:
-            held.append(line)
+            held.append(text)
         else:
             held.clear()
+        if early or not part:
+            break
+    after = lines.next_filled()
+    more = after is not None and not _is_count(after) and len(after.split()) >= 4
+    if after is not None:
+        lines.give_back([after])
+    if more:
+        # A line of a site where the count of the next frame should stand belongs to this frame; any other line is the
+        # beginning of a broken frame.
+        lines.to_next_count()
     if size > limit:
         message = f"frame {number} has {size} bytes; the setting max_text_bytes allows {limit}"
-        return _broken(label, "text_too_long", message), after
+        return _broken(label, "text_too_long", message)
     try:
-        pairs = comment_pairs(decoded(comment))
+        shown = decoded(comment)
+        pairs = comment_pairs(shown)
     except CommentError as error:
-        return _broken(label, "text_unreadable", f"the comment line of frame {number}: {error}"), after
-    named = next((k for k in LABEL_KEYS if pairs.get(k)), None)
+        return _broken(label, "text_unreadable", f"the comment line of frame {number}: {error}")
+    if "=" not in shown:
+        # Words of prose, not keys.
+        pairs = {}
+    named = next((k for k in LABEL_KEYS if pairs.get(k) and re.search(rf"\b{k}\b\"?\s*=", shown)), None)
     if named is not None:
         label = clean_text(pairs[named])
-    if met < count:
-        message = f"frame {number} claims {count} sites and has {met}"
-        return _broken(label, "text_unreadable", message), after
-    # A line of a site where the count of the next frame should stand belongs to this frame; any other is the beginning
-    # of a broken frame.
-    if after is not None and len(after.split()) >= 4:
-        message = f"frame {number} claims {count} sites and more lines follow"
-        return _broken(label, "text_unreadable", message), _next_count(lines)
-    words = any("=" in part for part in decoded(comment).split())
-    properties = {
-        clean_text(k): property_of(v) for k, v in pairs.items() if words and k != named and k.lower() not in _OWN_KEYS
-    }
-    return RawRecord(label, decoded(b"".join(held)), properties), after
+    if met < count or more:
+        found = "more lines follow" if more else f"has {met}"
+        return _broken(label, "text_unreadable", f"frame {number} claims {count} sites and {found}")
+    properties = {clean_text(k): property_of(v) for k, v in pairs.items() if k != named and k.lower() not in _OWN_KEYS}
+    return RawRecord(label, decoded(b"".join(held)), properties)
 
 
 def _parse_one(builder: BatchBuilder, row: int, text: str, max_sites: int) -> None:
     lines = text.split("\n")
     if not lines[0].strip().isdigit() or len(lines) < 2:
         raise StructureRefused("text_unreadable", "the first line is not a count, or there is no comment line")
-    count = int(lines[0])
+    count = _count(lines[0].encode())
     try:
         pairs = {k.lower(): v for k, v in comment_pairs(lines[1]).items()}
         lattice = _lattice(pairs)
