@@ -10,7 +10,7 @@ from lattice_census.model.refusals import REASONS
 from lattice_census.readers import reader_named
 from lattice_census.readers.archives import open_records
 
-from .broken_files import GOOD_CIF, Broken, broken_files
+from .broken_files import GOOD_CIF, GOOD_ENTRY, GOOD_FRAME, GOOD_ROW, HEADER, POSCAR, Broken, broken_files
 
 CASES = broken_files()
 
@@ -80,3 +80,48 @@ def test_a_text_of_ten_to_the_eleventh_power_costs_no_memory(tmp_path):
     peak = tracemalloc.get_traced_memory()[1]
     tracemalloc.stop()
     assert peak < 3_000_000
+
+
+WHOLE = {
+    "a.cif": GOOD_CIF.encode() * 3,
+    "a.csv": b"id,cif\n" + GOOD_ROW.encode() * 3,
+    "a.extxyz": GOOD_FRAME.encode() * 3,
+    "a.jsonl": HEADER + GOOD_ENTRY * 3,
+    "a.json": b'{"data": [' + GOOD_ENTRY + b"," + GOOD_ENTRY + b"]}",
+    "POSCAR": POSCAR.encode(),
+}
+
+
+@pytest.mark.parametrize("name", WHOLE)
+def test_random_damage_never_raises(name, tmp_path):
+    """Every raw record of a damaged file is a crystal or a refusal: `outcome` checks that."""
+    rng = np.random.default_rng(20)
+    pieces = [
+        b"\0",
+        b"\xff",
+        b"\n",
+        b'"',
+        b"nan",
+        b"1e999",
+        b"-",
+        b"9" * 5000,
+        b"{",
+        b"[",
+        b"data_",
+        b";",
+        b"\r",
+        b"=",
+        b",",
+    ]
+    for _ in range(120):
+        data = bytearray(WHOLE[name])
+        for _ in range(rng.integers(1, 4)):
+            at = int(rng.integers(len(data)))
+            if rng.random() < 0.5:
+                del data[at : at + int(rng.integers(1, 40))]
+            else:
+                data[at:at] = pieces[rng.integers(len(pieces))]
+        (tmp_path / name).write_bytes(data)
+        _, refusals, found = outcome(tmp_path / name, name)
+        assert all(r.reason in REASONS for r in refusals)
+        assert all(f.record.label and "\0" not in f.record.label for f in found)
