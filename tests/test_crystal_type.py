@@ -12,6 +12,7 @@ import pytest
 import spglib
 
 from lattice_census.cell import crystal_type
+from lattice_census.cell.canonical import canonicalise
 from lattice_census.cell.crystal_type import (
     SYMMETRY_FAILED,
     classify_crystals,
@@ -32,18 +33,11 @@ DEFAULT = Tolerances()
 
 
 def primitive(crystal):
-    """The crystal in a short, right-handed primitive cell (spglib takes out the translations)."""
-    cell, positions, tokens = crystal
-    names = sorted(set(tokens))
-    with warnings.catch_warnings():
-        warnings.simplefilter("ignore")
-        cell, positions, numbers = spglib.find_primitive(
-            (cell, positions, [names.index(t) + 1 for t in tokens]), symprec=1e-3
-        )
-    new = strategies.reduced(cell)
-    new = new if np.linalg.det(new) > 0 else -new
-    positions = positions @ cell @ np.linalg.inv(new)
-    return new, positions - np.floor(positions), [names[n - 1] for n in numbers]
+    """The canonical form of the crystal: primitive, reduced, right-handed."""
+    found = canonicalise(strategies.batch([crystal]), DEFAULT)
+    assert found.refusals == ()
+    batch = found.crystals
+    return batch.cells[0], batch.positions, batch.tokens_of(0)
 
 
 def classified(crystal_list, tolerances=DEFAULT, keys=None):
@@ -156,19 +150,15 @@ def plain_counts(crystal, limits):
     metric = cell @ cell.T
     box = np.array(np.meshgrid(*[[-1, 0, 1]] * 9)).reshape(9, -1).T.reshape(-1, 3, 3)
     box = box[np.abs(np.abs(np.linalg.det(box)) - 1) < 1e-9]
-    residuals = []
+    image = box @ metric @ np.swapaxes(box, 1, 2)
     edge = np.sqrt(np.diag(metric))
-    angle = np.arccos(np.clip(metric / np.outer(edge, edge), -1, 1))
-    for m in box:
-        image = m @ metric @ m.T
-        new = np.sqrt(np.diag(image))
-        lattice = np.abs(new - edge).max()
-        turned = np.arccos(np.clip(image / np.outer(new, new), -1, 1))
-        mean = np.sqrt((np.outer(edge, edge) + np.outer(new, new)) / 2)
-        off = np.triu_indices(3, 1)
-        lattice = max(lattice, (np.abs(np.sin(turned - angle)) * mean)[off].max())
-        if lattice > limits[-1]:
-            continue
+    new = np.sqrt(np.einsum("nii->ni", image))
+    lengths, pairs = np.outer(edge, edge), new[:, :, None] * new[:, None, :]
+    turn = np.arccos(np.clip(image / pairs, -1, 1)) - np.arccos(np.clip(metric / lengths, -1, 1))
+    off = (np.abs(np.sin(turn)) * np.sqrt((lengths + pairs) / 2)).max(axis=(1, 2))
+    part = np.maximum(np.abs(new - edge).max(axis=1), off)
+    residuals = []
+    for m, lattice in zip(box[part <= limits[-1]], part[part <= limits[-1]], strict=True):
         rare = min(range(len(tokens)), key=lambda i: tokens.count(tokens[i]))
         for target in range(len(tokens)):
             if tokens[target] != tokens[rare]:
