@@ -145,7 +145,7 @@ def canonicalise(batch: CrystalBatch, tolerances: Tolerances) -> CanonicalBatch:
     accepted[list(refused)] = False
     rows = np.flatnonzero(accepted)
     cells, rotation = lower_triangular(found.frames[rows])
-    reduced = is_niggli_reduced(metric(cells), NIGGLI_EPSILON)
+    reduced = is_niggli_reduced(metric(cells), found.levels[rows])
     for i in rows[~reduced]:
         refused[int(i)] = Refusal(
             "reduction_failed", "the reduced cell does not satisfy the conditions of a Niggli cell", "canonical"

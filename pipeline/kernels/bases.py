@@ -27,7 +27,7 @@ import numpy as np
 from ..model.batch import Floats, Ints
 from .compiled import inner
 from .integers import set_unit
-from .niggli import add_row, next_step
+from .niggli import add_row, next_step, six_numbers
 from .vectors import plane_spacing, row_dot, through, through_float, volume
 
 SLACK = 128.0
@@ -102,10 +102,12 @@ def triple_determinant(v: Ints, i: int, j: int, h: int) -> int:
 
 @inner
 def reduced_bases(cell: Floats, epsilon: float, out: Ints) -> int:
-    """All matrices M (3, 3), det +1, for which M cell is Niggli-reduced within epsilon; returns their number.
+    """All matrices M (3, 3), det +1, for which M cell is Niggli-reduced at a tolerance; returns their number.
 
-    cell (3, 3) must be reduced within epsilon itself and right-handed; `out` is (MOST_BASES, 3, 3) int64. The unit
-    matrix comes first. Returns -1 where the search cannot be carried out (see the head of this file).
+    cell (3, 3) right-handed and reduced at this tolerance or at one of the smaller levels (niggli.py), so that its
+    edges are the successive minima up to the slack; `out` is (MOST_BASES, 3, 3) int64. The unit matrix comes first,
+    where it belongs to them. There may be none (0). Returns -1 where the search cannot be carried out (see the head of
+    this file).
     """
     s = np.empty((4, 3), np.int64)
     if not obtuse_superbase(cell, s):
@@ -153,8 +155,10 @@ def reduced_bases(cell: Floats, epsilon: float, out: Ints) -> int:
                             points[c, k] = p[0, k]
                         count[row] += 1
 
-    set_unit(out[0])
-    found = 1
+    found = 0
+    if next_step(six_numbers(cell, unit * unit), epsilon) == 0:
+        set_unit(out[0])
+        found = 1
     for i in range(count[0]):
         # M and -M have one metric and opposite determinants: half of the first rows suffice.
         if vectors[i, 0] < 0 or (

@@ -17,7 +17,7 @@ from ..tolerances import GRID, GRID_OFFSET
 from .bases import MOST_BASES, reduced_bases
 from .compiled import inner, kernel
 from .integers import adjugate, copy_matrix, multiply
-from .niggli import reduce_cell, six_numbers
+from .niggli import LEVEL_STEP, LEVELS, reduce_cell, six_numbers
 from .ordering import MOST_KINDS, smallest_description
 from .overlap import closest_overlap
 from .translations import primitive_crystals
@@ -178,7 +178,7 @@ def prepare(
         if rank_species(species[a:b], kinds[a:b], order[a:b]) > MOST_KINDS:
             outcome[i] = TOO_MANY_KINDS
             continue
-        if not reduce_cell(cell, epsilon, matrices[i]):
+        if reduce_cell(cell, epsilon, matrices[i]) == 0.0:
             outcome[i] = NOT_REDUCED
             continue
         transform(matrices[i], cell, reduced[i])
@@ -203,6 +203,7 @@ def describe(
     kinds: Ints,
     epsilon: float,
     outcome: Ints,
+    levels: Floats,
     last: Ints,
     origin: Floats,
     positions: Floats,
@@ -211,7 +212,8 @@ def describe(
     """The smallest description of each primitive crystal whose outcome is DONE.
 
     primitive (n, 3, 3) Niggli-reduced cells, sites (n,) their numbers of sites, x (m, 3) and kinds (m,) as
-    primitive_crystals left them. Filled: outcome, NOT_REDUCED where the reduced bases cannot be listed; last
+    primitive_crystals left them. Filled: outcome, NOT_REDUCED where the reduced bases cannot be listed; levels (n,)
+    float64, the tolerance at which the canonical cell is Niggli-reduced (niggli.py); last
     M (n, 3, 3) int64, det +1: canonical vectors W = M primitive; origin (n, 3), fractional in W; positions (m, 3),
     canonical sites in order from offsets[i] on; place (m,) int64: where each site of x went, from 0 a crystal.
     """
@@ -222,8 +224,15 @@ def describe(
             continue
         a = offsets[i]
         b = a + sites[i]
+        # The first level at which the lattice has reduced bases: a property of the lattice, not of the cell given.
+        levels[i] = epsilon
         count = reduced_bases(primitive[i], epsilon, bases)
-        if count < 0:
+        for _ in range(1, LEVELS):
+            if count != 0:
+                break
+            levels[i] *= LEVEL_STEP
+            count = reduced_bases(primitive[i], levels[i], bases)
+        if count <= 0:
             outcome[i] = NOT_REDUCED
             continue
         kept = smallest_metrics(primitive[i], sites[i], bases, count, inverses)
@@ -301,6 +310,8 @@ class CanonicalColumns:
     """(n,) int64: DONE or why not."""
     detail: Floats
     """(n, 3): for OVERLAP the two given sites, from 0, and their distance (angstrom)."""
+    levels: Floats
+    """(n,) float64: tolerance, at cell volume 1, at which the canonical cell is Niggli-reduced."""
     sites: Ints
     """(n,) int64: sites of the canonical crystal."""
     frames: Floats
@@ -342,14 +353,17 @@ def canonical_columns(
     sites = np.diff(own_offsets) // np.maximum(index, 1)
     last, place = np.empty((n, 3, 3), np.int64), np.empty(m, np.int64)
     origin, new_positions = np.empty((n, 3)), np.empty((m, 3))
-    describe(own_offsets, reduced, sites, x, kinds, epsilon, outcome, last, origin, new_positions, place)
+    levels = np.ones(n)
+    describe(own_offsets, reduced, sites, x, kinds, epsilon, outcome, levels, last, origin, new_positions, place)
     multiplicity, frames = np.empty((n, 3, 3), np.int64), np.empty((n, 3, 3))
     site_map, new_species = np.empty(m, np.int32), np.empty(m, np.int32)
     compose(
         cells, own_offsets, outcome, hands, matrices, order, division, index, primitive_map, last, place, species,
         multiplicity, frames, site_map, new_species,
     )  # fmt: skip
-    return CanonicalColumns(outcome, detail, sites, frames, multiplicity, origin, new_positions, new_species, site_map)
+    return CanonicalColumns(
+        outcome, detail, levels, sites, frames, multiplicity, origin, new_positions, new_species, site_map
+    )
 
 
 def warm_up() -> None:

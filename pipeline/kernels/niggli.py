@@ -8,7 +8,12 @@ Krivy & Gruber, Acta Cryst. A32 (1976) 297-298, with the tolerance of Grosse-Kun
 - A strongly skewed cell is first shortened pair by pair with rounded quotients (Lagrange), because the steps of Krivy
   & Gruber subtract one vector at a time.
 
-A cell that is reduced already (within the tolerance) is left exactly as it is.
+With a tolerance, equality is not transitive: of a lattice that misses a higher symmetry by about the tolerance it can
+happen that no basis at all satisfies the conditions, or that the steps go round in a circle. Then a tolerance smaller
+by LEVEL_STEP is taken, and so on; at some level the near-equalities count as inequalities, and a Niggli cell exists
+for each lattice without tolerance.
+
+A cell that is reduced already (within one of these tolerances) is left exactly as it is.
 """
 
 from __future__ import annotations
@@ -20,8 +25,12 @@ from .compiled import inner, kernel
 from .integers import set_unit
 from .vectors import row_dot, transform, volume
 
-MAX_STEPS = 500
+MAX_STEPS = 200
 """Steps after which a reduction counts as failed. From a pairwise shortened cell it takes about ten."""
+
+LEVEL_STEP = 0.1
+LEVELS = 6
+"""Tolerances tried: epsilon, and epsilon times powers of LEVEL_STEP."""
 
 Six = tuple[float, float, float, float, float, float]
 
@@ -147,17 +156,13 @@ def apply_step(step: int, six: Six, e: float, m: Ints) -> None:
 
 
 @inner
-def reduce_cell(cell: Floats, epsilon: float, m: Ints) -> bool:
-    """Niggli reduction of a right-handed cell (3, 3): fills m (3, 3) int64, det +1, with reduced cell = m cell.
+def krivy_gruber(cell: Floats, epsilon: float, m: Ints) -> bool:
+    """Apply steps until none is due: m (3, 3) int64 changes in place; the reduced cell is m cell.
 
-    epsilon is dimensionless, for cell volume 1. Returns False where the steps do not come to an end.
+    Returns False where the steps do not come to an end.
     """
-    set_unit(m)
     v = np.empty((3, 3))
     scale = abs(volume(cell)) ** (-2.0 / 3.0)
-    if next_step(six_numbers(cell, scale), epsilon) == 0:
-        return True
-    shorten_pairs(cell, m)
     for _ in range(MAX_STEPS):
         transform(m, cell, v)
         six = six_numbers(v, scale)
@@ -168,12 +173,38 @@ def reduce_cell(cell: Floats, epsilon: float, m: Ints) -> bool:
     return False
 
 
+@inner
+def reduce_cell(cell: Floats, epsilon: float, m: Ints) -> float:
+    """Niggli reduction of a right-handed cell (3, 3): fills m (3, 3) int64, det +1, with reduced cell = m cell.
+
+    epsilon is dimensionless, for cell volume 1. Returns the tolerance at which m cell is reduced: epsilon, or a smaller
+    one where the steps go round in a circle at epsilon (see the head of this file), or 0 where no tolerance will do. A
+    cell that is reduced at one of these tolerances is left as it is.
+    """
+    set_unit(m)
+    six = six_numbers(cell, abs(volume(cell)) ** (-2.0 / 3.0))
+    level = epsilon
+    for _ in range(LEVELS):
+        if next_step(six, level) == 0:
+            return level
+        level *= LEVEL_STEP
+    shorten_pairs(cell, m)
+    level = epsilon
+    for _ in range(LEVELS):
+        if krivy_gruber(cell, level, m):
+            return level
+        level *= LEVEL_STEP
+    return 0.0
+
+
 @kernel
-def reduce_cells(cells: Floats, epsilon: float) -> tuple[Ints, Ints]:
-    """Matrices (n, 3, 3) int64 and 1 or 0 for success (n,) int64 of the reductions of right-handed cells (n, 3, 3)."""
+def reduce_cells(cells: Floats, epsilon: float) -> tuple[Ints, Floats]:
+    """Matrices (n, 3, 3) int64 and tolerances (n,) float64, as reduce_cell gives them, of right-handed cells (n, 3,
+    3).
+    """
     n = len(cells)
     matrices = np.empty((n, 3, 3), np.int64)
-    done = np.empty(n, np.int64)
+    levels = np.empty(n)
     for i in range(n):
-        done[i] = int(reduce_cell(cells[i], epsilon, matrices[i]))
-    return matrices, done
+        levels[i] = reduce_cell(cells[i], epsilon, matrices[i])
+    return matrices, levels

@@ -267,9 +267,9 @@ def primitive_crystals(
     offsets (n + 1,); positions (m, 3) fractional in [0, 1); kinds (m,) int64 ascending from 0 a crystal, the rarest
     first: cells, positions and kinds are overwritten by those of the primitive crystal (the first sites of each range).
     Filled for each crystal in todo: index (n,) int64, cells divided by (0 where a reduction failed);
-    matrices K (n, 3, 3) int64: cell = K primitive_cell, det K = index, primitive_cell Niggli-reduced within epsilon;
-    site_map (m,) int64: the new site, from 0 a crystal, of each site; residual (n,) angstrom: the largest distance of
-    position K from new position[site_map] modulo the new lattice.
+    matrices K (n, 3, 3) int64: cell = K primitive_cell, det K = index, primitive_cell Niggli-reduced as reduce_cell
+    does it; site_map (m,) int64: the new site, from 0 a crystal, of each site; residual (n,) angstrom: the largest
+    distance of position K from new position[site_map] modulo the new lattice.
     """
     cell = np.empty((3, 3))
     new_cell = np.empty((3, 3))
@@ -302,7 +302,7 @@ def primitive_crystals(
                 break
             size //= factor
             index[i] *= factor
-            if not reduce_cell(new_cell, epsilon, m):
+            if reduce_cell(new_cell, epsilon, m) == 0.0:
                 index[i] = 0
                 break
             adjugate(m, inverse)

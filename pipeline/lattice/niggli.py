@@ -14,9 +14,10 @@ from ..model.batch import Floats
 from .metric import at_unit_volume, characteristics
 
 
-def is_niggli_reduced(metrics: Floats, epsilon: float) -> NDArray[np.bool_]:
-    """Which metrics (..., 3, 3), in square angstrom, belong to Niggli-reduced cells; epsilon applies at cell volume
-    1.
+def is_niggli_reduced(metrics: Floats, epsilon: float | Floats) -> NDArray[np.bool_]:
+    """Which metrics (..., 3, 3), in square angstrom, belong to Niggli-reduced cells.
+
+    epsilon, one for all or (...), is the tolerance at cell volume 1.
     """
     g = characteristics(at_unit_volume(metrics))
     a, b, c, xi, eta, zeta = (g[..., k] for k in range(6))
@@ -27,9 +28,9 @@ def is_niggli_reduced(metrics: Floats, epsilon: float) -> NDArray[np.bool_]:
     def at_most(x: Floats, y: Floats) -> NDArray[np.bool_]:
         return np.asarray(x <= y + epsilon)
 
-    angles = g[..., 3:]
-    type_one = (angles > epsilon).all(axis=-1)
-    type_two = (angles <= epsilon).all(axis=-1)
+    smallest, largest = g[..., 3:].min(axis=-1), g[..., 3:].max(axis=-1)
+    type_one = np.asarray(smallest > epsilon)
+    type_two = np.asarray(largest <= epsilon)
     zero = np.zeros_like(a)
 
     # Main conditions.
