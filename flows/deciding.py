@@ -8,9 +8,11 @@ from pathlib import Path
 from typing import Any
 
 import duckdb
+
 from lattice_census.grouping.exact import group_exact
 from lattice_census.ingest.withdraw import undo_withdrawals
 from lattice_census.ingest.withdraw import withdraw as note_withdrawal
+from lattice_census.settings import Settings
 from lattice_census.store.runs import begin_run, end_run
 from lattice_census.store.stages import stored_settings
 from lattice_census.store.workspace import Workspace
@@ -41,7 +43,7 @@ def _act(
         connection.execute("BEGIN")
         try:
             done = act(connection, run.run_id)
-            group_exact(connection, run.run_id)
+            group_exact(connection, run.run_id, Settings.model_validate(stored_settings(connection)))
             end_run(connection, run, done)
             connection.execute("COMMIT")
         except BaseException:

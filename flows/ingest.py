@@ -71,7 +71,7 @@ def _close(workspace: Workspace, work: IngestWork) -> dict[str, Any]:
     connection = workspace.connection
     connection.execute("BEGIN")
     try:
-        group_exact(connection, work.run.run_id)
+        group_exact(connection, work.run.run_id, work.settings)
         record_settings(connection, work.settings, ("parse", "canonical"))
         counts = ingest_counts(connection, work)
         end_run(connection, work.run, counts)

@@ -7,6 +7,7 @@ from pathlib import Path
 from typing import TYPE_CHECKING, Annotated, Any
 
 import typer
+
 from lattice_census.errors import UsageError
 
 if TYPE_CHECKING:

@@ -130,10 +130,11 @@ def run(
 
 
 def _request(paths: list[Path], source: str | None, recompute: bool, **source_settings: Any) -> IngestRequest:
+    from pydantic import ValidationError
+
     from lattice_census.errors import UsageError
     from lattice_census.ingest.scan import IngestRequest
     from lattice_census.settings import SourceSettings
-    from pydantic import ValidationError
 
     given = {name: value for name, value in source_settings.items() if value is not None}
     try:

@@ -12,7 +12,7 @@ from collections.abc import Mapping
 from pathlib import Path
 from typing import Any, Literal
 
-from pydantic import BaseModel, ConfigDict, Field, ValidationError
+from pydantic import BaseModel, ConfigDict, Field, ValidationError, field_validator
 
 from .errors import UsageError
 from .tolerances import Tolerances
@@ -25,6 +25,9 @@ EnergyUnit = Literal["eV", "eV/site", "Ha", "Ry", "kJ/mol"]
 
 def _setting(default: Any, meaning: str, stage: str | None = None, **limits: Any) -> Any:
     return Field(default=default, description=meaning, json_schema_extra={"stage": stage}, **limits)
+
+
+KeepRule = Literal["theory", "energy", "symmetry", "sites", "date", "source"]
 
 
 class SourceSettings(BaseModel):
@@ -99,6 +102,17 @@ class Settings(BaseModel):
     )
     matches_per_record: int = _setting(32, "Closest matches kept of each record.", "verify", ge=1, le=1000)
 
+    keep_rules: tuple[KeepRule, ...] = _setting(
+        ("theory", "energy", "symmetry", "sites", "date", "source"),
+        "What makes a record the kept one, in order; last comes the record id.",
+        "keep",
+    )
+    theory_preference: tuple[str, ...] = _setting((), "Levels of theory, best first.", "keep")
+    source_preference: tuple[str, ...] = _setting((), "Sources, best first.", "keep")
+    energy_conflict_ev_per_site: float = _setting(
+        0.005, "Energies of one theory in a group that differ by more are a conflict, eV per site.", "keep", gt=0
+    )
+
     chunk_records: int = _setting(2000, "Records in a chunk of work.", ge=1, le=100_000)
     workers: int = _setting(0, "Worker processes; 0: one a core.", ge=0, le=256)
     orchestrator: Literal["prefect", "direct"] = _setting(
@@ -107,6 +121,21 @@ class Settings(BaseModel):
     sources: dict[str, SourceSettings] = Field(
         default_factory=dict, description="Settings of single sources by name.", json_schema_extra={"stage": None}
     )
+
+    @field_validator("keep_rules", "theory_preference", "source_preference", mode="before")
+    @classmethod
+    def _words(cls, value: Any) -> Any:
+        """A text with commas, as an environment variable or option gives it, is a list."""
+        if isinstance(value, str):
+            return [word.strip() for word in value.split(",") if word.strip()]
+        return value
+
+    @field_validator("keep_rules", "theory_preference", "source_preference")
+    @classmethod
+    def _once(cls, value: tuple[str, ...]) -> tuple[str, ...]:
+        if len(set(value)) != len(value):
+            raise ValueError("a word stands twice")
+        return value
 
     @property
     def tolerances(self) -> Tolerances:
@@ -124,7 +153,8 @@ class Settings(BaseModel):
 
     def of_stage(self, stage: str) -> dict[str, Any]:
         """Names and values of the settings that decide the rows of a stage."""
-        return {name: getattr(self, name) for name in Settings.model_fields if stage_of(name) == stage}
+        values = self.model_dump(mode="json")
+        return {name: values[name] for name in Settings.model_fields if stage_of(name) == stage}
 
 
 def stage_of(name: str) -> str | None:

@@ -11,6 +11,7 @@ import polars as pl
 
 from ..cell.crystal_type import classify_crystals
 from ..cell.lattice_type import classify_lattices
+from ..lattice.point_groups import point_group_order
 from ..model.columns import TABLES
 from ..settings import Settings, SourceSettings
 from ..store.rows import one_number
@@ -108,11 +109,22 @@ def _classify(job: ReduceJob) -> int:
         )
         .join(found.rename({"group_symbol": "space_group_symbol"}), on="row", how="left")
         .join(standard, on="row", how="left")
+        .with_columns(
+            pl.struct("space_group", "layer_group")
+            .map_elements(_point_group_order, return_dtype=pl.Int32)
+            .alias("point_group_order")
+        )
         .join(failures, on="row", how="left")
         .sort("row")
     )
     write_part(types.select(c.name for c in TABLES["crystal_types"].columns).to_arrow(), accepted_part(job.part))
     return len(frame)
+
+
+def _point_group_order(groups: dict[str, int | None]) -> int | None:
+    if groups["space_group"] is not None:
+        return point_group_order(groups["space_group"])
+    return point_group_order(groups["layer_group"], layer=True) if groups["layer_group"] is not None else None
 
 
 def _commit(connection: duckdb.DuckDBPyConnection, part: str) -> None:

@@ -60,7 +60,8 @@ class CrystalBatch:
     @property
     def volumes(self) -> Floats:
         """(n,) float64, cubic angstrom, positive."""
-        return np.abs(np.linalg.det(self.cells))
+        volumes: Floats = np.abs(np.linalg.det(self.cells))
+        return volumes
 
     def sites(self, i: int) -> slice:
         """The slice of `positions` and `species` that belongs to crystal i."""

@@ -209,6 +209,7 @@ TABLES: dict[str, Table] = {
         ("space_group", "INTEGER", "Number of the space group, 1 to 230; NULL for a layer."),
         ("layer_group", "INTEGER", "Number of the layer group, 1 to 80; NULL for a bulk crystal."),
         ("space_group_symbol", "VARCHAR", "Hermann-Mauguin symbol of the space or layer group, standard setting."),
+        ("point_group_order", "INTEGER", "Operations in the point group: a measure of symmetry."),
         ("hall_number", "INTEGER", "Sequential number of the Hall symbol of the standard cell."),
         ("pearson", "VARCHAR", "Pearson symbol; for hR the sites of the primitive cell are counted."),
         ("pearson_hexagonal", "VARCHAR", "Pearson symbol of an hR crystal counted in the hexagonal cell; else NULL."),

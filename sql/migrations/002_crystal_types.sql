@@ -28,6 +28,7 @@ CREATE TABLE crystal_types (
     space_group INTEGER,
     layer_group INTEGER,
     space_group_symbol VARCHAR,
+    point_group_order INTEGER,
     hall_number INTEGER,
     pearson VARCHAR,
     pearson_hexagonal VARCHAR,
@@ -67,6 +68,7 @@ COMMENT ON COLUMN crystal_types.crystal_lattice_type IS 'Lattice type of the cry
 COMMENT ON COLUMN crystal_types.space_group IS 'Number of the space group, 1 to 230; NULL for a layer.';
 COMMENT ON COLUMN crystal_types.layer_group IS 'Number of the layer group, 1 to 80; NULL for a bulk crystal.';
 COMMENT ON COLUMN crystal_types.space_group_symbol IS 'Hermann-Mauguin symbol of the space or layer group, standard setting.';
+COMMENT ON COLUMN crystal_types.point_group_order IS 'Operations in the point group: a measure of symmetry.';
 COMMENT ON COLUMN crystal_types.hall_number IS 'Sequential number of the Hall symbol of the standard cell.';
 COMMENT ON COLUMN crystal_types.pearson IS 'Pearson symbol; for hR the sites of the primitive cell are counted.';
 COMMENT ON COLUMN crystal_types.pearson_hexagonal IS 'Pearson symbol of an hR crystal counted in the hexagonal cell; else NULL.';
@@ -131,6 +133,7 @@ COMMENT ON COLUMN crystals.crystal_lattice_type IS 'Lattice type of the crystal:
 COMMENT ON COLUMN crystals.space_group IS 'Number of the space group, 1 to 230; NULL for a layer.';
 COMMENT ON COLUMN crystals.layer_group IS 'Number of the layer group, 1 to 80; NULL for a bulk crystal.';
 COMMENT ON COLUMN crystals.space_group_symbol IS 'Hermann-Mauguin symbol of the space or layer group, standard setting.';
+COMMENT ON COLUMN crystals.point_group_order IS 'Operations in the point group: a measure of symmetry.';
 COMMENT ON COLUMN crystals.hall_number IS 'Sequential number of the Hall symbol of the standard cell.';
 COMMENT ON COLUMN crystals.pearson IS 'Pearson symbol; for hR the sites of the primitive cell are counted.';
 COMMENT ON COLUMN crystals.pearson_hexagonal IS 'Pearson symbol of an hR crystal counted in the hexagonal cell; else NULL.';
