@@ -29,20 +29,23 @@ angstrom, everything is divided by that length. (A pair that matches within s as
 
 from __future__ import annotations
 
-import math
 from dataclasses import dataclass
 
 import numpy as np
 from numpy.typing import NDArray
 from scipy.spatial import cKDTree
 
+from ..fingerprint.distributions import Distributions, column_means, distributions
 from ..kernels.rows_filter import pairs_allowed, sort_columns
-from ..model.batch import Floats, Ints
-from .preparation import Prepared, transform, transform_slack
+from ..model.batch import CrystalBatch, Floats, Ints
+from .preparation import Prepared, prepare, transform, transform_slack
 from .window import Window
 
-TREE_COLUMNS = (0, 3, 7, 12, 18, 25, 33, 42, 52, 63)
+TREE_COLUMNS = (0, 5, 14, 33, 63)
 """Columns of the means that the tree holds (neighbouring columns say nearly the same); all of them are tested after."""
+
+QUANTILE_COLUMNS = (0, 3, 11, 29)
+"""Columns of the rows of which quantiles are taken."""
 
 BLOCK = 2_000_000
 """Pairs handled at a time."""
@@ -69,6 +72,22 @@ def mean_coordinates(means: NDArray[np.float32], volumes: Floats, window: Window
     return np.concatenate([np.log(volumes)[:, None] / 3.0, y], axis=1)
 
 
+def quantile_coordinates(prepared: Prepared) -> Floats:
+    """(n, w): quantiles over the sites of a species of some columns of its rows, transformed; same slack as the means.
+
+    Sorted columns of two crystals of a match agree place by place, whatever the numbers of sites, so their quantiles do.
+    Noise, which leaves means alone, moves them: they tell noisy copies apart.
+    """
+    c = prepared.crystals
+    ordered = sort_columns(c.rows, c.blocks)
+    first, size = c.blocks[:, :-1], np.diff(c.blocks, axis=1)
+    parts = [
+        ordered[first + np.minimum((size * u).astype(np.int64), size - 1)][:, :, QUANTILE_COLUMNS]
+        for u in (0.0, 0.26, 0.51, 0.76, 1.0)
+    ]
+    return np.stack(parts, axis=2).reshape(len(first), -1).astype(np.float64)
+
+
 def tree_columns(width: int, k: int) -> Ints:
     """Which of the coordinates of `mean_coordinates` the tree holds: the volume and TREE_COLUMNS of each species."""
     chosen = [0]
@@ -77,20 +96,7 @@ def tree_columns(width: int, k: int) -> Ints:
     return np.array(chosen, dtype=np.int64)
 
 
-def mean_pairs(coordinates: Floats, k: int, slack: float) -> tuple[Ints, dict[str, int]]:
-    """Pairs (p, 2) of rows whose coordinates all agree to the slack, ascending, and the counts of the steps."""
-    columns = tree_columns(coordinates.shape[1], k)
-    tree = cKDTree(coordinates[:, columns])
-    pairs = tree.query_pairs(slack, p=np.inf, output_type="ndarray").astype(np.int64).reshape(-1, 2)
-    kept = [
-        part[_all_close(coordinates, part, slack)]
-        for part in (pairs[i : i + BLOCK] for i in range(0, len(pairs), BLOCK))
-    ]
-    left = np.concatenate(kept) if kept else pairs
-    return left[np.lexsort((left[:, 1], left[:, 0]))], {"tree": len(pairs), "means": len(left)}
-
-
-def _all_close(coordinates: Floats, pairs: Ints, slack: float) -> NDArray[np.bool_]:
+def coordinates_agree(coordinates: Floats, pairs: Ints, slack: float) -> NDArray[np.bool_]:
     """Which pairs agree to the slack in every column, column by column so that most fall out early."""
     alive = np.arange(len(pairs))
     for column in range(coordinates.shape[1]):
@@ -103,17 +109,6 @@ def _all_close(coordinates: Floats, pairs: Ints, slack: float) -> NDArray[np.boo
     return out
 
 
-def candidate_pairs(prepared: Prepared, means: NDArray[np.float32], window: Window) -> Candidates:
-    """Every pair of a prepared batch of one composition that could match within the window.
-
-    means (n, r, k) float32: column means of the batch at the scale it was prepared at.
-    """
-    slack = transform_slack(window.strain)
-    pairs, steps = mean_pairs(mean_coordinates(means, prepared.volumes, window), means.shape[2], slack)
-    allowed, columns = allowed_pairs(prepared, pairs)
-    return Candidates(pairs[allowed], {**steps, "columns": columns, "rows": int(allowed.sum())})
-
-
 def allowed_pairs(prepared: Prepared, pairs: Ints) -> tuple[NDArray[np.bool_], int]:
     """Which of the pairs the sorted columns and the rows cannot rule out, and how many the columns left."""
     c = prepared.crystals
@@ -122,9 +117,63 @@ def allowed_pairs(prepared: Prepared, pairs: Ints) -> tuple[NDArray[np.bool_], i
     return allowed, int(columns)
 
 
-def rescaled_shift(window: Window, volumes: Floats) -> float:
-    """Largest shift of a match in units of (V/site)^(1/3), for pairs scaled to the geometric mean of their volumes.
+@dataclass(frozen=True, slots=True)
+class Search:
+    """A batch of one composition made ready for one window: what candidates are looked for in, and verified on."""
 
-    The smallest scale of the batch is taken for all, which only lets more through.
-    """
-    return window.shift / math.exp(float(np.log(volumes).min()) / 3.0)
+    window: Window
+    rows: Distributions
+    """Distances of the batch as it came."""
+
+    scales: Floats
+    """(n,): factor on the lengths of each crystal."""
+
+    prepared: Prepared
+    """At those scales."""
+
+    coordinates: Floats
+    """(n, w): transformed means, then quantiles; crystals of a match agree to `slack` in every one."""
+
+    columns: Ints
+    """Those that the tree holds."""
+
+    slack: float
+
+
+def start_search(
+    batch: CrystalBatch, window: Window, unit_volume: bool = False, rows: Distributions | None = None
+) -> Search:
+    """Prepare a batch of one composition. unit_volume: every crystal is scaled to one cubic unit a site (`isotypic`)."""
+    found = rows if rows is not None else distributions(batch)
+    per_site = batch.volumes / np.diff(batch.offsets)
+    scales = per_site ** (-1.0 / 3.0) if unit_volume else np.ones(len(batch))
+    prepared = prepare(batch, window, scales, found)
+    means = column_means(batch, found).means
+    k = means.shape[1]
+    scaled = means.reshape(len(batch), -1, k) * scales[:, None, None].astype(np.float32)
+    averages = mean_coordinates(scaled, prepared.volumes, window)
+    coordinates = np.concatenate([averages, quantile_coordinates(prepared)], axis=1)
+    columns = np.concatenate([tree_columns(averages.shape[1], k), np.arange(averages.shape[1], coordinates.shape[1])])
+    return Search(window, found, scales, prepared, coordinates, columns, transform_slack(window.strain))
+
+
+def filtered(prepared: Prepared, coordinates: Floats, pairs: Ints, slack: float) -> Ints:
+    """Those of the pairs that no bound rules out, ascending."""
+    kept = []
+    for start in range(0, len(pairs), BLOCK):
+        part = pairs[start : start + BLOCK]
+        part = part[coordinates_agree(coordinates, part, slack)]
+        kept.append(part[allowed_pairs(prepared, part)[0]])
+    left = np.concatenate(kept) if kept else np.zeros((0, 2), np.int64)
+    return left[np.lexsort((left[:, 1], left[:, 0]))]
+
+
+def candidate_pairs(search: Search) -> Candidates:
+    """Every pair of a batch of one composition that could match within the window."""
+    tree = cKDTree(search.coordinates[:, search.columns])
+    pairs = tree.query_pairs(search.slack, p=np.inf, output_type="ndarray").astype(np.int64).reshape(-1, 2)
+    agree = pairs[coordinates_agree(search.coordinates, pairs, search.slack)]
+    allowed, columns = allowed_pairs(search.prepared, agree)
+    left = agree[allowed]
+    left = left[np.lexsort((left[:, 1], left[:, 0]))]
+    return Candidates(left, {"tree": len(pairs), "means": len(agree), "columns": columns, "rows": len(left)})

@@ -14,8 +14,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from ..fingerprint.distributions import Distributions, distributions
-from ..kernels.hermite import hermite
-from ..kernels.lattice_maps import reduced_bases, reduced_basis
+from ..kernels.lattice_maps import reduced_bases
 from ..kernels.match import Crystals
 from ..kernels.near_translations import COMMON_ORDER, all_near_translations
 from ..model.batch import CrystalBatch, Floats, Ints
@@ -119,7 +118,7 @@ def group_lattice(cell: Floats, group: frozenset[tuple[int, int, int]], planar: 
     """Reduced basis R of the lattice spanned by `cell` and the translations, and the integer H with cell = H @ R."""
     rows = [list(t) for t in sorted(group) if any(t)] + [[COMMON_ORDER * (i == j) for j in range(3)] for i in range(3)]
     basis = _integer_basis(np.array(rows, dtype=np.int64))
-    reduced, _ = reduced_basis(basis / COMMON_ORDER @ cell, planar)
+    reduced = reduced_bases((basis / COMMON_ORDER @ cell)[None], np.array([planar]))[0][0]
     return reduced, np.rint(cell @ np.linalg.inv(reduced)).astype(np.int64)
 
 
@@ -134,7 +133,7 @@ def _integer_basis(rows: Ints) -> Ints:
                 pivot = i + int(np.argmin(np.where(tail == 0, np.iinfo(np.int64).max, np.abs(tail))))
                 stacked[[i, pivot]] = stacked[[pivot, i]]
                 stacked[i + 1 :] -= (stacked[i + 1 :, i] // stacked[i, i])[:, None] * stacked[i]
-        basis = hermite(np.ascontiguousarray(stacked[:3]))
+        basis = stacked[:3]
     return basis
 
 
@@ -211,10 +210,9 @@ def _variants(
     """The variants of all crystals: (offsets (n + 1,), bases, matrices, orders, moved), the trivial one first."""
     n = len(cells)
     tolerance = np.full(n, window.translation_tolerance)
-    owners, integers, moved = all_near_translations(cells, offsets, positions, blocks, planar, tolerance)
+    starts, integers, moved = all_near_translations(cells, offsets, positions, blocks, planar, tolerance)
     extra: dict[int, list[tuple[Floats, Ints, int, float]]] = {}
-    starts = np.searchsorted(owners, np.arange(n + 1))
-    for i in np.unique(owners).tolist():
+    for i in np.flatnonzero(np.diff(starts)).tolist():
         part = slice(starts[i], starts[i + 1])
         far = {tuple(t): float(m) for t, m in zip(integers[part].tolist(), moved[part], strict=True)}
         divisor = int(np.gcd.reduce(bins[i]))

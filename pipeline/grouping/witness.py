@@ -70,7 +70,9 @@ def witnesses(prepared: Prepared, found: Verified, window: Window) -> Witnesses:
         offsets,
     )
     if not ok.all():
-        raise NumericsError(f"the recorded match of pair {found.pairs[~ok][0].tolist()} has no pairing within its shift")
+        raise NumericsError(
+            f"the recorded match of pair {found.pairs[~ok][0].tolist()} has no pairing within its shift"
+        )
     if turned.any():  # a permutation stands for its inverse where the pair was computed the other way
         owner = np.repeat(np.arange(len(found)), np.diff(offsets))
         inverse = np.empty_like(pairing)

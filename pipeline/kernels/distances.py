@@ -13,7 +13,7 @@ import math
 import numpy as np
 from numpy.typing import NDArray
 
-from .compiled import kernel
+from .compiled import inner, kernel
 
 SPHERE_SURPLUS = 1.3
 """Expected points in the first ball over k: few sites then need a second, larger one."""
@@ -22,7 +22,7 @@ RADIUS_GROWTH = 1.15
 """Factor on the radius while the ball holds fewer than k points."""
 
 
-@kernel
+@inner
 def lower_triangle(cell: NDArray[np.float64]) -> NDArray[np.float64]:
     """The lower-triangular cell of equal metric with positive diagonal: Gram-Schmidt on the rows of `cell` (3, 3)."""
     out = np.zeros((3, 3))
@@ -42,7 +42,7 @@ def lower_triangle(cell: NDArray[np.float64]) -> NDArray[np.float64]:
     return out
 
 
-@kernel
+@inner
 def _ball(
     low: NDArray[np.float64],
     f0: float,
@@ -94,7 +94,7 @@ def _ball(
     return used
 
 
-@kernel
+@inner
 def _sort_ball(
     values: NDArray[np.float64], lo: int, hi: int, radius2: float, scratch: NDArray[np.float64], ends: NDArray[np.int64]
 ) -> None:
@@ -106,7 +106,8 @@ def _sort_ball(
     n = hi - lo
     if n > 8:
         scale = n / (radius2 * math.sqrt(radius2)) * (1.0 - 1e-9)
-        ends[: n + 1] = 0
+        for t in range(n + 1):
+            ends[t] = 0
         for t in range(lo, hi):
             scratch[t - lo] = values[t]
             ends[min(int(values[t] * math.sqrt(values[t]) * scale), n - 1) + 1] += 1
@@ -179,11 +180,17 @@ def neighbour_distances(
     ends = np.empty(buffer.shape[0] + 1, np.int64)
     starts = np.zeros(kinds + 1, np.int64)
     heads = np.zeros(kinds, np.int64)
+    order = np.empty(sites, np.int64)
     for c in range(cells.shape[0]):
         low = lower_triangle(cells[c])
         first, last = offsets[c], offsets[c + 1]
         n = last - first
-        order = np.argsort(ranks[first:last], kind="mergesort") + first
+        used = 0
+        for s in range(kinds):
+            for j in range(first, last):
+                if ranks[j] == s:
+                    order[used] = j
+                    used += 1
         if planar[c]:
             base = math.sqrt(SPHERE_SURPLUS * k * low[0, 0] * low[1, 1] / (math.pi * n))
         else:
@@ -195,7 +202,8 @@ def neighbour_distances(
                 used = 0
                 kind = 0
                 starts[0] = 0
-                for j in order:
+                for place in range(n):
+                    j = order[place]
                     while kind < ranks[j]:
                         kind += 1
                         starts[kind] = used
@@ -205,7 +213,8 @@ def neighbour_distances(
                     got = _ball(low, f0, f1, f2, radius * radius, planar[c], j == i, buffer, used)
                     while got < 0:
                         larger = np.empty(2 * buffer.shape[0])
-                        larger[:used] = buffer[:used]
+                        for t in range(used):
+                            larger[t] = buffer[t]
                         buffer = larger
                         scratch = np.empty(buffer.shape[0])
                         ends = np.empty(buffer.shape[0] + 1, np.int64)

@@ -10,12 +10,12 @@ from __future__ import annotations
 import numpy as np
 from numpy.typing import NDArray
 
-from .compiled import kernel
+from .compiled import inner
 
 Ints = NDArray[np.int64]
 
 
-@kernel
+@inner
 def hermite(matrix: Ints) -> Ints:
     """The row Hermite normal form (3, 3) int64 of a regular integer matrix."""
     h = matrix.copy()
@@ -47,7 +47,7 @@ def hermite(matrix: Ints) -> Ints:
     return h
 
 
-@kernel
+@inner
 def coset_index(h: Ints, n0: int, n1: int, n2: int) -> int:
     """Which coset of the sublattice spanned by the Hermite matrix `h` the integer vector (n0, n1, n2) lies in."""
     k = n0 // h[0, 0]
@@ -58,7 +58,7 @@ def coset_index(h: Ints, n0: int, n1: int, n2: int) -> int:
     return int((n0 * h[1, 1] + n1) * h[2, 2] + n2)
 
 
-@kernel
+@inner
 def multiples_in(matrix: Ints, modulus: int) -> tuple[bool, Ints]:
     """The Hermite matrix of {n in Z^3 : n @ matrix = 0 mod modulus}, if its determinant is |modulus|.
 

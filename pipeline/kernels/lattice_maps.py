@@ -14,7 +14,7 @@ import math
 import numpy as np
 from numpy.typing import NDArray
 
-from .compiled import kernel
+from .compiled import inner, kernel
 
 Floats = NDArray[np.float64]
 Ints = NDArray[np.int64]
@@ -23,7 +23,7 @@ LENGTH_SLACK = 1e-9
 """Relative slack on every bound of the search, far above rounding and far below any tolerance."""
 
 
-@kernel
+@inner
 def inverse3(m: Floats) -> Floats:
     """Inverse of a (3, 3) float64 matrix by cofactors."""
     out = np.empty((3, 3))
@@ -43,7 +43,7 @@ def inverse3(m: Floats) -> Floats:
     return out
 
 
-@kernel
+@inner
 def product3(a, b):  # type: ignore[no-untyped-def]
     """a @ b of two (3, 3) matrices of one dtype, without a call to BLAS."""
     out = np.zeros((3, 3), a.dtype)
@@ -53,7 +53,7 @@ def product3(a, b):  # type: ignore[no-untyped-def]
     return out
 
 
-@kernel
+@inner
 def determinant3(m):  # type: ignore[no-untyped-def]
     """Determinant of a (3, 3) matrix in its own dtype."""
     return (
@@ -63,7 +63,7 @@ def determinant3(m):  # type: ignore[no-untyped-def]
     )
 
 
-@kernel
+@inner
 def adjugate3(m: Ints) -> Ints:
     """Integer adjugate: m @ adjugate3(m) = det(m) 1."""
     out = np.empty((3, 3), np.int64)
@@ -79,12 +79,12 @@ def adjugate3(m: Ints) -> Ints:
     return out
 
 
-@kernel
+@inner
 def _dot(a: Floats, b: Floats) -> float:
     return a[0] * b[0] + a[1] * b[1] + a[2] * b[2]
 
 
-@kernel
+@inner
 def reduced_basis(cell: Floats, planar: bool) -> tuple[Floats, Ints]:
     """A Minkowski-reduced basis R of a lattice and the unimodular T (int64) with R = T @ cell, shortest vector first.
 
@@ -94,7 +94,9 @@ def reduced_basis(cell: Floats, planar: bool) -> tuple[Floats, Ints]:
     first two rows are reduced, and the third is kept.
     """
     basis = cell.copy()
-    t = np.eye(3, dtype=np.int64)
+    t = np.zeros((3, 3), np.int64)
+    for i in range(3):
+        t[i, i] = 1
     size = 2 if planar else 3
     shrink = 1.0 - 1e-10
     for _ in range(1000):
@@ -140,11 +142,15 @@ def reduced_bases(cells: Floats, planar: NDArray[np.bool_]) -> tuple[Floats, Int
     bases = np.empty_like(cells)
     t = np.empty(cells.shape, np.int64)
     for i in range(cells.shape[0]):
-        bases[i], t[i] = reduced_basis(cells[i], planar[i])
+        basis, matrix = reduced_basis(cells[i], planar[i])
+        for j in range(3):
+            for k in range(3):
+                bases[i, j, k] = basis[j, k]
+                t[i, j, k] = matrix[j, k]
     return bases, t
 
 
-@kernel
+@inner
 def log_stretches(first_inverse: Floats, second: Floats) -> tuple[float, float, float]:
     """Logarithms of the principal stretches of F = first_inverse @ second, ascending.
 
@@ -185,15 +191,43 @@ def log_stretches(first_inverse: Floats, second: Floats) -> tuple[float, float, 
     return low, x + y + z - low - high, high
 
 
-@kernel
+@inner
+def _wider_shells(vectors: Floats, integers: Ints, lengths: Floats) -> tuple[Floats, Ints, Floats]:
+    """Copies with room for twice as many vectors in each shell."""
+    n = lengths.shape[1]
+    more_vectors, more_integers = np.empty((3, 2 * n, 3)), np.empty((3, 2 * n, 3), np.int64)
+    more_lengths = np.empty((3, 2 * n))
+    for i in range(3):
+        for k in range(n):
+            more_lengths[i, k] = lengths[i, k]
+            for m in range(3):
+                more_vectors[i, k, m] = vectors[i, k, m]
+                more_integers[i, k, m] = integers[i, k, m]
+    return more_vectors, more_integers, more_lengths
+
+
+@inner
+def _wider_maps(maps: Ints, strains: Floats) -> tuple[Ints, Floats]:
+    """Copies with room for twice as many maps."""
+    n = strains.shape[0]
+    more_maps, more_strains = np.empty((2 * n, 3, 3), np.int64), np.empty(2 * n)
+    for k in range(n):
+        more_strains[k] = strains[k]
+        for i in range(3):
+            for j in range(3):
+                more_maps[k, i, j] = maps[k, i, j]
+    return more_maps, more_strains
+
+
+@inner
 def lattice_maps(first: Floats, second: Floats, limit: float, planar: bool) -> tuple[int, Ints, Floats]:
     """All integer U with det U = +-1 such that `first` -> U @ second has a strain of at most `limit`.
 
-    first, second (3, 3): reduced bases (reduced_basis). Returns their number, U (count, 3, 3) int64 and strains (count,),
-    in a fixed order: of the box, first row slowest. planar: the third vectors, perpendicular to the planes, map onto each
+    first, second (3, 3): reduced bases (reduced_basis). Returns their number, U (capacity, 3, 3) int64 and strains
+    (capacity,), in a fixed order: of the box, first row slowest. planar: the third vectors, perpendicular to the planes, map onto each
     other and the planes onto themselves.
     """
-    none = np.empty((0, 3, 3), np.int64)
+    none = np.empty((1, 3, 3), np.int64)
     up = math.exp(2.0 * limit) * (1.0 + LENGTH_SLACK)
     down = 1.0 / up
     norms = np.empty(3)
@@ -201,7 +235,7 @@ def lattice_maps(first: Floats, second: Floats, limit: float, planar: bool) -> t
         norms[i] = _dot(first[i], first[i])
         ratio = _dot(second[i], second[i]) / norms[i]
         if ratio > up or ratio < down:  # successive minima
-            return 0, none, np.empty(0)
+            return 0, none, np.empty(1)
     inverse = inverse3(second)
     reach = math.sqrt(up * (max(norms[0], norms[1]) if planar else max(norms[0], norms[1], norms[2])))
     box = np.empty(3, np.int64)
@@ -229,13 +263,8 @@ def lattice_maps(first: Floats, second: Floats, limit: float, planar: bool) -> t
                     if planar and i == 2:
                         continue
                     if counts[i] == size:
-                        wider_v = np.empty((3, 2 * size, 3))
-                        wider_n = np.empty((3, 2 * size, 3), np.int64)
-                        wider_l = np.empty((3, 2 * size))
-                        wider_v[:, :size] = vectors
-                        wider_n[:, :size] = integers
-                        wider_l[:, :size] = lengths
-                        vectors, integers, lengths, size = wider_v, wider_n, wider_l, 2 * size
+                        vectors, integers, lengths = _wider_shells(vectors, integers, lengths)
+                        size *= 2
                     k = counts[i]
                     vectors[i, k, 0], vectors[i, k, 1], vectors[i, k, 2] = v0, v1, v2
                     integers[i, k, 0], integers[i, k, 1], integers[i, k, 2] = n0, n1, n2
@@ -250,7 +279,7 @@ def lattice_maps(first: Floats, second: Floats, limit: float, planar: bool) -> t
             lengths[2, k] = _dot(second[2], second[2])
         counts[2] = 2
     if counts[0] == 0 or counts[1] == 0 or counts[2] == 0:
-        return 0, none, np.empty(0)
+        return 0, none, np.empty(1)
     # |a_i + a_j|^2 and |a_i - a_j|^2 change by the same factors; both intervals bound the product b_i . b_j.
     d01, d02, d12 = _dot(first[0], first[1]), _dot(first[0], first[2]), _dot(first[1], first[2])
     first_inverse = inverse3(first)
@@ -294,12 +323,11 @@ def lattice_maps(first: Floats, second: Floats, limit: float, planar: bool) -> t
                 if strain > limit + LENGTH_SLACK:
                     continue
                 if total == capacity:
-                    wider_u = np.empty((2 * capacity, 3, 3), np.int64)
-                    wider_s = np.empty(2 * capacity)
-                    wider_u[:capacity] = found
-                    wider_s[:capacity] = strains
-                    found, strains, capacity = wider_u, wider_s, 2 * capacity
-                found[total] = u
+                    found, strains = _wider_maps(found, strains)
+                    capacity *= 2
+                for m in range(3):
+                    for n in range(3):
+                        found[total, m, n] = u[m, n]
                 strains[total] = strain
                 total += 1
-    return total, found[:total], strains[:total]
+    return total, found, strains

@@ -22,7 +22,7 @@ from typing import NamedTuple
 import numpy as np
 from numpy.typing import NDArray
 
-from .compiled import kernel
+from .compiled import inner, kernel
 from .hermite import hermite, multiples_in
 from .lattice_maps import adjugate3, determinant3, inverse3, lattice_maps, log_stretches, product3
 from .pairing import bottleneck_pairing, length2, nearest_pairing
@@ -115,7 +115,7 @@ class Matches(NamedTuple):
     """(p, 2, 3): fractions of the common cell: site of the first + shift = site of the second, up to its own shift."""
 
 
-@kernel
+@inner
 def _rows_agree(a: NDArray[np.float32], b: NDArray[np.float32], slack: float) -> bool:
     for t in range(a.shape[0]):
         if abs(a[t] - b[t]) > slack:
@@ -123,7 +123,7 @@ def _rows_agree(a: NDArray[np.float32], b: NDArray[np.float32], slack: float) ->
     return True
 
 
-@kernel
+@inner
 def _pin(c: Crystals, a: int, b: int, origins: Ints) -> tuple[int, int]:
     """The site of `a` to pin and the sites of `b` it may go to: (pinned site, number of `origins` filled in).
 
@@ -156,7 +156,7 @@ def _pin(c: Crystals, a: int, b: int, origins: Ints) -> tuple[int, int]:
     return pinned, used
 
 
-@kernel
+@inner
 def _class_of(value: int, limits: Floats) -> int:
     """The strictest of the three limits that `value` (in UNIT) keeps; 3 for none."""
     for g in range(3):
@@ -165,7 +165,7 @@ def _class_of(value: int, limits: Floats) -> int:
     return 3
 
 
-@kernel
+@inner
 def _cap(best: Ints, map_class: int, shifts: Floats) -> float:
     """The largest shift that could still beat the key `best` on a map of this strain class; negative for none."""
     if best[0] > 2:
@@ -178,7 +178,7 @@ def _cap(best: Ints, map_class: int, shifts: Floats) -> float:
     return cap
 
 
-@kernel
+@inner
 def mean_metric(cell_a: Floats, cell_b: Floats, w: Floats) -> Floats:
     """(G_A + G_B) / 2 of matched cells, for vectors in fractions of cell_b; w takes fractions of cell_a to those."""
     image = product3(inverse3(w), cell_a)
@@ -192,7 +192,7 @@ def mean_metric(cell_a: Floats, cell_b: Floats, w: Floats) -> Floats:
     return g
 
 
-@kernel
+@inner
 def images_of(c: Crystals, a: int, p: Ints, w: Floats) -> tuple[Floats, Ints]:
     """Sites of crystal `a` in its cell p @ cell, in fractions of the other cell, and where its species begin.
 
@@ -219,7 +219,7 @@ def images_of(c: Crystals, a: int, p: Ints, w: Floats) -> tuple[Floats, Ints]:
     return out, blocks
 
 
-@kernel
+@inner
 def pair_up(
     c: Crystals,
     a: int,
@@ -304,7 +304,16 @@ def pair_up(
     return largest if largest <= cap + UNIT else -1.0
 
 
-@kernel
+@inner
+def _unit() -> Ints:
+    """The integer unit matrix."""
+    out = np.zeros((3, 3), np.int64)
+    for i in range(3):
+        out[i, i] = 1
+    return out
+
+
+@inner
 def _match_pair(
     c: Crystals,
     a: int,
@@ -368,7 +377,7 @@ def _match_pair(
                         continue
                     top = product3(product3(c.matrices[va], u), adjugate)
                     if nb == 1:
-                        p = np.eye(3, dtype=np.int64)
+                        p = _unit()
                     else:
                         fits, p = multiples_in(top, det_b)
                         if not fits:
@@ -448,7 +457,8 @@ def _match_pair(
                                     break
                             if order > 0:
                                 continue
-                        best[hand] = key
+                        for i in range(KEY):
+                            best[hand, i] = key[i]
                         grade[hand] = key[0]
                         low, middle, high = log_stretches(inverse_a, product3(float_of(u), c.bases[vb]))
                         mean = (low + middle + high) / 3.0
@@ -470,7 +480,7 @@ def _match_pair(
         grade[1] = 3
 
 
-@kernel
+@inner
 def float_of(m: Ints) -> Floats:
     """A (3, 3) integer matrix as float64."""
     out = np.empty((3, 3))

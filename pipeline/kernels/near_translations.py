@@ -12,25 +12,38 @@ import math
 import numpy as np
 from numpy.typing import NDArray
 
-from .compiled import kernel
+from .compiled import inner, kernel
 from .lattice_maps import inverse3
 
 COMMON_ORDER = 840
 """Least common multiple of 1 to 8: translations are listed as integers over it."""
 
 
-@kernel
+@inner
+def _wider(integers: NDArray[np.int64], moved: NDArray[np.float64]) -> tuple[NDArray[np.int64], NDArray[np.float64]]:
+    """Copies with room for twice as many rows."""
+    n = moved.shape[0]
+    more_integers = np.empty((2 * n, 3), np.int64)
+    more_moved = np.empty(2 * n)
+    for i in range(n):
+        more_moved[i] = moved[i]
+        for k in range(3):
+            more_integers[i, k] = integers[i, k]
+    return more_integers, more_moved
+
+
+@inner
 def near_translations(
     cell: NDArray[np.float64],
     positions: NDArray[np.float64],
     blocks: NDArray[np.int64],
     planar: bool,
     tolerance: float,
-) -> tuple[NDArray[np.int64], NDArray[np.float64]]:
+) -> tuple[int, NDArray[np.int64], NDArray[np.float64]]:
     """Approximate translations of one crystal other than lattice vectors.
 
     cell (3, 3), rows; positions (n, 3), fractional, sorted by species; blocks (kinds + 1,): where each species begins.
-    Returns integers (t, 3) in [0, 840), translation = integers / 840 in fractions of the cell, distinct; and the
+    Returns how many there are, integers (t, 3) in [0, 840), translation = integers / 840 in fractions of the cell, distinct; and the
     displacement (t,), angstrom, of the site that moves farthest. Only orders that divide the number of sites of every
     species occur, because a translation group leaves no site in place.
     """
@@ -44,10 +57,11 @@ def near_translations(
         common = x
         if size < blocks[rare + 1] - blocks[rare]:
             rare = s
-    found = np.empty((0, 3), np.int64)
-    moved = np.empty(0)
+    found = np.empty((64, 3), np.int64)
+    moved = np.empty(64)
+    count = 0
     if common == 1:
-        return found, moved
+        return 0, found, moved
     g = np.empty((3, 3))
     for i in range(3):
         for j in range(3):
@@ -78,7 +92,7 @@ def near_translations(
                         if m0 == 0 and m1 == 0 and m2 == 0:
                             continue
                         known = False
-                        for k in range(found.shape[0]):
+                        for k in range(count):
                             if found[k, 0] == m0 and found[k, 1] == m1 and found[k, 2] == m2:
                                 known = True
                                 break
@@ -106,12 +120,12 @@ def near_translations(
                             if worst > tolerance2:
                                 break
                         if worst <= tolerance2:
-                            wider = np.empty((found.shape[0] + 1, 3), np.int64)
-                            wider[:-1] = found
-                            wider[-1, 0], wider[-1, 1], wider[-1, 2] = m0, m1, m2
-                            found = wider
-                            moved = np.append(moved, math.sqrt(worst))
-    return found, moved
+                            if count == moved.shape[0]:
+                                found, moved = _wider(found, moved)
+                            found[count, 0], found[count, 1], found[count, 2] = m0, m1, m2
+                            moved[count] = math.sqrt(worst)
+                            count += 1
+    return count, found, moved
 
 
 @kernel
@@ -123,23 +137,22 @@ def all_near_translations(
     planar: NDArray[np.bool_],
     tolerance: NDArray[np.float64],
 ) -> tuple[NDArray[np.int64], NDArray[np.int64], NDArray[np.float64]]:
-    """`near_translations` of every crystal of a batch: (owner (t,), integers (t, 3), displacement (t,)).
+    """`near_translations` of every crystal of a batch: (starts (n + 1,), integers (t, 3), displacement (t,)).
 
     blocks (n, kinds + 1): where each species begins, in sites of the batch; tolerance (n,), angstrom.
     """
-    owners = np.empty(64, np.int64)
+    starts = np.zeros(cells.shape[0] + 1, np.int64)
     integers = np.empty((64, 3), np.int64)
     moved = np.empty(64)
     used = 0
     for c in range(cells.shape[0]):
-        found, far = near_translations(cells[c], positions, blocks[c], planar[c], tolerance[c])
-        more = found.shape[0]
-        while used + more > owners.shape[0]:
-            owners = np.concatenate((owners, np.empty_like(owners)))
-            integers = np.concatenate((integers, np.empty_like(integers)))
-            moved = np.concatenate((moved, np.empty_like(moved)))
-        owners[used : used + more] = c
-        integers[used : used + more] = found
-        moved[used : used + more] = far
-        used += more
-    return owners[:used], integers[:used], moved[:used]
+        count, found, far = near_translations(cells[c], positions, blocks[c], planar[c], tolerance[c])
+        while used + count > moved.shape[0]:
+            integers, moved = _wider(integers, moved)
+        starts[c + 1] = starts[c] + count
+        for i in range(count):
+            moved[used] = far[i]
+            for k in range(3):
+                integers[used, k] = found[i, k]
+            used += 1
+    return starts, integers[:used], moved[:used]

@@ -13,7 +13,7 @@ import math
 import numpy as np
 from numpy.typing import NDArray
 
-from .compiled import kernel
+from .compiled import inner
 from .hermite import coset_index
 from .lattice_maps import inverse3
 
@@ -21,7 +21,7 @@ Floats = NDArray[np.float64]
 Ints = NDArray[np.int64]
 
 
-@kernel
+@inner
 def length2(g: Floats, x: float, y: float, z: float) -> float:
     """Squared length of the fractional vector (x, y, z) in the metric g (3, 3)."""
     return float(
@@ -32,7 +32,7 @@ def length2(g: Floats, x: float, y: float, z: float) -> float:
     )
 
 
-@kernel
+@inner
 def nearest_pairing(
     targets: Floats,
     target_blocks: Ints,
@@ -74,7 +74,7 @@ def nearest_pairing(
     return True
 
 
-@kernel
+@inner
 def _augment(
     t: int,
     starts: Ints,
@@ -115,18 +115,51 @@ def _augment(
     return False
 
 
-@kernel
+@inner
+def _wider(node: Ints, length: Floats, image: Ints) -> tuple[Ints, Floats, Ints]:
+    """Copies of the columns of edges with room for twice as many."""
+    n = node.shape[0]
+    more_node, more_length, more_image = np.empty(2 * n, np.int64), np.empty(2 * n), np.empty((2 * n, 3), np.int64)
+    for e in range(n):
+        more_node[e], more_length[e] = node[e], length[e]
+        for i in range(3):
+            more_image[e, i] = image[e, i]
+    return more_node, more_length, more_image
+
+
+@inner
+def _sorted(values: Floats, count: int) -> Floats:
+    """The first `count` values in ascending order (Shell 1959)."""
+    out = np.empty(count)
+    for i in range(count):
+        out[i] = values[i]
+    gap = count // 2
+    while gap > 0:
+        for i in range(gap, count):
+            v = out[i]
+            j = i
+            while j >= gap and out[j - gap] > v:
+                out[j] = out[j - gap]
+                j -= gap
+            out[j] = v
+        gap //= 2
+    return out
+
+
+@inner
 def _complete(starts: Ints, ends: Ints, edge_node: Ints, edge_length: Floats, limit: float, mate: Ints) -> bool:
     """Whether edges up to `limit` allow a complete pairing; fills mate."""
-    mate[:] = -1
-    seen = np.full(mate.shape[0], -1, np.int64)
+    seen = np.empty(mate.shape[0], np.int64)
+    for node in range(mate.shape[0]):
+        mate[node] = -1
+        seen[node] = -1
     for t in range(starts.shape[0]):
         if not _augment(t, starts, ends, edge_node, edge_length, limit, mate, seen, t):
             return False
     return True
 
 
-@kernel
+@inner
 def bottleneck_pairing(
     targets: Floats,
     target_blocks: Ints,
@@ -175,9 +208,7 @@ def bottleneck_pairing(
                             if r > limit2:
                                 continue
                             if used == capacity:
-                                edge_node = np.concatenate((edge_node, np.empty_like(edge_node)))
-                                edge_length = np.concatenate((edge_length, np.empty_like(edge_length)))
-                                edge_image = np.concatenate((edge_image, np.empty_like(edge_image)))
+                                edge_node, edge_length, edge_image = _wider(edge_node, edge_length, edge_image)
                                 capacity *= 2
                             edge_node[used] = q * index + coset_index(common, n0, n1, n2)
                             edge_length[used] = r
@@ -186,7 +217,7 @@ def bottleneck_pairing(
             ends[t] = used
             if used == starts[t]:
                 return False
-    steps = np.unique(edge_length[:used])
+    steps = _sorted(edge_length, used)
     nodes = positions.shape[0] * index
     mate = np.empty(nodes, np.int64)
     low, high = 0, steps.shape[0] - 1

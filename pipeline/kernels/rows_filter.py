@@ -9,7 +9,7 @@ from __future__ import annotations
 import numpy as np
 from numpy.typing import NDArray
 
-from .compiled import kernel
+from .compiled import inner, kernel
 
 Singles = NDArray[np.float32]
 Ints = NDArray[np.int64]
@@ -33,7 +33,7 @@ def sort_columns(rows: Singles, blocks: Ints) -> Singles:
     return out
 
 
-@kernel
+@inner
 def _columns_agree(ordered: Singles, a: Ints, b: Ints, slack: float) -> bool:
     """Sorted columns of two crystals within the slack; unequal numbers of sites by their common refinement.
 
@@ -55,7 +55,7 @@ def _columns_agree(ordered: Singles, a: Ints, b: Ints, slack: float) -> bool:
     return True
 
 
-@kernel
+@inner
 def _site_allows(rows: Singles, grouped: Singles, counts: Ints, p: int, q: int, slack: float) -> bool:
     """Whether sites p and q can be paired: distances to all neighbours, then to the neighbours of each species.
 
@@ -84,7 +84,7 @@ def _site_allows(rows: Singles, grouped: Singles, counts: Ints, p: int, q: int, 
     return True
 
 
-@kernel
+@inner
 def _each_has_partner(rows: Singles, grouped: Singles, counts: Ints, a: Ints, b: Ints, slack: float) -> bool:
     for s in range(a.shape[0] - 1):
         for p in range(a[s], a[s + 1]):

@@ -1,0 +1,99 @@
+"""Crowds: records with so many candidates that verifying every pair would follow the number of true pairs.
+
+Five thousand noisy copies of one crystal are twelve million pairs. Families and groups need few of them:
+
+- a group needs its kept record against the records not yet taken (groups.py);
+- a family needs one match wherever two groups touch: candidates between two components are verified in the order of
+  their distance in the fingerprint and only while the two are not yet known to be one. When none is left between
+  different components, the components are those of the graph of all pairs.
+
+Both are exactly what all pairs would give. What is not complete inside a crowd is the list of matches: a record of a crowd
+has its kept record, a spanning tree of its family over the pairs that were verified, and the nearest of the pairs verified
+(its nearest few in the fingerprint among them), and carries the flag that there are more.
+"""
+
+from __future__ import annotations
+
+from dataclasses import fields
+
+import numpy as np
+from scipy.spatial import cKDTree
+
+from ..fingerprint.distributions import Distributions
+from ..model.batch import Ints, select
+from .candidates import Search, allowed_pairs, coordinates_agree, start_search
+from .graph import components
+from .pair_store import Limit, PairStore
+from .window import Window
+
+CHUNK = 512
+"""Pairs between components that are verified before the components are looked at again."""
+
+
+class Crowd:
+    """The crowded nodes of a composition at one grade.
+
+    Candidates are looked for with the limits of the grade itself, not of the window; what is verified is verified in
+    the window, as everywhere.
+    """
+
+    def __init__(self, search: Search, limit: Limit, crowded: Ints) -> None:
+        """crowded (c,): the nodes, ascending."""
+        window = Window((limit.shift,) * 3, (limit.strain,) * 3)
+        batch = select(search.prepared.batch, crowded)
+        sites = np.concatenate([np.arange(*search.prepared.batch.offsets[[i, i + 1]]) for i in crowded.tolist()])
+        rows = Distributions(*(getattr(search.rows, f.name)[sites] for f in fields(Distributions)))
+        self.limit = limit
+        self.crowded = crowded
+        self._place = {int(node): i for i, node in enumerate(crowded)}
+        self._inner = start_search(batch, window, bool((search.scales != 1.0).any()), rows)
+        self._points = self._inner.coordinates[:, self._inner.columns]
+        self._tree = cKDTree(self._points)
+
+    def _candidates(self, first: int, others: Ints) -> Ints:
+        """Candidate pairs of nodes: places in the crowd `first` with `others`."""
+        pairs = np.stack([np.full(len(others), first), others], axis=1)
+        pairs = pairs[coordinates_agree(self._inner.coordinates, pairs, self._inner.slack)]
+        pairs = pairs[allowed_pairs(self._inner.prepared, pairs)[0]]
+        return np.sort(self.crowded[pairs], axis=1)
+
+    def _ball(self, place: int) -> Ints:
+        found = self._tree.query_ball_point(self._points[place], self._inner.slack, p=np.inf)
+        return np.sort(np.asarray(found, dtype=np.int64))
+
+    def partners(self, store: PairStore, node: int, free: Ints) -> Ints:
+        """Crowded nodes among `free` (ascending) that match a crowded node; verified as far as needed."""
+        place = self._place[node]
+        ball = self._ball(place)
+        ball = ball[np.isin(self.crowded[ball], free) & (ball != place)]
+        pairs = self._candidates(place, ball)
+        if not len(pairs):
+            return np.zeros(0, np.int64)
+        store.ensure(pairs)
+        return store.neighbours(pairs, self.limit, node)
+
+    def nearest(self, count: int) -> Ints:
+        """Pairs of each crowded node with its `count` nearest crowded nodes in the fingerprint."""
+        if len(self.crowded) < 2:
+            return np.zeros((0, 2), np.int64)
+        _, found = self._tree.query(self._points, k=min(count + 1, len(self.crowded)), p=np.inf)
+        pairs = np.stack([np.repeat(np.arange(len(found)), found.shape[1]), found.ravel()], axis=1)
+        pairs = np.sort(self.crowded[pairs], axis=1)
+        return np.unique(pairs[pairs[:, 0] < pairs[:, 1]], axis=0)
+
+    def connect(self, store: PairStore) -> None:
+        """Verify pairs until no candidate is left between different components of the graph at the limit."""
+        label = components(store.nodes, store.edges(self.limit)[0])
+        values, counts = np.unique(label[self.crowded], return_counts=True)
+        largest = values[np.argmax(counts)]
+        # Every pair between two components has an end outside the largest one.
+        for node in self.crowded[label[self.crowded] != largest].tolist():
+            place = self._place[node]
+            ball = self._ball(place)
+            pairs = self._candidates(place, ball[label[self.crowded[ball]] != label[node]])
+            pairs = pairs[~store.has(pairs[:, 0] * store.nodes + pairs[:, 1])]
+            while len(pairs):
+                store.ensure(pairs[:CHUNK])
+                label = components(store.nodes, store.edges(self.limit)[0])
+                pairs = pairs[CHUNK:]
+                pairs = pairs[label[pairs[:, 0]] != label[pairs[:, 1]]]

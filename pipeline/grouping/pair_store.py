@@ -1,0 +1,123 @@
+"""The pairs of one composition that have been verified, and the rule by which more are: each at most once."""
+
+from __future__ import annotations
+
+from collections.abc import Callable
+from dataclasses import dataclass, fields
+
+import numpy as np
+from numpy.typing import NDArray
+
+from ..model.batch import Floats, Ints
+from .verification import NO_MATCH, Verified
+
+
+@dataclass(frozen=True, slots=True)
+class Limit:
+    """What makes two nodes neighbours in a graph: a grade, under one rule for mirror images."""
+
+    grade: int
+    """0 for `same`, 1 for `near`."""
+
+    shift: float
+    strain: float
+
+    separate: bool
+    """Mirror images are two crystals: only a proper match counts."""
+
+
+class PairStore:
+    """Verified pairs (first < second) of n nodes. `pins` force or forbid pairs whatever was measured."""
+
+    def __init__(
+        self, nodes: int, verify: Callable[[Ints], Verified], together: Ints, apart: Ints, known: Verified | None = None
+    ) -> None:
+        self.nodes = nodes
+        self._verify = verify
+        self._codes = np.zeros(0, np.int64)
+        self._rows = np.zeros(0, np.int64)
+        self._columns: Verified | None = None
+        self.together = self._code(together)
+        self.apart = self._code(apart)
+        self.computed = 0
+        if known is not None and len(known):
+            self._append(known)
+
+    def _code(self, pairs: Ints) -> Ints:
+        pairs = np.asarray(pairs, dtype=np.int64).reshape(-1, 2)
+        return np.unique(pairs.min(axis=1) * self.nodes + pairs.max(axis=1))
+
+    def _append(self, found: Verified) -> None:
+        start = 0 if self._columns is None else len(self._columns)
+        if self._columns is None:
+            self._columns = found
+        else:
+            self._columns = Verified(
+                **{
+                    f.name: np.concatenate([getattr(self._columns, f.name), getattr(found, f.name)])
+                    for f in fields(Verified)
+                }
+            )
+        codes = np.concatenate([self._codes, found.pairs[:, 0] * self.nodes + found.pairs[:, 1]])
+        rows = np.concatenate([self._rows, np.arange(start, start + len(found))])
+        order = np.argsort(codes, kind="stable")
+        self._codes, self._rows = codes[order], rows[order]
+
+    def ensure(self, pairs: Ints) -> None:
+        """Verify those of the pairs (p, 2), first < second, that have not been."""
+        if not len(pairs):
+            return
+        codes = np.unique(pairs[:, 0] * self.nodes + pairs[:, 1])
+        codes = codes[~self.has(codes)]
+        if len(codes):
+            self.computed += len(codes)
+            self._append(self._verify(np.stack([codes // self.nodes, codes % self.nodes], axis=1)))
+
+    def has(self, codes: Ints) -> NDArray[np.bool_]:
+        """Which pairs, as first * nodes + second, have been verified."""
+        if not len(self._codes):
+            return np.zeros(len(codes), bool)
+        place = np.minimum(np.searchsorted(self._codes, codes), len(self._codes) - 1)
+        return np.asarray(self._codes[place] == codes)
+
+    def matches(self) -> Verified | None:
+        """All verified pairs that match in the window, ascending by pair."""
+        if self._columns is None:
+            return None
+        ordered = self._columns.take(self._rows)
+        return ordered.take(ordered.grade < NO_MATCH)
+
+    def edges(self, limit: Limit) -> tuple[Ints, Floats, Floats, Floats]:
+        """Pairs (e, 2) that are neighbours at a grade, with shift, strain and t = max(shift / limit, strain / limit).
+
+        Pairs pinned together that do not match have shift and strain NaN and t = infinity: they hold a group together,
+        and nothing is said of their distance. A pair pinned apart is none.
+        """
+        found = self.matches()
+        if found is None:
+            pairs, shift, strain = np.zeros((0, 2), np.int64), np.zeros(0), np.zeros(0)
+        else:
+            if limit.separate:
+                grade, shift, strain = found.proper_grade, found.proper_shift, found.proper_strain
+            else:
+                grade, shift, strain = found.grade, found.largest_shift, found.strain
+            keep = grade <= limit.grade
+            pairs, shift, strain = found.pairs[keep], shift[keep], strain[keep]
+        codes = pairs[:, 0] * self.nodes + pairs[:, 1]
+        keep = ~np.isin(codes, self.apart)
+        added = self.together[~np.isin(self.together, codes)]
+        pairs = np.concatenate([pairs[keep], np.stack([added // self.nodes, added % self.nodes], axis=1)])
+        unmeasured = np.full(len(added), np.nan)
+        shift, strain = np.concatenate([shift[keep], unmeasured]), np.concatenate([strain[keep], unmeasured])
+        t = np.fmax(shift / limit.shift, strain / limit.strain)
+        return pairs, shift, strain, np.where(np.isnan(t), np.inf, t)
+
+    def neighbours(self, pairs: Ints, limit: Limit, node: int) -> Ints:
+        """The other end of those of the verified pairs (p, 2) of `node` that are neighbours at a grade."""
+        if self._columns is None:
+            raise ValueError("nothing has been verified")
+        codes = pairs[:, 0] * self.nodes + pairs[:, 1]
+        rows = self._rows[np.searchsorted(self._codes, codes)]
+        grade = (self._columns.proper_grade if limit.separate else self._columns.grade)[rows]
+        good = pairs[(grade <= limit.grade) & ~np.isin(codes, self.apart)]
+        return good.sum(axis=1) - node
