@@ -12,10 +12,11 @@ from typing import Annotated
 
 import click
 import typer
+
 from lattice_census import __version__
 from lattice_census.errors import CensusError
 
-from . import reading, writing
+from . import asking, reading, writing
 
 app = typer.Typer(
     name="lattice-census",
@@ -44,6 +45,7 @@ def _root(
 
 writing.register(app)
 reading.register(app)
+asking.register(app)
 
 
 def main() -> None:
