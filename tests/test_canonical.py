@@ -2,13 +2,16 @@
 
 from __future__ import annotations
 
+import time
+
 import numpy as np
 import pytest
 
 from lattice_census.cell.canonical import canonicalise
 from lattice_census.errors import UsageError
 from lattice_census.model.batch import CrystalBatch
-from lattice_census.tolerances import Tolerances
+from lattice_census.tolerances import GRID, Tolerances
+from tests import slow_canonical
 from tests.invariants import check_accounting, check_canonical, check_fixed_point
 from tests.strategies import (
     LATTICE_TYPES,
@@ -17,9 +20,11 @@ from tests.strategies import (
     disguise,
     hermite_matrices,
     mirror,
+    primitive_cell,
     random_crystal,
     supercell,
     type_crystals,
+    unimodular,
 )
 
 TOLERANCES = Tolerances()
@@ -82,8 +87,7 @@ def test_six_digits_mostly_keep_the_key():
     kept = np.mean([result.crystal_key[r] == plain.crystal_key[owner[i]] for r, i in enumerate(result.rows)])
     straight = canonicalise(batch([six_digits(c) for c in crystals]), TOLERANCES)
     same = np.mean([straight.crystal_key[r] == plain.crystal_key[i] for r, i in enumerate(straight.rows)])
-    print(f"six digits: {same:.2f} of the plain cells, {kept:.2f} of the disguised ones keep the key")
-    assert same > 0.3
+    assert same > 0.6 and kept > 0.3
 
 
 def test_order_and_chunks_do_not_matter():
@@ -233,3 +237,75 @@ def test_empty_batch():
 def test_contradicting_tolerances_are_refused():
     with pytest.raises(UsageError):
         canonicalise(batch([]), Tolerances(primitive_tolerance=0.2))
+
+
+@pytest.mark.parametrize("number", [40, pytest.param(400, marks=pytest.mark.slow)])
+def test_descriptions_agree_with_the_plain_twin(number):
+    """The smallest description by forming them all; the twin starts from the canonical crystal in another basis."""
+    rng = np.random.default_rng(301)
+    crystals = crystals_of_all_types(rng, number + 84)[-number:]
+    result = canonicalise(batch(crystals), TOLERANCES)
+    for i in range(len(result)):
+        x = result.crystals.positions[result.crystals.sites(i)]
+        if len(x) > 12:
+            continue
+        cell, tokens = result.crystals.cells[i], result.crystals.tokens_of(i)
+        order = rng.permutation(len(x))
+        numbers, sites = slow_canonical.smallest_description(cell, x[order], [tokens[k] for k in order])
+        size = np.cbrt(abs(np.linalg.det(cell)) / len(x))
+        metric = (cell @ cell.T / size**2)[[0, 1, 2, 1, 0, 0], [0, 1, 2, 2, 2, 1]]
+        assert slow_canonical.grid(metric).tolist() == list(numbers)
+        assert (slow_canonical.grid(x) % GRID).tolist() == [list(s[1:]) for s in sites]
+
+
+def test_overlaps_agree_with_the_plain_twin():
+    """Random sites close to the limit, in skewed bases of cells with edges near it too."""
+    rng = np.random.default_rng(302)
+    crystals, wanted = [], []
+    for i in range(150):
+        cell = primitive_cell(rng, LATTICE_TYPES[i % 14]) * rng.uniform(0.1, 0.4)
+        x = rng.random((int(rng.integers(1, 5)), 3))
+        wanted.append(slow_canonical.closest_pair(cell, x, TOLERANCES.overlap_distance))
+        m = unimodular(rng)
+        crystals.append((m @ cell, x @ np.linalg.inv(m) + rng.integers(-2, 3, x.shape), ["C"] * len(x)))
+    result = canonicalise(batch(crystals), TOLERANCES)
+    refused = dict(result.refusals)
+    assert 30 < len(refused) < 140
+    for i, pair in enumerate(wanted):
+        assert (i in refused) == (pair is not None)
+        if pair is not None:
+            a, b, r = pair
+            named = f"sites {a + 1} and {b + 1} are" if a != b else "site 1 and its own periodic image are"
+            assert refused[i].message == f"{named} {r:.3f} angstrom apart"
+
+
+def test_crystals_of_lattices_close_to_a_higher_symmetry():
+    """Double precision, lattices that miss a higher type by 1e-7 to 1e-4: one key each, and a fixed point."""
+    rng = np.random.default_rng(303)
+    crystals = []
+    for i in range(140):
+        cell, x, tokens = random_crystal(rng, LATTICE_TYPES[i % 14], 3)
+        noise = 10 ** rng.uniform(-7, -4)
+        crystals.append((cell @ (np.eye(3) + noise * rng.uniform(-1, 1, (3, 3))), x, tokens))
+    plain = canonicalise(batch(crystals), TOLERANCES)
+    disguised, owner = disguises_of(rng, crystals, 4)
+    other = canonicalise(batch(disguised), TOLERANCES)
+    assert not other.refusals
+    assert list(other.crystal_key) == [plain.crystal_key[i] for i in owner]
+    check_fixed_point(other, canonicalise(other.crystals, TOLERANCES))
+
+
+def test_large_symmetric_crystals_take_no_more_than_moments():
+    """Many sites and many rotations at once: 48 and 1,000 sites in cubic lattices (seconds allowed, not minutes)."""
+    rng = np.random.default_rng(304)
+    n = 10
+    grid = np.stack(np.meshgrid(*[np.arange(n) / n] * 3, indexing="ij"), axis=-1).reshape(-1, 3)
+    cell = np.eye(3) * 3.0 * n
+    noisy = grid + rng.uniform(-0.01, 0.01, grid.shape)
+    tokens = ["Si"] * n**3
+    start = time.perf_counter()
+    given = batch([(cell, noisy, tokens), (cell, grid[1:], tokens[1:]), (cell, noisy[:48], tokens[:48])])
+    result = canonicalise(given, TOLERANCES)
+    assert time.perf_counter() - start < 20
+    assert len(result) == 3
+    assert canonicalise(result.crystals, TOLERANCES).crystal_key == result.crystal_key
