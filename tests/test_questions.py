@@ -306,6 +306,7 @@ def test_answers_have_distinct_columns_that_name_their_unit(connection: duckdb.D
         cursor = connection.execute(question.sql, bind(question, tried[0][0], connection))
         columns = [d[0] for d in cursor.description]
         assert len(set(columns)) == len(columns)
+        assert not {"HUGEINT", "DECIMAL"} & {str(d[1]).split("(")[0] for d in cursor.description}, name
         for column in columns:
             if "energy" in column and column != "with_energy":
                 assert column.endswith("_ev_per_site"), (name, column)

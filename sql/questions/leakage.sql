@@ -12,8 +12,8 @@ WITH held AS (
 SELECT a.split,
        b.split AS other_split,
        count(*) AS groups_in_common,
-       sum(a.records) AS records_in_split,
-       sum(b.records) AS records_in_other,
+       sum(a.records)::BIGINT AS records_in_split,
+       sum(b.records)::BIGINT AS records_in_other,
        100.0 * sum(a.records) / (SELECT sum(h.records) FROM held h WHERE h.split = a.split) AS share_of_split_percent
 FROM held a
 JOIN held b ON a.group_id = b.group_id AND a.split <> b.split

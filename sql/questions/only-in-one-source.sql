@@ -10,7 +10,7 @@ WITH held AS (
     GROUP BY group_id, source
 )
 SELECT source,
-       sum(records) AS records,
+       sum(records)::BIGINT AS records,
        count(*) AS groups,
        count(*) FILTER (sources = 1) AS groups_only_here,
        100.0 * count(*) FILTER (sources = 1) / count(*) AS only_here_percent

@@ -2,8 +2,8 @@
 SELECT r.source,
        x.supercell_index,
        count(*) AS records,
-       sum(r.sites_given) AS sites_given,
-       sum(r.sites_primitive) AS sites_primitive
+       sum(r.sites_given)::BIGINT AS sites_given,
+       sum(r.sites_primitive)::BIGINT AS sites_primitive
 FROM current_records r
 JOIN crystals x USING (record_id)
 WHERE x.supercell_index > 1
