@@ -6,16 +6,10 @@ and every limit is held by counting the bytes that really come out, not those th
 
 from __future__ import annotations
 
-import bz2
-import gzip
-import io
-import lzma
 import re
 import stat
-import sys
 import tarfile
 import zipfile
-import zlib
 from collections.abc import Callable, Iterator
 from dataclasses import dataclass
 from pathlib import Path
@@ -25,39 +19,22 @@ from ..model.raw import FileRefused, RawRecord, Reader, SplitOptions
 from ..model.refusals import Refusal
 from . import reader_for
 from .detect import COMPRESSIONS, base_name, stem_of
+from .guarded import (
+    FAULTS,
+    ArchiveLimits,
+    Guarded,
+    Total,
+    buffered,
+    compressed_stream,
+    ratio_check,
+    unreadable,
+    unsafe_archive,
+)
 from .streams import CHUNK, clean_text
 
 _TAR = re.compile(r".*\.(?:tar|tgz|tbz2?|txz|tar\.(?:gz|bz2|xz))", re.IGNORECASE)
 _ARCHIVE = re.compile(r".*\.(?:zip|7z|rar|tar|tgz|tbz2?|txz|tar\.(?:gz|bz2|xz|zst))", re.IGNORECASE)
-_FAULTS = (
-    OSError,
-    EOFError,
-    zlib.error,
-    lzma.LZMAError,
-    zipfile.BadZipFile,
-    tarfile.TarError,
-    ValueError,
-    RuntimeError,
-)
 _BLOCK = 512
-
-
-@dataclass(frozen=True, slots=True)
-class ArchiveLimits:
-    """What an archive or a compressed file may come to."""
-
-    member_bytes: int = 8 << 30
-    """Bytes of one member."""
-
-    total_bytes: int = 64 << 30
-    """Bytes of all members."""
-
-    ratio: float = 500.0
-    """Bytes that come out over bytes that go in, once `ratio_after` bytes are out."""
-
-    ratio_after: int = 32 << 20
-
-    members: int = 1_000_000
 
 
 @dataclass(frozen=True, slots=True)
@@ -104,7 +81,7 @@ def open_records(
             except FileRefused as refused:
                 refusal = refused.refusal
             except OSError as error:
-                refusal = _unreadable(error)
+                refusal = unreadable(error)
         if refusal is not None:
             yield FoundRecord(member.file, name, RawRecord(member.stem, None, {}, refusal))
 
@@ -123,30 +100,21 @@ def open_members(
             yield from _zip_members(path, file, limits)
         elif _TAR.fullmatch(path.name):
             with path.open("rb") as raw:
-                yield from _tar_members(_compressed_stream(raw, path.name, limits, tar=True), file, limits)
+                yield from _tar_members(compressed_stream(raw, path.name, limits, tar=True), file, limits)
         else:
             with path.open("rb") as raw:
                 packed = path.name.lower().endswith(COMPRESSIONS)
-                stream = _compressed_stream(raw, path.name, limits) if packed else raw
+                stream = compressed_stream(raw, path.name, limits) if packed else raw
                 yield _member(stream, file, path.name, by_content=explicit, explicit=explicit)
     except FileRefused as refused:
         yield Member(file, stem_of(path.name), refusal=refused.refusal)
-    except _FAULTS as error:
-        yield Member(file, stem_of(path.name), refusal=_unreadable(error))
+    except FAULTS as error:
+        yield Member(file, stem_of(path.name), refusal=unreadable(error))
 
 
 def zipfile_named(name: str) -> bool:
     """Whether the name is that of a zip archive."""
     return name.lower().endswith(".zip")
-
-
-def _unreadable(error: BaseException) -> Refusal:
-    shown = error.strerror if isinstance(error, OSError) and error.strerror else str(error) or type(error).__name__
-    return Refusal("file_unreadable", shown, "read")
-
-
-def _unsafe(message: str) -> Refusal:
-    return Refusal("archive_unsafe", message, "read")
 
 
 def _member(stream: BinaryIO, file: str, name: str, by_content: bool = False, explicit: bool = False) -> Member:
@@ -160,97 +128,6 @@ def _member(stream: BinaryIO, file: str, name: str, by_content: bool = False, ex
         message = "neither the name nor the content shows a format that is known"
         return Member(file, stem_of(name), refusal=Refusal("file_unreadable", message, "read"))
     return Member(file, stem_of(name), reader, stream)
-
-
-class _Guarded(io.RawIOBase):
-    """A stream that counts what comes out of it, holds limits, and turns every fault into FileRefused."""
-
-    def __init__(self, source: IO[bytes], limit: int, ratio: Callable[[int], str | None], total: _Total) -> None:
-        self._read: Callable[[int], bytes] = getattr(source, "read1", source.read)
-        self._limit = limit
-        self._ratio = ratio
-        self._total = total
-        self._out = 0
-
-    def readable(self) -> bool:
-        return True
-
-    def readinto(self, buffer: bytearray | memoryview) -> int:  # type: ignore[override]
-        try:
-            data = self._read(len(buffer))
-        except FileRefused:
-            raise
-        except _FAULTS as error:
-            raise FileRefused(_unreadable(error)) from None
-        self._out += len(data)
-        self._total.out += len(data)
-        if self._out > self._limit:
-            raise FileRefused(_unsafe(f"more than {self._limit} bytes come out of it"))
-        if self._total.out > self._total.limit:
-            raise FileRefused(_unsafe(f"more than {self._total.limit} bytes come out of the archive"))
-        excess = self._ratio(self._out)
-        if excess is not None:
-            raise FileRefused(_unsafe(excess))
-        buffer[: len(data)] = data
-        return len(data)
-
-
-class _Total:
-    """Bytes that came out of all members of one archive."""
-
-    def __init__(self, limit: int) -> None:
-        self.limit = limit
-        self.out = 0
-
-
-def _buffered(guarded: _Guarded) -> BinaryIO:
-    return cast(BinaryIO, io.BufferedReader(guarded, CHUNK))
-
-
-def _ratio_check(limits: ArchiveLimits, went_in: Callable[[], int]) -> Callable[[int], str | None]:
-    def check(out: int) -> str | None:
-        if out > limits.ratio_after and out > limits.ratio * max(went_in(), 1):
-            return f"{out} bytes come out of {went_in()}: more than {limits.ratio:g} to 1"
-        return None
-
-    return check
-
-
-def _compressed_stream(raw: BinaryIO, name: str, limits: ArchiveLimits, tar: bool = False) -> BinaryIO:
-    """The decompressed content of an open file or member, guarded."""
-    went_in = _Counted(raw)
-    source = _decompressor(went_in, name)
-    # What comes out of a plain tar is as long as the file; its members are counted one by one.
-    limit = (sys.maxsize if name.lower().endswith(".tar") else limits.total_bytes) if tar else limits.member_bytes
-    return _buffered(_Guarded(source, limit, _ratio_check(limits, lambda: went_in.count), _Total(limit)))
-
-
-class _Counted(io.RawIOBase):
-    """Counts what is taken from a compressed stream."""
-
-    def __init__(self, source: BinaryIO) -> None:
-        self._source = source
-        self.count = 0
-
-    def readable(self) -> bool:
-        return True
-
-    def readinto(self, buffer: bytearray | memoryview) -> int:  # type: ignore[override]
-        data = self._source.read(min(len(buffer), 1 << 14))
-        self.count += len(data)
-        buffer[: len(data)] = data
-        return len(data)
-
-
-def _decompressor(raw: io.RawIOBase, name: str) -> IO[bytes]:
-    lower, source = name.lower(), cast(IO[bytes], raw)
-    if lower.endswith((".gz", ".tgz")):
-        return cast(IO[bytes], gzip.GzipFile(fileobj=source, mode="rb"))
-    if lower.endswith((".bz2", ".tbz", ".tbz2")):
-        return cast(IO[bytes], bz2.BZ2File(source))
-    if lower.endswith((".xz", ".txz")):
-        return cast(IO[bytes], lzma.LZMAFile(source))
-    return source
 
 
 def _refused_name(name: str) -> str | None:
@@ -281,31 +158,31 @@ def _archive_member(
     inner = clean_text(_inner(name))
     full, stem = f"{file}/{inner}", stem_of(inner)
     if unsafe is not None:
-        return Member(full, stem, refusal=_unsafe(f"{clean_text(name)}: {unsafe}"))
+        return Member(full, stem, refusal=unsafe_archive(f"{clean_text(name)}: {unsafe}"))
     if _is_hidden(inner):
         return Member(full, stem)
     if _ARCHIVE.fullmatch(inner):
-        return Member(full, stem, refusal=_unsafe("an archive inside an archive is not opened"))
+        return Member(full, stem, refusal=unsafe_archive("an archive inside an archive is not opened"))
     try:
         stream = opened()
         if inner.lower().endswith(COMPRESSIONS):
-            stream = _compressed_stream(stream, inner, limits)
+            stream = compressed_stream(stream, inner, limits)
         return _member(stream, full, inner)
     except FileRefused as refused:
         return Member(full, stem, refusal=refused.refusal)
-    except (*_FAULTS, NotImplementedError) as error:
-        return Member(full, stem, refusal=_unreadable(error))
+    except (*FAULTS, NotImplementedError) as error:
+        return Member(full, stem, refusal=unreadable(error))
 
 
-def _check_total(number: int, total: _Total, limits: ArchiveLimits) -> None:
+def _check_total(number: int, total: Total, limits: ArchiveLimits) -> None:
     if number > limits.members:
-        raise FileRefused(_unsafe(f"more than {limits.members} members"))
+        raise FileRefused(unsafe_archive(f"more than {limits.members} members"))
     if total.out > total.limit:
-        raise FileRefused(_unsafe(f"more than {total.limit} bytes come out of the archive"))
+        raise FileRefused(unsafe_archive(f"more than {total.limit} bytes come out of the archive"))
 
 
 def _zip_members(path: Path, file: str, limits: ArchiveLimits) -> Iterator[Member]:
-    total = _Total(limits.total_bytes)
+    total = Total(limits.total_bytes)
     with zipfile.ZipFile(path) as archive:
         for number, info in enumerate(archive.infolist(), 1):
             _check_total(number, total, limits)
@@ -316,8 +193,8 @@ def _zip_members(path: Path, file: str, limits: ArchiveLimits) -> Iterator[Membe
             unsafe = "a link" if stat.S_ISLNK(mode) else None
 
             def opened(info: zipfile.ZipInfo = info) -> BinaryIO:
-                ratio = _ratio_check(limits, lambda: info.compress_size)
-                return _buffered(_Guarded(archive.open(info), limits.member_bytes, ratio, total))
+                ratio = ratio_check(limits, lambda: info.compress_size)
+                return buffered(Guarded(archive.open(info), limits.member_bytes, ratio, total))
 
             yield _archive_member(info.orig_filename, file, unsafe, opened, limits)
 
@@ -349,7 +226,7 @@ class _TarContent:
         while left > 0:
             try:
                 piece: bytes = self._raw.read(min(left, _BLOCK))
-            except (FileRefused, *_FAULTS) as fault:
+            except (FileRefused, *FAULTS) as fault:
                 if not pieces:
                     raise
                 self._fault = fault
@@ -363,7 +240,7 @@ class _TarContent:
 
 def _tar_members(stream: BinaryIO, file: str, limits: ArchiveLimits) -> Iterator[Member]:
     blocks = _Recorder(stream)
-    total = _Total(limits.total_bytes)
+    total = Total(limits.total_bytes)
     with tarfile.open(fileobj=blocks, mode="r|", bufsize=_BLOCK) as archive:  # type: ignore[call-overload]
         number = 0
         while (info := archive.next()) is not None:
@@ -378,8 +255,8 @@ def _tar_members(stream: BinaryIO, file: str, limits: ArchiveLimits) -> Iterator
             def opened(info: tarfile.TarInfo = info) -> BinaryIO:
                 content = archive.extractfile(info)
                 assert content is not None
-                return _buffered(
-                    _Guarded(cast(IO[bytes], _TarContent(content)), limits.member_bytes, lambda out: None, total)
+                return buffered(
+                    Guarded(cast(IO[bytes], _TarContent(content)), limits.member_bytes, lambda out: None, total)
                 )
 
             yield _archive_member(info.name, file, unsafe, opened, limits)

@@ -19,6 +19,7 @@ import numpy as np
 from ..model.raw import Parsed, ParseOptions, RawRecord, SplitOptions
 from ..model.refusals import Refusal
 from ..model.species import element_of
+from .cif_symmetry import symmetry_of
 from .sites import (
     BatchBuilder,
     StructureRefused,
@@ -29,42 +30,12 @@ from .sites import (
     merge_mixed,
     parse_each,
 )
-from .space_group_names import operations_of_names
 from .streams import blocks_of, clean_text, decoded
-from .symmetry import Operations, expand, operations_of
+from .symmetry import expand
 
 _LENGTHS = tuple(f"_cell_{part}" for part in ("length_a", "length_b", "length_c"))
 _CELL = _LENGTHS + tuple(f"_cell_{part}" for part in ("angle_alpha", "angle_beta", "angle_gamma"))
 _CELL_DOTTED = tuple(tag.replace("_cell_", "_cell.") for tag in _CELL)
-_OPERATIONS = (
-    "_space_group_symop_operation_xyz",
-    "_symmetry_equiv_pos_as_xyz",
-    "_space_group_symop.operation_xyz",
-    "_symmetry_equiv.pos_as_xyz",
-)
-_HALL = ("_space_group_name_Hall", "_symmetry_space_group_name_Hall", "_space_group.name_Hall")
-_NAMES = (
-    "_space_group_name_H-M_alt",
-    "_symmetry_space_group_name_H-M",
-    "_space_group_name_H-M_full",
-    "_space_group.name_H-M_alt",
-    "_space_group.name_H-M_full",
-    "_symmetry.space_group_name_H-M",
-)
-_NUMBERS = (
-    "_space_group_IT_number",
-    "_symmetry_Int_Tables_number",
-    "_space_group.IT_number",
-    "_symmetry.Int_Tables_number",
-)
-_SETTINGS = ("_space_group_IT_coordinate_system_code", "_space_group.IT_coordinate_system_code")
-_OTHER_SYMMETRY = (
-    "_space_group_symop_magn_operation.xyz",
-    "_space_group_symop_magn_operation_xyz",
-    "_space_group_symop_ssg_operation_algebraic",
-    "_space_group_symop_magn_ssg_operation.algebraic",
-    "_space_group_ssg_name",
-)
 _UNKNOWN = frozenset({"?", "."})
 _FULL = frozenset({"1", "1.", "1.0", "1.00", "1.000", "1.0000", ".", "?"})
 _STRUCTURAL = re.compile(
@@ -180,7 +151,7 @@ def _parse_one(builder: BatchBuilder, row: int, text: str, max_sites: int) -> No
     check_coordinates(positions)
     symbols = _symbols(columns)
     occupancies = _occupancies(columns, count)
-    operations = _operations(block, cell)
+    operations = symmetry_of(block, cell)
     if operations is not None and len(operations) > 1:
         rows = np.array(positions, np.float64).reshape(-1, 3)
         full, index = expand(operations, cell, rows, occupancies or [1.0] * count, max_sites)
@@ -343,32 +314,3 @@ def _occupancies(columns: dict[str, list[str]], count: int) -> list[float]:
 
 def _known(value: str) -> str:
     return "1" if value in _UNKNOWN else value
-
-
-def _operations(block: gemmi.cif.Block, cell: list[float]) -> Operations | None:
-    for tag in _OPERATIONS:
-        loop = block.find_loop(tag).get_loop()
-        if loop is None:
-            listed = (block.find_value(tag),)
-        else:
-            at = [t.lower() for t in loop.tags].index(tag.lower())
-            listed = tuple(loop.values[at :: loop.width()])
-        if listed and listed[0] and not _UNKNOWN.issuperset(listed):
-            return operations_of(listed)
-    hall = _first(block, _HALL)
-    names = [n for tag in _NAMES if (n := _value(block, tag))]
-    operations = operations_of_names(hall, names, _first(block, _NUMBERS), _first(block, _SETTINGS), cell)
-    if operations is None:
-        other = [tag for tag in _OTHER_SYMMETRY if len(block.find_values(tag))]
-        if other:
-            raise StructureRefused("symmetry_unreadable", f"the symmetry is given only by {other[0]}")
-    return operations
-
-
-def _value(block: gemmi.cif.Block, tag: str) -> str | None:
-    value = block.find_value(tag)
-    return gemmi.cif.as_string(value).strip() or None if value and value not in _UNKNOWN else None
-
-
-def _first(block: gemmi.cif.Block, tags: Sequence[str]) -> str | None:
-    return next((v for tag in tags if (v := _value(block, tag))), None)

@@ -128,13 +128,21 @@ def check_count(sites: int, max_sites: int) -> None:
 
 def fractional(cell: Sequence[float], cartesian: Sequence[float]) -> list[float]:
     """Fractional coordinates of Cartesian ones (flat, angstrom) in a checked cell of nine numbers (rows a, b, c)."""
-    matrix = np.array(cell, np.float64).reshape(3, 3)
-    rows = np.array(cartesian, np.float64).reshape(-1, 3)
-    if not np.isfinite(rows).all():
-        at = int(np.flatnonzero(~np.isfinite(rows).all(axis=1))[0])
-        raise StructureRefused("coordinates_nonfinite", f"site {at + 1} has the coordinates {rows[at].tolist()}")
-    result: list[float] = np.linalg.solve(matrix.T, rows.T).T.ravel().tolist()
-    return result
+    if not math.isfinite(sum(cartesian)):
+        at = max(range(len(cartesian)), key=lambda i: abs(cartesian[i]) if cartesian[i] == cartesian[i] else math.inf)
+        raise StructureRefused("coordinates_nonfinite", f"site {at // 3 + 1} has the coordinate {cartesian[at]}")
+    ax, ay, az, bx, by, bz, cx, cy, cz = cell
+    # x = r . (b x c)/V and so on: the reciprocal rows. Plain floats, since most structures have few sites.
+    ux, uy, uz = by * cz - bz * cy, bz * cx - bx * cz, bx * cy - by * cx
+    vx, vy, vz = cy * az - cz * ay, cz * ax - cx * az, cx * ay - cy * ax
+    wx, wy, wz = ay * bz - az * by, az * bx - ax * bz, ax * by - ay * bx
+    volume = ax * ux + ay * uy + az * uz
+    flat = [0.0] * len(cartesian)
+    places = list(zip(cartesian[0::3], cartesian[1::3], cartesian[2::3], strict=True))
+    flat[0::3] = [(x * ux + y * uy + z * uz) / volume for x, y, z in places]
+    flat[1::3] = [(x * vx + y * vy + z * vz) / volume for x, y, z in places]
+    flat[2::3] = [(x * wx + y * wy + z * wz) / volume for x, y, z in places]
+    return flat
 
 
 def merge_mixed(
