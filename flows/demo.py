@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 from pathlib import Path
+from shlex import quote
 
 import typer
 
@@ -37,7 +38,8 @@ def run_demo(folder: Path, direct: bool, workers: int | None, quiet: bool) -> in
         f"sources; what they are stands in {folder / 'manifest.json'}. No number in it is real."
     )
 
-    options = {"workers": workers, "orchestrator": "direct" if direct else None}
+    # So few records are read sooner than worker processes begin.
+    options = {"workers": 1 if workers is None else workers, "orchestrator": "direct" if direct else None}
     settings = resolve_settings(options, file=settings_file)
     job = IngestJob(store, IngestRequest(sources_of(collection)), settings)
     with progress_for(quiet) as progress:
@@ -69,11 +71,12 @@ def run_demo(folder: Path, direct: bool, workers: int | None, quiet: bool) -> in
 
 def _next_steps(folder: Path, store: Path, settings_file: Path) -> str:
     """Three commands that show more of the store."""
+    collection, in_store = quote(str(folder / "collection")), quote(str(store))
     return "\n".join(
         (
             "Try next:",
-            f"  lattice-census status --store {store}",
-            f"  lattice-census run {folder / 'collection'}/* --store {store} --settings {settings_file}",
-            f"  lattice-census export {folder / 'table'} --form csv --store {store}",
+            f"  lattice-census survey --store {in_store}",
+            f"  lattice-census ask energy-spread --store {in_store}",
+            f"  lattice-census run {collection}/* --store {in_store} --settings {quote(str(settings_file))}",
         )
     )

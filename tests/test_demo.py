@@ -24,8 +24,13 @@ from lattice_census.demo.manifest import DemoRecord, Manifest
 from lattice_census.demo.packing import stored_gzip, stored_tar, stored_zip
 from lattice_census.demo.plan import NOISE, STRAIN
 from lattice_census.errors import UsageError
+from lattice_census.grouping.preparation import prepare
+from lattice_census.grouping.verification import verify
+from lattice_census.grouping.window import near_window
+from lattice_census.model.batch import batch_from_lists
 from lattice_census.model.refusals import REASONS
 from lattice_census.settings import resolve_settings
+from lattice_census.tolerances import Tolerances
 
 from .tables_of_structures import query
 
@@ -201,6 +206,44 @@ def test_copies_are_copies(demo: tuple[Path, Manifest]) -> None:
     for record in copies:
         assert record.same_as is not None
         assert content[f"{record.source}:{record.label}"] == content[record.same_as]
+
+
+def test_pairs_reach_the_grade_that_the_manifest_gives(demo: tuple[Path, Manifest]) -> None:
+    """Disguises are found at their grade, near misses at none: neither with what they nearly are, nor in the window."""
+    rows = query(
+        demo[0] / "census.duckdb",
+        "SELECT r.source || ':' || r.label, r.composition, x.cell_angstrom, x.species, x.positions_fractional "
+        "FROM records r JOIN canonical_forms x USING (record_id) ORDER BY r.source, r.label",
+    )
+    places = {name: i for i, (name, *_) in enumerate(rows)}
+    firsts = {str(r.crystal): f"{r.source}:{r.label}" for r in demo[1].accepted() if r.grade is None}
+    wanted: dict[str, list[tuple[int, int, str | None]]] = {}
+
+    def want(a: str, b: str, grade: str | None) -> None:
+        wanted.setdefault(rows[places[a]][1], []).append((places[a], places[b], grade))
+
+    for record in demo[1].accepted():
+        if record.same_as is not None and record.grade != "rescaled":
+            want(f"{record.source}:{record.label}", record.same_as, record.grade)
+    for images, grade in ((demo[1].mirror_images, "same"), (demo[1].near_misses, None)):
+        for one, other in images.items():
+            want(firsts[one], firsts[other], grade)
+    limits = near_window(Tolerances())
+    strictest = {"copy": 0, "key": 0, "same": 0, "near": 1, None: 3}
+    wrong = []
+    for of_one_composition in wanted.values():
+        used = sorted({i for a, b, _ in of_one_composition for i in (a, b)})
+        batch = batch_from_lists(
+            [np.array(rows[i][2]).reshape(3, 3) for i in used],
+            [np.array(rows[i][4]).reshape(-1, 3) for i in used],
+            [list(rows[i][3]) for i in used],
+        )
+        pairs = np.array([(used.index(a), used.index(b)) for a, b, _ in of_one_composition])
+        reached = verify(prepare(batch, limits), pairs, limits).grade
+        for (a, b, grade), got in zip(of_one_composition, reached.tolist(), strict=True):
+            if got > strictest[grade] or (grade is None and got < 3):
+                wrong.append((rows[a][0], rows[b][0], grade, got))
+    assert not wrong
 
 
 def test_the_command_leaves_what_it_says(demo: tuple[Path, Manifest]) -> None:
