@@ -9,7 +9,7 @@ import time
 from collections.abc import Callable
 from importlib import import_module
 
-MODULES: tuple[str, ...] = ("canonical", "translations")
+MODULES: tuple[str, ...] = ("canonical", "translations", "lattice_type", "operations")
 """Modules of this package that offer `warm_up()`, which runs each of their kernels once on a small input."""
 
 
