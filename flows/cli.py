@@ -10,7 +10,6 @@ import os
 import sys
 from typing import Annotated
 
-import click
 import typer
 
 from lattice_census import __version__
@@ -43,6 +42,9 @@ def _root(
     """Survey the lattices in a collection of crystal structures and find the records that are the same crystal."""
 
 
+# The class of every error in the words of a command. It is click's, of which typer carries a copy of its own.
+_WRONG_WORDS: type[Exception] = typer.BadParameter.__bases__[0]
+
 writing.register(app)
 reading.register(app)
 asking.register(app)
@@ -59,12 +61,9 @@ def main() -> None:
 def _run() -> int:
     try:
         result = app(standalone_mode=False)
-    except click.UsageError as error:
-        error.show()
-        return 2
-    except click.exceptions.Exit as error:
+    except typer.Exit as error:
         return error.exit_code
-    except (KeyboardInterrupt, click.exceptions.Abort):
+    except (KeyboardInterrupt, typer.Abort):
         print("Stopped. Nothing is half-written; the same command goes on where it was.", file=sys.stderr)
         return 4
     except CensusError as error:
@@ -74,6 +73,9 @@ def _run() -> int:
         os.dup2(os.open(os.devnull, os.O_WRONLY), sys.stdout.fileno())
         return 0
     except Exception as error:
+        if isinstance(error, _WRONG_WORDS):
+            error.show()  # type: ignore[attr-defined]
+            return 2
         logging.getLogger("lattice_census").debug("", exc_info=True)
         if os.environ.get("LATTICE_CENSUS_DEBUG"):
             raise

@@ -16,6 +16,7 @@ from lattice_census.ingest.ingest import (
     prepare_ingest,
     read_source,
 )
+from lattice_census.ingest.pool import WorkerPool
 from lattice_census.ingest.progress import Progress, Step
 from lattice_census.ingest.recompute import recompute_canonical
 from lattice_census.ingest.scan import IngestRequest
@@ -39,18 +40,21 @@ class IngestJob:
 
 def ingest(job: IngestJob, step: Step, progress: Progress, command: str = "ingest") -> dict[str, Any]:
     """Run the job's steps and return the counts. A dry run does the same on a copy that is then thrown away."""
-    with Workspace(job.store, command, job.wait_seconds, scratch=job.dry_run) as workspace:
+    with (
+        Workspace(job.store, command, job.wait_seconds, scratch=job.dry_run) as workspace,
+        WorkerPool(job.settings.worker_count) as pool,
+    ):
         work = step("scan", prepare_ingest, workspace, job.request, job.settings, command)
         if work is None:
             counts: dict[str, Any] = {"nothing_new": True}
         else:
             step("compile kernels", _compile, progress)
             if work.canonical_again:
-                step("reduce stored structures anew", recompute_canonical, workspace, job.settings, progress)
+                step("reduce stored structures anew", recompute_canonical, workspace, job.settings, pool, progress)
             for source in work.plan.sources:
                 if source.stale:
-                    step(f"read {source.source}", read_source, workspace, work, source, progress)
-            step("classify", classify_keys, workspace, job.settings, progress)
+                    step(f"read {source.source}", read_source, workspace, work, source, pool, progress)
+            step("classify", classify_keys, workspace, job.settings, pool, progress)
             counts = step("group exactly", _close, workspace, work)
             counts["no_unit"] = energies_without_unit(workspace.connection, work.plan)
         if not job.dry_run and workspace.ahead_of_published:

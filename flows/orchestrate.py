@@ -15,7 +15,7 @@ R = TypeVar("R")
 for _name, _value in {
     "PREFECT_SERVER_ANALYTICS_ENABLED": "false",
     "PREFECT_SERVER_EPHEMERAL_STARTUP_TIMEOUT_SECONDS": "60",
-    "PREFECT_LOGGING_LEVEL": "WARNING",
+    "PREFECT_LOGGING_LEVEL": "CRITICAL",
     "PREFECT_SERVER_LOGGING_LEVEL": "ERROR",
 }.items():
     os.environ.setdefault(_name, _value)

@@ -16,7 +16,7 @@ from ..model.columns import TABLES
 from ..settings import Settings, SourceSettings
 from ..store.rows import one_number
 from ..store.workspace import Workspace
-from .pool import ordered_results
+from .pool import WorkerPool
 from .progress import Progress
 from .recompute import stored_batch
 from .reduce import ReduceJob, accepted_part, fixed, ragged, token_lists, write_part
@@ -30,7 +30,7 @@ TO_CLASSIFY = (
 )
 
 
-def classify_keys(workspace: Workspace, settings: Settings, progress: Progress) -> int:
+def classify_keys(workspace: Workspace, settings: Settings, pool: WorkerPool, progress: Progress) -> int:
     """Classify every key that needs it, and drop the types of keys that no record has any more; returns how many.
 
     Each chunk is committed by itself; after a kill what is missing is found again.
@@ -42,7 +42,7 @@ def classify_keys(workspace: Workspace, settings: Settings, progress: Progress) 
     if not total:
         return 0
     progress.start("lattice types and space groups", total)
-    for job, count in ordered_results(_classify, _jobs(workspace, settings, total), settings.worker_count):
+    for job, count in pool.ordered_results(_classify, _jobs(workspace, settings, total)):
         _commit(connection, str(accepted_part(job.part)))
         job.raw.unlink()
         accepted_part(job.part).unlink()

@@ -19,7 +19,7 @@ from ..store.stages import changed_stages, record_settings, refuse_mixed, stored
 from ..store.workspace import Workspace
 from .commit import ChunkToCommit, commit_chunk, is_committed
 from .finish import finish_source
-from .pool import ordered_results
+from .pool import WorkerPool
 from .progress import Progress
 from .reduce import ReduceJob, accepted_part, part_name, reduce_chunk, rejects_part
 from .scan import IngestRequest, Plan, SourceToRead, scan
@@ -63,7 +63,9 @@ def prepare_ingest(workspace: Workspace, request: IngestRequest, settings: Setti
     return IngestWork(run, plan, settings, request.recompute and "canonical" in changed)
 
 
-def read_source(workspace: Workspace, work: IngestWork, source: SourceToRead, progress: Progress) -> None:
+def read_source(
+    workspace: Workspace, work: IngestWork, source: SourceToRead, pool: WorkerPool, progress: Progress
+) -> None:
     """Read, reduce and commit all changed files of a source, chunk by chunk in order, then finish it."""
     connection = workspace.connection
     found: Counter[str] = Counter({f.file: 0 for f in source.files if f.changed})
@@ -79,7 +81,7 @@ def read_source(workspace: Workspace, work: IngestWork, source: SourceToRead, pr
                 continue
             yield _job(workspace, work, source, chunk, waiting)
 
-    for job, _ in ordered_results(reduce_chunk, jobs(), work.settings.worker_count):
+    for job, _ in pool.ordered_results(reduce_chunk, jobs()):
         todo = waiting.pop(job.number)
         commit_chunk(connection, todo)
         job.raw.unlink()

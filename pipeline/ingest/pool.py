@@ -10,6 +10,8 @@ from collections import deque
 from collections.abc import Callable, Iterable, Iterator
 from concurrent.futures import Future, ProcessPoolExecutor
 from concurrent.futures.process import BrokenProcessPool
+from itertools import chain, islice
+from types import TracebackType
 from typing import TypeVar
 
 from ..errors import WorkError
@@ -29,34 +31,57 @@ def _leave_with_parent(parent: int) -> None:
     threading.Thread(target=watch, daemon=True).start()
 
 
-def ordered_results(work: Callable[[J], R], jobs: Iterable[J], workers: int) -> Iterator[tuple[J, R]]:
-    """(job, work(job)) in the order of the jobs; at most 2 x workers jobs are in flight.
+class WorkerPool:
+    """The pool of a run: made when it is first needed, kept until the run ends. Use as a context."""
 
-    `work` and the jobs must be picklable and small: paths and ids, no arrays. One worker means this process itself.
-    Raises WorkError when a worker dies; an error inside `work` is raised as it is.
-    """
-    if workers == 1:
-        for job in jobs:
-            yield job, work(job)
-        return
-    # Spawn, not fork: a forked child of a process with threads (numba, Polars, DuckDB) may hang.
-    pool = ProcessPoolExecutor(
-        workers, multiprocessing.get_context("spawn"), initializer=_leave_with_parent, initargs=(os.getpid(),)
-    )
-    flying: deque[tuple[J, Future[R]]] = deque()
-    try:
-        for job in jobs:
-            flying.append((job, pool.submit(work, job)))
-            if len(flying) >= 2 * workers:
+    def __init__(self, workers: int) -> None:
+        """workers: number of processes; 1 means this process itself."""
+        self._workers = workers
+        self._executor: ProcessPoolExecutor | None = None
+
+    def __enter__(self) -> WorkerPool:
+        return self
+
+    def __exit__(self, kind: type[BaseException] | None, error: BaseException | None, at: TracebackType | None) -> None:
+        if self._executor is not None:
+            self._executor.shutdown(wait=True, cancel_futures=True)
+            self._executor = None
+
+    def ordered_results(self, work: Callable[[J], R], jobs: Iterable[J]) -> Iterator[tuple[J, R]]:
+        """(job, work(job)) in the order of the jobs; at most 2 x workers jobs are in flight.
+
+        `work` and the jobs must be picklable and small: paths and ids, no arrays. A single job is done in this process:
+        making workers would take longer. Raises WorkError when a worker dies; an error inside `work` as it is.
+        """
+        coming = iter(jobs)
+        ahead = list(islice(coming, 2))
+        if self._workers == 1 or (len(ahead) == 1 and self._executor is None):
+            for job in chain(ahead, coming):
+                yield job, work(job)
+            return
+        flying: deque[tuple[J, Future[R]]] = deque()
+        try:
+            for job in chain(ahead, coming):
+                flying.append((job, self._processes().submit(work, job)))
+                if len(flying) >= 2 * self._workers:
+                    first, future = flying.popleft()
+                    yield first, future.result()
+            while flying:
                 first, future = flying.popleft()
                 yield first, future.result()
-        while flying:
-            first, future = flying.popleft()
-            yield first, future.result()
-    except BrokenProcessPool as error:
-        raise WorkError(
-            "A worker process ended unexpectedly (killed, or out of memory). Nothing is lost: give the same command "
-            "again to go on, if memory is short with a smaller chunk_records or workers."
-        ) from error
-    finally:
-        pool.shutdown(wait=True, cancel_futures=True)
+        except BrokenProcessPool as error:
+            raise WorkError(
+                "A worker process ended unexpectedly (killed, or out of memory). Nothing is lost: give the same "
+                "command again to go on, if memory is short with a smaller chunk_records or workers."
+            ) from error
+
+    def _processes(self) -> ProcessPoolExecutor:
+        if self._executor is None:
+            # Spawn, not fork: a forked child of a process with threads (numba, Polars, DuckDB) may hang.
+            self._executor = ProcessPoolExecutor(
+                self._workers,
+                multiprocessing.get_context("spawn"),
+                initializer=_leave_with_parent,
+                initargs=(os.getpid(),),
+            )
+        return self._executor

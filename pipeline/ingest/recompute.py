@@ -18,12 +18,12 @@ from ..settings import Settings, SourceSettings
 from ..store.rows import one_number
 from ..store.workspace import Workspace
 from .commit import insert_canonical_forms
-from .pool import ordered_results
+from .pool import WorkerPool
 from .progress import Progress
 from .reduce import ReduceJob, accepted_part, crystal_columns, write_part
 
 
-def recompute_canonical(workspace: Workspace, settings: Settings, progress: Progress) -> int:
+def recompute_canonical(workspace: Workspace, settings: Settings, pool: WorkerPool, progress: Progress) -> int:
     """Reduce every stored structure anew, replace the rows of `canonical_forms` and drop `crystal_types`; their number.
 
     Chunks already replaced are replaced again after a kill: the result is the same.
@@ -32,7 +32,7 @@ def recompute_canonical(workspace: Workspace, settings: Settings, progress: Prog
     total = one_number(connection, "SELECT count(*) FROM structures")
     progress.start("reducing stored structures anew", total)
     done = 0
-    for job, count in ordered_results(_reduce_stored, _jobs(workspace, settings, total), settings.worker_count):
+    for job, count in pool.ordered_results(_reduce_stored, _jobs(workspace, settings, total)):
         _replace(connection, accepted_part(job.part))
         job.raw.unlink()
         accepted_part(job.part).unlink()

@@ -29,7 +29,7 @@ CAUTION = (
 )
 
 KEPT = (
-    "SELECT m.record_id, m.source, m.label, r.file, r.position, r.formula, r.sites_given, r.sites_primitive, "
+    "SELECT m.record_id, m.source, m.label, r.file, r.reader, r.position, r.formula, r.sites_given, r.sites_primitive, "
     "x.crystal_key, x.volume_angstrom3_per_site, r.energy_ev_per_site, r.theory, r.split, "
     "(SELECT count(*) FROM members o WHERE o.grade = m.grade AND o.group_id = m.group_id) AS group_size "
     "FROM members m JOIN records r USING (record_id) JOIN canonical_forms x USING (record_id) "

@@ -11,9 +11,15 @@ from typing import Literal
 import duckdb
 import polars as pl
 
+from ..model.refusals import Refusal
+from ..readers.detect import COMPRESSIONS
+from ..readers.jsonl import objects_of
 from ..store.rows import one_row
 from .cif import cif_text
 from .structures import given_structures
+
+JSON_LINE_LIMIT = 1 << 30
+"""Bytes of one JSON line; the reader's own limit was held when the file was read."""
 
 OURS = (
     "record_id", "source", "label", "formula", "sites_given", "sites_primitive", "crystal_key",
@@ -31,12 +37,14 @@ def write_table(
     from the store (the structure as it came).
     """
     parts, notes = [], []
-    for (source, file), rows in kept.group_by(["source", "file"], maintain_order=True):
-        original = _original(connection, str(source), str(file), rows)
+    for (source, file, reader), rows in kept.group_by(["source", "file", "reader"], maintain_order=True):
+        original = None
+        if reader in _TABLES:
+            original, why = _original(connection, str(source), str(file), str(reader), rows)
+            if original is None:
+                notes.append(f"{source}: {file} {why}; its records are written from the store.")
         if original is None:
             original = _from_store(connection, rows)
-            if Path(str(file)).suffix in (".csv", ".parquet", ".jsonl"):
-                notes.append(f"{source}: {file} is not the file that was read; its records are written from the store.")
         ours = rows.select(OURS).rename({name: f"census_{name}" for name in OURS})
         parts.append(pl.concat([original, ours], how="horizontal"))
     table = pl.concat(parts, how="diagonal_relaxed") if parts else pl.DataFrame()
@@ -47,37 +55,51 @@ def write_table(
     return notes
 
 
-def _original(connection: duckdb.DuckDBPyConnection, source: str, file: str, rows: pl.DataFrame) -> pl.DataFrame | None:
-    """The input's own columns of these rows, by place in the file; None where the file is no table or has changed."""
+def _original(
+    connection: duckdb.DuckDBPyConnection, source: str, file: str, reader: str, rows: pl.DataFrame
+) -> tuple[pl.DataFrame | None, str]:
+    """The input's own columns of these rows, by place in the file; or None and why they cannot be had."""
     fact = one_row(
         connection,
         "SELECT s.root, s.kind, f.sha256 FROM sources s JOIN files f USING (source) WHERE s.source = ? AND f.file = ?",
         [source, file],
     )
     if fact is None:
-        return None
+        return None, "stands inside an archive"
     path = Path(fact[0]) if fact[1] == "file" else Path(fact[0]) / file
-    readers: dict[str, Callable[[Path], pl.LazyFrame]] = {
-        ".csv": _scan_csv,
-        ".parquet": pl.scan_parquet,
-        ".jsonl": pl.scan_ndjson,
-    }
-    scan = readers.get(path.suffix)
-    if scan is None or not path.is_file():
-        return None
+    if not path.is_file():
+        return None, "is not there any more"
     with path.open("rb") as f:
         if hashlib.file_digest(f, "sha256").hexdigest() != fact[2]:
-            return None
+            return None, "is not the file that was read"
+    if path.suffix in COMPRESSIONS:
+        return None, "is compressed"
+    frame = _TABLES[reader](path)
     places = rows.select(pl.col("position").cast(pl.Int64).alias("census_place"))
-    frame = scan(path).with_row_index("census_place").with_columns(pl.col("census_place").cast(pl.Int64))
-    return (
-        places.lazy().join(frame, on="census_place", how="left", maintain_order="left").drop("census_place").collect()
-    )
+    frame = frame.with_row_index("census_place").with_columns(pl.col("census_place").cast(pl.Int64))
+    chosen = places.lazy().join(frame, on="census_place", how="left", maintain_order="left")
+    return chosen.drop("census_place").collect(), ""
 
 
 def _scan_csv(path: Path) -> pl.LazyFrame:
     """Every column as the text that stands in the file, so that numbers keep their digits."""
-    return pl.scan_csv(path, infer_schema=False)
+    return pl.scan_csv(path, infer_schema=False, separator="\t" if path.suffix == ".tsv" else ",")
+
+
+def _scan_jsonl(path: Path) -> pl.LazyFrame:
+    """One row an object, counted as the reader counts them: a line that is no object is a row of nulls."""
+    with path.open("rb") as f:
+        objects = [{} if isinstance(o, Refusal) else o for _, o in objects_of(f, JSON_LINE_LIMIT)]
+    plain = [{name: _plain(value) for name, value in o.items()} for o in objects]
+    return pl.from_dicts(plain, infer_schema_length=None, strict=False).lazy()
+
+
+_TABLES: dict[str, Callable[[Path], pl.LazyFrame]] = {
+    "csv": _scan_csv,
+    "parquet": pl.scan_parquet,
+    "jsonl": _scan_jsonl,
+}
+"""Readers whose records are rows of a table, with a scan that has one row a record of the file."""
 
 
 def _from_store(connection: duckdb.DuckDBPyConnection, rows: pl.DataFrame) -> pl.DataFrame:
