@@ -60,7 +60,7 @@ def tables() -> str:
 def questions() -> str:
     """Every named question."""
     rows = [("question", "what it answers", "parameters")]
-    for question in all_questions():
+    for question in all_questions().values():
         rows.append((f"`{question.name}`", question.sentence, ", ".join(f"`{p.name}`" for p in question.parameters)))
     return _table(*rows)
 
