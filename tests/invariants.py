@@ -169,3 +169,63 @@ def check_canonical(given: CrystalBatch, result: CanonicalBatch, within: float |
     check_recovery(given, result, within)
     check_pseudo(result)
     check_keys(result)
+
+
+# ---------------------------------------------------------------------------------------------------------------------
+# Groupings
+# ---------------------------------------------------------------------------------------------------------------------
+
+
+def check_grouping(grouping, rank: dict[str, int], near: dict[tuple[str, str], bool], grade: str) -> None:
+    """Families, groups and ids of one grade against all true pairs of ids (`near`, both orders), by their
+    definitions."""
+    ids = grouping.ids.tolist()
+    members = grouping.members[grade]
+    assert ids == sorted(ids) and len(set(ids)) == len(ids)
+    family = dict(zip(ids, members.family_id.tolist(), strict=True))
+    group = dict(zip(ids, members.group_id.tolist(), strict=True))
+    # Families are the connected components, named by their smallest id.
+    left, components = set(ids), []
+    while left:
+        todo, found = [min(left)], set()
+        while todo:
+            i = todo.pop()
+            if i not in found:
+                found.add(i)
+                todo += [j for j in left if j not in found and near.get((i, j), False)]
+        components.append(found)
+        left -= found
+    for found in components:
+        assert {family[i] for i in found} == {min(found)}
+    # Groups are stars in keep order, named by the kept record.
+    free, expected = set(ids), {}
+    for i in sorted(ids, key=lambda i: (rank[i], i)):
+        if i in free:
+            star = {i} | {j for j in free if near.get((i, j), False)}
+            expected.update(dict.fromkeys(star, i))
+            free -= star
+    assert group == expected
+    assert members.kept.tolist() == [group[i] == i for i in ids]
+
+
+def check_matches(grouping) -> None:
+    """Stored pairs are in order, every set-aside record of another key has its kept record, families are spanned."""
+    pairs = grouping.matches.pairs
+    assert (pairs[:, 0] < pairs[:, 1]).all()
+    assert len(np.unique(pairs, axis=0)) == len(pairs)
+    stored = {tuple(p) for p in pairs.tolist()}
+    place = {name: i for i, name in enumerate(grouping.ids.tolist())}
+    for members in grouping.members.values():
+        parent = list(range(len(place)))
+
+        def root(i: int, parent=parent) -> int:
+            while parent[i] != i:
+                i = parent[i]
+            return i
+
+        for a, b in stored:
+            parent[root(a)] = root(b)
+        for i, (family, group) in enumerate(zip(members.family_id.tolist(), members.group_id.tolist(), strict=True)):
+            a, b = sorted((int(grouping.node[i]), int(grouping.node[place[group]])))
+            assert a == b or (a, b) in stored
+            assert root(int(grouping.node[i])) == root(int(grouping.node[place[family]]))

@@ -1,8 +1,8 @@
 """The matcher's slow plain twin: brute force over common cells, lattice maps, origins and assignments, in NumPy.
 
-Written from the definition of a match alone. It knows nothing of approximate translations, distance rows or reduced forms
-of the product: it tries every pair of sublattices up to a given index, every basis of the one whose stretches are within
-the window, and every origin, and pairs sites by the assignment with the smallest largest shift.
+Written from the definition of a match alone. It knows nothing of approximate translations, distance rows or reduced
+forms of the product: it tries every pair of sublattices up to a given index, every basis of the one whose stretches
+are within the window, and every origin, and pairs sites by the assignment with the smallest largest shift.
 """
 
 from __future__ import annotations

@@ -1,14 +1,14 @@
 """Pointwise distance distributions and their column means.
 
 Row i of the distribution of a crystal holds the distances from site i to its k nearest neighbours in ascending order
-(Widdowson & Kurlin, NeurIPS 2022; SIAM J. Appl. Math. 2026); the column means over sites are kept apart for each species
-of the centre. Taken on the exact primitive crystal, all of it is independent of cell, origin, orientation, handedness
-and the order of sites, and continuous.
+(Widdowson & Kurlin, NeurIPS 2022; SIAM J. Appl. Math. 2026); the column means over sites are kept apart for each
+species of the centre. Taken on the exact primitive crystal, all of it is independent of cell, origin, orientation,
+handedness and the order of sites, and continuous.
 
 What is stored and why. The bound of grouping/candidates.py holds for each pair of paired sites, whose species are
-equal, so it holds for the means over the sites of one species: one mean row a species of the centre is kept, in float32.
-Distances to the neighbours of one species at a time need a row a site to be of use and are computed again from the
-crystal where candidates are left.
+equal, so it holds for the means over the sites of one species: one mean row a species of the centre is kept, in
+float32. Distances to the neighbours of one species at a time need a row a site to be of use and are computed again
+from the crystal where candidates are left.
 """
 
 from __future__ import annotations

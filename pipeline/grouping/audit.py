@@ -1,14 +1,14 @@
 """The audit of a witness: the match is rebuilt from the two structures as they came, and measured again.
 
-NumPy alone; nothing of the matcher, its kernels or their conventions in code is used: only the equations of the witness,
-as grouping/witness.py states them in words, and the way back of the canonical form. For a canonical crystal with cell L,
-integer matrix K, rotation R, origin o, site map m and site shifts t,
+NumPy alone; nothing of the matcher, its kernels or their conventions in code is used: only the equations of the
+witness, as grouping/witness.py states them in words, and the way back of the canonical form. For a canonical crystal
+with cell L, integer matrix K, rotation R, origin o, site map m and site shifts t,
 
     given_cell = K L R,    given_position[j] K = position[m[j]] + t[j] + o + (a deviation).
 
-The audit takes given cell and positions and undoes these equations itself, so that a wrong K, R, o, m or t fails it too.
-Where the given structure is a supercell or a noisy one, its sites differ from the canonical ones by up to `deviation`,
-which is part of what is checked and is allowed for in comparing shifts.
+The audit takes given cell and positions and undoes these equations itself, so that a wrong K, R, o, m or t fails it
+too. Where the given structure is a supercell or a noisy one, its sites differ from the canonical ones by up to
+`deviation`, which is part of what is checked and is allowed for in comparing shifts.
 """
 
 from __future__ import annotations
@@ -50,6 +50,9 @@ class Given:
     site_map: Ints
     """(g,): primitive site that each given site is an image of."""
 
+    site_shift: Ints
+    """t (g, 3): lattice translation, in the primitive cell, from that site to the given one."""
+
     residual: float
     """Largest distance of a given site from its image, angstrom, as recorded."""
 
@@ -74,8 +77,7 @@ class Claim:
 def primitive_of(given: Given, failures: list[str], name: str) -> tuple[Floats, Floats, list[str], float]:
     """Primitive cell, positions and tokens by undoing the equations above, and the largest deviation found (angstrom).
 
-    The position of a primitive site is that of the first given site mapped to it; the others must agree with it to twice
-    the recorded residual.
+    The position of a primitive site is the mean of its given images, which agree with it to the recorded residual.
     """
     k = np.asarray(given.matrix, dtype=np.int64)
     index = round(abs(float(np.linalg.det(k))))
@@ -91,18 +93,15 @@ def primitive_of(given: Given, failures: list[str], name: str) -> tuple[Floats, 
     if len(given.positions) != sites * index or len(counts) != sites or (counts != index).any():
         failures.append(f"{name}: the site map does not give every primitive site {index} images")
         return cell, given.positions, given.tokens, np.inf
-    place = given.positions @ k - given.origin
+    place = given.positions @ k - given.origin - given.site_shift
     positions = np.zeros((sites, 3))
+    np.add.at(positions, given.site_map, place / index)
     tokens = [""] * sites
-    worst = 0.0
-    for j in range(len(place) - 1, -1, -1):
-        positions[given.site_map[j]] = place[j]
-        tokens[given.site_map[j]] = given.tokens[j]
-    for j in range(len(place)):
-        d = place[j] - positions[given.site_map[j]]
-        worst = max(worst, float(np.linalg.norm((d - np.rint(d)) @ cell)))
-        if given.tokens[j] != tokens[given.site_map[j]]:
-            failures.append(f"{name}: site {j + 1} and the site it is mapped to are of different species")
+    for j, token in zip(given.site_map.tolist(), given.tokens, strict=True):
+        tokens[j] = tokens[j] or token
+        if token != tokens[j]:
+            failures.append(f"{name}: images of primitive site {j + 1} are of different species")
+    worst = float(np.linalg.norm((place - positions[given.site_map]) @ cell, axis=1).max())
     if worst > 2 * given.residual + AGREEMENT:
         failures.append(f"{name}: images of one site disagree by {worst:.6f} angstrom")
     return cell, positions, tokens, worst
@@ -171,7 +170,7 @@ def audit(a: Given, b: Given, claim: Claim, allow: float = AGREEMENT) -> list[st
         failures.append(f"site {wrong[0]} of A is paired with a site of another species")
     delta = v[pairing] - u - np.asarray(claim.shift)
     delta -= np.rint(delta)
-    slack = 2 * (deviation_a + deviation_b) + allow
+    slack = allow
     metric = (first @ first.T + second @ second.T) / 2
     mean = delta.mean(axis=0)
     if np.sqrt(mean @ metric @ mean) > slack:

@@ -1,11 +1,11 @@
 """Candidates: every pair of one composition that a bound on distances cannot rule out.
 
-The bound. Let A and B match with largest shift D and strain s, in the mean metric G = (G_A + G_B) / 2. For paired sites p
-and q and any other paired sites p' and q', the vector q' - q is the image of p' - p under the lattice map plus the
-difference of two shifts. The map changes lengths by a factor of at most exp(s). Since G_A >= exp(-2s) G_B,
-G >= (1 + exp(-2s)) / 2 G_B >= exp(-s) G_B, so a shift of length D in G is at most exp(s/2) D long in G_B. Hence
-|q' - q| <= exp(s) |p' - p| + c with c = 2 exp(s/2) D. The pairing is one to one and keeps species, so the k sites nearest
-to p give k sites (of the same species each) within exp(s) d_k(p) + c of q:
+The bound. Let A and B match with largest shift D and strain s, in the mean metric G = (G_A + G_B) / 2. For paired
+sites p and q and any other paired sites p' and q', the vector q' - q is the image of p' - p under the lattice map plus
+the difference of two shifts. The map changes lengths by a factor of at most exp(s). Since G_A >= exp(-2s) G_B, G >= (1
++ exp(-2s)) / 2 G_B >= exp(-s) G_B, so a shift of length D in G is at most exp(s/2) D long in G_B. Hence |q' - q| <=
+exp(s) |p' - p| + c with c = 2 exp(s/2) D. The pairing is one to one and keeps species, so the k sites nearest to p
+give k sites (of the same species each) within exp(s) d_k(p) + c of q:
 
     d_k(q) <= exp(s) d_k(p) + c,  and likewise with p and q exchanged,
 
@@ -13,8 +13,9 @@ for all neighbours and for the neighbours of one species. With y = ln(d + c / (e
 |y_k(p) - y_k(q)| <= s, because exp(s) d + c + c / (exp(s) - 1) = exp(s) (d + c / (exp(s) - 1)).
 
 What follows, in the order of the steps below; nothing that matches is lost in any:
-1. the common cell has 1/n of the sites of every species per site of the crystal on either side, so means over the sites of
-   a species are means over the common cell, whatever the two cells are. The bound is linear in d: it holds for the means;
+1. the common cell has 1/n of the sites of every species per site of the crystal on either side, so means over the
+   sites of a species are means over the common cell, whatever the two cells are. The bound is linear in d: it holds
+   for the means;
 2. the volumes per site differ by at most the sum of three logarithms of stretches: |ln(V_A / V_B)| <= 3 s, so ln(V) / 3
    is one coordinate more of the same Chebyshev ball;
 3. sorting two columns of numbers paired within s leaves them within s, place by place;
@@ -22,9 +23,9 @@ What follows, in the order of the steps below; nothing that matches is lost in a
 Means are stored in float32 and rows are transformed to float32: the slack holds the rounding of both sides.
 
 On crystals scaled to equal volume (`rescaled`, `isotypic`) the strain is shape strain and the same bound holds with the
-window's own s; c is in the units of the scale. For a pair scaled to the geometric mean of its volumes per site, with D in
-angstrom, everything is divided by that length. (A pair that matches within s as it is has strain at most 4 s / 3 there,
-(s, -s, -s) less its mean; it is found by the search that does not scale.)
+window's own s; c is in the units of the scale. For a pair scaled to the geometric mean of its volumes per site, with D
+in angstrom, everything is divided by that length. (A pair that matches within s as it is has strain at most 4 s / 3
+there, (s, -s, -s) less its mean; it is found by the search that does not scale.)
 """
 
 from __future__ import annotations
@@ -36,7 +37,7 @@ from numpy.typing import NDArray
 from scipy.spatial import cKDTree
 
 from ..fingerprint.distributions import Distributions, column_means, distributions
-from ..kernels.rows_filter import pairs_allowed, sort_columns
+from ..kernels.rows_filter import coordinates_close, pairs_allowed
 from ..model.batch import CrystalBatch, Floats, Ints
 from .preparation import Prepared, prepare, transform, transform_slack
 from .window import Window
@@ -65,7 +66,8 @@ class Candidates:
 def mean_coordinates(means: NDArray[np.float32], volumes: Floats, window: Window) -> Floats:
     """(n, 1 + r k): ln(V)/3 and the transformed means; two crystals of a match differ by at most the slack in each.
 
-    means (n, r, k): column means of each species of the centre, angstrom (or units of the scale); volumes (n,): per site.
+    means (n, r, k): column means of each species of the centre, angstrom (or units of the scale); volumes (n,): per
+    site.
     """
     n = len(means)
     y = transform(means.astype(np.float64), window.shift, window.strain).reshape(n, -1)
@@ -75,14 +77,13 @@ def mean_coordinates(means: NDArray[np.float32], volumes: Floats, window: Window
 def quantile_coordinates(prepared: Prepared) -> Floats:
     """(n, w): quantiles over the sites of a species of some columns of its rows, transformed; same slack as the means.
 
-    Sorted columns of two crystals of a match agree place by place, whatever the numbers of sites, so their quantiles do.
-    Noise, which leaves means alone, moves them: they tell noisy copies apart.
+    Sorted columns of two crystals of a match agree place by place, whatever the numbers of sites, so their quantiles
+    do. Noise, which leaves means alone, moves them: they tell noisy copies apart.
     """
     c = prepared.crystals
-    ordered = sort_columns(c.rows, c.blocks)
     first, size = c.blocks[:, :-1], np.diff(c.blocks, axis=1)
     parts = [
-        ordered[first + np.minimum((size * u).astype(np.int64), size - 1)][:, :, QUANTILE_COLUMNS]
+        prepared.ordered[first + np.minimum((size * u).astype(np.int64), size - 1)][:, :, QUANTILE_COLUMNS]
         for u in (0.0, 0.26, 0.51, 0.76, 1.0)
     ]
     return np.stack(parts, axis=2).reshape(len(first), -1).astype(np.float64)
@@ -97,23 +98,16 @@ def tree_columns(width: int, k: int) -> Ints:
 
 
 def coordinates_agree(coordinates: Floats, pairs: Ints, slack: float) -> NDArray[np.bool_]:
-    """Which pairs agree to the slack in every column, column by column so that most fall out early."""
-    alive = np.arange(len(pairs))
-    for column in range(coordinates.shape[1]):
-        if not len(alive):
-            break
-        values = coordinates[:, column]
-        alive = alive[np.abs(values[pairs[alive, 0]] - values[pairs[alive, 1]]) <= slack]
-    out = np.zeros(len(pairs), bool)
-    out[alive] = True
-    return out
+    """Which pairs agree to the slack in every coordinate; quantiles are looked at first, they tell most."""
+    return coordinates_close(coordinates, pairs, slack)
 
 
 def allowed_pairs(prepared: Prepared, pairs: Ints) -> tuple[NDArray[np.bool_], int]:
     """Which of the pairs the sorted columns and the rows cannot rule out, and how many the columns left."""
     c = prepared.crystals
-    ordered = sort_columns(c.rows, c.blocks)
-    allowed, columns = pairs_allowed(pairs, c.blocks, c.rows, ordered, prepared.grouped, prepared.counts, c.slack)
+    allowed, columns = pairs_allowed(
+        pairs, c.blocks, c.rows, prepared.ordered, prepared.grouped, prepared.counts, c.slack
+    )
     return allowed, int(columns)
 
 
@@ -122,6 +116,8 @@ class Search:
     """A batch of one composition made ready for one window: what candidates are looked for in, and verified on."""
 
     window: Window
+    """In the units of `scales`."""
+
     rows: Distributions
     """Distances of the batch as it came."""
 
@@ -141,12 +137,12 @@ class Search:
 
 
 def start_search(
-    batch: CrystalBatch, window: Window, unit_volume: bool = False, rows: Distributions | None = None
+    batch: CrystalBatch, window: Window, scales: Floats | None = None, rows: Distributions | None = None
 ) -> Search:
-    """Prepare a batch of one composition. unit_volume: every crystal is scaled to one cubic unit a site (`isotypic`)."""
+    """Prepare a batch of one composition. scales (n,): factor on the lengths of each crystal, default 1; rows:
+    distances of the batch as it came, computed where not given."""
     found = rows if rows is not None else distributions(batch)
-    per_site = batch.volumes / np.diff(batch.offsets)
-    scales = per_site ** (-1.0 / 3.0) if unit_volume else np.ones(len(batch))
+    scales = np.ones(len(batch)) if scales is None else scales
     prepared = prepare(batch, window, scales, found)
     means = column_means(batch, found).means
     k = means.shape[1]

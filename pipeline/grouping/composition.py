@@ -8,7 +8,7 @@ alone, not on their order, and not on how many runs it took.
 from __future__ import annotations
 
 from collections.abc import Sequence
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 
 import numpy as np
 from numpy.typing import NDArray
@@ -17,14 +17,14 @@ from scipy.spatial import cKDTree
 from ..errors import UsageError
 from ..model.batch import CrystalBatch, Floats, Ints, select
 from ..tolerances import Tolerances
-from .candidates import Search, filtered, start_search
+from .candidates import Search, filtered
 from .crowds import Crowd
 from .graph import components, spanning_forest
 from .groups import stars
 from .pair_store import Limit, PairStore
-from .verification import Verified, verify
-from .window import Window, isotypic_window, near_window, rescaled_window
-from .witness import Witnesses, witnesses
+from .searches import Searcher, searcher
+from .verification import Verified
+from .witness import Witnesses
 
 CROWDED = 200
 """A node with more candidates than this is crowded (crowds.py)."""
@@ -64,7 +64,8 @@ class Members:
     kept: NDArray[np.bool_]
 
     witness_shift: Floats
-    """(n,): largest shift of the match with the kept record: 0 for records of its key, NaN where pinned without a match."""
+    """(n,): largest shift of the match with the kept record: 0 for records of its key, NaN where pinned without a
+    match."""
 
     witness_strain: Floats
 
@@ -103,7 +104,8 @@ def group_composition(
     tolerances: Tolerances,
     options: Options | None = None,
 ) -> Grouping:
-    """Matches, families and groups of the records of one composition (for `isotypic`: one species renamed to another's).
+    """Matches, families and groups of the records of one composition (for `isotypic`: one species renamed to
+    another's).
 
     batch: n exact primitive crystals with the same species in the same proportions; keys: crystal_key of each; ids:
     distinct record ids; rank: smaller is kept first, ties by id. Deterministic under any order of the records.
@@ -130,18 +132,13 @@ def group_composition(
     node_rank = np.full(len(stands), len(names), dtype=np.int64)
     np.minimum.at(node_rank, node_of, place)
 
-    search = start_search(select(batch, order[stands]), _window(tolerances, chosen.search), chosen.search == "isotypic")
-    store = PairStore(
-        len(stands),
-        lambda pairs: verify(search.prepared, pairs, search.window, chosen.mirror_images),
-        node_of[together],
-        node_of[apart],
-    )
-    crowded, candidates = _verify_plain(search, store, chosen.crowded)
+    by = searcher(select(batch, order[stands]), tolerances, chosen.search, chosen.mirror_images)
+    store = PairStore(len(stands), by.verify, node_of[together], node_of[apart])
+    crowded, candidates = _verify_plain(by, store, chosen.crowded)
     members: dict[str, Members] = {}
     keep_pairs: list[Ints] = []
-    for grade, limit in _grades(tolerances, chosen):
-        kept = _families_and_groups(search, store, limit, crowded, node_rank)
+    for grade, limit in by.limits:
+        kept = _families_and_groups(by.search, store, limit, crowded, node_rank)
         pairs, shift, strain, t = store.edges(limit)
         family = components(len(stands), pairs)
         keep_pairs.append(pairs[spanning_forest(len(stands), pairs, t)])
@@ -151,11 +148,11 @@ def group_composition(
         members[grade] = _members(names, ranks, place, node_of, stands, family, kept, pairs, shift, strain)
     found = store.matches()
     if found is None:
-        found = verify(search.prepared, np.zeros((0, 2), np.int64), search.window)
+        found = by.verify(np.zeros((0, 2), np.int64))
     wanted, more = _selection(len(stands), found, keep_pairs, chosen.matches_per_record)
     more[crowded] = True
     matches = found.take(wanted)
-    witness = witnesses(search.prepared, matches, search.window)
+    witness = by.witness(matches)
     counts = {
         "records": len(names),
         "nodes": len(stands),
@@ -165,10 +162,7 @@ def group_composition(
         "stored": len(matches),
         "crowded": len(crowded),
     }
-    in_records = Verified(
-        **{name: getattr(matches, name) for name in Verified.__slots__ if name != "pairs"},  # type: ignore[attr-defined]
-        pairs=stands[matches.pairs],
-    )
+    in_records = replace(matches, pairs=stands[matches.pairs])
     return Grouping(names, stands[node_of], in_records, witness, more[node_of], members, counts)
 
 
@@ -182,39 +176,20 @@ def _pins(pairs: tuple[tuple[str, str], ...], names: NDArray[np.str_]) -> Ints:
     return np.array([[place[a], place[b]] for a, b in pairs], dtype=np.int64).reshape(-1, 2)
 
 
-def _window(tolerances: Tolerances, search: str) -> Window:
-    if search == "near":
-        return near_window(tolerances)
-    if search == "rescaled":
-        return rescaled_window(tolerances)
-    if search == "isotypic":
-        return isotypic_window(tolerances)
-    raise UsageError(f"search is near, rescaled or isotypic, not {search!r}")
-
-
-def _grades(tolerances: Tolerances, options: Options) -> list[tuple[str, Limit]]:
-    separate = options.mirror_images == "separate"
-    if options.search == "near":
-        return [
-            ("same", Limit(0, tolerances.same_shift, tolerances.same_strain, separate)),
-            ("near", Limit(1, tolerances.near_shift, tolerances.near_strain, separate)),
-        ]
-    window = _window(tolerances, options.search)
-    return [(options.search, Limit(1, window.shift, window.strain, separate))]
-
-
-def _verify_plain(search: Search, store: PairStore, crowded_at: int) -> tuple[Ints, int]:
-    """Verify every candidate pair but those of two crowded nodes; returns the crowded nodes and the number of candidates.
+def _verify_plain(by: Searcher, store: PairStore, crowded_at: int) -> tuple[Ints, int]:
+    """Verify every candidate pair but those of two crowded nodes; returns the crowded nodes and the number of
+    candidates.
 
     Where the tree alone leaves over DENSE pairs a node, its pairs are not even listed between nodes that have more than
     that; elsewhere a node is crowded that has more than `crowded_at` candidates after all filters.
     """
-    n = store.nodes
+    search, owner = by.search, by.owner
+    n = len(owner)
     points = search.coordinates[:, search.columns]
     slack = search.slack
     tree = cKDTree(points)
     dense = np.zeros(n, bool)
-    if int(tree.count_neighbors(tree, slack, p=np.inf)) > DENSE * n:
+    if n == store.nodes and int(tree.count_neighbors(tree, slack, p=np.inf)) > DENSE * n:
         dense = np.asarray(tree.query_ball_point(points, slack, p=np.inf, return_length=True)) > DENSE
         plain = np.flatnonzero(~dense)
         balls = tree.query_ball_point(points[plain], slack, p=np.inf)
@@ -224,9 +199,11 @@ def _verify_plain(search: Search, store: PairStore, crowded_at: int) -> tuple[In
         pairs = np.unique(pairs[first != second], axis=0)
     else:
         pairs = tree.query_pairs(slack, p=np.inf, output_type="ndarray").astype(np.int64).reshape(-1, 2)
-    pairs = filtered(search.prepared, search.coordinates, pairs, slack)
-    degree = np.bincount(pairs.ravel(), minlength=n)
-    crowded = dense | (degree > crowded_at)
+    pairs = owner[filtered(search.prepared, search.coordinates, pairs, slack)]
+    pairs = np.unique(np.sort(pairs[pairs[:, 0] != pairs[:, 1]], axis=1), axis=0)
+    crowded = np.zeros(store.nodes, bool)
+    if n == store.nodes:  # with several versions of a node every pair is verified
+        crowded = dense | (np.bincount(pairs.ravel(), minlength=n) > crowded_at)
     store.ensure(pairs[~crowded[pairs].all(axis=1)])
     return np.flatnonzero(crowded), len(pairs)
 

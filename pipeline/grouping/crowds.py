@@ -7,9 +7,9 @@ Five thousand noisy copies of one crystal are twelve million pairs. Families and
   their distance in the fingerprint and only while the two are not yet known to be one. When none is left between
   different components, the components are those of the graph of all pairs.
 
-Both are exactly what all pairs would give. What is not complete inside a crowd is the list of matches: a record of a crowd
-has its kept record, a spanning tree of its family over the pairs that were verified, and the nearest of the pairs verified
-(its nearest few in the fingerprint among them), and carries the flag that there are more.
+Both are exactly what all pairs would give. What is not complete inside a crowd is the list of matches: a record of a
+crowd has its kept record, a spanning tree of its family over the pairs that were verified, and the nearest of the
+pairs verified (its nearest few in the fingerprint among them), and carries the flag that there are more.
 """
 
 from __future__ import annotations
@@ -39,14 +39,15 @@ class Crowd:
 
     def __init__(self, search: Search, limit: Limit, crowded: Ints) -> None:
         """crowded (c,): the nodes, ascending."""
-        window = Window((limit.shift,) * 3, (limit.strain,) * 3)
+        scaled = bool((search.scales != 1.0).any())
+        window = search.window if scaled else Window((limit.shift,) * 3, (limit.strain,) * 3)
         batch = select(search.prepared.batch, crowded)
         sites = np.concatenate([np.arange(*search.prepared.batch.offsets[[i, i + 1]]) for i in crowded.tolist()])
         rows = Distributions(*(getattr(search.rows, f.name)[sites] for f in fields(Distributions)))
         self.limit = limit
         self.crowded = crowded
         self._place = {int(node): i for i, node in enumerate(crowded)}
-        self._inner = start_search(batch, window, bool((search.scales != 1.0).any()), rows)
+        self._inner = start_search(batch, window, search.scales[crowded], rows)
         self._points = self._inner.coordinates[:, self._inner.columns]
         self._tree = cKDTree(self._points)
 

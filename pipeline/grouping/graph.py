@@ -17,7 +17,7 @@ def components(nodes: int, edges: Ints) -> Ints:
     count, label = connected_components(graph, directed=False)
     smallest = np.full(count, nodes, dtype=np.int64)
     np.minimum.at(smallest, label, np.arange(nodes))
-    return smallest[label]
+    return np.asarray(smallest[label], dtype=np.int64)
 
 
 def spanning_forest(nodes: int, edges: Ints, t: Floats) -> NDArray[np.bool_]:
@@ -44,7 +44,8 @@ def spanning_forest(nodes: int, edges: Ints, t: Floats) -> NDArray[np.bool_]:
 
 
 def similarity_graph(members: Ints, edges: Ints, shifts: Floats, strains: Floats, t: Floats) -> nx.Graph:
-    """The graph of one family: nodes `members`, the edges between them with largest_shift, strain and t as attributes."""
+    """The graph of one family: nodes `members`, the edges between them with largest_shift, strain and t as
+    attributes."""
     graph: nx.Graph = nx.Graph()
     graph.add_nodes_from(int(m) for m in members)
     inside = np.isin(edges, members).all(axis=1)

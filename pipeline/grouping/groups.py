@@ -16,9 +16,9 @@ from ..model.batch import Ints
 def stars(nodes: int, rank: Ints, edges: Ints, on_demand: Callable[[int, Ints], Ints] | None = None) -> Ints:
     """(nodes,) int64: the kept node of each node; kept nodes stand for themselves.
 
-    rank (nodes,): a permutation, 0 is best. edges (e, 2): direct matches. on_demand(node, free): further direct matches of
-    a node about to be kept, among the nodes `free` that nobody has taken; called in keep order, so that only those pairs
-    need to be verified.
+    rank (nodes,): a permutation, 0 is best. edges (e, 2): direct matches. on_demand(node, free): further direct
+    matches of a node about to be kept, among the nodes `free` that nobody has taken; called in keep order, so that
+    only those pairs need to be verified.
     """
     kept = np.full(nodes, -1, dtype=np.int64)
     both = np.concatenate([edges, edges[:, ::-1]]) if len(edges) else np.zeros((0, 2), np.int64)

@@ -120,4 +120,4 @@ class PairStore:
         rows = self._rows[np.searchsorted(self._codes, codes)]
         grade = (self._columns.proper_grade if limit.separate else self._columns.grade)[rows]
         good = pairs[(grade <= limit.grade) & ~np.isin(codes, self.apart)]
-        return good.sum(axis=1) - node
+        return np.asarray(good.sum(axis=1) - node, dtype=np.int64)

@@ -1,12 +1,12 @@
 """Verification: whether two crystals match, with the measures and the witness of the recorded match.
 
-A pair is always computed from the crystal whose content comes first (preparation.py) and turned round where it was asked
-for the other way, so that the measures are equal whichever record comes first.
+A pair is always computed from the crystal whose content comes first (preparation.py) and turned round where it was
+asked for the other way, so that the measures are equal whichever record comes first.
 
-Which match is recorded. Among all matches in the window, first those of the strictest grade reached count (`same` before
-`near` before the rest: a grade means that one match keeps both limits, and a noisy pseudo-cubic crystal must not lose
-its grade to another setting of its axes with a slightly smaller shift and a larger strain); among them the smallest
-largest shift, rounded to 1e-9; then proper before improper, smaller strain, and the smallest P, Q and shift.
+Which match is recorded. Among all matches in the window, first those of the strictest grade reached count (`same`
+before `near` before the rest: a grade means that one match keeps both limits, and a noisy pseudo-cubic crystal must
+not lose its grade to another setting of its axes with a slightly smaller shift and a larger strain); among them the
+smallest largest shift, rounded to 1e-9; then proper before improper, smaller strain, and the smallest P, Q and shift.
 """
 
 from __future__ import annotations
@@ -28,7 +28,8 @@ NO_MATCH = 3
 
 @dataclass(frozen=True, slots=True)
 class Verified:
-    """Recorded matches of p pairs as columns, first crystal (A) to second (B). Rows without a match have grade 3 and NaN."""
+    """Recorded matches of p pairs as columns, first crystal (A) to second (B). Rows without a match have grade 3 and
+    NaN."""
 
     pairs: Ints
     """(p, 2): rows of the batch, A and B."""

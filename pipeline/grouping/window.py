@@ -62,9 +62,16 @@ def near_window(t: Tolerances) -> Window:
     )
 
 
-def rescaled_window(t: Tolerances) -> Window:
-    """Limits of `rescaled`: those of `near`, without a margin (a grade of its own, on request)."""
-    return Window((t.near_shift,) * 3, (t.near_strain,) * 3)
+def rescaled_window(t: Tolerances, smallest_volume: float) -> Window:
+    """Window of the search behind `rescaled`, for crystals brought to one cubic unit a site.
+
+    A pair is compared at the geometric mean of its volumes per site; its limit on the shift, in units of that mean's
+    cubic root, is largest for the smallest volume per site of the batch (cubic angstrom), which is taken for all. A
+    pair that is `near` as it is has a shape strain of up to 4 s / 3 ((s, -s, -s) less its mean), and its shift, taken
+    in a metric of other volume, changes by a factor of up to exp(s / 2). What is found is measured again (scaled.py).
+    """
+    shift = t.near_shift * math.exp(t.near_strain) / smallest_volume ** (1.0 / 3.0)
+    return Window((shift,) * 3, (t.near_strain, t.near_strain, 4.0 / 3.0 * t.near_strain))
 
 
 def isotypic_window(t: Tolerances) -> Window:

@@ -3,8 +3,8 @@
 A has the cell A (rows) with sites x_i, B the cell B with sites y_j, both primitive and in fractions of their own cell.
 
 1. The common cell is P A for A and Q B for B; P and Q are integer matrices with |det P| sites(A) = |det Q| sites(B).
-2. P A F = Q B defines F. Its singular values are the principal stretches: strain is the largest |ln| of them. F = U S V^T
-   gives the orthogonal part O = U V^T (det O = -1 where B is matched as the mirror image): Q B is close to P A O.
+2. P A F = Q B defines F. Its singular values are the principal stretches: strain is the largest |ln| of them. F = U S
+   V^T gives the orthogonal part O = U V^T (det O = -1 where B is matched as the mirror image): Q B is close to P A O.
 3. Sites of P A are numbered k = i |det P| + j. With the Hermite form H = [[a, p, q], [0, b, r], [0, 0, c]] of P (rows),
    coset j stands for the integers n_j = (j // (b c), j // c mod b, j mod c), and the site lies at
    u_k = (x_i + n_j) P^-1 in fractions of the common cell. Sites v of Q B are numbered likewise.

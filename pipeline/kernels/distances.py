@@ -1,9 +1,9 @@
 """Sorted distances from every site to its nearest neighbours, over all species and for one species at a time.
 
 Nothing nearer is missed. Every point within a radius is visited: the cell is brought to lower-triangular form, so that
-|z| <= R bounds the third integer, then y^2 <= R^2 - z^2 the second, then x^2 <= R^2 - z^2 - y^2 the first, each interval
-exactly. When the closed ball holds at least k points, the k nearest lie inside it, because any point outside is farther
-than all of them; when it holds fewer, the radius grows and the site is done again.
+|z| <= R bounds the third integer, then y^2 <= R^2 - z^2 the second, then x^2 <= R^2 - z^2 - y^2 the first, each
+interval exactly. When the closed ball holds at least k points, the k nearest lie inside it, because any point outside
+is farther than all of them; when it holds fewer, the radius grows and the site is done again.
 """
 
 from __future__ import annotations
@@ -163,13 +163,14 @@ def neighbour_distances(
 ) -> tuple[NDArray[np.float64], NDArray[np.float64], NDArray[np.int64]]:
     """Distances to the k nearest neighbours of every site of a batch.
 
-    cells (n, 3, 3), angstrom, rows are vectors; offsets (n + 1,); positions (m, 3), fractional; ranks (m,): species of a
-    site as its rank 0, 1, ... among the species of its own crystal; planar (n,): periodic in the first two rows alone;
-    kinds: the largest number of species in one crystal.
+    cells (n, 3, 3), angstrom, rows are vectors; offsets (n + 1,); positions (m, 3), fractional; ranks (m,): species of
+    a site as its rank 0, 1, ... among the species of its own crystal; planar (n,): periodic in the first two rows
+    alone; kinds: the largest number of species in one crystal.
 
-    Returns, all in site order: `total` (m, k) float64, angstrom, ascending; `grouped` (m, k): the same distances ordered
-    by species of the neighbour, ascending within each; `counts` (m, kinds) int64: how many of the k are of each species.
-    The counted neighbours of a species are its nearest; every further one is at least as far as total[:, -1].
+    Returns, all in site order: `total` (m, k) float64, angstrom, ascending; `grouped` (m, k): the same distances
+    ordered by species of the neighbour, ascending within each; `counts` (m, kinds) int64: how many of the k are of
+    each species. The counted neighbours of a species are its nearest; every further one is at least as far as total[:,
+    -1].
     """
     sites = positions.shape[0]
     total = np.empty((sites, k))

@@ -1,10 +1,10 @@
 """All maps of one lattice onto another within a strain, and the reduced basis that bounds the search.
 
 A map takes the basis A of the first lattice to a basis B of the second; its strain is the largest |ln| of the principal
-stretches of F in A F = B (rows are vectors). Within strain s every lattice vector x of the first changes its length by a
-factor between exp(-s) and exp(s), so (i) the successive minima of the two lattices agree to that factor, and (ii) each
-basis vector of A goes to a vector of the second lattice from a thin shell. All vectors of the shells are found in a box:
-the i-th coefficient of a vector of length r is at most r times the length of the i-th reciprocal vector.
+stretches of F in A F = B (rows are vectors). Within strain s every lattice vector x of the first changes its length by
+a factor between exp(-s) and exp(s), so (i) the successive minima of the two lattices agree to that factor, and (ii)
+each basis vector of A goes to a vector of the second lattice from a thin shell. All vectors of the shells are found in
+a box: the i-th coefficient of a vector of length r is at most r times the length of the i-th reciprocal vector.
 """
 
 from __future__ import annotations
@@ -81,7 +81,7 @@ def adjugate3(m: Ints) -> Ints:
 
 @inner
 def _dot(a: Floats, b: Floats) -> float:
-    return a[0] * b[0] + a[1] * b[1] + a[2] * b[2]
+    return float(a[0] * b[0] + a[1] * b[1] + a[2] * b[2])
 
 
 @inner
@@ -224,8 +224,8 @@ def lattice_maps(first: Floats, second: Floats, limit: float, planar: bool) -> t
     """All integer U with det U = +-1 such that `first` -> U @ second has a strain of at most `limit`.
 
     first, second (3, 3): reduced bases (reduced_basis). Returns their number, U (capacity, 3, 3) int64 and strains
-    (capacity,), in a fixed order: of the box, first row slowest. planar: the third vectors, perpendicular to the planes, map onto each
-    other and the planes onto themselves.
+    (capacity,), in a fixed order: of the box, first row slowest. planar: the third vectors, perpendicular to the
+    planes, map onto each other and the planes onto themselves.
     """
     none = np.empty((1, 3, 3), np.int64)
     up = math.exp(2.0 * limit) * (1.0 + LENGTH_SLACK)

@@ -6,9 +6,9 @@ the sites of B that takes each within 2 D of its site plus that translation; so 
 approximate translation, and so has A. While 4 D is below the least distance of equal species these displacements
 compose, and the pairing is the same after every translation of L_A and L_B together: the match already stands in the
 common cell L_A intersected with L_B, with the same measures. So it is enough to take, for A and for B, every group of
-approximate translations (a *variant*: the lattice G it spans, of index n over the crystal's own; the trivial one too), to
-map G_A onto G_B with n_B sites(A) = n_A sites(B), and to use P and Q that span L_A intersected with L_B in G, which then
-have determinants n_B and n_A. Where L_A + L_B is smaller than G, a smaller pair of variants finds the match.
+approximate translations (a *variant*: the lattice G it spans, of index n over the crystal's own; the trivial one too),
+to map G_A onto G_B with n_B sites(A) = n_A sites(B), and to use P and Q that span L_A intersected with L_B in G, which
+then have determinants n_B and n_A. Where L_A + L_B is smaller than G, a smaller pair of variants finds the match.
 
 Thresholds. The pinned pair has no shift, so every other pair is shifted by up to 2 D against it: pairing runs at twice
 the limit, and the limit is applied after the mean is removed.
@@ -117,7 +117,7 @@ class Matches(NamedTuple):
 
 @inner
 def _rows_agree(a: NDArray[np.float32], b: NDArray[np.float32], slack: float) -> bool:
-    for t in range(a.shape[0]):
+    for t in range(a.shape[0]):  # noqa: SIM110 - compiled
         if abs(a[t] - b[t]) > slack:
             return False
     return True
@@ -172,7 +172,7 @@ def _cap(best: Ints, map_class: int, shifts: Floats) -> float:
         return float(shifts[2])
     if map_class > best[0]:
         return -1.0
-    cap = best[1] * UNIT
+    cap = float(best[1] * UNIT)
     if map_class < best[0]:
         cap = max(cap, shifts[best[0] - 1])
     return cap
@@ -238,9 +238,9 @@ def pair_up(
 ) -> float:
     """Pair the sites for origin shift `s` (fractions of b's cell), take the mean out, return the largest shift.
 
-    Negative when a site finds no partner within `limit` or the result is above `cap`. `s` is changed to the shift with the
-    mean taken in, d and partner belong to it. Where the pairing is ambiguous it is taken again at the new origin until it
-    stays as it is.
+    Negative when a site finds no partner within `limit` or the result is above `cap`. `s` is changed to the shift with
+    the mean taken in, d and partner belong to it. Where the pairing is ambiguous it is taken again at the new origin
+    until it stays as it is.
     """
     count = targets.shape[0]
     largest2 = -1.0
@@ -366,7 +366,7 @@ def _match_pair(
                     proper = (hand_a * hand_b > 0) == (determinant3(u) > 0)
                     if proper != (hand == 0):
                         continue
-                    strain9 = np.int64(math.floor(strains[m] / UNIT + 0.5))
+                    strain9 = math.floor(strains[m] / UNIT + 0.5)
                     map_class = _class_of(strain9, limits.strains)
                     if map_class > 2:
                         continue
@@ -416,7 +416,7 @@ def _match_pair(
                         )
                         if largest < 0:
                             continue
-                        key[1] = np.int64(math.floor(largest / UNIT + 0.5))
+                        key[1] = math.floor(largest / UNIT + 0.5)
                         key[2] = strain9
                         shift_class = _class_of(key[1], limits.shifts)
                         if shift_class > 2:
@@ -448,7 +448,7 @@ def _match_pair(
                         for i in range(3):
                             v = s[0] * inverse_q[0, i] + s[1] * inverse_q[1, i] + s[2] * inverse_q[2, i]
                             v -= math.floor(v + 0.5 * UNIT)
-                            key[21 + i] = np.int64(math.floor(v / UNIT + 0.5))
+                            key[21 + i] = math.floor(v / UNIT + 0.5)
                         if order == 0:
                             order = 1
                             for i in range(21, KEY):

@@ -43,9 +43,9 @@ def near_translations(
     """Approximate translations of one crystal other than lattice vectors.
 
     cell (3, 3), rows; positions (n, 3), fractional, sorted by species; blocks (kinds + 1,): where each species begins.
-    Returns how many there are, integers (t, 3) in [0, 840), translation = integers / 840 in fractions of the cell, distinct; and the
-    displacement (t,), angstrom, of the site that moves farthest. Only orders that divide the number of sites of every
-    species occur, because a translation group leaves no site in place.
+    Returns how many there are, integers (t, 3) in [0, 840), translation = integers / 840 in fractions of the cell,
+    distinct; and the displacement (t,), angstrom, of the site that moves farthest. Only orders that divide the number
+    of sites of every species occur, because a translation group leaves no site in place.
     """
     common = 0
     rare = 0

@@ -49,9 +49,9 @@ def nearest_pairing(
 ) -> bool:
     """For each target + s the site of its species within sqrt(limit2), modulo the lattice of the second crystal.
 
-    targets (t, 3), positions (n, 3): fractions of the second crystal's cell, sorted by species; target_blocks and blocks
-    (kinds + 1,): where the species begin; g: metric (3, 3), angstrom^2. Fills partner (t,), images (t, 3) int64 and
-    d (t, 3) with d = positions[partner] + images - targets - s. False as soon as a target has no site near it.
+    targets (t, 3), positions (n, 3): fractions of the second crystal's cell, sorted by species; target_blocks and
+    blocks (kinds + 1,): where the species begin; g: metric (3, 3), angstrom^2. Fills partner (t,), images (t, 3) int64
+    and d (t, 3) with d = positions[partner] + images - targets - s. False as soon as a target has no site near it.
 
     Exact where at most one site lies in each ball and sqrt(limit2) is below half the least height of the cell.
     """
@@ -153,7 +153,7 @@ def _complete(starts: Ints, ends: Ints, edge_node: Ints, edge_length: Floats, li
     for node in range(mate.shape[0]):
         mate[node] = -1
         seen[node] = -1
-    for t in range(starts.shape[0]):
+    for t in range(starts.shape[0]):  # noqa: SIM110 - compiled
         if not _augment(t, starts, ends, edge_node, edge_length, limit, mate, seen, t):
             return False
     return True
@@ -177,9 +177,9 @@ def bottleneck_pairing(
 ) -> bool:
     """The one-to-one pairing with the smallest largest |d|, among those with every |d| <= sqrt(limit2).
 
-    As nearest_pairing, without its conditions. common: Hermite matrix of the common lattice in the lattice of the second
-    crystal, modulo which the pairing is one to one. Of assignments with the same largest shift the one that comes first
-    in the order of edges (length, target, site, image) is built: the same input gives the same pairing.
+    As nearest_pairing, without its conditions. common: Hermite matrix of the common lattice in the lattice of the
+    second crystal, modulo which the pairing is one to one. Of assignments with the same largest shift the one that
+    comes first in the order of edges (length, target, site, image) is built: the same input gives the same pairing.
     """
     index = common[0, 0] * common[1, 1] * common[2, 2]
     inverse = inverse3(g)

@@ -1,7 +1,7 @@
 """Whether the distance rows of two crystals allow a match: sorted columns, then row against row, then by species.
 
-All distances are transformed (grouping/candidates.py), so that every test is |y_a - y_b| <= slack. Each test follows from
-the bound on paired sites; none looks at the number of sites, the symmetry or the reduced cell.
+All distances are transformed (grouping/candidates.py), so that every test is |y_a - y_b| <= slack. Each test follows
+from the bound on paired sites; none looks at the number of sites, the symmetry or the reduced cell.
 """
 
 from __future__ import annotations
@@ -37,8 +37,9 @@ def sort_columns(rows: Singles, blocks: Ints) -> Singles:
 def _columns_agree(ordered: Singles, a: Ints, b: Ints, slack: float) -> bool:
     """Sorted columns of two crystals within the slack; unequal numbers of sites by their common refinement.
 
-    A pairing in the common cell takes n_a copies of one column onto n_b copies of the other. Sorting both does not raise
-    the largest difference, and the sorted copies are step functions of u in (0, 1): equal steps are met once each.
+    A pairing in the common cell takes n_a copies of one column onto n_b copies of the other. Sorting both does not
+    raise the largest difference, and the sorted copies are step functions of u in (0, 1): equal steps are met once
+    each.
     """
     for s in range(a.shape[0] - 1):
         size_a, size_b = a[s + 1] - a[s], b[s + 1] - b[s]
@@ -120,3 +121,18 @@ def pairs_allowed(
             rows, grouped, counts, b, a, slack
         )
     return out, left
+
+
+@kernel
+def coordinates_close(coordinates: NDArray[np.float64], pairs: Ints, slack: float) -> NDArray[np.bool_]:
+    """Which pairs (p, 2) of rows agree to the slack in every column (n, w); the last columns are looked at first."""
+    out = np.zeros(pairs.shape[0], np.bool_)
+    for i in range(pairs.shape[0]):
+        a, b = pairs[i, 0], pairs[i, 1]
+        close = True
+        for t in range(coordinates.shape[1] - 1, -1, -1):
+            if abs(coordinates[a, t] - coordinates[b, t]) > slack:
+                close = False
+                break
+        out[i] = close
+    return out

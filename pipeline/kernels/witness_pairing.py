@@ -1,4 +1,5 @@
-"""The pairing that belongs to a recorded match: from P, Q and the origin shift to a site of Q.B for each site of P.A."""
+"""The pairing that belongs to a recorded match: from P, Q and the origin shift to a site of Q.B for each site of
+P.A."""
 
 from __future__ import annotations
 
