@@ -2,12 +2,12 @@
 
 from __future__ import annotations
 
-import shutil
 from dataclasses import dataclass
 from pathlib import Path
 from typing import Any
 
 from lattice_census.grouping.exact import group_exact
+from lattice_census.grouping.stage import set_outdated_aside
 from lattice_census.ingest.classify import classify_keys
 from lattice_census.ingest.ingest import (
     IngestWork,
@@ -21,6 +21,7 @@ from lattice_census.ingest.progress import Progress, Step
 from lattice_census.ingest.recompute import recompute_canonical
 from lattice_census.ingest.scan import IngestRequest
 from lattice_census.kernels import warm_up
+from lattice_census.output.findings import find_all
 from lattice_census.settings import Settings
 from lattice_census.store.runs import end_run
 from lattice_census.store.stages import record_settings
@@ -39,54 +40,63 @@ class IngestJob:
 
 
 def ingest(job: IngestJob, step: Step, progress: Progress, command: str = "ingest") -> dict[str, Any]:
-    """Run the job's steps and return the counts. A dry run does the same on a copy that is then thrown away."""
+    """Run the job's steps, publish, and return the counts. A dry run does the same on a copy that is thrown away."""
     with (
         Workspace(job.store, command, job.wait_seconds, scratch=job.dry_run) as workspace,
         WorkerPool(job.settings.worker_count) as pool,
     ):
-        work = step("scan", prepare_ingest, workspace, job.request, job.settings, command)
-        if work is None:
-            counts: dict[str, Any] = {"nothing_new": True}
-        else:
-            step("compile kernels", _compile, progress)
-            if work.canonical_again:
-                step("reduce stored structures anew", recompute_canonical, workspace, job.settings, pool, progress)
-            for source in work.plan.sources:
-                if source.stale:
-                    step(f"read {source.source}", read_source, workspace, work, source, pool, progress)
-            step("classify", classify_keys, workspace, job.settings, pool, progress)
-            counts = step("group exactly", _close, workspace, work)
-            counts["no_unit"] = energies_without_unit(workspace.connection, work.plan)
-        if not job.dry_run and workspace.ahead_of_published:
-            step("publish", workspace.publish)
-        if work is not None and not job.dry_run:
-            workspace.clear_parts()
+        counts = ingest_into(workspace, job, pool, step, progress, command)
+        if not job.dry_run:
+            finish(workspace, step)
         return counts
 
 
-def _compile(progress: Progress) -> None:
+def ingest_into(
+    workspace: Workspace, job: IngestJob, pool: WorkerPool, step: Step, progress: Progress, command: str
+) -> dict[str, Any]:
+    """The steps of an ingest in an open workspace, up to the end of its run; not published yet."""
+    work = step("scan", prepare_ingest, workspace, job.request, job.settings, command)
+    if work is None:
+        return {"nothing_new": True}
+    step("compile kernels", compile_kernels, progress)
+    if work.canonical_again:
+        step("reduce stored structures anew", recompute_canonical, workspace, job.settings, pool, progress)
+    for source in work.plan.sources:
+        if source.stale:
+            step(f"read {source.source}", read_source, workspace, work, source, pool, progress)
+    step("classify", classify_keys, workspace, job.settings, pool, progress)
+    counts = step("close the run", _close, workspace, work)
+    counts["no_unit"] = energies_without_unit(workspace.connection, work.plan)
+    return counts
+
+
+def finish(workspace: Workspace, step: Step) -> None:
+    """Publish where the work store is ahead, and clear what is in the store by now."""
+    if workspace.ahead_of_published:
+        step("publish", workspace.publish)
+    workspace.clear_parts()
+
+
+def compile_kernels(progress: Progress) -> None:
+    """Compile the kernels or take them from the cache; a compilation is said."""
     seconds = warm_up()
-    if seconds > 2:
+    if seconds > 5:
         progress.note(f"Compiled the kernels in {seconds:.0f} s; later runs take them from the cache.")
 
 
 def _close(workspace: Workspace, work: IngestWork) -> dict[str, Any]:
-    """Exact groups, settings and the end of the run in one transaction."""
+    """Exact groups, settings, findings and the end of the run in one transaction."""
     connection = workspace.connection
     connection.execute("BEGIN")
     try:
         group_exact(connection, work.run.run_id, work.settings)
-        record_settings(connection, work.settings, ("parse", "canonical"))
-        counts = ingest_counts(connection, work)
+        waiting = set_outdated_aside(connection, work.settings)
+        find_all(connection, work.settings)
+        record_settings(connection, work.settings, ("parse", "canonical", "keep"))
+        counts = ingest_counts(connection, work) | {"compositions_waiting": waiting}
         end_run(connection, work.run, counts)
         connection.execute("COMMIT")
     except BaseException:
         connection.execute("ROLLBACK")
         raise
     return {"run": work.run.run_id, **counts}
-
-
-def remove_store(store: Path) -> None:
-    """Remove a store of the demo with its work folder."""
-    store.unlink(missing_ok=True)
-    shutil.rmtree(store.with_name(store.name + ".work"), ignore_errors=True)

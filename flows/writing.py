@@ -24,7 +24,11 @@ from .options import (
 )
 
 if TYPE_CHECKING:
+    from collections.abc import Callable
+
+    from lattice_census.ingest.progress import Progress, Step
     from lattice_census.ingest.scan import IngestRequest
+    from lattice_census.settings import Settings
 
 PathsArgument = Annotated[list[Path], typer.Argument(metavar="PATH...", help="Files or folders of structures.")]
 SourceOption = Annotated[str | None, typer.Option("--source", help="Name of the source [default: the PATH's own].")]
@@ -47,6 +51,7 @@ DryRunOption = Annotated[bool, typer.Option("--dry-run", help="Print the counts 
 def register(app: typer.Typer) -> None:
     """Add the commands of this module."""
     app.command("ingest")(ingest)
+    app.command("group")(group)
     app.command("run")(run)
     app.command("withdraw")(withdraw)
     app.command("undo")(undo)
@@ -78,14 +83,44 @@ def ingest(
 ) -> int:
     """Read structures into the store, each in its canonical cell; refuse what cannot be read, by name."""
     failing = fail_on(fails, ("rejects",))
+    from .ingest import IngestJob
+    from .ingest import ingest as steps
+
     request = _request(
         paths, source, recompute, id_column=id_column, structure_column=structure_column, energy_column=energy_column,
         energy_unit=energy_unit, theory=theory, theory_column=theory_column, split_column=split_column,
         date_column=date_column,
     )  # fmt: skip
-    counts = _ingest("ingest", request, store, dry_run, direct, workers, wait, settings, assignments, quiet)
+    resolved = _resolved(store, settings, assignments, direct, workers)
+    job = IngestJob(store, request, resolved, wait, dry_run)
+    counts = _orchestrated("ingest", resolved.orchestrator, quiet, lambda step, progress: steps(job, step, progress))
     typer.echo(json.dumps(counts) if as_json else ingest_text(counts, dry_run))
     return 1 if "rejects" in failing and counts.get("rejected") else 0
+
+
+def group(
+    store: StoreOption = DEFAULT_STORE,
+    everything: Annotated[bool, typer.Option("--all", help="Every composition, not only those that changed.")] = False,
+    recompute: RecomputeOption = False,
+    direct: DirectOption = False,
+    workers: WorkersOption = None,
+    wait: WaitOption = 0.0,
+    settings: SettingsOption = None,
+    assignments: SetOption = None,
+    as_json: JsonOption = False,
+    quiet: QuietOption = False,
+    fails: FailOnOption = None,
+) -> int:
+    """Find the records that are the same crystal: verified matches, families, groups, findings."""
+    failing = fail_on(fails, ("findings",))
+    from .group import GroupJob
+    from .group import group as steps
+
+    resolved = _resolved(store, settings, assignments, direct, workers)
+    job = GroupJob(store, resolved, everything, recompute, wait)
+    counts = _orchestrated("group", resolved.orchestrator, quiet, lambda step, progress: steps(job, step, progress))
+    typer.echo(json.dumps(counts) if as_json else group_text(counts))
+    return 1 if "findings" in failing and _findings(store) else 0
 
 
 def run(
@@ -106,27 +141,44 @@ def run(
     fails: FailOnOption = None,
 ) -> int:
     """What a night does: ingest, group, and, where a folder is given, export."""
-    from lattice_census.output.export import export as export_to
-    from lattice_census.store.connect import open_for_reading
+    failing = fail_on(fails, ("rejects", "findings"))
+    from .group import night
+    from .ingest import IngestJob
 
-    failing = fail_on(fails, ("rejects",))
-    request = _request(paths, source, recompute)
-    counts = _ingest("run", request, store, False, direct, workers, wait, settings, assignments, quiet)
-    exported = None
+    resolved = _resolved(store, settings, assignments, direct, workers)
+    job = IngestJob(store, _request(paths, source, recompute), resolved, wait)
+    counts = _orchestrated("run", resolved.orchestrator, quiet, lambda step, progress: night(job, step, progress))
+    told = None
     if export is not None:
+        from lattice_census.output.export import export as export_to
+        from lattice_census.store.connect import open_for_reading
+
         connection = open_for_reading(store)
         try:
-            exported = export_to(connection, export, "key", "cif")
+            exported = export_to(connection, export, "near", "cif")
         finally:
             connection.close()
+        told = {"kept": exported.kept, "set_aside": exported.set_aside, "folder": str(export)}
     if as_json:
-        told = {"kept": exported.kept, "set_aside": exported.set_aside, "folder": str(export)} if exported else None
-        typer.echo(json.dumps({"ingest": counts, "export": told}))
+        typer.echo(json.dumps({**counts, "export": told}))
     else:
-        typer.echo(ingest_text(counts, False))
-        if exported:
-            typer.echo(f"Exported to {export}: {exported.kept:,} kept, {exported.set_aside:,} set aside.")
-    return 1 if "rejects" in failing and counts.get("rejected") else 0
+        typer.echo(ingest_text(counts["ingest"], False))
+        typer.echo(group_text(counts["group"]))
+        if told:
+            typer.echo(f"Exported to {export}: {told['kept']:,} kept, {told['set_aside']:,} set aside.")
+    rejected = "rejects" in failing and counts["ingest"].get("rejected")
+    return 1 if rejected or ("findings" in failing and _findings(store)) else 0
+
+
+def _findings(store: Path) -> int:
+    from lattice_census.store.connect import open_for_reading
+    from lattice_census.store.rows import one_number
+
+    connection = open_for_reading(store)
+    try:
+        return one_number(connection, "SELECT count(*) FROM findings")
+    finally:
+        connection.close()
 
 
 def _request(paths: list[Path], source: str | None, recompute: bool, **source_settings: Any) -> IngestRequest:
@@ -146,25 +198,47 @@ def _request(paths: list[Path], source: str | None, recompute: bool, **source_se
     return IngestRequest(tuple(paths), source, given, recompute)
 
 
-def _ingest(
-    command: str, request: IngestRequest, store: Path, dry_run: bool, direct: bool, workers: int | None, wait: float,
-    settings: Path | None, assignments: list[str] | None, quiet: bool,
-) -> dict[str, Any]:  # fmt: skip
-    from .ingest import IngestJob
-    from .ingest import ingest as steps
+def _resolved(
+    store: Path, settings: Path | None, assignments: list[str] | None, direct: bool, workers: int | None
+) -> Settings:
+    options = {"workers": workers, "orchestrator": "direct" if direct else None}
+    return settings_from(settings, assignments, store, options)
+
+
+def _orchestrated(
+    name: str, orchestrator: str, quiet: bool, body: Callable[[Step, Progress], dict[str, Any]]
+) -> dict[str, Any]:
+    """body(step, progress), as a Prefect flow or directly."""
     from .progress import progress_for
 
-    options = {"workers": workers, "orchestrator": "direct" if direct else None}
-    resolved = settings_from(settings, assignments, store, options)
-    job = IngestJob(store, request, resolved, wait, dry_run)
     with progress_for(quiet) as progress:
-        if resolved.orchestrator == "direct":
+        if orchestrator == "direct":
             from lattice_census.ingest.progress import call_directly
 
-            return steps(job, call_directly, progress, command)
+            return body(call_directly, progress)
         from .orchestrate import run_as_flow, task_step
 
-        return run_as_flow(command, lambda: steps(job, task_step, progress, command))
+        return run_as_flow(name, lambda: body(task_step, progress))
+
+
+def group_text(counts: dict[str, Any]) -> str:
+    """The counts of a grouping in sentences."""
+    if counts.get("nothing_new"):
+        return "Nothing new to group."
+    lines = [
+        f"Run {counts['run']}: grouped {counts['compositions']:,} compositions, compared {counts['compared']:,} pairs "
+        f"site by site; the store holds {counts['matches']:,} matches."
+    ]
+    for grade, groups in counts["groups"].items():
+        lines.append(
+            f"Grade {grade}: {counts['families'][grade]:,} families, {groups:,} groups, "
+            f"{counts['set_aside'][grade]:,} records set aside."
+        )
+    if counts["findings"]:
+        lines.append(
+            "Findings: " + ", ".join(f"{code} {number:,}" for code, number in counts["findings"].items()) + "."
+        )
+    return "\n".join(lines)
 
 
 def ingest_text(counts: dict[str, Any], dry_run: bool) -> str:
@@ -182,6 +256,10 @@ def ingest_text(counts: dict[str, Any], dry_run: bool) -> str:
     if counts["reasons"]:
         told = ", ".join(f"{reason} {number:,}" for reason, number in counts["reasons"].items())
         lines.append(f"Refused: {told}.")
+    if counts["compositions_waiting"]:
+        lines.append(
+            f"{counts['compositions_waiting']:,} compositions changed; `group` brings their groups up to date."
+        )
     for source in counts["no_unit"]:
         lines.append(
             f"The energies of {source} have no unit and stay in `properties`; give --energy-unit to compare them."

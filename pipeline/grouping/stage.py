@@ -1,0 +1,290 @@
+"""The stage `group`: which compositions have changed, their work in the pool, and the rows it gives.
+
+A composition is grouped from its current records, their keys, their ranks and the settings alone; the digest of these
+stands in `grouped_compositions`, so that only compositions whose digest changed are worked on, and a killed run goes on
+with those that are left. Compositions with one key need no comparison and are written by SQL.
+"""
+
+from __future__ import annotations
+
+import hashlib
+import json
+from collections.abc import Callable, Iterator
+from dataclasses import dataclass
+from functools import partial
+from pathlib import Path
+
+import duckdb
+
+from ..ingest.pool import WorkerPool
+from ..ingest.progress import Progress
+from ..settings import Settings
+from ..store.rows import one_number, one_row
+from ..store.workspace import Workspace
+from .exact import note_id_changes
+from .rank import rank_records
+from .work import GroupJob, group_chunk, matches_part, members_part, summary_part
+
+GRADES = ("same", "near")
+
+MOST_PAIRS = 3_000_000
+"""A job ends at so many possible pairs of keys (the square of the keys of its compositions)."""
+
+MOST_COMPOSITIONS = 400
+
+
+@dataclass(frozen=True, slots=True)
+class GroupCounts:
+    """What the stage did."""
+
+    compositions: int
+    """Compositions worked on."""
+
+    compared: int
+    """Pairs of keys compared site by site in this run."""
+
+    matches: int
+    """Rows of `matches`."""
+
+    families: dict[str, int]
+    """By grade."""
+
+    groups: dict[str, int]
+    """By grade."""
+
+    set_aside: dict[str, int]
+    """Records that are not kept, by grade."""
+
+
+def group_records(
+    workspace: Workspace,
+    run_id: int,
+    settings: Settings,
+    pool: WorkerPool,
+    progress: Progress,
+    everything: bool = False,
+) -> GroupCounts:
+    """Bring `matches` and the members of grades same and near up to date with the current records.
+
+    everything: work on every composition again. Each job's rows are committed in one transaction with its digests.
+    """
+    connection = workspace.connection
+    rank_records(connection, settings)
+    _find_changed(connection, settings, everything)
+    _in_transaction(connection, partial(_drop_left, connection, run_id))
+    _in_transaction(connection, partial(_write_single, connection, run_id))
+    records = one_number(connection, "SELECT coalesce(sum(records), 0) FROM changed_compositions WHERE keys > 1")
+    if records:
+        progress.start("comparing and grouping", records)
+        for job, done in pool.ordered_results(group_chunk, _jobs(workspace, settings)):
+            _in_transaction(connection, partial(_commit, connection, job.part, run_id))
+            for path in (job.raw, matches_part(job.part), members_part(job.part), summary_part(job.part)):
+                path.unlink()
+            progress.advance(done)
+    return _counts(connection, run_id)
+
+
+def find_work(connection: duckdb.DuckDBPyConnection, settings: Settings, everything: bool = False) -> str | None:
+    """The hash of what `group_records` would bring about, or None where nothing is to be done.
+
+    It is that of all records, keys, ranks and settings, and does not depend on how much is done already, so that an
+    interrupted run is known by it.
+    """
+    rank_records(connection, settings)
+    _find_changed(connection, settings, True)
+    row = one_row(connection, "SELECT sha256(string_agg(digest, '' ORDER BY composition)) FROM changed_compositions")
+    target = f"group {everything} {row[0] if row else None}"
+    unfinished = one_number(
+        connection, "SELECT count(*) FROM runs WHERE status = 'running' AND plan_hash = ?", [target]
+    )
+    if not everything and not unfinished:
+        _find_changed(connection, settings, False)
+        left = "SELECT 1 FROM (SELECT record_id FROM members UNION SELECT record_id FROM outdated_members) "
+        left += "WHERE record_id NOT IN (SELECT record_id FROM current_records) LIMIT 1"
+        if not one_number(connection, "SELECT count(*) FROM changed_compositions") and not one_row(connection, left):
+            return None
+    return target
+
+
+def _counts(connection: duckdb.DuckDBPyConnection, run_id: int) -> GroupCounts:
+    rows = connection.execute(
+        "SELECT grade, count(DISTINCT family_id), count(DISTINCT group_id), count(*) FILTER (NOT kept) FROM members "
+        f"WHERE grade IN {GRADES} GROUP BY grade ORDER BY grade DESC"
+    ).fetchall()
+    return GroupCounts(
+        one_number(connection, "SELECT count(*) FROM grouped_compositions WHERE run_id = ?", [run_id]),
+        one_number(connection, "SELECT sum(verified) FROM grouped_compositions WHERE run_id = ?", [run_id]),
+        one_number(connection, "SELECT count(*) FROM matches"),
+        {grade: families for grade, families, _, _ in rows},
+        {grade: groups for grade, _, groups, _ in rows},
+        {grade: aside for grade, _, _, aside in rows},
+    )
+
+
+def _in_transaction(connection: duckdb.DuckDBPyConnection, work: Callable[[], None]) -> None:
+    connection.execute("BEGIN")
+    try:
+        work()
+        connection.execute("COMMIT")
+    except BaseException:
+        connection.execute("ROLLBACK")
+        raise
+
+
+def _find_changed(connection: duckdb.DuckDBPyConnection, settings: Settings, everything: bool) -> None:
+    """The temporary table `changed_compositions` (composition, digest, records, keys)."""
+    verify = json.dumps(settings.of_stage("verify") | settings.of_stage("canonical"), sort_keys=True)
+    connection.execute(
+        "CREATE OR REPLACE TEMP TABLE changed_compositions AS SELECT n.* FROM ("
+        "SELECT r.composition, count(*) AS records, count(DISTINCT f.crystal_key) AS keys, "
+        "sha256($settings || string_agg(r.record_id || f.crystal_key || x.place, '' ORDER BY r.record_id)) AS digest "
+        "FROM current_records r JOIN canonical_forms f USING (record_id) "
+        "JOIN (SELECT k.record_id, row_number() OVER (PARTITION BY i.composition ORDER BY k.rank) AS place "
+        "FROM ranks k JOIN records i USING (record_id)) x USING (record_id) GROUP BY r.composition) n "
+        "LEFT JOIN grouped_compositions g USING (composition) "
+        "WHERE $everything OR g.digest IS DISTINCT FROM n.digest",
+        {"settings": verify, "everything": everything},
+    )
+
+
+def set_outdated_aside(connection: duckdb.DuckDBPyConnection, settings: Settings) -> int:
+    """Take the rows of compositions that changed since they were grouped out of `members` and `matches`.
+
+    So that no result speaks of records as they were; `group` makes them anew and compares the ids. To be called inside
+    a transaction. Returns the number of compositions that wait for `group`, once any was grouped.
+    """
+    if not one_number(connection, "SELECT count(*) FROM grouped_compositions"):
+        return 0
+    rank_records(connection, settings)
+    _find_changed(connection, settings, False)
+    connection.execute(
+        "CREATE OR REPLACE TEMP TABLE stale AS SELECT composition FROM changed_compositions UNION "
+        "SELECT composition FROM grouped_compositions "
+        "WHERE composition NOT IN (SELECT composition FROM current_records)"
+    )
+    # The composition of a replaced record may be another now; its old rows go with the record.
+    where = (
+        f"WHERE grade IN {GRADES} AND (record_id IN (SELECT record_id FROM records JOIN stale USING (composition)) "
+        "OR record_id NOT IN (SELECT record_id FROM current_records) OR group_id NOT IN "
+        "(SELECT record_id FROM current_records))"
+    )
+    connection.execute(
+        f"INSERT INTO outdated_members SELECT grade, group_id, family_id, record_id FROM members {where}"
+    )
+    connection.execute(f"DELETE FROM members {where}")
+    for table in ("matches", "grouped_compositions"):
+        connection.execute(f"DELETE FROM {table} WHERE composition IN (SELECT composition FROM stale)")
+    connection.execute(
+        "DELETE FROM more_matches WHERE record_id NOT IN (SELECT record_id FROM members WHERE grade = 'near')"
+    )
+    return one_number(connection, "SELECT count(*) FROM changed_compositions")
+
+
+def _before(connection: duckdb.DuckDBPyConnection, records: str) -> None:
+    """Keep the members of grades same and near of `records` (a query of record ids) aside, and delete them."""
+    where = f"WHERE grade IN {GRADES} AND record_id IN ({records})"
+    columns = "grade, group_id, family_id, record_id"
+    connection.execute(
+        f"CREATE OR REPLACE TEMP TABLE members_before AS SELECT {columns} FROM members {where} "
+        f"UNION SELECT {columns} FROM outdated_members {where}"
+    )
+    for table in ("members", "outdated_members"):
+        connection.execute(f"DELETE FROM {table} {where}")
+
+
+def _drop_left(connection: duckdb.DuckDBPyConnection, run_id: int) -> None:
+    """Rows of records and compositions that take no part in results any more."""
+    gone = (
+        "SELECT record_id FROM (SELECT record_id FROM members UNION SELECT record_id FROM outdated_members) "
+        "WHERE record_id NOT IN (SELECT record_id FROM current_records)"
+    )
+    _before(connection, gone)
+    note_id_changes(connection, run_id)
+    current = "SELECT composition FROM current_records"
+    for table in ("matches", "grouped_compositions"):
+        connection.execute(f"DELETE FROM {table} WHERE composition NOT IN ({current})")
+    connection.execute("DELETE FROM more_matches WHERE record_id NOT IN (SELECT record_id FROM current_records)")
+
+
+def _write_single(connection: duckdb.DuckDBPyConnection, run_id: int) -> None:
+    """Members of compositions with one key: one family and one group, kept by rank."""
+    single = "(SELECT composition FROM changed_compositions WHERE keys = 1)"
+    records = f"SELECT record_id FROM current_records WHERE composition IN {single}"
+    _before(connection, records)
+    connection.execute(f"DELETE FROM matches WHERE composition IN {single}")
+    connection.execute(f"DELETE FROM more_matches WHERE record_id IN ({records})")
+    for grade in GRADES:
+        connection.execute(
+            "INSERT INTO members SELECT $1, first_value(r.record_id) OVER kept, min(r.record_id) OVER family, "
+            "r.record_id, r.label, r.source, row_number() OVER kept = 1, 0.0, 0.0 "
+            f"FROM current_records r JOIN ranks k USING (record_id) WHERE r.composition IN {single} "
+            "WINDOW kept AS (PARTITION BY r.composition ORDER BY k.rank), family AS (PARTITION BY r.composition) "
+            "ORDER BY r.record_id",
+            [grade],
+        )
+    note_id_changes(connection, run_id)
+    connection.execute(f"DELETE FROM grouped_compositions WHERE composition IN {single}")
+    connection.execute(
+        "INSERT INTO grouped_compositions SELECT composition, digest, ?, records, keys, 0, 0 FROM changed_compositions "
+        "WHERE keys = 1 ORDER BY composition",
+        [run_id],
+    )
+
+
+def _jobs(workspace: Workspace, settings: Settings) -> Iterator[GroupJob]:
+    """Jobs of whole compositions, the largest first, so that the last ones to end are short."""
+    rows = workspace.connection.execute(
+        "SELECT composition, digest, keys FROM changed_compositions WHERE keys > 1 ORDER BY keys DESC, composition"
+    ).fetchall()
+    pack: list[tuple[str, str]] = []
+    pairs = 0
+    number = 0
+    for composition, digest, keys in rows:
+        pack.append((composition, digest))
+        pairs += keys * keys
+        if pairs >= MOST_PAIRS or len(pack) >= MOST_COMPOSITIONS:
+            yield _job(workspace, settings, number, pack)
+            pack, pairs, number = [], 0, number + 1
+    if pack:
+        yield _job(workspace, settings, number, pack)
+
+
+def _job(workspace: Workspace, settings: Settings, number: int, pack: list[tuple[str, str]]) -> GroupJob:
+    digest = hashlib.sha256(json.dumps(pack).encode()).hexdigest()[:32]
+    part = workspace.parts / f"group-{digest}"
+    raw = part.with_name(part.name + ".raw.parquet")
+    connection = workspace.connection
+    connection.execute("CREATE OR REPLACE TEMP TABLE packed (composition VARCHAR, digest VARCHAR)")
+    connection.executemany("INSERT INTO packed VALUES (?, ?)", pack)
+    frame = connection.sql(
+        "SELECT r.composition, p.digest, r.record_id, f.crystal_key, k.rank, f.cell_angstrom, f.species, "
+        "f.positions_fractional, r.periodicity, f.matrix FROM packed p JOIN current_records r USING (composition) "
+        "JOIN canonical_forms f USING (record_id) JOIN ranks k USING (record_id) ORDER BY r.composition, r.record_id"
+    ).pl()
+    frame.write_parquet(raw, compression="lz4")
+    return GroupJob(number, raw, part, settings)
+
+
+def _commit(connection: duckdb.DuckDBPyConnection, part: Path, run_id: int) -> None:
+    matches, members, summary = (str(name(part)) for name in (matches_part, members_part, summary_part))
+    connection.execute("CREATE OR REPLACE TEMP TABLE done AS SELECT * FROM read_parquet(?)", [summary])
+    connection.execute("CREATE OR REPLACE TEMP TABLE grouped AS SELECT * FROM read_parquet(?)", [members])
+    _before(connection, "SELECT record_id FROM grouped")
+    for table in ("matches", "grouped_compositions"):
+        connection.execute(f"DELETE FROM {table} WHERE composition IN (SELECT composition FROM done)")
+    connection.execute("DELETE FROM more_matches WHERE record_id IN (SELECT record_id FROM grouped)")
+    connection.execute("INSERT INTO matches BY NAME SELECT * FROM read_parquet(?)", [matches])
+    for grade in GRADES:
+        connection.execute(
+            f"INSERT INTO members SELECT ?, g.{grade}_group, g.{grade}_family, g.record_id, r.label, r.source, "
+            f"g.{grade}_group = g.record_id, g.{grade}_shift, g.{grade}_strain "
+            "FROM grouped g JOIN records r USING (record_id) ORDER BY g.record_id",
+            [grade],
+        )
+    connection.execute("INSERT INTO more_matches SELECT record_id FROM grouped WHERE more ORDER BY record_id")
+    note_id_changes(connection, run_id)
+    connection.execute(
+        "INSERT INTO grouped_compositions SELECT composition, digest, ?, records, keys, candidates, verified FROM done "
+        "ORDER BY composition",
+        [run_id],
+    )
