@@ -1,6 +1,6 @@
 """The stage `group`: which compositions have changed, their work in the pool, and the rows it gives.
 
-A composition is grouped from its current records, their keys, their ranks and the settings alone; the digest of these
+A composition is grouped from its current records, their keys, ranks and pins, and the settings alone; the digest of these
 stands in `grouped_compositions`, so that only compositions whose digest changed are worked on, and a killed run goes on
 with those that are left. Compositions with one key need no comparison and are written by SQL.
 """
@@ -22,8 +22,9 @@ from ..settings import Settings
 from ..store.rows import one_number, one_row
 from ..store.workspace import Workspace
 from .exact import note_id_changes
+from .pinned import PAIR_PINS
 from .rank import rank_records
-from .work import GroupJob, group_chunk, matches_part, members_part, summary_part
+from .work import GroupJob, PairPin, group_chunk, matches_part, members_part, summary_part
 
 GRADES = ("same", "near")
 
@@ -31,6 +32,9 @@ MOST_PAIRS = 3_000_000
 """A job ends at so many possible pairs of keys (the square of the keys of its compositions)."""
 
 MOST_COMPOSITIONS = 400
+
+LITTLE_WORK = 100_000
+"""Possible pairs of keys that are compared before workers would have started."""
 
 
 @dataclass(frozen=True, slots=True)
@@ -73,10 +77,12 @@ def group_records(
     _find_changed(connection, settings, everything)
     _in_transaction(connection, partial(_drop_left, connection, run_id))
     _in_transaction(connection, partial(_write_single, connection, run_id))
-    records = one_number(connection, "SELECT coalesce(sum(records), 0) FROM changed_compositions WHERE keys > 1")
+    records = one_number(connection, "SELECT coalesce(sum(records), 0) FROM changed_compositions WHERE NOT plain")
     if records:
         progress.start("comparing and grouping", records)
-        for job, done in pool.ordered_results(group_chunk, _jobs(workspace, settings)):
+        pairs = one_number(connection, "SELECT sum(keys * keys) FROM changed_compositions WHERE keys > 1")
+        few = 4 if pairs < LITTLE_WORK else 1
+        for job, done in pool.ordered_results(group_chunk, _jobs(workspace, settings), few):
             _in_transaction(connection, partial(_commit, connection, job.part, run_id))
             for path in (job.raw, matches_part(job.part), members_part(job.part), summary_part(job.part)):
                 path.unlink()
@@ -132,15 +138,20 @@ def _in_transaction(connection: duckdb.DuckDBPyConnection, work: Callable[[], No
 
 
 def _find_changed(connection: duckdb.DuckDBPyConnection, settings: Settings, everything: bool) -> None:
-    """The temporary table `changed_compositions` (composition, digest, records, keys)."""
+    """The temporary table `changed_compositions` (composition, digest, records, keys, plain): plain ones have one key
+    and no pins, and need no comparison."""
     verify = json.dumps(settings.of_stage("verify") | settings.of_stage("canonical"), sort_keys=True)
     connection.execute(
         "CREATE OR REPLACE TEMP TABLE changed_compositions AS SELECT n.* FROM ("
         "SELECT r.composition, count(*) AS records, count(DISTINCT f.crystal_key) AS keys, "
-        "sha256($settings || string_agg(r.record_id || f.crystal_key || x.place, '' ORDER BY r.record_id)) AS digest "
+        "count(DISTINCT f.crystal_key) = 1 AND any_value(p.pins) IS NULL AS plain, "
+        "sha256($settings || string_agg(r.record_id || f.crystal_key || x.place, '' ORDER BY r.record_id) "
+        "|| coalesce(any_value(p.pins), '')) AS digest "
         "FROM current_records r JOIN canonical_forms f USING (record_id) "
         "JOIN (SELECT k.record_id, row_number() OVER (PARTITION BY i.composition ORDER BY k.rank) AS place "
-        "FROM ranks k JOIN records i USING (record_id)) x USING (record_id) GROUP BY r.composition) n "
+        "FROM ranks k JOIN records i USING (record_id)) x USING (record_id) "
+        "LEFT JOIN (SELECT composition, string_agg(kind || pin_id || record_a || record_b, '' ORDER BY pin_id) AS pins "
+        f"FROM {PAIR_PINS} GROUP BY composition) p ON p.composition = r.composition GROUP BY r.composition) n "
         "LEFT JOIN grouped_compositions g USING (composition) "
         "WHERE $everything OR g.digest IS DISTINCT FROM n.digest",
         {"settings": verify, "everything": everything},
@@ -172,7 +183,7 @@ def set_outdated_aside(connection: duckdb.DuckDBPyConnection, settings: Settings
         f"INSERT INTO outdated_members SELECT grade, group_id, family_id, record_id FROM members {where}"
     )
     connection.execute(f"DELETE FROM members {where}")
-    for table in ("matches", "grouped_compositions"):
+    for table in ("matches", "grouped_compositions", "refused_pins"):
         connection.execute(f"DELETE FROM {table} WHERE composition IN (SELECT composition FROM stale)")
     connection.execute(
         "DELETE FROM more_matches WHERE record_id NOT IN (SELECT record_id FROM members WHERE grade = 'near')"
@@ -201,17 +212,18 @@ def _drop_left(connection: duckdb.DuckDBPyConnection, run_id: int) -> None:
     _before(connection, gone)
     note_id_changes(connection, run_id)
     current = "SELECT composition FROM current_records"
-    for table in ("matches", "grouped_compositions"):
+    for table in ("matches", "grouped_compositions", "refused_pins"):
         connection.execute(f"DELETE FROM {table} WHERE composition NOT IN ({current})")
     connection.execute("DELETE FROM more_matches WHERE record_id NOT IN (SELECT record_id FROM current_records)")
 
 
 def _write_single(connection: duckdb.DuckDBPyConnection, run_id: int) -> None:
     """Members of compositions with one key: one family and one group, kept by rank."""
-    single = "(SELECT composition FROM changed_compositions WHERE keys = 1)"
+    single = "(SELECT composition FROM changed_compositions WHERE plain)"
     records = f"SELECT record_id FROM current_records WHERE composition IN {single}"
     _before(connection, records)
-    connection.execute(f"DELETE FROM matches WHERE composition IN {single}")
+    for table in ("matches", "refused_pins"):
+        connection.execute(f"DELETE FROM {table} WHERE composition IN {single}")
     connection.execute(f"DELETE FROM more_matches WHERE record_id IN ({records})")
     for grade in GRADES:
         connection.execute(
@@ -226,7 +238,7 @@ def _write_single(connection: duckdb.DuckDBPyConnection, run_id: int) -> None:
     connection.execute(f"DELETE FROM grouped_compositions WHERE composition IN {single}")
     connection.execute(
         "INSERT INTO grouped_compositions SELECT composition, digest, ?, records, keys, 0, 0 FROM changed_compositions "
-        "WHERE keys = 1 ORDER BY composition",
+        "WHERE plain ORDER BY composition",
         [run_id],
     )
 
@@ -234,7 +246,7 @@ def _write_single(connection: duckdb.DuckDBPyConnection, run_id: int) -> None:
 def _jobs(workspace: Workspace, settings: Settings) -> Iterator[GroupJob]:
     """Jobs of whole compositions, the largest first, so that the last ones to end are short."""
     rows = workspace.connection.execute(
-        "SELECT composition, digest, keys FROM changed_compositions WHERE keys > 1 ORDER BY keys DESC, composition"
+        "SELECT composition, digest, keys FROM changed_compositions WHERE NOT plain ORDER BY keys DESC, composition"
     ).fetchall()
     pack: list[tuple[str, str]] = []
     pairs = 0
@@ -262,7 +274,11 @@ def _job(workspace: Workspace, settings: Settings, number: int, pack: list[tuple
         "JOIN canonical_forms f USING (record_id) JOIN ranks k USING (record_id) ORDER BY r.composition, r.record_id"
     ).pl()
     frame.write_parquet(raw, compression="lz4")
-    return GroupJob(number, raw, part, settings)
+    pins = connection.execute(
+        f"SELECT composition, pin_id, kind, record_a, record_b FROM {PAIR_PINS} JOIN packed USING (composition) "
+        "ORDER BY pin_id"
+    ).fetchall()
+    return GroupJob(number, raw, part, settings, tuple(PairPin(*pin) for pin in pins))
 
 
 def _commit(connection: duckdb.DuckDBPyConnection, part: Path, run_id: int) -> None:
@@ -270,8 +286,9 @@ def _commit(connection: duckdb.DuckDBPyConnection, part: Path, run_id: int) -> N
     connection.execute("CREATE OR REPLACE TEMP TABLE done AS SELECT * FROM read_parquet(?)", [summary])
     connection.execute("CREATE OR REPLACE TEMP TABLE grouped AS SELECT * FROM read_parquet(?)", [members])
     _before(connection, "SELECT record_id FROM grouped")
-    for table in ("matches", "grouped_compositions"):
+    for table in ("matches", "grouped_compositions", "refused_pins"):
         connection.execute(f"DELETE FROM {table} WHERE composition IN (SELECT composition FROM done)")
+    connection.execute("INSERT INTO refused_pins SELECT unnest(refused), composition FROM done ORDER BY ALL")
     connection.execute("DELETE FROM more_matches WHERE record_id IN (SELECT record_id FROM grouped)")
     connection.execute("INSERT INTO matches BY NAME SELECT * FROM read_parquet(?)", [matches])
     for grade in GRADES:

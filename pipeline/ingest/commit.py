@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+from collections.abc import Sequence
 from dataclasses import dataclass
 from pathlib import Path
 
@@ -62,8 +63,6 @@ def is_committed(connection: duckdb.DuckDBPyConnection, run_id: int, source: str
 
 def _commit(connection: duckdb.DuckDBPyConnection, work: ChunkToCommit) -> dict[str, int]:
     run, source = work.run_id, work.source
-    for name in ("incoming", "change"):
-        connection.execute(f"DROP TABLE IF EXISTS temp.{name}")
     for file in work.chunk.begins:
         connection.execute(
             "DELETE FROM rejects WHERE source = $1 AND (file = $2 OR starts_with(file, $2 || '/'))", [source, file]
@@ -74,10 +73,9 @@ def _commit(connection: duckdb.DuckDBPyConnection, work: ChunkToCommit) -> dict[
         [source, run, parquet],
     )
     rejected = one_number(connection, "SELECT count(*) FROM read_parquet(?)", [parquet])
-    connection.execute("CREATE TEMP TABLE incoming AS SELECT * FROM read_parquet(?)", [str(accepted_part(work.part))])
     counts = {"found": len(work.chunk.records), "rejected": rejected, "unchanged": len(work.unchanged)}
     worked = {"new": 0, "amended": 0, "replaced": 0, "unchanged": 0}
-    if one_number(connection, "SELECT count(*) FROM incoming", []):
+    if one_number(connection, "SELECT count(*) FROM read_parquet(?)", [str(accepted_part(work.part))]):
         worked = _commit_incoming(connection, work)
     if len(work.unchanged):
         connection.register("unchanged_frame", work.unchanged.to_arrow())
@@ -100,19 +98,42 @@ def _commit(connection: duckdb.DuckDBPyConnection, work: ChunkToCommit) -> dict[
 
 
 def _commit_incoming(connection: duckdb.DuckDBPyConnection, work: ChunkToCommit) -> dict[str, int]:
-    run, source = work.run_id, work.source
+    run, source, part = work.run_id, work.source, str(accepted_part(work.part))
     same_facts = " AND ".join(f"r.{c} IS NOT DISTINCT FROM i.{c}" for c in FACT_COLUMNS)
     connection.execute(
-        "CREATE TEMP TABLE change AS SELECT i.record_id, "
+        "CREATE OR REPLACE TEMP TABLE change AS SELECT i.record_id, "
         "CASE WHEN r.record_id IS NULL THEN 'new' WHEN r.content_hash <> i.content_hash THEN 'replaced' "
         f"WHEN NOT ({same_facts}) THEN 'amended' ELSE 'unchanged' END AS change, "
         "coalesce(r.first_run, $1) AS first_run, "
         "CASE WHEN r.content_hash = i.content_hash THEN r.content_run ELSE $1 END AS content_run "
-        "FROM incoming i LEFT JOIN records r USING (record_id)",
-        [run],
+        "FROM read_parquet($2) i LEFT JOIN records r USING (record_id)",
+        [run, part],
     )
     rows = connection.execute("SELECT change, count(*) FROM change GROUP BY change").fetchall()
     counts = {"new": 0, "amended": 0, "replaced": 0, "unchanged": 0, **dict(rows)}
+    # Structures and canonical forms are written anew only with new content, unless everything is computed again.
+    written = "c.change IN ('new', 'replaced')" if not work.recompute else "true"
+    if counts["new"] < sum(counts.values()):
+        _set_known_aside(connection, run, written)
+    connection.execute(
+        f"INSERT INTO records (record_id, source, {RECORD_COLUMNS}, first_run, content_run, missing_since_run) "
+        f"SELECT i.record_id, $1, {RECORD_COLUMNS}, c.first_run, c.content_run, NULL "
+        "FROM read_parquet($2) i JOIN change c USING (record_id) ORDER BY i.row",
+        [source, part],
+    )
+    changed = f"read_parquet(?) i JOIN change c USING (record_id) WHERE {written}"
+    connection.execute(
+        "INSERT INTO structures SELECT i.record_id, i.given_cell, i.given_species, i.given_positions "
+        f"FROM {changed} ORDER BY i.row",
+        [part],
+    )
+    insert_canonical_forms(connection, changed, [part])
+    connection.execute("INSERT INTO seen SELECT ?, file, record_id FROM read_parquet(?)", [source, part])
+    return counts
+
+
+def _set_known_aside(connection: duckdb.DuckDBPyConnection, run: int, written: str) -> None:
+    """Keep the present state of amended and replaced records as versions; delete the rows that are written anew."""
     connection.execute(
         "INSERT INTO record_versions SELECT r.record_id, "
         "1 + (SELECT count(*) FROM record_versions v WHERE v.record_id = r.record_id), c.change, $1, r.content_hash, "
@@ -122,30 +143,13 @@ def _commit_incoming(connection: duckdb.DuckDBPyConnection, work: ChunkToCommit)
         "WHERE c.change IN ('amended', 'replaced') ORDER BY r.file, r.position",
         [run],
     )
-    # A row of `records` is written anew whenever its record was worked on, the others only with new content.
-    written = "'new', 'replaced'" + (", 'amended', 'unchanged'" if work.recompute else "")
-    connection.execute("DELETE FROM records WHERE record_id IN (SELECT record_id FROM change WHERE change <> 'new')")
-    connection.execute(
-        f"INSERT INTO records (record_id, source, {RECORD_COLUMNS}, first_run, content_run, missing_since_run) "
-        f"SELECT i.record_id, $1, {RECORD_COLUMNS}, c.first_run, c.content_run, NULL "
-        "FROM incoming i JOIN change c USING (record_id) ORDER BY i.row",
-        [source],
-    )
+    known = "SELECT c.record_id FROM change c WHERE c.change <> 'new'"
+    connection.execute(f"DELETE FROM records WHERE record_id IN ({known})")
     for table in ("structures", "canonical_forms"):
-        connection.execute(
-            f"DELETE FROM {table} WHERE record_id IN "
-            f"(SELECT record_id FROM change WHERE change <> 'new' AND change IN ({written}))"
-        )
-    connection.execute(
-        "INSERT INTO structures SELECT i.record_id, i.given_cell, i.given_species, i.given_positions "
-        f"FROM incoming i JOIN change c USING (record_id) WHERE c.change IN ({written}) ORDER BY i.row"
-    )
-    insert_canonical_forms(connection, f"incoming i JOIN change c USING (record_id) WHERE c.change IN ({written})")
-    connection.execute("INSERT INTO seen SELECT ?, file, record_id FROM incoming", [source])
-    return counts
+        connection.execute(f"DELETE FROM {table} WHERE record_id IN ({known} AND {written})")
 
 
-def insert_canonical_forms(connection: duckdb.DuckDBPyConnection, rows: str) -> None:
+def insert_canonical_forms(connection: duckdb.DuckDBPyConnection, rows: str, values: Sequence[object] = ()) -> None:
     """Insert into `canonical_forms` from a part's rows: the text after FROM, with the part under the name i."""
     columns = ", ".join(f"i.{column.name}" for column in TABLES["canonical_forms"].columns)
-    connection.execute(f"INSERT INTO canonical_forms SELECT {columns} FROM {rows} ORDER BY i.row")
+    connection.execute(f"INSERT INTO canonical_forms SELECT {columns} FROM {rows} ORDER BY i.row", list(values))

@@ -96,7 +96,7 @@ def _job(
 ) -> ReduceJob:
     """Leave out what the store holds just so, write the rest for a worker, and remember what to commit."""
     unchanged = chunk.records.clear().select("record_id", "file", "position")
-    if not source.force:
+    if not source.force and one_row(workspace.connection, _KNOWN, [source.source]):
         unchanged = _unchanged(workspace.connection, chunk)
     todo = chunk.records.join(unchanged, on="record_id", how="anti", maintain_order="left")
     part = workspace.parts / part_name(chunk.digest, unchanged["record_id"].to_list(), work.settings, source.settings)
@@ -107,6 +107,9 @@ def _job(
     )  # the texts are on disk now: do not hold them while the chunk is in flight
     waiting[chunk.number] = ChunkToCommit(work.run.run_id, source.source, light, unchanged, part, source.force)
     return ReduceJob(chunk.number, raw, part, work.settings, source.settings)
+
+
+_KNOWN = "SELECT 1 FROM records WHERE source = ? LIMIT 1"
 
 
 def _unchanged(connection: duckdb.DuckDBPyConnection, chunk: RawChunk) -> pl.DataFrame:

@@ -20,6 +20,10 @@ J = TypeVar("J")
 R = TypeVar("R")
 
 
+FEW = 4
+"""So many chunks of ordinary size take less time than a worker needs to start."""
+
+
 def _leave_with_parent(parent: int) -> None:
     """End this worker when the process that made it is gone (a kill leaves no time to tell the workers)."""
 
@@ -47,15 +51,16 @@ class WorkerPool:
             self._executor.shutdown(wait=True, cancel_futures=True)
             self._executor = None
 
-    def ordered_results(self, work: Callable[[J], R], jobs: Iterable[J]) -> Iterator[tuple[J, R]]:
+    def ordered_results(self, work: Callable[[J], R], jobs: Iterable[J], few: int = FEW) -> Iterator[tuple[J, R]]:
         """(job, work(job)) in the order of the jobs; at most 2 x workers jobs are in flight.
 
-        `work` and the jobs must be picklable and small: paths and ids, no arrays. A single job is done in this process:
-        making workers would take longer. Raises WorkError when a worker dies; an error inside `work` as it is.
+        `work` and the jobs must be picklable and small: paths and ids, no arrays. Up to `few` jobs are done in this
+        process where there are no workers yet: making them would take longer. Raises WorkError when a worker dies; an
+        error inside `work` as it is.
         """
         coming = iter(jobs)
-        ahead = list(islice(coming, 2))
-        if self._workers == 1 or (len(ahead) == 1 and self._executor is None):
+        ahead = list(islice(coming, few + 1))
+        if self._workers == 1 or (len(ahead) <= few and self._executor is None):
             for job in chain(ahead, coming):
                 yield job, work(job)
             return

@@ -218,7 +218,7 @@ def _rejects_table(where: pl.DataFrame, rejects: list[tuple[int, Refusal]]) -> p
 def write_part(table: pa.Table, path: Path) -> None:
     """Write a part whole or not at all."""
     temporary = path.with_name(f"{path.name}.{os.getpid()}.new")
-    pq.write_table(table, temporary, compression="zstd")
+    pq.write_table(table, temporary, compression="lz4")
     with temporary.open("rb") as f:
         os.fsync(f.fileno())
     temporary.replace(path)

@@ -4,7 +4,7 @@ from __future__ import annotations
 
 import statistics
 import time
-from collections.abc import Callable, Sequence
+from collections.abc import Callable
 from typing import Any
 
 import numpy as np
@@ -21,7 +21,12 @@ def timed(work: Callable[[], Any], repeat: int) -> tuple[Any, dict[str, float]]:
         begun = time.perf_counter()
         result = work()
         seconds.append(time.perf_counter() - begun)
-    return result, {"median_s": statistics.median(seconds), "least_s": min(seconds), "greatest_s": max(seconds)}
+    return result, summary(seconds)
+
+
+def summary(seconds: list[float]) -> dict[str, float]:
+    """Median, least and greatest of repeated timings."""
+    return {"median_s": statistics.median(seconds), "least_s": min(seconds), "greatest_s": max(seconds)}
 
 
 def reference_seconds(batch: CrystalBatch, most: int = 500) -> float:
@@ -43,8 +48,3 @@ def against(reference: float, seconds: dict[str, float], count: int) -> dict[str
         "us_per_structure": each * 1e6,
         "ratio_to_reference": each / reference,
     }
-
-
-def middle(values: Sequence[float]) -> float:
-    """The median."""
-    return statistics.median(values)
