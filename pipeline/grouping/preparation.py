@@ -163,6 +163,7 @@ def prepare(
     order = np.lexsort((found.ranks, owner)).astype(np.int64)
     cells = batch.cells * factor[:, None, None]
     planar = batch.periodicity == 2
+    offsets = batch.offsets.copy()  # arrays of the kernels can all be written: one compiled form each
     bins = np.bincount(owner * kinds + found.ranks, minlength=n * kinds).reshape(n, kinds)
     blocks = batch.offsets[:-1, None] + np.concatenate([np.zeros((n, 1), np.int64), np.cumsum(bins, axis=1)], axis=1)
     total = found.total[order] * factor[owner][:, None]
@@ -172,11 +173,11 @@ def prepare(
     positions = np.ascontiguousarray(batch.positions[order])
     bases, t = reduced_bases(cells, planar)
     matrices = np.rint(np.linalg.inv(t.astype(np.float64))).astype(np.int64)
-    variants = _variants(cells, batch.offsets, positions, blocks, planar, bins, bases, matrices, window)
+    variants = _variants(cells, offsets, positions, blocks, planar, bins, bases, matrices, window)
     transformed = transform(total, window.shift, window.strain)
     crystals = Crystals(
         cells,
-        batch.offsets,
+        offsets,
         positions,
         blocks,
         transformed,

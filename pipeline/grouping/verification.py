@@ -98,11 +98,28 @@ def verify(prepared: Prepared, pairs: Ints, window: Window, mirror_images: str =
     turned = prepared.rank[pairs[:, 0]] > prepared.rank[pairs[:, 1]]
     ordered = np.where(turned[:, None], pairs[:, ::-1], pairs)
     found = match_pairs(prepared.crystals, np.ascontiguousarray(ordered), window.limits())
-    return _columns(prepared, pairs, turned, found, mirror_images)
+    return _columns(prepared, pairs, ordered, turned, found, mirror_images)
+
+
+def _log_stretches(prepared: Prepared, ordered: Ints, found: Matches, hand: Ints) -> Floats:
+    """(p, 3): logarithms of the principal stretches of the matches of the chosen hands; NaN where there is none."""
+    index = np.arange(len(ordered))
+    rows = np.flatnonzero(found.grade[index, hand] < NO_MATCH)
+    cells = prepared.crystals.cells
+    first = found.p[rows, hand[rows]] @ cells[ordered[rows, 0]]
+    second = found.q[rows, hand[rows]] @ cells[ordered[rows, 1]]
+    out = np.full((len(ordered), 3), np.nan)
+    out[rows] = np.log(np.linalg.svd(np.linalg.solve(first, second), compute_uv=False))
+    return out
 
 
 def _columns(
-    prepared: Prepared, pairs: Ints, turned: NDArray[np.bool_], found: Matches, mirror_images: str
+    prepared: Prepared,
+    pairs: Ints,
+    ordered: Ints,
+    turned: NDArray[np.bool_],
+    found: Matches,
+    mirror_images: str,
 ) -> Verified:
     proper, improper = found.grade[:, 0], found.grade[:, 1]
     hand = (improper < NO_MATCH).astype(np.int64)  # given only where it beats the proper one
@@ -113,27 +130,29 @@ def _columns(
     best = np.minimum(proper, improper)
     mirrored = (improper < NO_MATCH) & np.where(best <= 1, proper > 1, proper == NO_MATCH)
     measures = found.measures[index, hand]
+    logs = _log_stretches(prepared, ordered, found, hand)
+    proper_logs = _log_stretches(prepared, ordered, found, np.zeros_like(hand))
     p, q, shift = found.p[index, hand], found.q[index, hand], found.shift[index, hand]
     t = turned[:, None, None]
     back = -shift
     back -= np.floor(back + 5e-10)
     batch = prepared.batch
-    logs = np.log(batch.volumes / np.diff(batch.offsets))
-    difference = logs[pairs[:, 1]] - logs[pairs[:, 0]]
+    per_site = np.log(batch.volumes / np.diff(batch.offsets))
+    difference = per_site[pairs[:, 1]] - per_site[pairs[:, 0]]
     return Verified(
         pairs=pairs,
         grade=grade,
-        strain=measures[:, 0],
-        shape_strain=measures[:, 1],
+        strain=np.abs(logs).max(axis=1, initial=0.0),
+        shape_strain=np.abs(logs - logs.mean(axis=1, keepdims=True)).max(axis=1, initial=0.0),
         volume_ratio=np.exp(np.abs(difference)),
         larger=np.where(np.abs(difference) < 1e-12, -1, (difference > 0).astype(np.int64)),
-        largest_shift=measures[:, 2],
-        rms_shift=measures[:, 3],
+        largest_shift=measures[:, 0],
+        rms_shift=measures[:, 1],
         improper=(hand == 1) & (grade < NO_MATCH),
         mirrored=mirrored,
         proper_grade=proper,
-        proper_strain=found.measures[:, 0, 0],
-        proper_shift=found.measures[:, 0, 2],
+        proper_strain=np.abs(proper_logs).max(axis=1, initial=0.0),
+        proper_shift=found.measures[:, 0, 0],
         p_matrix=np.where(t, q, p),
         q_matrix=np.where(t, p, q),
         shift=np.where(turned[:, None], back, shift),

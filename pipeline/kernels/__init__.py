@@ -9,7 +9,18 @@ import time
 from collections.abc import Callable
 from importlib import import_module
 
-MODULES: tuple[str, ...] = ("canonical", "translations", "lattice_type", "operations")
+MODULES: tuple[str, ...] = (
+    "canonical",
+    "translations",
+    "lattice_type",
+    "operations",
+    "distances",
+    "lattice_maps",
+    "near_translations",
+    "rows_filter",
+    "match",
+    "witness_pairing",
+)
 """Modules of this package that offer `warm_up()`, which runs each of their kernels once on a small input."""
 
 

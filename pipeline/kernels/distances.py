@@ -244,3 +244,13 @@ def neighbour_distances(
                     grouped[i, t] = math.sqrt(buffer[h])
                     t += 1
     return total, grouped, counts
+
+
+def warm_up() -> None:
+    """Compile the kernels for read-only batches, as they come."""
+    cells, offsets, positions = np.eye(3)[None] * 3.0, np.array([0, 1]), np.zeros((1, 3))
+    for array in (cells, offsets, positions):
+        array.flags.writeable = False
+    ranks = np.zeros(1, np.int64)
+    total, _, _ = neighbour_distances(cells, offsets, positions, ranks, np.zeros(1, np.bool_), 1, 4)
+    species_means(total, offsets, ranks, np.array([0, 1]))

@@ -331,3 +331,8 @@ def lattice_maps(first: Floats, second: Floats, limit: float, planar: bool) -> t
                 strains[total] = strain
                 total += 1
     return total, found, strains
+
+
+def warm_up() -> None:
+    """Compile the kernel that is called from Python."""
+    reduced_bases(np.eye(3)[None], np.zeros(1, np.bool_))

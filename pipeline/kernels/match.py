@@ -24,7 +24,7 @@ from numpy.typing import NDArray
 
 from .compiled import inner, kernel
 from .hermite import hermite, multiples_in
-from .lattice_maps import adjugate3, determinant3, inverse3, lattice_maps, log_stretches, product3
+from .lattice_maps import adjugate3, determinant3, inverse3, lattice_maps, product3
 from .pairing import bottleneck_pairing, length2, nearest_pairing
 
 Floats = NDArray[np.float64]
@@ -103,7 +103,7 @@ class Matches(NamedTuple):
     """(p, 2): 0 within `same`, 1 within `near`, 2 within the window, 3 none."""
 
     measures: Floats
-    """(p, 2, 4): strain, shape strain, largest shift, root mean square shift."""
+    """(p, 2, 2): largest shift, root mean square shift; NaN where there is no match."""
 
     p: Ints
     """(p, 2, 3, 3): P of the first crystal's cell."""
@@ -305,179 +305,12 @@ def pair_up(
 
 
 @inner
-def _unit() -> Ints:
-    """The integer unit matrix."""
-    out = np.zeros((3, 3), np.int64)
-    for i in range(3):
-        out[i, i] = 1
-    return out
-
-
-@inner
-def _match_pair(
-    c: Crystals,
-    a: int,
-    b: int,
-    limits: Limits,
-    grade: Ints,
-    measures: Floats,
-    out_p: Ints,
-    out_q: Ints,
-    out_shift: Floats,
-) -> None:
-    """Fill row arrays (2,), (2, 4), (2, 3, 3), (2, 3, 3), (2, 3) with the best proper and improper match."""
-    window = limits.shifts[2]
-    best = np.zeros((2, KEY), np.int64)
-    best[0, 0] = 3
-    best[1, 0] = 3
-    key = np.zeros(KEY, np.int64)
-    grade[0] = 3
-    grade[1] = 3
-    if c.planar[a] != c.planar[b]:
-        return
-    sites_a, sites_b = c.offsets[a + 1] - c.offsets[a], c.offsets[b + 1] - c.offsets[b]
-    kinds = c.blocks.shape[1] - 1
-    for k in range(kinds):
-        if (c.blocks[a, k + 1] - c.blocks[a, k]) * sites_b != (c.blocks[b, k + 1] - c.blocks[b, k]) * sites_a:
-            return
-    unambiguous = 4.0 * window * math.exp(limits.strains[2]) < min(c.clear[a], c.clear[b])
-    pinned, count = -1, 0
-    origins = np.empty(sites_b, np.int64)
-    s = np.empty(3)
-    for va in range(c.variants[a], c.variants[a + 1]):
-        for vb in range(c.variants[b], c.variants[b + 1]):
-            na, nb = c.orders[va], c.orders[vb]
-            if sites_a * nb != sites_b * na:
-                continue
-            total, maps, strains = lattice_maps(c.bases[va], c.bases[vb], limits.strains[2], c.planar[a])
-            if total == 0:
-                continue
-            if pinned < 0:
-                pinned, count = _pin(c, a, b, origins)
-                if pinned < 0:
-                    return
-            hand_a, hand_b = determinant3(c.bases[va]), determinant3(c.bases[vb])
-            adjugate = adjugate3(c.matrices[vb])
-            det_b = determinant3(c.matrices[vb])
-            inverse_a = inverse3(c.bases[va])
-            for hand in range(2):
-                for m in range(total):
-                    u = maps[m]
-                    proper = (hand_a * hand_b > 0) == (determinant3(u) > 0)
-                    if proper != (hand == 0):
-                        continue
-                    strain9 = math.floor(strains[m] / UNIT + 0.5)
-                    map_class = _class_of(strain9, limits.strains)
-                    if map_class > 2:
-                        continue
-                    cap = _cap(best[hand], map_class, limits.shifts)
-                    if hand == 1 and cap >= 0:
-                        cap = min(cap, _cap(best[0], map_class, limits.shifts))
-                    if cap < 0 or max(c.moved[va], c.moved[vb]) > 2.0 * cap * math.exp(limits.strains[2]) + UNIT:
-                        continue
-                    top = product3(product3(c.matrices[va], u), adjugate)
-                    if nb == 1:
-                        p = _unit()
-                    else:
-                        fits, p = multiples_in(top, det_b)
-                        if not fits:
-                            continue
-                    q = product3(p, top)
-                    w = np.empty((3, 3))
-                    for i in range(3):
-                        for j in range(3):
-                            q[i, j] //= det_b
-                            w[i, j] = top[i, j] / det_b
-                    targets, target_blocks = images_of(c, a, p, w)
-                    g = mean_metric(c.cells[a], c.cells[b], w)
-                    common = hermite(q)
-                    pin_row = (pinned - c.offsets[a]) * nb
-                    partner = np.empty(targets.shape[0], np.int64)
-                    images = np.empty((targets.shape[0], 3), np.int64)
-                    d = np.empty((targets.shape[0], 3))
-                    for o in range(count):
-                        for i in range(3):
-                            s[i] = c.positions[origins[o], i] - targets[pin_row, i]
-                        largest = pair_up(
-                            c,
-                            a,
-                            b,
-                            unambiguous,
-                            targets,
-                            target_blocks,
-                            g,
-                            s,
-                            2.0 * cap + 2.0 * UNIT,
-                            cap,
-                            common,
-                            partner,
-                            images,
-                            d,
-                        )
-                        if largest < 0:
-                            continue
-                        key[1] = math.floor(largest / UNIT + 0.5)
-                        key[2] = strain9
-                        shift_class = _class_of(key[1], limits.shifts)
-                        if shift_class > 2:
-                            continue
-                        key[0] = max(map_class, shift_class)
-                        order = 0
-                        for i in range(3):
-                            if key[i] != best[hand, i]:
-                                order = -1 if key[i] < best[hand, i] else 1
-                                break
-                        if order > 0:
-                            continue
-                        for i in range(3):
-                            for j in range(3):
-                                key[3 + 3 * i + j] = p[i, j]
-                                key[12 + 3 * i + j] = q[i, j]
-                        if order == 0:
-                            for i in range(3, 21):
-                                if key[i] != best[hand, i]:
-                                    order = -1 if key[i] < best[hand, i] else 1
-                                    break
-                            if order > 0:
-                                continue
-                        float_q = np.empty((3, 3))
-                        for i in range(3):
-                            for j in range(3):
-                                float_q[i, j] = q[i, j]
-                        inverse_q = inverse3(float_q)
-                        for i in range(3):
-                            v = s[0] * inverse_q[0, i] + s[1] * inverse_q[1, i] + s[2] * inverse_q[2, i]
-                            v -= math.floor(v + 0.5 * UNIT)
-                            key[21 + i] = math.floor(v / UNIT + 0.5)
-                        if order == 0:
-                            order = 1
-                            for i in range(21, KEY):
-                                if key[i] != best[hand, i]:
-                                    order = -1 if key[i] < best[hand, i] else 1
-                                    break
-                            if order > 0:
-                                continue
-                        for i in range(KEY):
-                            best[hand, i] = key[i]
-                        grade[hand] = key[0]
-                        low, middle, high = log_stretches(inverse_a, product3(float_of(u), c.bases[vb]))
-                        mean = (low + middle + high) / 3.0
-                        square = 0.0
-                        for t in range(targets.shape[0]):
-                            square += length2(g, d[t, 0], d[t, 1], d[t, 2])
-                        measures[hand, 0] = max(-low, high)
-                        measures[hand, 1] = max(mean - low, high - mean)
-                        measures[hand, 2] = largest
-                        measures[hand, 3] = math.sqrt(square / targets.shape[0])
-                        for i in range(3):
-                            v = s[0] * inverse_q[0, i] + s[1] * inverse_q[1, i] + s[2] * inverse_q[2, i]
-                            out_shift[hand, i] = v - math.floor(v + 0.5 * UNIT)
-                            for j in range(3):
-                                out_p[hand, i, j] = p[i, j]
-                                out_q[hand, i, j] = q[i, j]
-                        cap = min(cap, _cap(best[hand], map_class, limits.shifts))
-    if grade[1] < 3 and (best[0, 0] < best[1, 0] or (best[0, 0] == best[1, 0] and best[0, 1] <= best[1, 1])):
-        grade[1] = 3
+def _first_difference(key: Ints, best: Ints, start: int, stop: int) -> int:
+    """-1 where `key` comes before `best` in the places from start to stop, 1 where after, 0 where they are equal."""
+    for i in range(start, stop):
+        if key[i] != best[i]:
+            return -1 if key[i] < best[i] else 1
+    return 0
 
 
 @inner
@@ -490,15 +323,223 @@ def float_of(m: Ints) -> Floats:
     return out
 
 
+@inner
+def _common_cell(a: Ints, u: Ints, b: Ints, p: Ints, q: Ints, w: Floats) -> bool:
+    """P, Q and W = P^-1 Q of a lattice map; False where the two lattices together do not span that of the variants.
+
+    a, b: matrices of the variants (cell = matrix @ basis); u: U with U @ basis_b the image of basis_a. A fractional
+    vector of the first cell times W = a U b^-1 is the same vector in the second; P spans the x with integer x W.
+    """
+    det = determinant3(b)
+    top = product3(product3(a, u), adjugate3(b))
+    if abs(det) == 1:
+        for i in range(3):
+            for j in range(3):
+                p[i, j] = 1 if i == j else 0
+    else:
+        fits, h = multiples_in(top, det)
+        if not fits:
+            return False
+        for i in range(3):
+            for j in range(3):
+                p[i, j] = h[i, j]
+    for i in range(3):
+        for j in range(3):
+            q[i, j] = (p[i, 0] * top[0, j] + p[i, 1] * top[1, j] + p[i, 2] * top[2, j]) // det
+            w[i, j] = top[i, j] / det
+    return True
+
+
+@inner
+def _record(
+    key: Ints,
+    p: Ints,
+    q: Ints,
+    s: Floats,
+    largest: float,
+    d: Floats,
+    g: Floats,
+    best: Ints,
+    measures: Floats,
+    shift: Floats,
+) -> bool:
+    """Complete `key` and take it as the best where it comes first. key[:3]: grade, shift, strain, already set."""
+    order = _first_difference(key, best, 0, 3)
+    if order > 0:
+        return False
+    for i in range(3):
+        for j in range(3):
+            key[3 + 3 * i + j] = p[i, j]
+            key[12 + 3 * i + j] = q[i, j]
+    if order == 0:
+        order = _first_difference(key, best, 3, 21)
+        if order > 0:
+            return False
+    inverse = inverse3(float_of(q))
+    place = np.empty(3)
+    for i in range(3):
+        v = s[0] * inverse[0, i] + s[1] * inverse[1, i] + s[2] * inverse[2, i]
+        place[i] = v - math.floor(v + 0.5 * UNIT)
+        key[21 + i] = math.floor(place[i] / UNIT + 0.5)
+    if order == 0 and _first_difference(key, best, 21, KEY) >= 0:
+        return False
+    square = 0.0
+    for t in range(d.shape[0]):
+        square += length2(g, d[t, 0], d[t, 1], d[t, 2])
+    measures[0] = largest
+    measures[1] = math.sqrt(square / d.shape[0])
+    for i in range(3):
+        shift[i] = place[i]
+    for i in range(KEY):
+        best[i] = key[i]
+    return True
+
+
+@inner
+def _try_map(
+    c: Crystals,
+    a: int,
+    b: int,
+    p: Ints,
+    q: Ints,
+    w: Floats,
+    pinned: int,
+    origins: Ints,
+    count: int,
+    map_class: int,
+    cap: float,
+    shifts: Floats,
+    key: Ints,
+    best: Ints,
+    measures: Floats,
+    shift: Floats,
+) -> None:
+    """All origins for one lattice map: the pinned site onto each of the `count` sites of `origins`."""
+    unambiguous = 4.0 * shifts[2] * math.exp(c.slack) < min(c.clear[a], c.clear[b])
+    targets, target_blocks = images_of(c, a, p, w)
+    g = mean_metric(c.cells[a], c.cells[b], w)
+    common = hermite(q)
+    size = targets.shape[0]
+    pin_row = (pinned - c.offsets[a]) * (size // (c.offsets[a + 1] - c.offsets[a]))
+    partner = np.empty(size, np.int64)
+    images = np.empty((size, 3), np.int64)
+    d = np.empty((size, 3))
+    s = np.empty(3)
+    for o in range(count):
+        for i in range(3):
+            s[i] = c.positions[origins[o], i] - targets[pin_row, i]
+        limit = 2.0 * cap + 2.0 * UNIT
+        largest = pair_up(c, a, b, unambiguous, targets, target_blocks, g, s, limit, cap, common, partner, images, d)
+        if largest < 0:
+            continue
+        key[1] = math.floor(largest / UNIT + 0.5)
+        shift_class = _class_of(key[1], shifts)
+        if shift_class > 2:
+            continue
+        key[0] = max(map_class, shift_class)
+        if _record(key, p, q, s, largest, d, g, best, measures, shift):
+            cap = min(cap, _cap(best, map_class, shifts))
+
+
+@inner
+def _match_pair(c: Crystals, a: int, b: int, limits: Limits, best: Ints, measures: Floats, shift: Floats) -> None:
+    """Fill best (2, KEY), measures (2, 2) and shift (2, 3) with the best proper and the best improper match."""
+    if c.planar[a] != c.planar[b]:
+        return
+    sites_a, sites_b = c.offsets[a + 1] - c.offsets[a], c.offsets[b + 1] - c.offsets[b]
+    for k in range(c.blocks.shape[1] - 1):
+        if (c.blocks[a, k + 1] - c.blocks[a, k]) * sites_b != (c.blocks[b, k + 1] - c.blocks[b, k]) * sites_a:
+            return
+    pinned, count = -1, 0
+    origins = np.empty(sites_b, np.int64)
+    key = np.zeros(KEY, np.int64)
+    p = np.empty((3, 3), np.int64)
+    q = np.empty((3, 3), np.int64)
+    w = np.empty((3, 3))
+    for va in range(c.variants[a], c.variants[a + 1]):
+        for vb in range(c.variants[b], c.variants[b + 1]):
+            if sites_a * c.orders[vb] != sites_b * c.orders[va]:
+                continue
+            total, maps, strains = lattice_maps(c.bases[va], c.bases[vb], limits.strains[2], c.planar[a])
+            if total == 0:
+                continue
+            if pinned < 0:
+                pinned, count = _pin(c, a, b, origins)
+                if pinned < 0:
+                    return
+            one_hand = determinant3(c.bases[va]) * determinant3(c.bases[vb]) > 0
+            moved = max(c.moved[va], c.moved[vb])
+            for hand in range(2):
+                for m in range(total):
+                    if (one_hand == (determinant3(maps[m]) > 0)) != (hand == 0):
+                        continue
+                    key[2] = math.floor(strains[m] / UNIT + 0.5)
+                    map_class = _class_of(key[2], limits.strains)
+                    if map_class > 2:
+                        continue
+                    cap = _cap(best[hand], map_class, limits.shifts)
+                    if hand == 1:  # an improper match counts only where it beats the proper one
+                        cap = min(cap, _cap(best[0], map_class, limits.shifts))
+                    if cap < 0 or moved > 2.0 * cap * math.exp(limits.strains[2]) + UNIT:
+                        continue
+                    if _common_cell(c.matrices[va], maps[m], c.matrices[vb], p, q, w):
+                        _try_map(
+                            c,
+                            a,
+                            b,
+                            p,
+                            q,
+                            w,
+                            pinned,
+                            origins,
+                            count,
+                            map_class,
+                            cap,
+                            limits.shifts,
+                            key,
+                            best[hand],
+                            measures[hand],
+                            shift[hand],
+                        )
+
+
 @kernel
 def match_pairs(c: Crystals, pairs: Ints, limits: Limits) -> Matches:
     """The best matches of every pair (p, 2) of crystals of the batch."""
     n = pairs.shape[0]
-    grade = np.full((n, 2), 3, np.int64)
-    measures = np.full((n, 2, 4), np.nan)
+    grade = np.empty((n, 2), np.int64)
+    measures = np.empty((n, 2, 2))
     p = np.zeros((n, 2, 3, 3), np.int64)
     q = np.zeros((n, 2, 3, 3), np.int64)
     shift = np.zeros((n, 2, 3))
+    best = np.zeros((2, KEY), np.int64)
     for i in range(n):
-        _match_pair(c, pairs[i, 0], pairs[i, 1], limits, grade[i], measures[i], p[i], q[i], shift[i])
+        for hand in range(2):
+            best[hand, 0] = 3
+            measures[i, hand, 0] = np.nan
+            measures[i, hand, 1] = np.nan
+        _match_pair(c, pairs[i, 0], pairs[i, 1], limits, best, measures[i], shift[i])
+        if best[1, 0] < 3 and _first_difference(best[1], best[0], 0, 2) >= 0:
+            best[1, 0] = 3
+        for hand in range(2):
+            grade[i, hand] = best[hand, 0]
+            if best[hand, 0] < 3:
+                for j in range(3):
+                    for k in range(3):
+                        p[i, hand, j, k] = best[hand, 3 + 3 * j + k]
+                        q[i, hand, j, k] = best[hand, 12 + 3 * j + k]
     return Matches(grade, measures, p, q, shift)
+
+
+def one_site() -> Crystals:
+    """A batch of one crystal of one site in a unit cube: the smallest input, for compiling."""
+    unit, two = np.eye(3)[None], np.array([0, 1])
+    return Crystals(
+        unit, two, np.zeros((1, 3)), np.array([[0, 1]]), np.zeros((1, 4), np.float32), 0.1, np.zeros(1, np.bool_),
+        np.ones(1), two.copy(), unit.copy(), unit.astype(np.int64), np.ones(1, np.int64), np.zeros(1),
+    )  # fmt: skip
+
+
+def warm_up() -> None:
+    """Compile the kernel by matching a crystal of one site with itself."""
+    match_pairs(one_site(), np.zeros((1, 2), np.int64), Limits(np.full(3, 0.01), np.full(3, 0.01)))

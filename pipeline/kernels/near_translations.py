@@ -156,3 +156,10 @@ def all_near_translations(
                 integers[used, k] = found[i, k]
             used += 1
     return starts, integers[:used], moved[:used]
+
+
+def warm_up() -> None:
+    """Compile the kernel that is called from Python."""
+    all_near_translations(
+        np.eye(3)[None], np.array([0, 1]), np.zeros((1, 3)), np.array([[0, 1]]), np.zeros(1, np.bool_), np.zeros(1)
+    )

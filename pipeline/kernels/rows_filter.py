@@ -136,3 +136,10 @@ def coordinates_close(coordinates: NDArray[np.float64], pairs: Ints, slack: floa
                 break
         out[i] = close
     return out
+
+
+def warm_up() -> None:
+    """Compile the kernels that are called from Python."""
+    rows, blocks, pairs = np.zeros((1, 4), np.float32), np.array([[0, 1]]), np.zeros((1, 2), np.int64)
+    pairs_allowed(pairs, blocks, rows, sort_columns(rows, blocks), rows.copy(), np.array([[4]]), 0.1)
+    coordinates_close(np.zeros((1, 2)), pairs, 0.1)

@@ -9,7 +9,7 @@ from numpy.typing import NDArray
 from .compiled import kernel
 from .hermite import coset_index, hermite
 from .lattice_maps import inverse3, product3
-from .match import Crystals, float_of, images_of, mean_metric, pair_up
+from .match import Crystals, float_of, images_of, mean_metric, one_site, pair_up
 
 Floats = NDArray[np.float64]
 Ints = NDArray[np.int64]
@@ -51,7 +51,7 @@ def recorded_pairings(
         partner = np.empty(targets.shape[0], np.int64)
         images = np.empty((targets.shape[0], 3), np.int64)
         d = np.empty((targets.shape[0], 3))
-        clear = 4.0 * window * np.exp(strain) < min(c.clear[a], c.clear[b])
+        clear = 4.0 * window * np.exp(c.slack) < min(c.clear[a], c.clear[b])
         reach = limits[i] + 1e-7
         got = pair_up(c, a, b, clear, targets, blocks, g, s, reach, reach, common, partner, images, d)
         ok[i] = got >= 0
@@ -63,3 +63,12 @@ def recorded_pairings(
             coset = coset_index(common, images[t, 0], images[t, 1], images[t, 2])
             out[starts[i] + site * index_a + t % index_a] = other * index_b + coset
     return out, ok
+
+
+def warm_up() -> None:
+    """Compile the kernel by pairing a crystal of one site with itself."""
+    one = np.eye(3, dtype=np.int64)[None]
+    recorded_pairings(
+        one_site(), np.zeros(1, np.int64), np.zeros((1, 2), np.int64), one, one.copy(), np.zeros((1, 3)), np.zeros(1),
+        0.01, 0.01, np.array([0, 1]),
+    )  # fmt: skip
