@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import json
+from pathlib import Path
 from typing import TYPE_CHECKING, Annotated
 
 import typer
@@ -21,7 +22,48 @@ FAILED = 4
 
 def register(app: typer.Typer) -> None:
     """Add the commands of this module."""
+    app.command("witness")(witness)
     app.command("check")(check)
+
+
+def witness(
+    first: Annotated[str, typer.Argument(metavar="RECORD", help="A record: its id, or SOURCE:LABEL.")],
+    second: Annotated[str, typer.Argument(metavar="RECORD", help="Another record.")],
+    store: StoreOption = DEFAULT_STORE,
+    rows: Annotated[int, typer.Option("--rows", min=0, help="Most paired sites that are printed.")] = 20,
+    out: Annotated[
+        Path | None,
+        typer.Option("--out", metavar="DIR", help="New folder for a.cif, b.cif and witness.json, to check by hand."),
+    ] = None,
+    as_json: JsonOption = False,
+) -> None:
+    """Prove that two records are the same crystal, or say with numbers what keeps them apart."""
+    from lattice_census.output.witness import check_folder, examine, witness_text, write_witness
+    from lattice_census.store.connect import open_for_reading
+    from lattice_census.store.find import find_record
+
+    if out is not None:
+        check_folder(out)
+    connection = open_for_reading(store)
+    try:
+        found = examine(connection, find_record(connection, first), find_record(connection, second), _say_compiling)
+    finally:
+        connection.close()
+    if out is not None:
+        write_witness(found, out)
+        typer.echo(f"Wrote a.cif, b.cif and witness.json to {out}.", err=True)
+    typer.echo(json.dumps(found.as_json()) if as_json else witness_text(found, rows))
+
+
+def _say_compiling() -> None:
+    """On stderr, where the kernels of the comparison are not compiled yet."""
+    from lattice_census.kernels.cache import PACKAGE, folder
+
+    for name in ("match", "distances"):
+        kept = folder(PACKAGE / "kernels" / f"{name}.py")
+        if next(kept.rglob("*.nbi"), None) is None:
+            typer.echo("Compiling the kernels of the comparison; later runs take them from the cache.", err=True)
+            return
 
 
 def check(
