@@ -1,14 +1,17 @@
-"""Acts of the curator, each a run of its own: withdraw and undo."""
+"""Acts of the curator, each a run of its own: withdraw, undo, and pins."""
 
 from __future__ import annotations
 
 import uuid
-from collections.abc import Callable
+from collections.abc import Callable, Sequence
 from pathlib import Path
 from typing import Any
 
 import duckdb
 
+from lattice_census.decisions.ledger import lapse, restore_ended, undo_decisions
+from lattice_census.decisions.pins import add_pins, remove_pin, set_pin, undo_pins
+from lattice_census.errors import UsageError
 from lattice_census.grouping.exact import group_exact
 from lattice_census.grouping.stage import group_records, set_outdated_aside
 from lattice_census.ingest.pool import WorkerPool
@@ -17,6 +20,7 @@ from lattice_census.ingest.withdraw import undo_withdrawals
 from lattice_census.ingest.withdraw import withdraw as note_withdrawal
 from lattice_census.output.findings import find_all
 from lattice_census.settings import Settings
+from lattice_census.store.rows import one_row
 from lattice_census.store.runs import begin_run, end_run
 from lattice_census.store.stages import stored_settings
 from lattice_census.store.workspace import Workspace
@@ -31,8 +35,44 @@ def withdraw(store: Path, what: str, reason: str, wait: float = 0.0) -> dict[str
 
 
 def undo(store: Path, what: str, wait: float = 0.0) -> dict[str, Any]:
-    """Take withdrawals back, group anew, publish."""
-    return _act(store, "undo", {"what": what}, wait, lambda connection, run: undo_withdrawals(connection, run, what))
+    """Take back withdrawals, decisions and pins, group anew, publish.
+
+    What a run that is taken back had superseded or let lapse is decided again in the same words.
+    """
+    run_given = int(what) if what.isdigit() and len(what) < 20 else None
+
+    def act(connection: duckdb.DuckDBPyConnection, run: int) -> dict[str, Any]:
+        restored = undo_withdrawals(connection, run, what)
+        is_source = one_row(connection, "SELECT 1 FROM sources WHERE source = ?", [what]) is not None
+        decisions = 0 if is_source else undo_decisions(connection, run, what)
+        pins = undo_pins(connection, run, run_given) if run_given is not None else 0
+        if not (restored or decisions or pins):
+            raise UsageError(
+                f"There is nothing to undo for {what}: no withdrawal, decision or pin of that run, record or source "
+                "holds."
+            )
+        return {"restored": restored, "decisions": decisions, "pins": pins}
+
+    def after(connection: duckdb.DuckDBPyConnection, run: int) -> dict[str, Any]:
+        return {"decided_again": restore_ended(connection, run, run_given) if run_given is not None else 0}
+
+    return _act(store, "undo", {"what": what}, wait, act, after)
+
+
+def pin(store: Path, kind: str, records: Sequence[str], reason: str, wait: float = 0.0) -> dict[str, Any]:
+    """Set a pin, group anew, publish."""
+    return _act(store, "pin", {"kind": kind, "records": list(records), "reason": reason}, wait,
+                lambda connection, run: set_pin(connection, run, kind, records, reason))  # fmt: skip
+
+
+def unpin(store: Path, number: int, wait: float = 0.0) -> dict[str, Any]:
+    """Remove a pin, group anew, publish."""
+    return _act(store, "pin", {"remove": number}, wait, lambda connection, run: remove_pin(connection, run, number))
+
+
+def import_pins(store: Path, pins: Sequence[tuple[str, tuple[str, ...], str]], wait: float = 0.0) -> dict[str, Any]:
+    """Set the pins of a file, group anew, publish."""
+    return _act(store, "pin", {"import": len(pins)}, wait, lambda connection, run: add_pins(connection, run, pins))
 
 
 def _act(
@@ -41,8 +81,12 @@ def _act(
     arguments: dict[str, Any],
     wait: float,
     act: Callable[[duckdb.DuckDBPyConnection, int], dict[str, Any]],
+    after: Callable[[duckdb.DuckDBPyConnection, int], dict[str, Any]] = lambda connection, run: {},
 ) -> dict[str, Any]:
-    """Do the act in one transaction, then bring groups and findings up to date, then publish."""
+    """Do the act in one transaction, then bring groups, decisions and findings up to date, then publish.
+
+    after: what is to be done once the groups are as the act leaves them.
+    """
     with Workspace(store, command, wait, must_exist=True) as workspace:
         connection = workspace.connection
         settings = Settings.model_validate(stored_settings(connection))
@@ -63,6 +107,8 @@ def _act(
                 group_records(workspace, run.run_id, settings, pool, Silent())
         connection.execute("BEGIN")
         try:
+            lapse(connection, run.run_id)
+            done |= after(connection, run.run_id)
             find_all(connection, settings)
             end_run(connection, run, done)
             connection.execute("COMMIT")

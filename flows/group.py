@@ -6,6 +6,7 @@ from dataclasses import dataclass
 from pathlib import Path
 from typing import Any
 
+from lattice_census.decisions.ledger import lapse
 from lattice_census.grouping.exact import group_exact
 from lattice_census.grouping.stage import GroupCounts, find_work, group_records
 from lattice_census.ingest.pool import WorkerPool
@@ -17,6 +18,7 @@ from lattice_census.store.stages import record_settings, refuse_mixed
 from lattice_census.store.workspace import Workspace
 
 from .ingest import IngestJob, compile_kernels, finish, ingest_into
+from .keeping import KeepJob, keep_into
 
 
 @dataclass(frozen=True, slots=True)
@@ -42,7 +44,7 @@ def group(job: GroupJob, step: Step, progress: Progress) -> dict[str, Any]:
 
 
 def night(job: IngestJob, step: Step, progress: Progress) -> dict[str, Any]:
-    """What a night does: ingest, then group, then publish once."""
+    """What a night does: ingest, then group, then keep, then publish once."""
     with (
         Workspace(job.store, "run", job.wait_seconds) as workspace,
         WorkerPool(job.settings.worker_count) as pool,
@@ -50,8 +52,9 @@ def night(job: IngestJob, step: Step, progress: Progress) -> dict[str, Any]:
         read = ingest_into(workspace, job, pool, step, progress, "ingest")
         again = GroupJob(job.store, job.settings, recompute=job.request.recompute)
         grouped = group_into(workspace, again, pool, step, progress)
+        kept = keep_into(workspace, KeepJob(job.store, job.settings), step)
         finish(workspace, step)
-        return {"ingest": read, "group": grouped}
+        return {"ingest": read, "group": grouped, "keep": kept}
 
 
 def group_into(workspace: Workspace, job: GroupJob, pool: WorkerPool, step: Step, progress: Progress) -> dict[str, Any]:
@@ -74,6 +77,7 @@ def _close(workspace: Workspace, run: Run, settings: Settings, done: GroupCounts
     connection.execute("BEGIN")
     try:
         group_exact(connection, run.run_id, settings)
+        lapse(connection, run.run_id)
         findings = find_all(connection, settings)
         record_settings(connection, settings, ("fingerprint", "verify", "keep"))
         counts = {

@@ -6,6 +6,7 @@ from dataclasses import dataclass
 from pathlib import Path
 from typing import Any
 
+from lattice_census.decisions.ledger import lapse
 from lattice_census.grouping.exact import group_exact
 from lattice_census.grouping.stage import set_outdated_aside
 from lattice_census.ingest.classify import classify_keys
@@ -91,6 +92,7 @@ def _close(workspace: Workspace, work: IngestWork) -> dict[str, Any]:
     try:
         group_exact(connection, work.run.run_id, work.settings)
         waiting = set_outdated_aside(connection, work.settings)
+        lapse(connection, work.run.run_id)
         find_all(connection, work.settings)
         record_settings(connection, work.settings, ("parse", "canonical", "keep"))
         counts = ingest_counts(connection, work) | {"compositions_waiting": waiting}

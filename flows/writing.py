@@ -140,7 +140,7 @@ def run(
     quiet: QuietOption = False,
     fails: FailOnOption = None,
 ) -> int:
-    """What a night does: ingest, group, and, where a folder is given, export."""
+    """What a night does: ingest, group, keep, and, where a folder is given, export."""
     failing = fail_on(fails, ("rejects", "findings"))
     from .group import night
     from .ingest import IngestJob
@@ -164,6 +164,9 @@ def run(
     else:
         typer.echo(ingest_text(counts["ingest"], False))
         typer.echo(group_text(counts["group"]))
+        from .curating import keep_text
+
+        typer.echo(keep_text(counts["keep"]))
         if told:
             typer.echo(f"Exported to {export}: {told['kept']:,} kept, {told['set_aside']:,} set aside.")
     rejected = "rejects" in failing and counts["ingest"].get("rejected")
@@ -288,11 +291,24 @@ def undo(
     wait: WaitOption = 0.0,
     as_json: JsonOption = False,
 ) -> None:
-    """Take back the withdrawals of a run, a record or a source."""
+    """Take back the withdrawals and decisions of a run, a record or a source, and the pins of a run."""
     from .deciding import undo as act
 
     done = act(store, what, wait)
-    typer.echo(json.dumps(done) if as_json else f"Run {done['run']}: restored {', '.join(done['restored'])}.")
+    typer.echo(json.dumps(done) if as_json else f"Run {done['run']}: {_undone_text(done)}.")
+
+
+def _undone_text(done: dict[str, Any]) -> str:
+    parts = []
+    if done["restored"]:
+        parts.append(f"restored {', '.join(done['restored'])}")
+    if done["decisions"]:
+        parts.append(f"{done['decisions']:,} decisions taken back; `keep --again RECORD` lets one be made again")
+    if done["decided_again"]:
+        parts.append(f"{done['decided_again']:,} earlier decisions in force again")
+    if done["pins"]:
+        parts.append(f"{done['pins']:,} pins as they were")
+    return "; ".join(parts)
 
 
 def demo(

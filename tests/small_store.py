@@ -168,4 +168,17 @@ def _add_runs(connection: duckdb.DuckDBPyConnection) -> None:
     _add(connection, "withdrawals", withdrawal_id=1, record_id=record_id(12), reason="bad run", run_id=4, made_at=DAY,
          made_by="curator")  # fmt: skip
     _add(connection, "stage_settings", stage="keep", name="zeta", value="1")
+    _add(connection, "decisions", decision_id=1, record_id=record_id(2), kept_record_id=record_id(1), grade="key",
+         rule="date", reason="copy", witness_shift_angstrom=0.0, witness_strain=0.0, run_id=3, made_at=DAY,
+         made_by="curator", undone_by_run=4, ending="undone")  # fmt: skip
+    _add(connection, "decisions", decision_id=2, record_id=record_id(6), kept_record_id=record_id(5), grade="near",
+         rule="energy", reason="rerun", witness_shift_angstrom=0.03, witness_strain=0.004, run_id=4, made_at=DAY,
+         made_by="curator", note="looked at")  # fmt: skip
+    _add(connection, "pins", pin_id=1, kind="keep", record_id=record_id(4), reason="best run", run_id=2, made_at=DAY,
+         made_by="curator", removed_by_run=3)  # fmt: skip
+    _add(connection, "pins", pin_id=2, kind="apart", record_id=record_id(7), other_record_id=record_id(8),
+         reason="spins", run_id=3, made_at=DAY, made_by="curator")  # fmt: skip
+    _add(connection, "findings", code="leak", record_id=record_id(1), other_record_id=record_id(2), grade="key",
+         group_id=record_id(1), value=2.0, message="one family stands in several splits")  # fmt: skip
+    _add(connection, "findings", code="symmetry_failed", record_id=record_id(10), message="no cell found")
     _add(connection, "stage_settings", stage="parse", name="alpha", value="2.5")

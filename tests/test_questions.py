@@ -33,6 +33,13 @@ EXPECTED: dict[str, list[tuple[dict[str, str], list[tuple[Any, ...]]]]] = {
         ({"run": "2"}, [("replaced", rid(6), "beta", "b3", "beta.csv", "O2Ti")]),
         ({"run": "4"}, []),
     ],
+    "decisions": [
+        ({}, [(2, "beta:b3", "alpha:a3", "near", "energy", "rerun", 0.03, 0.004, 4, "curator", "looked at", None,
+               None)]),
+        ({"ended": "true", "record": "alpha:a1"},
+         [(1, "alpha:a2", "alpha:a1", "key", "date", "copy", 0.0, 0.0, 3, "curator", None, "undone", 4)]),
+        ({"grade": "key"}, []),
+    ],
     "duplicates-by-reason": [
         ({}, [("copy", 1, 1, 0), ("other_cell", 1, 0, 1), ("rerun", 1, 0, 1), ("supercell", 1, 0, 1)]),
         ({"grade": "copy"}, [("copy", 1, 1, 0)]),
@@ -53,6 +60,12 @@ EXPECTED: dict[str, list[tuple[dict[str, str], list[tuple[Any, ...]]]]] = {
         ({}, [(rid(1), "O2Ti", "PBE", 3, 2, -8.02, -8.00, 0.02)]),
         ({"least": "0.03"}, []),
         ({"grade": "near", "least": "0.1"}, [(rid(5), "O2Ti", "PBE", 2, 2, -8.10, -7.90, 0.2)]),
+    ],
+    "findings": [
+        ({}, [("leak", "alpha:a1", "alpha:a2", "key", 2.0, "one family stands in several splits", rid(1), rid(2)),
+              ("symmetry_failed", "beta:b5", None, None, None, "no cell found", rid(10), None)]),
+        ({"code": "leak", "source": "beta"}, []),
+        ({"source": "beta"}, [("symmetry_failed", "beta:b5", None, None, None, "no cell found", rid(10), None)]),
     ],
     "group-of": [
         ({"record": "alpha:a4"},
@@ -143,6 +156,11 @@ EXPECTED: dict[str, list[tuple[dict[str, str], list[tuple[Any, ...]]]]] = {
         ({}, [(rid(9), "alpha", "a5", "ClK", 4, 8, 2, 0.0), (rid(3), "beta", "b1", "O2Ti", 2, 12, 6, 0.0)]),
         ({"least": "3"}, [(rid(9), "alpha", "a5", "ClK", 4, 8, 2, 0.0)]),
         ({"source": "beta"}, [(rid(3), "beta", "b1", "O2Ti", 2, 12, 6, 0.0)]),
+    ],
+    "pins": [
+        ({}, [(2, "apart", "alpha:a4", "beta:b4", "spins", "curator", DAY, 3, None)]),
+        ({"removed": "yes"}, [(1, "keep", "beta:b2", None, "best run", "curator", DAY, 2, 3),
+                              (2, "apart", "alpha:a4", "beta:b4", "spins", "curator", DAY, 3, None)]),
     ],
     "polymorphs": [
         ({"formula": "TiO2"},
@@ -296,7 +314,7 @@ def test_headers_and_statements_agree(connection: duckdb.DuckDBPyConnection):
         assert not options & {p.name for p in question.parameters}, question.name
         assert re.search(r"\bORDER BY\b[^()]*(\([^()]*\)[^()]*)*$", question.sql), f"{question.name} has no last order"
         for p in question.parameters:
-            if p.name == "grade" and question.name != "id-changes":
+            if p.name == "grade" and question.name not in ("id-changes", "decisions"):
                 assert (p.type, p.default) == ("GRADE", "key"), question.name
 
 

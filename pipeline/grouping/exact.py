@@ -5,6 +5,7 @@ from __future__ import annotations
 import duckdb
 
 from ..settings import Settings
+from .pinned import part_pinned
 from .rank import rank_records
 
 GRADES = {"copy": "r.content_hash", "key": "x.crystal_key"}
@@ -13,8 +14,8 @@ GRADES = {"copy": "r.content_hash", "key": "x.crystal_key"}
 def group_exact(connection: duckdb.DuckDBPyConnection, run_id: int, settings: Settings) -> None:
     """Compute `members` of grades copy and key anew from the current records, and note every id that changed.
 
-    The kept record of a group is its best by the keep rules (rank.py): a pure function of the current records and the
-    rules. To be called inside a transaction.
+    The kept record of a group is its best by the keep rules (rank.py): a pure function of the current records, the
+    rules and the pins. To be called inside a transaction.
     """
     connection.execute("DROP TABLE IF EXISTS temp.members_before")
     connection.execute("CREATE TEMP TABLE members_before AS SELECT * FROM members WHERE grade IN ('copy', 'key')")
@@ -30,6 +31,7 @@ def group_exact(connection: duckdb.DuckDBPyConnection, run_id: int, settings: Se
             f"family AS (PARTITION BY {column}) ORDER BY r.record_id",
             [grade],
         )
+        part_pinned(connection, grade)
     note_id_changes(connection, run_id)
 
 

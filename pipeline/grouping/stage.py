@@ -1,8 +1,8 @@
 """The stage `group`: which compositions have changed, their work in the pool, and the rows it gives.
 
-A composition is grouped from its current records, their keys, ranks and pins, and the settings alone; the digest of these
-stands in `grouped_compositions`, so that only compositions whose digest changed are worked on, and a killed run goes on
-with those that are left. Compositions with one key need no comparison and are written by SQL.
+A composition is grouped from its current records, their keys, ranks and pins, and the settings alone; the digest of
+these stands in `grouped_compositions`, so that only compositions whose digest changed are worked on, and a killed run
+goes on with those that are left. Compositions with one key need no comparison and are written by SQL.
 """
 
 from __future__ import annotations

@@ -14,9 +14,25 @@ from ..ingest.reduce import write_part
 from ..model.batch import CrystalBatch
 from ..settings import Settings
 from .composition import Grouping, Options, group_composition
+from .pinned_matches import by_key, measured, verified_together
 from .reasons import reasons
+from .verification import Verified
+from .witness import Witnesses
 
 _GRADE_NAMES = np.array(["same", "near", "window"])
+
+
+@dataclass(frozen=True, slots=True)
+class PairPin:
+    """A pin of two records of one composition."""
+
+    composition: str
+    pin_id: int
+    kind: str
+    """apart or together."""
+
+    record_a: str
+    record_b: str
 
 
 @dataclass(frozen=True, slots=True)
@@ -31,6 +47,7 @@ class GroupJob:
     """Stem of the parts to write."""
 
     settings: Settings
+    pins: tuple[PairPin, ...] = ()
 
 
 def matches_part(part: Path) -> Path:
@@ -56,17 +73,34 @@ def group_chunk(job: GroupJob) -> int:
     matches, members, summary = [], [], []
     for (composition, digest), rows in frame.group_by(["composition", "digest"], maintain_order=True):
         batch = stored_batch(rows)
+        pins = [pin for pin in job.pins if pin.composition == composition]
+        ids = rows["record_id"].to_list()
+        together, refused = verified_together(batch, ids, pins, job.settings)
         found = group_composition(
             batch,
             rows["crystal_key"].to_list(),
-            rows["record_id"].to_list(),
+            ids,
             rows["rank"].to_list(),
             job.settings.tolerances,
-            Options(job.settings.mirror_images, "near", job.settings.matches_per_record),
+            Options(
+                job.settings.mirror_images,
+                "near",
+                job.settings.matches_per_record,
+                together=tuple(pair.ids for pair in together),
+                apart=tuple((pin.record_a, pin.record_b) for pin in pins if pin.kind == "apart"),
+            ),
         )
-        if len(found.matches):
-            matches.append(_matches_frame(str(composition), rows, batch, found, job.settings))
-        members.append(_members_frame(found))
+        frame_of = _matches_frame(str(composition), rows, batch, found.matches, found.witnesses, job.settings)
+        of_members = _members_frame(found)
+        if pins:
+            more = [
+                _matches_frame(str(composition), rows[p.places], p.batch, p.match, p.witness, job.settings)
+                for p in together
+            ]
+            frame_of = by_key(pl.concat([frame_of, *more]), rows)
+            of_members = measured(of_members, frame_of, rows, job.settings.mirror_images == "separate")
+        matches.append(frame_of)
+        members.append(of_members)
         summary.append(
             {
                 "composition": composition,
@@ -75,11 +109,13 @@ def group_chunk(job: GroupJob) -> int:
                 "keys": rows["crystal_key"].n_unique(),
                 "candidates": found.counts["candidates"],
                 "verified": found.counts["verified"],
+                "refused": refused,
             }
         )
-    write_part(pl.concat(matches).to_arrow() if matches else _NO_MATCHES.to_arrow(), matches_part(job.part))
+    write_part(pl.concat(matches).to_arrow(), matches_part(job.part))
     write_part(pl.concat(members).to_arrow(), members_part(job.part))
-    write_part(pl.DataFrame(summary).to_arrow(), summary_part(job.part))
+    told = pl.DataFrame(summary, schema_overrides={"refused": pl.List(pl.Int64)}, infer_schema_length=None)
+    write_part(told.to_arrow(), summary_part(job.part))
     return len(frame)
 
 
@@ -127,10 +163,12 @@ _NO_MATCHES = pl.DataFrame(schema=_SCHEMA)
 
 
 def _matches_frame(
-    composition: str, rows: pl.DataFrame, batch: CrystalBatch, found: Grouping, settings: Settings
+    composition: str, rows: pl.DataFrame, batch: CrystalBatch, match: Verified, witness: Witnesses, settings: Settings
 ) -> pl.DataFrame:
     """The rows of `matches`. `rows` and `batch` are in ascending order of record id, as the result is."""
-    pairs, match, witness = found.matches.pairs, found.matches, found.witnesses
+    pairs = match.pairs
+    if not len(pairs):
+        return _NO_MATCHES
     ids, keys = np.array(rows["record_id"].to_list()), np.array(rows["crystal_key"].to_list())
     first, second = pairs[:, 0], pairs[:, 1]
     given = np.array(rows["matrix"].to_list(), np.int64).reshape(-1, 3, 3)

@@ -39,10 +39,10 @@ def withdraw(connection: duckdb.DuckDBPyConnection, run_id: int, what: str, reas
     return {"withdrawn": count, "source": source, "record": record, "reason": reason}
 
 
-def undo_withdrawals(connection: duckdb.DuckDBPyConnection, run_id: int, what: str) -> dict[str, Any]:
+def undo_withdrawals(connection: duckdb.DuckDBPyConnection, run_id: int, what: str) -> list[str]:
     """Take back the withdrawals of a run (by number), a source or a record; inside the caller's transaction.
 
-    Raises UsageError where there is nothing to take back.
+    Returns the sources and records that are back; UsageError where no record is named so.
     """
     if what.isdigit() and len(what) < 20:
         condition, value = "run_id = ?", what
@@ -55,12 +55,10 @@ def undo_withdrawals(connection: duckdb.DuckDBPyConnection, run_id: int, what: s
         f"WHERE undone_by_run IS NULL AND {condition} ORDER BY withdrawal_id",
         [value],
     ).fetchall()
-    if not rows:
-        raise UsageError(f"There is nothing to undo for {what}: no withdrawal of that run, source or record holds.")
     connection.execute(
         f"UPDATE withdrawals SET undone_by_run = ? WHERE undone_by_run IS NULL AND {condition}", [run_id, value]
     )
-    return {"restored": [name for _, name in rows]}
+    return [name for _, name in rows]
 
 
 def user_name() -> str:

@@ -294,6 +294,55 @@ TABLES: dict[str, Table] = {
         ("made_by", "VARCHAR", "Who (the login name)."),
         ("undone_by_run", "BIGINT", "Run that took the withdrawal back; NULL while it holds."),
     ),
+    "decisions": _table(
+        "The ledger, one row a decision to set a record aside in favour of another. Rows are only ever added; an ended "
+        "one says which run ended it and why.",
+        ("decision_id", "BIGINT", "1, 2, 3 ..."),
+        ("record_id", "VARCHAR", "The record that is set aside."),
+        ("kept_record_id", "VARCHAR", "The record that is kept in its place."),
+        ("grade", "VARCHAR", "The grade at which the two are one crystal."),
+        ("rule", "VARCHAR", "The first keep rule that tells the two apart."),
+        ("reason", "VARCHAR", "Why the two match, as in `matches`; copy for equal content."),
+        ("witness_shift_angstrom", "DOUBLE", "Largest shift of their match, angstrom; 0 for equal keys."),
+        ("witness_strain", "DOUBLE", "Strain of their match; 0 for equal keys."),
+        ("run_id", "BIGINT", "Run that decided it."),
+        ("made_at", "TIMESTAMP", "When, UTC."),
+        ("made_by", "VARCHAR", "Who (the login name)."),
+        ("note", "VARCHAR", "The curator's words."),
+        ("undone_by_run", "BIGINT", "Run that ended it; NULL while it is in force."),
+        (
+            "ending",
+            "VARCHAR",
+            "undone (by a curator: the record is held), superseded (by a newer decision), lapsed (the two are no "
+            "longer there, or no longer one), or NULL while it is in force.",
+        ),
+        ("released_by_run", "BIGINT", "Of an undone decision: run that lets `keep` decide again; NULL while held."),
+    ),
+    "holds": _table(
+        "One row a group or record that `keep` leaves alone, and why; made anew by every run.",
+        ("grade", "VARCHAR", "The grade."),
+        ("group_id", "VARCHAR", "The group that is held; NULL where one record is."),
+        ("record_id", "VARCHAR", "The record that is held; NULL where a group is."),
+        ("reason", "VARCHAR", "energy_conflict, pin_conflict or undone."),
+        ("message", "VARCHAR", "Why, for a person."),
+    ),
+    "pins": _table(
+        "One row a curator's pin: a record to be kept, or two records that are, or are not, one crystal.",
+        ("pin_id", "BIGINT", "1, 2, 3 ..."),
+        ("kind", "VARCHAR", "keep, apart or together."),
+        ("record_id", "VARCHAR", "The record."),
+        ("other_record_id", "VARCHAR", "The other record; NULL for keep."),
+        ("reason", "VARCHAR", "Why, in the curator's words."),
+        ("run_id", "BIGINT", "Run that set it."),
+        ("made_at", "TIMESTAMP", "When, UTC."),
+        ("made_by", "VARCHAR", "Who (the login name)."),
+        ("removed_by_run", "BIGINT", "Run that removed it; NULL while it holds."),
+    ),
+    "refused_pins": _table(
+        "One row a pin `together` without a match in the window between its records: it takes no part in grouping.",
+        ("pin_id", "BIGINT", "The pin."),
+        ("composition", "VARCHAR", "Composition of the two records."),
+    ),
     "members": _table(
         "One row a record and grade: every record that is neither missing nor withdrawn stands in exactly one group of "
         "each grade computed, alone if need be.",
@@ -331,6 +380,8 @@ TABLES: dict[str, Table] = {
 }
 
 VIEWS: dict[str, str] = {
+    "decisions_in_force": "Decisions that nothing has ended.",
+    "pins_in_force": "Pins that nobody has removed.",
     "crystals": "One row a record: its canonical form, lattice type, ladder and space group.",
     "record_matches": "Every verified match written out for all records of the two keys, and the pairs of one key.",
     "current_records": "Records that take part in results: neither missing from their file nor withdrawn.",

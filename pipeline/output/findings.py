@@ -7,6 +7,7 @@ from importlib.resources import files
 
 import duckdb
 
+from ..decisions.holds import make_holds
 from ..grouping.rank import rank_records
 from ..settings import Settings
 
@@ -23,8 +24,9 @@ def finding_queries() -> dict[str, tuple[str, str]]:
 
 
 def find_all(connection: duckdb.DuckDBPyConnection, settings: Settings) -> dict[str, int]:
-    """Make `findings` anew, inside the caller's transaction; the number of each code that was met."""
+    """Make `holds` and `findings` anew, inside the caller's transaction; the number of each code that was met."""
     rank_records(connection, settings)
+    make_holds(connection, settings)
     connection.execute("DELETE FROM findings")
     values = {"energy_conflict": settings.energy_conflict_ev_per_site}
     for _, query in finding_queries().values():

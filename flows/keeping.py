@@ -1,0 +1,90 @@
+"""The steps of `keep`."""
+
+from __future__ import annotations
+
+from dataclasses import dataclass
+from pathlib import Path
+from typing import Any
+
+from lattice_census.decisions.ledger import (
+    KeepPlan,
+    current_holds,
+    decide,
+    default_grade,
+    held_records,
+    plan_keep,
+    planned_rows,
+    release,
+)
+from lattice_census.ingest.progress import Step
+from lattice_census.output.findings import find_all
+from lattice_census.settings import Settings
+from lattice_census.store.runs import begin_run, end_run
+from lattice_census.store.stages import refuse_mixed
+from lattice_census.store.workspace import Workspace
+
+from .ingest import finish
+
+
+@dataclass(frozen=True, slots=True)
+class KeepJob:
+    """Everything that `keep` needs, and nothing open."""
+
+    store: Path
+    settings: Settings
+    grade: str | None = None
+    """None: near where it was computed, else key."""
+
+    note: str | None = None
+    again: tuple[str, ...] = ()
+    """Records whose decisions were taken back and may be made again."""
+
+    dry_run: bool = False
+    wait_seconds: float = 0.0
+
+
+def keep(job: KeepJob, step: Step) -> dict[str, Any]:
+    """Decide, publish, and return the counts; a dry run also returns what would change, row by row."""
+    with Workspace(job.store, "keep", job.wait_seconds, scratch=job.dry_run, must_exist=True) as workspace:
+        counts = keep_into(workspace, job, step)
+        if not job.dry_run:
+            finish(workspace, step)
+        return counts
+
+
+def keep_into(workspace: Workspace, job: KeepJob, step: Step) -> dict[str, Any]:
+    """The steps of `keep` in an open workspace, up to the end of its run; not published yet."""
+    connection = workspace.connection
+    refuse_mixed(connection, job.settings, ("parse", "canonical", "fingerprint", "verify", "keep"))
+    grade = job.grade or default_grade(connection)
+    again = held_records(connection, job.again, grade)
+    current_holds(connection, job.settings)
+    plan = step("plan decisions", plan_keep, connection, job.settings, grade, again)
+    if job.dry_run:
+        return {**_counts(plan), "rows": planned_rows(connection, grade)}
+    if plan.nothing and not again:
+        return {"nothing_new": True, **_counts(plan)}
+    arguments = {"grade": grade, "note": job.note, "again": again}
+    run = begin_run(connection, "keep", arguments, plan.digest, job.settings.model_dump(mode="json"))
+    connection.execute("BEGIN")
+    try:
+        decide(connection, run.run_id, plan, job.note)
+        release(connection, run.run_id, again, grade)
+        find_all(connection, job.settings)
+        end_run(connection, run, _counts(plan))
+        connection.execute("COMMIT")
+    except BaseException:
+        connection.execute("ROLLBACK")
+        raise
+    return {"run": run.run_id, **_counts(plan)}
+
+
+def _counts(plan: KeepPlan) -> dict[str, Any]:
+    return {
+        "grade": plan.grade,
+        "set_aside": plan.new,
+        "superseded": plan.superseded,
+        "kept_again": plan.lapsed,
+        "held": plan.held,
+        "in_force": plan.in_force + plan.new - plan.lapsed,
+    }
