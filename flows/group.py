@@ -79,7 +79,7 @@ def _close(workspace: Workspace, run: Run, settings: Settings, done: GroupCounts
         group_exact(connection, run.run_id, settings)
         lapse(connection, run.run_id)
         findings = find_all(connection, settings)
-        record_settings(connection, settings, ("fingerprint", "verify", "keep"))
+        record_settings(connection, settings, ("verify", "keep"))
         counts = {
             "compositions": done.compositions,
             "compared": done.compared,

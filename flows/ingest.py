@@ -94,7 +94,7 @@ def _close(workspace: Workspace, work: IngestWork) -> dict[str, Any]:
         waiting = set_outdated_aside(connection, work.settings)
         lapse(connection, work.run.run_id)
         find_all(connection, work.settings)
-        record_settings(connection, work.settings, ("parse", "canonical", "keep"))
+        record_settings(connection, work.settings, ("parse", "canonical", "fingerprint", "keep"))
         counts = ingest_counts(connection, work) | {"compositions_waiting": waiting}
         end_run(connection, work.run, counts)
         connection.execute("COMMIT")

@@ -8,9 +8,11 @@ from collections.abc import Iterator
 import duckdb
 import numpy as np
 import polars as pl
+import pyarrow as pa
 
 from ..cell.crystal_type import classify_crystals
 from ..cell.lattice_type import classify_lattices
+from ..fingerprint.distributions import Fingerprint, column_means, distributions
 from ..lattice.point_groups import point_group_order
 from ..model.columns import TABLES
 from ..settings import Settings, SourceSettings
@@ -90,11 +92,13 @@ def _classify(job: ReduceJob) -> int:
             "symmetry_failure": pl.Series([message for _, _, message in crystals.failures], dtype=pl.String),
         }
     )
+    prints = column_means(batch, distributions(batch, job.settings.fingerprint_k))
     planes = ("op", "oc", "tp", "hp")
     types = (
         frame.select("crystal_key", pl.col("record_id").alias("typed_record_id"))
         .with_columns(
             pl.Series("row", np.arange(len(frame))),
+            pl.Series("mean_distances_angstrom", pl.from_arrow(_by_crystal(prints, job.settings.fingerprint_k))),
             pl.Series("conventional_matrix", pl.from_arrow(fixed(lattices.matrices.astype(np.int32)))),
         )
         .hstack(
@@ -119,6 +123,11 @@ def _classify(job: ReduceJob) -> int:
     )
     write_part(types.select(c.name for c in TABLES["crystal_types"].columns).to_arrow(), accepted_part(job.part))
     return len(frame)
+
+
+def _by_crystal(prints: Fingerprint, k: int) -> pa.Array:
+    """The mean rows of each crystal, one after the other, as a list column."""
+    return pa.LargeListArray.from_arrays(pa.array(prints.offsets * k), pa.array(prints.means.reshape(-1)))
 
 
 def _point_group_order(groups: dict[str, int | None]) -> int | None:

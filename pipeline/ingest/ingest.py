@@ -36,7 +36,7 @@ class IngestWork:
     plan: Plan
     settings: Settings
     canonical_again: bool
-    """The canonical settings changed: all stored structures are to be reduced anew."""
+    """A canonical or fingerprint setting changed: all stored structures are to be reduced and typed anew."""
 
 
 def prepare_ingest(workspace: Workspace, request: IngestRequest, settings: Settings, command: str) -> IngestWork | None:
@@ -44,7 +44,7 @@ def prepare_ingest(workspace: Workspace, request: IngestRequest, settings: Setti
     connection = workspace.connection
     changed = changed_stages(connection, settings)
     if not request.recompute:
-        refuse_mixed(connection, settings, ("parse", "canonical"))
+        refuse_mixed(connection, settings, ("parse", "canonical", "fingerprint"))
     plan = scan(connection, request, settings, read_all="parse" in changed)
     unfinished = one_row(
         connection,
@@ -58,9 +58,9 @@ def prepare_ingest(workspace: Workspace, request: IngestRequest, settings: Setti
         log.info("Run %d was interrupted; going on with it.", run.run_id)
     if not stored_settings(connection):
         connection.execute("BEGIN")
-        record_settings(connection, settings, ("parse", "canonical"))
+        record_settings(connection, settings, ("parse", "canonical", "fingerprint"))
         connection.execute("COMMIT")
-    return IngestWork(run, plan, settings, request.recompute and "canonical" in changed)
+    return IngestWork(run, plan, settings, request.recompute and bool({"canonical", "fingerprint"} & set(changed)))
 
 
 def read_source(

@@ -118,7 +118,7 @@ def scan(
     arguments = {
         "paths": [str(s.root) for s in sources],
         "recompute": request.recompute,
-        "settings": {stage: settings.of_stage(stage) for stage in ("parse", "canonical")},
+        "settings": {stage: settings.of_stage(stage) for stage in ("parse", "canonical", "fingerprint")},
     }
     return Plan(tuple(sources), arguments)
 

@@ -217,6 +217,12 @@ TABLES: dict[str, Table] = {
         ("pseudo_symmetric", "BOOLEAN", "The lattice has more symmetry than the crystal."),
         ("symmetry_unsure", "BOOLEAN", "The group changes between half and twice the symmetry tolerance."),
         ("symmetry_failure", "VARCHAR", "Why no space group was found; NULL where one was."),
+        (
+            "mean_distances_angstrom",
+            "FLOAT[]",
+            "Fingerprint: mean distance of the sites of a species to the 1st ... k-th "
+            "neighbour, angstrom; k numbers a species, species tokens in ascending order.",
+        ),
         ("standard_cell_angstrom", "DOUBLE[9]", "Standard conventional cell of the crystal, rows, angstrom."),
         ("standard_species", "VARCHAR[]", "Species tokens of the sites of the standard cell."),
         ("standard_positions_fractional", "DOUBLE[]", "Sites of the standard cell, x y z a site, fractional."),

@@ -36,6 +36,7 @@ CREATE TABLE crystal_types (
     pseudo_symmetric BOOLEAN,
     symmetry_unsure BOOLEAN,
     symmetry_failure VARCHAR,
+    mean_distances_angstrom FLOAT[],
     standard_cell_angstrom DOUBLE[9],
     standard_species VARCHAR[],
     standard_positions_fractional DOUBLE[]
@@ -76,6 +77,7 @@ COMMENT ON COLUMN crystal_types.wyckoff IS 'Wyckoff sequence, last letter first.
 COMMENT ON COLUMN crystal_types.pseudo_symmetric IS 'The lattice has more symmetry than the crystal.';
 COMMENT ON COLUMN crystal_types.symmetry_unsure IS 'The group changes between half and twice the symmetry tolerance.';
 COMMENT ON COLUMN crystal_types.symmetry_failure IS 'Why no space group was found; NULL where one was.';
+COMMENT ON COLUMN crystal_types.mean_distances_angstrom IS 'Fingerprint: mean distance of the sites of a species to the 1st ... k-th neighbour, angstrom; k numbers a species, species tokens in ascending order.';
 COMMENT ON COLUMN crystal_types.standard_cell_angstrom IS 'Standard conventional cell of the crystal, rows, angstrom.';
 COMMENT ON COLUMN crystal_types.standard_species IS 'Species tokens of the sites of the standard cell.';
 COMMENT ON COLUMN crystal_types.standard_positions_fractional IS 'Sites of the standard cell, x y z a site, fractional.';
@@ -141,6 +143,7 @@ COMMENT ON COLUMN crystals.wyckoff IS 'Wyckoff sequence, last letter first.';
 COMMENT ON COLUMN crystals.pseudo_symmetric IS 'The lattice has more symmetry than the crystal.';
 COMMENT ON COLUMN crystals.symmetry_unsure IS 'The group changes between half and twice the symmetry tolerance.';
 COMMENT ON COLUMN crystals.symmetry_failure IS 'Why no space group was found; NULL where one was.';
+COMMENT ON COLUMN crystals.mean_distances_angstrom IS 'Fingerprint: mean distance of the sites of a species to the 1st ... k-th neighbour, angstrom; k numbers a species, species tokens in ascending order.';
 COMMENT ON COLUMN crystals.standard_cell_angstrom IS 'Standard conventional cell of the crystal, rows, angstrom.';
 COMMENT ON COLUMN crystals.standard_species IS 'Species tokens of the sites of the standard cell.';
 COMMENT ON COLUMN crystals.standard_positions_fractional IS 'Sites of the standard cell, x y z a site, fractional.';
