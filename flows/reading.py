@@ -56,25 +56,52 @@ def _status_text(facts: dict[str, Any]) -> str:
 def export(
     folder: Annotated[Path, typer.Argument(metavar="DIR", help="A new folder.")],
     store: StoreOption = DEFAULT_STORE,
-    grade: Annotated[str, typer.Option("--grade", help="copy or key: which records count as the same.")] = "key",
-    form: Annotated[str, typer.Option("--form", help="cif (a file a structure), csv or parquet (one table).")] = "cif",
+    grade: Annotated[
+        str | None,
+        typer.Option("--grade", help="Which records count as the same [default: near where computed, else key]."),
+    ] = None,
+    form: Annotated[
+        str, typer.Option("--form", help="cif, poscar (a file a structure), extxyz, csv or parquet (one file).")
+    ] = "cif",
+    where: Annotated[
+        str | None, typer.Option("--where", metavar="SQL", help="A condition on the columns of the kept records.")
+    ] = None,
+    as_of: Annotated[
+        int | None, typer.Option("--as-of", metavar="RUN", help="The collection as it stood after this run.")
+    ] = None,
+    splits: Annotated[
+        str | None,
+        typer.Option("--splits", metavar="NAME=SHARE,...", help="Deal out whole families: train=0.8,val=0.1,test=0.1."),
+    ] = None,
+    seed: Annotated[int, typer.Option("--seed", help="Another seed deals otherwise.")] = 0,
     as_json: JsonOption = False,
 ) -> None:
-    """Write one structure a group into a new folder, with the list of what was set aside and why."""
+    """Write the kept structures into a new folder, with the list of what was set aside and why."""
     from lattice_census.errors import UsageError
+    from lattice_census.output.export import FORMS
     from lattice_census.output.export import export as write
     from lattice_census.store.connect import open_for_reading
 
-    if form not in ("cif", "csv", "parquet"):
-        raise UsageError(f"--form {form}: choose from cif, csv, parquet.")
+    chosen = next((f for f in FORMS if f == form), None)
+    if chosen is None:
+        raise UsageError(f"--form {form}: choose from {', '.join(FORMS)}.")
     connection = open_for_reading(store)
     try:
-        done = write(connection, folder, grade, form)  # type: ignore[arg-type]
+        done = write(connection, folder, grade, chosen, where=where, as_of=as_of, splits=splits, seed=seed)
     finally:
         connection.close()
-    if as_json:
-        typer.echo(json.dumps({"folder": str(folder), "kept": done.kept, "set_aside": done.set_aside}))
-        return
     for note in done.notes:
         typer.echo(note, err=True)
-    typer.echo(f"Exported to {folder}: {done.kept:,} kept, {done.set_aside:,} set aside.")
+    if as_json:
+        facts = {"folder": str(folder), "grade": done.grade, "kept": done.kept, "set_aside": done.set_aside,
+                 "held": done.held, "left_out": done.left_out, "splits": done.splits}  # fmt: skip
+        typer.echo(json.dumps(facts))
+        return
+    told = f"Exported to {folder}: {done.kept:,} kept, {done.set_aside:,} set aside at grade {done.grade}"
+    if done.held:
+        told += f"; {done.held:,} of the kept are held (kept.csv says why)"
+    if done.left_out:
+        told += f"; {done.left_out:,} left out by the condition"
+    if done.splits:
+        told += "; " + ", ".join(f"{name} {count:,}" for name, count in done.splits.items())
+    typer.echo(told + ".")

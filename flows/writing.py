@@ -155,7 +155,7 @@ def run(
 
         connection = open_for_reading(store)
         try:
-            exported = export_to(connection, export, "near", "cif")
+            exported = export_to(connection, export)
         finally:
             connection.close()
         told = {"kept": exported.kept, "set_aside": exported.set_aside, "folder": str(export)}

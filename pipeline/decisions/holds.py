@@ -41,7 +41,8 @@ _BOTH_WAYS = (
 # Two records pinned apart that both match a third one: it must not stand for both.
 _APART_IN_ONE_GROUP = (
     "SELECT a.grade, a.group_id, NULL, 'pin_conflict', "
-    "format('{} and {} are pinned apart (pin {}: {}), and both match {}', a.source || ':' || a.label, b.source || ':' || b.label, p.pin_id, p.reason, k.source || ':' || k.label) "
+    "format('{} and {} are pinned apart (pin {}: {}), and both match {}', a.source || ':' || a.label, "
+    "b.source || ':' || b.label, p.pin_id, p.reason, k.source || ':' || k.label) "
     "FROM pins_in_force p JOIN members a ON a.record_id = p.record_id "
     "JOIN members b ON b.record_id = p.other_record_id AND b.grade = a.grade AND b.group_id = a.group_id "
     "JOIN records k ON k.record_id = a.group_id "

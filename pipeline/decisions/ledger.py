@@ -1,7 +1,8 @@
 """The ledger of records set aside: decisions are added, superseded, undone and lapse; no row is ever taken away.
 
 A decision says that a record is set aside, at a grade, in favour of the kept record of its group. It stays in force
-until a later run of `keep` decides otherwise, a curator takes it back, or the two records are no longer what was decided on.
+until a later run of `keep` decides otherwise, a curator takes it back, or the two records are no longer what was
+decided on.
 """
 
 from __future__ import annotations

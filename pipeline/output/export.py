@@ -1,10 +1,9 @@
-"""A clean collection on disk: one structure a group, what was set aside and why, and how it was made."""
+"""A clean collection on disk: the kept structures, what was set aside and why, and how it was made."""
 
 from __future__ import annotations
 
 import json
 import os
-import re
 import shutil
 from collections import Counter
 from dataclasses import dataclass
@@ -17,38 +16,18 @@ import polars as pl
 
 from .. import __version__
 from ..errors import UsageError
-from ..store.rows import one_row
-from .cif import cif_text
-from .structures import given_structures
+from ..store.rows import one_number
+from .ask import LOCKS
+from .dealing import deal, families_of, parse_splits
+from .export_files import write_files
+from .selection import aside_rows, kept_rows, select_records
 
-Form = Literal["cif", "csv", "parquet"]
+Form = Literal["cif", "csv", "parquet", "extxyz", "poscar"]
+FORMS: tuple[Form, ...] = ("cif", "csv", "parquet", "extxyz", "poscar")
 
 CAUTION = (
     "A group is a geometric statement, not a magnetic or electronic one; structures are as good as their source; "
     "a record that is set aside is a proposal, and nothing was deleted from the input."
-)
-
-KEPT = (
-    "SELECT m.record_id, m.source, m.label, r.file, r.reader, r.position, r.formula, r.sites_given, r.sites_primitive, "
-    "x.crystal_key, x.volume_angstrom3_per_site, r.energy_ev_per_site, r.theory, r.split, "
-    "(SELECT count(*) FROM members o WHERE o.grade = m.grade AND o.group_id = m.group_id) AS group_size "
-    "FROM members m JOIN records r USING (record_id) JOIN canonical_forms x USING (record_id) "
-    "WHERE m.grade = ? AND m.kept ORDER BY m.source, r.file, r.position, m.record_id"
-)
-
-# Why a record is the same as its kept one, from what is known without a witness: equal content, equal given cell
-# (edges and site count; to 1e-3 angstrom), another number of primitive cells, or else another description.
-SET_ASIDE = (
-    "SELECT m.record_id, m.source, m.label, r.file, r.position, m.group_id AS kept_record_id, k.source AS kept_source, "
-    "k.label AS kept_label, CASE WHEN r.content_hash = k.content_hash THEN 'copy' "
-    "WHEN x.supercell_index <> y.supercell_index THEN 'supercell' "
-    "WHEN list_max(list_transform(range(1, 10), lambda i: abs(s.cell_angstrom[i] - t.cell_angstrom[i]))) < 1e-3 "
-    "THEN 'rerun' ELSE 'other_cell' END AS reason, "
-    "m.witness_shift_angstrom AS shift_angstrom, m.witness_strain AS strain "
-    "FROM members m JOIN records r USING (record_id) JOIN records k ON k.record_id = m.group_id "
-    "JOIN canonical_forms x ON x.record_id = m.record_id JOIN canonical_forms y ON y.record_id = m.group_id "
-    "JOIN structures s ON s.record_id = m.record_id JOIN structures t ON t.record_id = m.group_id "
-    "WHERE m.grade = ? AND NOT m.kept ORDER BY m.source, r.file, r.position, m.record_id"
 )
 
 
@@ -59,42 +38,94 @@ class ExportCounts:
     kept: int
     set_aside: int
     notes: tuple[str, ...]
+    grade: str
+    held: int
+    """Kept records that wait for a curator."""
+
+    left_out: int
+    """Records that a condition left out, with those set aside in their favour: records = kept + set aside + this."""
+
+    splits: dict[str, int]
+    """Records dealt to each split."""
 
 
-def export(connection: duckdb.DuckDBPyConnection, folder: Path, grade: str, form: Form) -> ExportCounts:
-    """Write the kept structures of a grade into a new folder; whole or not at all.
+def export(
+    connection: duckdb.DuckDBPyConnection,
+    folder: Path,
+    grade: str | None = None,
+    form: Form = "cif",
+    *,
+    where: str | None = None,
+    as_of: int | None = None,
+    splits: str | None = None,
+    seed: int = 0,
+) -> ExportCounts:
+    """Write the kept structures of a grade (default: near where computed, else key) into a new folder; whole or not at
+    all.
 
-    cif: one file a kept record in structures/, in the cell it came in. csv, parquet: one table `structures`, with the
-    input's own columns where the record came from a table whose file is still the one that was read, and ours prefixed
-    `census_`. Beside it kept.csv, set_aside.csv and census.json. Raises UsageError (folder exists, no such grade).
+    cif, poscar: one file a kept record in structures/, in the cell it came in; extxyz: one file of frames. csv,
+    parquet: one table `structures`, with the input's own columns where the record came from a table whose file is still
+    the one that was read, and ours prefixed `census_`. Beside it kept.csv, set_aside.csv and census.json.
+
+    where: a condition on the kept records (selection.py). as_of: the number of a run; the collection as it stood then.
+    splits: names and fractions; whole families are dealt out by `seed`, into a folder or file each. The connection is
+    closed to everything outside the store where a condition is given. Raises UsageError (folder exists, no such grade
+    or run, a condition that is none, a form that cannot hold a structure).
     """
     if folder.exists():
         raise UsageError(f"{folder} exists already: export writes into a new folder.")
-    if not one_row(connection, "SELECT 1 FROM members WHERE grade = ?", [grade]):
-        grades = [g for (g,) in connection.execute("SELECT DISTINCT grade FROM members ORDER BY grade").fetchall()]
-        raise UsageError(f"The store has no groups of grade {grade!r}; it has: {', '.join(grades) or 'none'}.")
-    kept = _frame(connection, KEPT, grade)
-    aside = _frame(connection, SET_ASIDE, grade)
+    fractions = parse_splits(splits) if splits is not None else None
+    if fractions is not None and as_of is not None:
+        raise UsageError("--splits deals out families as they are now: it does not go with --as-of.")
+    if where is not None:
+        for setting in LOCKS:
+            connection.execute(setting)
+    selection = select_records(connection, grade, as_of)
+    kept = kept_rows(connection, selection, where, as_of is not None)
+    aside = aside_rows(connection)
+    notes = list(selection.notes)
+    dealt: dict[str, int] = {}
+    if fractions is not None:
+        families, at = families_of(connection, kept)
+        names = deal(families, fractions, seed)
+        kept = kept.with_columns(pl.Series("dealt_split", names, dtype=pl.String))
+        dealt = {name: Counter(names)[name] for name in fractions}
+        if at != "near":
+            notes.append(f"Families of grade {at} were dealt out; with `group`, those of near would be.")
+    total = one_number(connection, "SELECT count(*) FROM then_records")
     temporary = folder.with_name(f".{folder.name}.{os.getpid()}.new")
     shutil.rmtree(temporary, ignore_errors=True)
     temporary.mkdir(parents=True)
-    notes: list[str] = []
     try:
-        if form == "cif":
-            kept = _write_cifs(connection, kept, temporary / "structures")
+        if form == "csv" or form == "parquet":
+            notes += _write_tables(connection, kept, temporary, form, as_of is None)
         else:
-            from .export_table import write_table
-
-            notes = write_table(connection, kept, temporary / f"structures.{form}", form)
+            kept = write_files(connection, kept, temporary, form)
         kept.write_csv(temporary / "kept.csv")
         aside.write_csv(temporary / "set_aside.csv")
+        done = ExportCounts(
+            len(kept),
+            len(aside),
+            tuple(notes),
+            selection.grade,
+            int(kept["held"].is_not_null().sum()),
+            total - len(kept) - len(aside),
+            dealt,
+        )
         about = {
             "made_by": f"lattice-census {__version__}",
             "made_at": datetime.now(UTC).isoformat(timespec="seconds"),
-            "grade": grade,
+            "grade": selection.grade,
+            "basis": selection.basis,
             "form": form,
-            "kept": len(kept),
-            "set_aside": len(aside),
+            "as_of_run": as_of,
+            "where": where,
+            "records": total,
+            "kept": done.kept,
+            "set_aside": done.set_aside,
+            "left_out": done.left_out,
+            "held": done.held,
+            "splits": {"fractions": fractions, "seed": seed, "records": dealt} if fractions else None,
             "store": dict(connection.execute("SELECT name, value FROM store_facts ORDER BY name").fetchall()),
             "settings": _settings(connection),
             "notes": notes,
@@ -104,12 +135,25 @@ def export(connection: duckdb.DuckDBPyConnection, folder: Path, grade: str, form
         temporary.replace(folder)
     finally:
         shutil.rmtree(temporary, ignore_errors=True)
-    return ExportCounts(len(kept), len(aside), tuple(notes))
+    return done
 
 
-def _frame(connection: duckdb.DuckDBPyConnection, sql: str, grade: str) -> pl.DataFrame:
-    frame: pl.DataFrame = connection.sql(sql, params=[grade]).pl()
-    return frame
+def _write_tables(
+    connection: duckdb.DuckDBPyConnection,
+    kept: pl.DataFrame,
+    folder: Path,
+    form: Literal["csv", "parquet"],
+    from_input: bool,
+) -> list[str]:
+    """One table, or one a split."""
+    from .export_table import write_table
+
+    if "dealt_split" not in kept.columns:
+        return write_table(connection, kept, folder / f"structures.{form}", form, from_input)
+    notes: list[str] = []
+    for (name,), rows in kept.group_by(["dealt_split"], maintain_order=True):
+        notes += write_table(connection, rows, folder / f"structures.{name}.{form}", form, from_input)
+    return list(dict.fromkeys(notes))
 
 
 def _settings(connection: duckdb.DuckDBPyConnection) -> dict[str, Any]:
@@ -117,34 +161,3 @@ def _settings(connection: duckdb.DuckDBPyConnection) -> dict[str, Any]:
         name: json.loads(value)
         for name, value in connection.execute("SELECT name, value FROM stage_settings ORDER BY name").fetchall()
     }
-
-
-def _write_cifs(connection: duckdb.DuckDBPyConnection, kept: pl.DataFrame, folder: Path) -> pl.DataFrame:
-    """One CIF a kept record; returns `kept` with the column `written_as`."""
-    folder.mkdir()
-    names = file_names(kept["label"].to_list(), kept["record_id"].to_list())
-    for start in range(0, len(kept), 2000):
-        part = kept.slice(start, 2000)
-        for record, name, structure in zip(
-            part.iter_rows(named=True), names[start : start + 2000], given_structures(connection, part), strict=True
-        ):
-            cell, species, positions = structure
-            extra = {
-                "_census_record_id": record["record_id"],
-                "_census_source": record["source"],
-                "_census_label": record["label"],
-            }
-            text = cif_text(cell, positions, species, name=record["label"], extra=extra)
-            (folder / name).write_text(text, encoding="utf-8")
-    return kept.with_columns(pl.Series("written_as", names, dtype=pl.String))
-
-
-def file_names(labels: list[str], record_ids: list[str], suffix: str = ".cif") -> list[str]:
-    """A safe, distinct file name for each label: letters, digits, `.`, `_`, `+`, `-`; with the id where two agree."""
-    safe = [re.sub(r"[^A-Za-z0-9._+-]+", "_", label).strip("._")[:80] or "record" for label in labels]
-    folded = [name.casefold() for name in safe]
-    used = Counter(folded)
-    return [
-        f"{name}{suffix}" if used[low] == 1 else f"{name}-{identity}{suffix}"
-        for name, low, identity in zip(safe, folded, record_ids, strict=True)
-    ]

@@ -24,28 +24,35 @@ JSON_LINE_LIMIT = 1 << 30
 OURS = (
     "record_id", "source", "label", "formula", "sites_given", "sites_primitive", "crystal_key",
     "volume_angstrom3_per_site", "energy_ev_per_site", "theory", "split", "group_size",
+    "held", "dealt_split",
 )  # fmt: skip
 
 
 def write_table(
-    connection: duckdb.DuckDBPyConnection, kept: pl.DataFrame, path: Path, form: Literal["csv", "parquet"]
+    connection: duckdb.DuckDBPyConnection,
+    kept: pl.DataFrame,
+    path: Path,
+    form: Literal["csv", "parquet"],
+    from_input: bool = True,
 ) -> list[str]:
     """Write the table of the kept records; returns sentences about rows that could not be taken from their input.
 
-    kept: rows of export.KEPT. A record of a CSV, Parquet or JSON-lines file whose bytes are still those that were read
-    keeps all its input columns as they stand there; any other record gets `label`, its properties, and `cif` written
-    from the store (the structure as it came).
+    kept: rows of selection.kept_rows; from_input: False where the records are wanted as they were earlier. A record of
+    a CSV, Parquet or JSON-lines file whose bytes are still those that were read keeps all its input columns as they
+    stand there; any other record gets `label`, its properties, and `cif` written from the store (the structure as it
+    came).
     """
     parts, notes = [], []
     for (source, file, reader), rows in kept.group_by(["source", "file", "reader"], maintain_order=True):
         original = None
-        if reader in _TABLES:
+        if reader in _TABLES and from_input:
             original, why = _original(connection, str(source), str(file), str(reader), rows)
             if original is None:
                 notes.append(f"{source}: {file} {why}; its records are written from the store.")
         if original is None:
             original = _from_store(connection, rows)
-        ours = rows.select(OURS).rename({name: f"census_{name}" for name in OURS})
+        present = [name for name in OURS if name in rows.columns]
+        ours = rows.select(present).rename({name: f"census_{name}" for name in present})
         parts.append(pl.concat([original, ours], how="horizontal"))
     table = pl.concat(parts, how="diagonal_relaxed") if parts else pl.DataFrame()
     if form == "csv":
@@ -106,14 +113,16 @@ def _from_store(connection: duckdb.DuckDBPyConnection, rows: pl.DataFrame) -> pl
     connection.register("wanted", rows.select("record_id").with_row_index("place").to_arrow())
     try:
         texts = connection.sql(
-            "SELECT r.properties FROM wanted w JOIN records r USING (record_id) ORDER BY w.place"
+            "SELECT r.properties FROM wanted w JOIN then_records r USING (record_id) ORDER BY w.place"
         ).fetchall()
     finally:
         connection.unregister("wanted")
     properties = [{k: _plain(v) for k, v in json.loads(text).items()} for (text,) in texts]
     cifs = [
         cif_text(cell, positions, species, name=label)
-        for label, (cell, species, positions) in zip(rows["label"], given_structures(connection, rows), strict=True)
+        for label, (cell, species, positions) in zip(
+            rows["label"], given_structures(connection, rows, "then_structures"), strict=True
+        )
     ]
     frame = pl.DataFrame({"label": rows["label"], "cif": pl.Series(cifs, dtype=pl.String)})
     if not any(properties):

@@ -10,14 +10,17 @@ import polars as pl
 
 
 def given_structures(
-    connection: duckdb.DuckDBPyConnection, records: pl.DataFrame
+    connection: duckdb.DuckDBPyConnection, records: pl.DataFrame, table: str = "structures"
 ) -> list[tuple[np.ndarray[Any, Any], list[str], np.ndarray[Any, Any]]]:
-    """(cell (3, 3) in angstrom, tokens, positions (n, 3) fractional) of each record, in order, as they came."""
+    """(cell (3, 3) in angstrom, tokens, positions (n, 3) fractional) of each record, in order, as they came.
+
+    table: one with the columns of `structures`.
+    """
     connection.register("wanted", records.select("record_id").with_row_index("place").to_arrow())
     try:
         rows = connection.sql(
             "SELECT s.cell_angstrom, s.species, s.positions_fractional "
-            "FROM wanted w JOIN structures s USING (record_id) ORDER BY w.place"
+            f"FROM wanted w JOIN {table} s USING (record_id) ORDER BY w.place"
         ).fetchall()
     finally:
         connection.unregister("wanted")
