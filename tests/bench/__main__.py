@@ -9,6 +9,11 @@ from pathlib import Path
 
 PARTS = {
     "ingest": "read, reduce and store of a table of structures",
+    "reduce": "canonical form",
+    "classify": "reduce, lattice type, space group once a distinct key, fingerprint",
+    "fingerprint": "distance distributions",
+    "verify": "comparing candidate pairs",
+    "group": "grouping one composition",
 }
 
 

@@ -48,3 +48,15 @@ def against(reference: float, seconds: dict[str, float], count: int) -> dict[str
         "us_per_structure": each * 1e6,
         "ratio_to_reference": each / reference,
     }
+
+
+def reference_numbers(batch: CrystalBatch, most: int = 300) -> list[int]:
+    """Space groups of the first `most` crystals by the reference."""
+    out = []
+    for i in range(min(most, len(batch))):
+        sites = batch.sites(i)
+        found = spglib.get_symmetry_dataset(
+            (batch.cells[i], batch.positions[sites], batch.species[sites] + 1), symprec=0.01
+        )
+        out.append(found.number if found is not None else 0)
+    return out
