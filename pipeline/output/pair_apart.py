@@ -1,9 +1,9 @@
 """What keeps two records apart: the first thing that rules a match out, with its number against the limit.
 
-The steps are those of the search, in its order: what a match requires outright (composition, periodicity, a common cell
-of equal numbers of sites), the bounds of grouping/candidates.py (volume, means, sorted columns, rows), a common
-lattice, and the shift. They are taken again in plain NumPy, for one pair, so that each has a number. Distances are
-compared by y = ln(d + c / (exp(s) - 1)), in which the bound reads |y_A - y_B| <= s.
+The steps are those of the search, in its order: what a match requires outright (pair_outright.py), the bounds of
+grouping/candidates.py (volume, means, sorted columns, rows), a common lattice, and the shift. The bounds are taken
+again in plain NumPy, for one pair, so that each has a number. Distances are compared by y = ln(d + c / (exp(s) - 1)),
+in which the bound reads |y_A - y_B| <= s.
 
 This module imports kernels: only `witness` needs it.
 """
@@ -11,8 +11,6 @@ This module imports kernels: only `witness` needs it.
 from __future__ import annotations
 
 import math
-from dataclasses import dataclass
-from typing import Any
 
 import numpy as np
 from numpy.typing import NDArray
@@ -21,8 +19,9 @@ from ..fingerprint.distributions import column_means
 from ..grouping.candidates import Search, mean_coordinates, start_search
 from ..grouping.preparation import SMALLEST_STRAIN, Prepared
 from ..grouping.window import Window, near_window
-from ..tolerances import MAX_SUPERCELL, Tolerances
+from ..tolerances import Tolerances
 from .pair_match import PairMatch, batch_of, match_of
+from .pair_outright import Apart, outright
 from .pair_sides import Side
 
 Floats = NDArray[np.float64]
@@ -40,76 +39,23 @@ LATTICE_REACH = 0.25
 """Strain up to which the nearest common lattice is looked for."""
 
 
-@dataclass(frozen=True, slots=True)
-class Apart:
-    """Why two records do not match in the store's window."""
-
-    cause: str
-    """composition, periodicity, sites, volume, means, columns, rows, lattice, or shift."""
-
-    message: str
-    """What was met, for a person, with its numbers."""
-
-    value: float | None
-    """The number that rules the match out; None where there is none."""
-
-    limit: float | None
-    """What it may be."""
-
-    closest: PairMatch | None
-    """The closest match in a wider window, if one was found."""
-
-    searched_shift: float | None
-    """Largest shift up to which it was looked for, angstrom; None where it was not."""
-
-    searched_strain: float | None
-
-    def as_json(self) -> dict[str, Any]:
-        """Ready for json.dumps."""
-        return {
-            "cause": self.cause,
-            "message": self.message,
-            "value": self.value,
-            "limit": self.limit,
-            "searched_shift_angstrom": self.searched_shift,
-            "searched_strain": self.searched_strain,
-            "closest": self.closest.as_json() if self.closest is not None else None,
-        }
-
-
 def what_keeps_apart(a: Side, b: Side, tolerances: Tolerances, mirror_images: str) -> Apart:
     """Why two records without a match in the window have none."""
-    outright = _outright(a, b)
-    if outright is not None:
-        return Apart(*outright, None, None, None, None, None)
+    without = outright(a, b)
+    if without is not None:
+        return without
     search = start_search(batch_of(a, b), near_window(tolerances))
-    cause, message, value, limit = _first_bound(a, b, search) or _lattice(search, a, b) or (None, "", None, None)
-    closest, shift, strain = _closest(a, b, tolerances, mirror_images)
-    if cause is None:
-        cause, limit = "shift", search.window.shift
-        if closest is None:
-            message = (
-                f"they have a common lattice, but no pairing of the sites shifts all of them by less than {limit:g} Å"
-            )
-        else:
-            value = closest.largest_shift
-            message = f"the smallest largest shift found is {value:.4f} Å; the window ends at {limit:g} Å"
-    return Apart(cause, message, value, limit, closest, shift, strain)
-
-
-def _outright(a: Side, b: Side) -> tuple[str, str] | None:
-    if a.composition != b.composition:
-        return "composition", f"the compositions differ: A is {a.composition}, B is {b.composition}"
-    if a.periodicity != b.periodicity:
-        return "periodicity", f"A is periodic in {a.periodicity} directions, B in {b.periodicity}"
-    n, m = len(a.tokens), len(b.tokens)
-    both = math.lcm(n, m)
-    if max(both // n, both // m) > MAX_SUPERCELL:
-        return "sites", (
-            f"the primitive cells hold {n} and {m} sites: a cell with equal numbers would be {both // n} and "
-            f"{both // m} of them, more than {MAX_SUPERCELL}"
-        )
-    return None
+    bound = _first_bound(a, b, search) or _lattice(search, a, b)
+    if bound is not None:
+        return Apart(*bound, *_closest(a, b, tolerances, mirror_images, strained=True))
+    # There is a common lattice: how far the sites are from each other on it.
+    closest, shift, strain = _closest(a, b, tolerances, mirror_images, strained=False)
+    limit = search.window.shift
+    if closest is None:
+        message = f"they have a common lattice, but no pairing that shifts no site by more than {shift or limit:g} Å"
+        return Apart("shift", message, None, limit, None, shift, strain)
+    message = f"the smallest largest shift is {closest.largest_shift:.4f} Å; the window ends at {limit:g} Å"
+    return Apart("shift", message, closest.largest_shift, limit, closest, shift, strain)
 
 
 Bound = tuple[str, str, float, float]
@@ -266,16 +212,16 @@ def nearest_lattice_strain(first: Floats, second: Floats, planar: bool = False) 
 
 
 def _closest(
-    a: Side, b: Side, t: Tolerances, mirror_images: str
+    a: Side, b: Side, t: Tolerances, mirror_images: str, strained: bool
 ) -> tuple[PairMatch | None, float | None, float | None]:
-    """The closest match in a wider window, and how far was looked."""
+    """The closest match in a window of wider shift, and of wider strain if `strained`; and how far was looked."""
     if max(len(a.tokens), len(b.tokens)) > MOST_SITES:
         return None, None, None
     usual = near_window(t)
     shift = strain = 0.0
     for factor in WIDER:
         shift = max(usual.shift, min(factor * usual.shift, WIDEST_SHIFT))
-        strain = max(usual.strain, min(factor * usual.strain, WIDEST_STRAIN))
+        strain = max(usual.strain, min(factor * usual.strain, WIDEST_STRAIN)) if strained else usual.strain
         window = Window((*usual.shifts[:2], shift), (*usual.strains[:2], strain))
         found = match_of(a, b, window, mirror_images, t.near_strain)
         if found is not None:

@@ -19,11 +19,11 @@ from ..grouping.reasons import REASONS
 from ..settings import Settings
 from ..store.stages import stored_settings
 from .cif import cif_text
+from .pair_outright import Apart, outright
 from .pair_sides import Side, side_of
 from .tables import safe, table_text
 
 if TYPE_CHECKING:
-    from .pair_apart import Apart
     from .pair_match import PairMatch
 
 CAUTION = "A grade is a geometric statement, not a magnetic or electronic one; structures are as good as their source."
@@ -91,20 +91,20 @@ def examine(
         raise UsageError(f"Both name the record {first}. Give two records.")
     a, b = side_of(connection, first), side_of(connection, second)
     settings = Settings.model_validate(stored_settings(connection))
-    if before is not None and a.composition == b.composition:
+    standing = _standing(connection, first, second)
+    without = outright(a, b)
+    if without is not None:
+        return Examined(a, b, settings, None, without, standing)
+    if before is not None:
         before()
     from ..grouping.window import near_window
     from .pair_apart import what_keeps_apart
     from .pair_match import match_of
 
     t = settings.tolerances
-    match = None
-    if a.composition == b.composition and a.periodicity == b.periodicity:
-        match = match_of(a, b, near_window(t), settings.mirror_images, t.near_strain)
-    standing = _standing(connection, first, second)
-    if match is not None:
-        return Examined(a, b, settings, match, None, standing)
-    return Examined(a, b, settings, None, what_keeps_apart(a, b, t, settings.mirror_images), standing)
+    match = match_of(a, b, near_window(t), settings.mirror_images, t.near_strain)
+    apart = what_keeps_apart(a, b, t, settings.mirror_images) if match is None else None
+    return Examined(a, b, settings, match, apart, standing)
 
 
 def _standing(connection: duckdb.DuckDBPyConnection, first: str, second: str) -> tuple[tuple[str, bool, bool], ...]:
