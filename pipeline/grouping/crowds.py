@@ -20,14 +20,22 @@ import numpy as np
 from scipy.spatial import cKDTree
 
 from ..fingerprint.distributions import Distributions
+from ..kernels.rows_filter import rows_close
 from ..model.batch import Ints, select
-from .candidates import Search, allowed_pairs, coordinates_agree, start_search
+from .candidates import Search, allowed_pairs, start_search
 from .graph import components
 from .pair_store import Limit, PairStore
 from .window import Window
 
 CHUNK = 512
 """Pairs between components that are verified before the components are looked at again."""
+
+
+NEAR_COLUMNS = 4
+"""Coordinates in which near ones are looked up: few, because a tree of many prunes nothing."""
+
+SPREAD_COLUMNS = 24
+"""Coordinates that are compared, those first that spread most; the rows are compared after them."""
 
 
 class Crowd:
@@ -45,22 +53,30 @@ class Crowd:
         sites = np.concatenate([np.arange(*search.prepared.batch.offsets[[i, i + 1]]) for i in crowded.tolist()])
         rows = Distributions(*(getattr(search.rows, f.name)[sites] for f in fields(Distributions)))
         self.limit = limit
-        self.crowded = crowded
-        self._place = {int(node): i for i, node in enumerate(crowded)}
         self._inner = start_search(batch, window, search.scales[crowded], rows)
-        self._points = self._inner.coordinates[:, self._inner.columns]
-        self._tree = cKDTree(self._points)
+        spread = np.ptp(self._inner.coordinates, axis=0)
+        widest = np.argsort(-spread, kind="stable")
+        # Places in the crowd are in the order of the coordinate that spreads most: a ball lies in an interval of it.
+        self._order = np.argsort(self._inner.coordinates[:, widest[0]], kind="stable")
+        ordered = self._inner.coordinates[self._order]
+        self._line = ordered[:, widest[0]]
+        self._near = ordered[:, widest[:NEAR_COLUMNS]]
+        self._points = np.ascontiguousarray(ordered[:, widest[:SPREAD_COLUMNS]], dtype=np.float32)
+        self.crowded = crowded[self._order]
+        self._place = {int(node): i for i, node in enumerate(self.crowded)}
 
     def _candidates(self, first: int, others: Ints) -> Ints:
-        """Candidate pairs of nodes: places in the crowd `first` with `others`."""
+        """Pairs of nodes, of place `first` with places `others`, that the rows cannot rule out."""
         pairs = np.stack([np.full(len(others), first), others], axis=1)
-        pairs = pairs[coordinates_agree(self._inner.coordinates, pairs, self._inner.slack)]
-        pairs = pairs[allowed_pairs(self._inner.prepared, pairs)[0]]
+        pairs = pairs[allowed_pairs(self._inner.prepared, self._order[pairs])[0]]
         return np.sort(self.crowded[pairs], axis=1)
 
     def _ball(self, place: int) -> Ints:
-        found = self._tree.query_ball_point(self._points[place], self._inner.slack, p=np.inf)
-        return np.sort(np.asarray(found, dtype=np.int64))
+        """Places whose coordinates all agree with those of a place."""
+        slack = self._inner.slack
+        start = int(np.searchsorted(self._line, self._line[place] - slack, side="left"))
+        stop = int(np.searchsorted(self._line, self._line[place] + slack, side="right"))
+        return rows_close(self._points, start, stop, place, slack + 1e-5)  # rounded to float32
 
     def partners(self, store: PairStore, node: int, free: Ints) -> Ints:
         """Crowded nodes among `free` (ascending) that match a crowded node; verified as far as needed."""
@@ -74,10 +90,11 @@ class Crowd:
         return store.neighbours(pairs, self.limit, node)
 
     def nearest(self, count: int) -> Ints:
-        """Pairs of each crowded node with its `count` nearest crowded nodes in the fingerprint."""
+        """Pairs of each crowded node with its `count` nearest crowded nodes in the coordinates that spread most."""
         if len(self.crowded) < 2:
             return np.zeros((0, 2), np.int64)
-        _, found = self._tree.query(self._points, k=min(count + 1, len(self.crowded)), p=np.inf)
+        tree = cKDTree(self._near)
+        _, found = tree.query(self._near, k=min(count + 1, len(self.crowded)), p=np.inf)
         pairs = np.stack([np.repeat(np.arange(len(found)), found.shape[1]), found.ravel()], axis=1)
         pairs = np.sort(self.crowded[pairs], axis=1)
         return np.unique(pairs[pairs[:, 0] < pairs[:, 1]], axis=0)
@@ -88,7 +105,7 @@ class Crowd:
         values, counts = np.unique(label[self.crowded], return_counts=True)
         largest = values[np.argmax(counts)]
         # Every pair between two components has an end outside the largest one.
-        for node in self.crowded[label[self.crowded] != largest].tolist():
+        for node in np.sort(self.crowded[label[self.crowded] != largest]).tolist():
             place = self._place[node]
             ball = self._ball(place)
             pairs = self._candidates(place, ball[label[self.crowded[ball]] != label[node]])

@@ -34,9 +34,8 @@ class PairStore:
     ) -> None:
         self.nodes = nodes
         self._verify = verify
-        self._codes = np.zeros(0, np.int64)
-        self._rows = np.zeros(0, np.int64)
-        self._columns: Verified | None = None
+        self._parts: list[Verified] = []
+        self._grades: dict[int, tuple[int, int]] = {}  # pair -> grade, proper grade
         self.together = self._code(together)
         self.apart = self._code(apart)
         self.computed = 0
@@ -48,25 +47,15 @@ class PairStore:
         return np.unique(pairs.min(axis=1) * self.nodes + pairs.max(axis=1))
 
     def _append(self, found: Verified) -> None:
-        start = 0 if self._columns is None else len(self._columns)
-        if self._columns is None:
-            self._columns = found
-        else:
-            self._columns = Verified(
-                **{
-                    f.name: np.concatenate([getattr(self._columns, f.name), getattr(found, f.name)])
-                    for f in fields(Verified)
-                }
-            )
-        codes = np.concatenate([self._codes, found.pairs[:, 0] * self.nodes + found.pairs[:, 1]])
-        rows = np.concatenate([self._rows, np.arange(start, start + len(found))])
-        order = np.argsort(codes, kind="stable")
-        self._codes, self._rows = codes[order], rows[order]
+        codes = (found.pairs[:, 0] * self.nodes + found.pairs[:, 1]).tolist()
+        grades = zip(found.grade.tolist(), found.proper_grade.tolist(), strict=True)
+        self._grades.update(zip(codes, grades, strict=True))
+        matched = found.take(found.grade < NO_MATCH)
+        if len(matched):
+            self._parts.append(matched)
 
     def ensure(self, pairs: Ints) -> None:
         """Verify those of the pairs (p, 2), first < second, that have not been."""
-        if not len(pairs):
-            return
         codes = np.unique(pairs[:, 0] * self.nodes + pairs[:, 1])
         codes = codes[~self.has(codes)]
         if len(codes):
@@ -75,17 +64,27 @@ class PairStore:
 
     def has(self, codes: Ints) -> NDArray[np.bool_]:
         """Which pairs, as first * nodes + second, have been verified."""
-        if not len(self._codes):
-            return np.zeros(len(codes), bool)
-        place = np.minimum(np.searchsorted(self._codes, codes), len(self._codes) - 1)
-        return np.asarray(self._codes[place] == codes)
+        return np.fromiter((c in self._grades for c in codes.tolist()), bool, len(codes))
+
+    def neighbours(self, pairs: Ints, limit: Limit, node: int) -> Ints:
+        """The other end of those of the verified pairs (p, 2) of `node` that are neighbours at a grade."""
+        codes = pairs[:, 0] * self.nodes + pairs[:, 1]
+        grade = np.array([self._grades[c][limit.separate] for c in codes.tolist()], dtype=np.int64)
+        good = pairs[(grade <= limit.grade) & ~np.isin(codes, self.apart)]
+        return np.asarray(good.sum(axis=1) - node, dtype=np.int64)
 
     def matches(self) -> Verified | None:
         """All verified pairs that match in the window, ascending by pair."""
-        if self._columns is None:
+        if not self._parts:
             return None
-        ordered = self._columns.take(self._rows)
-        return ordered.take(ordered.grade < NO_MATCH)
+        if len(self._parts) > 1:
+            self._parts = [
+                Verified(
+                    **{f.name: np.concatenate([getattr(p, f.name) for p in self._parts]) for f in fields(Verified)}
+                )
+            ]
+        found = self._parts[0]
+        return found.take(np.argsort(found.pairs[:, 0] * self.nodes + found.pairs[:, 1], kind="stable"))
 
     def edges(self, limit: Limit) -> tuple[Ints, Floats, Floats, Floats]:
         """Pairs (e, 2) that are neighbours at a grade, with shift, strain and t = max(shift / limit, strain / limit).
@@ -111,13 +110,3 @@ class PairStore:
         shift, strain = np.concatenate([shift[keep], unmeasured]), np.concatenate([strain[keep], unmeasured])
         t = np.fmax(shift / limit.shift, strain / limit.strain)
         return pairs, shift, strain, np.where(np.isnan(t), np.inf, t)
-
-    def neighbours(self, pairs: Ints, limit: Limit, node: int) -> Ints:
-        """The other end of those of the verified pairs (p, 2) of `node` that are neighbours at a grade."""
-        if self._columns is None:
-            raise ValueError("nothing has been verified")
-        codes = pairs[:, 0] * self.nodes + pairs[:, 1]
-        rows = self._rows[np.searchsorted(self._codes, codes)]
-        grade = (self._columns.proper_grade if limit.separate else self._columns.grade)[rows]
-        good = pairs[(grade <= limit.grade) & ~np.isin(codes, self.apart)]
-        return np.asarray(good.sum(axis=1) - node, dtype=np.int64)

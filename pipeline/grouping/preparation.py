@@ -54,6 +54,9 @@ class Prepared:
     volumes: Floats
     """(n,): cubic angstrom per site, after scaling."""
 
+    given_volumes: Floats
+    """(n,): ln of the cubic angstrom per site, as the crystals came."""
+
     rank: Ints
     """(n,): place in the order of content; equal content has equal rank. Every pair is computed from the lower one."""
 
@@ -194,6 +197,7 @@ def prepare(
         transform(found.grouped[order] * factor[owner][:, None], window.shift, window.strain),
         np.ascontiguousarray(found.counts[order]),
         np.abs(np.linalg.det(cells)) / sizes,
+        np.log(batch.volumes / sizes),
         content_ranks(batch),
     )
 

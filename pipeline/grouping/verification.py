@@ -136,8 +136,7 @@ def _columns(
     t = turned[:, None, None]
     back = -shift
     back -= np.floor(back + 5e-10)
-    batch = prepared.batch
-    per_site = np.log(batch.volumes / np.diff(batch.offsets))
+    per_site = prepared.given_volumes
     difference = per_site[pairs[:, 1]] - per_site[pairs[:, 0]]
     return Verified(
         pairs=pairs,

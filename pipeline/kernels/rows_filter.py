@@ -138,8 +138,26 @@ def coordinates_close(coordinates: NDArray[np.float64], pairs: Ints, slack: floa
     return out
 
 
+@kernel
+def rows_close(coordinates: Singles, start: int, stop: int, row: int, slack: float) -> Ints:
+    """The rows from start to stop that agree with `row` to the slack in every column, ascending."""
+    out = np.empty(stop - start, np.int64)
+    used = 0
+    for i in range(start, stop):
+        close = True
+        for t in range(coordinates.shape[1]):
+            if abs(coordinates[i, t] - coordinates[row, t]) > slack:
+                close = False
+                break
+        if close:
+            out[used] = i
+            used += 1
+    return out[:used]
+
+
 def warm_up() -> None:
     """Compile the kernels that are called from Python."""
     rows, blocks, pairs = np.zeros((1, 4), np.float32), np.array([[0, 1]]), np.zeros((1, 2), np.int64)
     pairs_allowed(pairs, blocks, rows, sort_columns(rows, blocks), rows.copy(), np.array([[4]]), 0.1)
     coordinates_close(np.zeros((1, 2)), pairs, 0.1)
+    rows_close(np.zeros((1, 2), np.float32), 0, 1, 0, 0.1)
