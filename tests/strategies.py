@@ -10,6 +10,7 @@ import itertools
 from functools import cache
 
 import numpy as np
+
 from lattice_census.demo.disguises import Crystal, hermite_matrices, mirror, rotation, supercell, unimodular
 from lattice_census.demo.structure_types import structure_types
 from lattice_census.model.batch import CrystalBatch, batch_from_lists
@@ -77,7 +78,7 @@ def random_crystal(
     rng: np.random.Generator, lattice_type: str = "aP", sites: int = 4, elements: tuple[str, ...] = ("Si", "O"),
     apart: float = 1.2,
 ) -> Crystal:
-    """A crystal of random sites on a random primitive lattice of the type: the lattice has the symmetry, the basis none.
+    """A crystal of random sites on a random primitive lattice of the type: the basis has no symmetry.
 
     The cell is scaled up where it is too small for its sites.
     """
