@@ -40,7 +40,8 @@ TABLES: dict[str, Table] = {
         (
             "name",
             "VARCHAR",
-            "store_id (made once), publication (counts up with every publication), recomputing (plan of an unfinished one).",
+            "store_id (made once), publication (counts up with every publication), recomputing (plan of an "
+            "unfinished one).",
         ),
         ("value", "VARCHAR", "The value as text."),
     ),
@@ -181,7 +182,8 @@ TABLES: dict[str, Table] = {
         ("pseudo_matrix", "INTEGER[9]", "Integer matrix: reduced cell = pseudo_matrix . approximate primitive cell."),
     ),
     "crystal_types": _table(
-        "One row a distinct key: types of the lattice and of the crystal, computed from its record with the smallest id.",
+        "One row a distinct key: types of the lattice and of the crystal, computed from its record with the "
+        "smallest id.",
         ("crystal_key", "VARCHAR", "The key."),
         ("typed_record_id", "VARCHAR", "The record that the types were computed from."),
         ("lattice_type", "VARCHAR", "Type of the lattice alone (IUCr symbol; layers mp op oc tp hp)."),
