@@ -178,6 +178,17 @@ def test_every_published_state_passes(tmp_path: Path):
     assert broken(store) == {}  # mirror images kept apart
 
 
+def test_pins_against_the_geometry_pass(tmp_path: Path, healthy: Path):
+    shutil.copy(healthy, tmp_path / "census.duckdb")
+    for kind, *pair in (("apart", "k1", "k2"), ("apart", "n1", "n2"), ("together", "w1", "w2")):
+        done = census("pin", kind, *(f"in:{label}" for label in pair), "--reason", "a test", cwd=tmp_path)
+        assert done.returncode == 0, done.stderr
+    store = tmp_path / "census.duckdb"
+    labels = "SELECT count(DISTINCT group_id) FROM members WHERE grade = 'near' AND label IN (?, ?)"
+    assert [query(store, labels, f"{x}1", f"{x}2") for x in "knw"] == [[(2,)], [(2,)], [(1,)]]
+    assert broken(store) == {}
+
+
 def test_the_command(tmp_path: Path, healthy: Path):
     shutil.copy(healthy, tmp_path / "census.duckdb")
     done = census("check", cwd=tmp_path)

@@ -140,8 +140,9 @@ def _standing_line(found: Examined) -> str:
 
 def _side_line(name: str, side: Side) -> str:
     kind = "" if side.periodicity == 3 else ", layer"
+    given = f"{len(side.given_tokens)} site{'' if len(side.given_tokens) == 1 else 's'} given"
     return (
-        f"{name}  {safe(side.name)}  {side.record_id}  {side.formula}, {len(side.given_tokens)} sites given, "
+        f"{name}  {safe(side.name)}  {side.record_id}  {side.formula}, {given}, "
         f"{len(side.tokens)} primitive{kind}, {side.volume_per_site:.4f} Å3/site, file {safe(side.file)}"
     )
 
@@ -194,7 +195,8 @@ def _measures(found: Examined, match: PairMatch) -> list[str]:
 
 
 def _numbers(values: Any, form: str) -> str:
-    return " ".join(format(v, form) for v in np.asarray(values).tolist())
+    shown = [format(v, form) for v in np.asarray(values).tolist()]
+    return " ".join(s.removeprefix("-") if not s.strip("-0.") else s for s in shown)  # no negative zero
 
 
 def _matrix(rows: Any, form: str) -> str:
