@@ -12,11 +12,11 @@ from lattice_census.errors import UsageError
 from lattice_census.ingest.progress import call_directly
 from lattice_census.ingest.scan import IngestRequest
 from lattice_census.output.export import export
-from lattice_census.output.status import status
 from lattice_census.settings import resolve_settings
 from lattice_census.store.connect import open_for_reading
 
-from .ingest import IngestJob, ingest
+from .group import night
+from .ingest import IngestJob
 from .progress import progress_for
 
 
@@ -44,24 +44,25 @@ def run_demo(folder: Path, direct: bool, workers: int | None, quiet: bool) -> in
     job = IngestJob(store, IngestRequest(sources_of(collection)), settings)
     with progress_for(quiet) as progress:
         if settings.orchestrator == "direct":
-            counts = ingest(job, call_directly, progress, "demo")
+            counts = night(job, call_directly, progress)
         else:
             from .orchestrate import run_as_flow, task_step
 
-            counts = run_as_flow("demo", lambda: ingest(job, task_step, progress, "demo"))
+            counts = run_as_flow("demo", lambda: night(job, task_step, progress))
+    read, grouped = counts["ingest"], counts["group"]
     typer.echo(
-        f"Read {counts['found']} records: {counts['accepted']} accepted, "
-        f"{counts['rejected']} refused with a reason each."
+        f"Read {read['found']} records: {read['accepted']} accepted, {read['rejected']} refused with a reason each."
     )
+    typer.echo(
+        f"Compared {grouped['compared']:,} pairs site by site: {grouped['families']['near']} families and "
+        f"{grouped['groups']['near']} groups at grade near."
+    )
+    typer.echo("Findings: " + ", ".join(f"{code} {number}" for code, number in grouped["findings"].items()) + ".")
 
     clean = folder / "clean"
     connection = open_for_reading(store)
     try:
-        for found in status(connection)["groups"]:
-            typer.echo(
-                f"Grade {found['grade']}: {found['groups']} groups, {found['set_aside']} records repeat another."
-            )
-        exported = export(connection, clean, "key", "cif")
+        exported = export(connection, clean)
     finally:
         connection.close()
     typer.echo(f"Exported {clean}: {exported.kept} structures, and set_aside.csv with {exported.set_aside} rows.")

@@ -249,8 +249,31 @@ def test_pairs_reach_the_grade_that_the_manifest_gives(demo: tuple[Path, Manifes
 def test_the_command_leaves_what_it_says(demo: tuple[Path, Manifest]) -> None:
     folder = demo[0]
     assert {p.name for p in folder.iterdir()} >= {"collection", "manifest.json", "demo.toml", "census.duckdb", "clean"}
-    kept = query(folder / "census.duckdb", "SELECT count(*) FROM members WHERE grade = 'key' AND kept")[0][0]
-    assert len(list((folder / "clean/structures").glob("*.cif"))) == kept
+    store = folder / "census.duckdb"
+    (aside,) = query(store, "SELECT count(DISTINCT record_id) FROM decisions_in_force WHERE grade = 'near'")[0]
+    assert aside > 300
+    assert len(list((folder / "clean/structures").glob("*.cif"))) == len(demo[1].accepted()) - aside
+
+
+def test_the_store_groups_the_demo_as_it_was_made(demo: tuple[Path, Manifest]) -> None:
+    """Records of one crystal (no near miss, no other volume) are one near family; two crystals never are."""
+    rows = query(
+        demo[0] / "census.duckdb",
+        "SELECT r.source, r.file, r.label, m.family_id FROM members m JOIN records r USING (record_id) "
+        "WHERE m.grade = 'near'",
+    )
+    family = {(source, file, label): name for source, file, label, name in rows}
+    named = {f"{source}:{label}": name for (source, _, label), name in family.items()}
+    crystals: dict[str, set[str]] = {}
+    for record in demo[1].accepted():
+        crystals.setdefault(family[place(record)], set()).add(str(record.crystal))
+        if record.same_as is not None and record.grade != "rescaled":
+            assert family[place(record)] == named[record.same_as], record
+    hands = [{*pair} for pair in demo[1].mirror_images.items()]
+    mixed = [names for names in crystals.values() if len(names) > 1]
+    assert all(any(names <= pair for pair in hands) or len(names) == 1 for names in mixed), mixed[:5]
+    leaks = query(demo[0] / "census.duckdb", "SELECT count(*) FROM findings WHERE code = 'leak'")[0][0]
+    assert leaks == len(demo[1].leaks)
 
 
 def test_the_command_refuses_a_folder_that_is_not_empty(tmp_path: Path) -> None:
