@@ -15,7 +15,7 @@ import typer
 from lattice_census import __version__
 from lattice_census.errors import CensusError
 
-from . import asking, curating, proving, reading, writing
+from . import asking, comparing, curating, proving, reading, writing
 
 app = typer.Typer(
     name="lattice-census",
@@ -47,6 +47,7 @@ _WRONG_WORDS: type[Exception] = typer.BadParameter.__bases__[0]
 
 writing.register(app)
 curating.register(app)
+comparing.register(app)
 reading.register(app)
 asking.register(app)
 proving.register(app)

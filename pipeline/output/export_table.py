@@ -14,6 +14,7 @@ import polars as pl
 from ..model.refusals import Refusal
 from ..readers.detect import COMPRESSIONS
 from ..readers.jsonl import objects_of
+from ..readers.tables import STRUCTURE_COLUMNS
 from ..store.rows import one_row
 from .cif import cif_text
 from .structures import given_structures
@@ -55,11 +56,39 @@ def write_table(
         ours = rows.select(present).rename({name: f"census_{name}" for name in present})
         parts.append(pl.concat([original, ours], how="horizontal"))
     table = pl.concat(parts, how="diagonal_relaxed") if parts else pl.DataFrame()
+    if parts:
+        ordered = pl.concat([rows for _, rows in kept.group_by(["source", "file", "reader"], maintain_order=True)])
+        table = _with_every_structure(connection, table, ordered)
     if form == "csv":
         table.write_csv(path)
     else:
         table.write_parquet(path)
     return notes
+
+
+def _with_every_structure(
+    connection: duckdb.DuckDBPyConnection, table: pl.DataFrame, rows: pl.DataFrame
+) -> pl.DataFrame:
+    """The table with a structure text in every row of one column, as a reader of tables looks for it.
+
+    Inputs that keep their structures in columns of different names leave gaps in each: those of `cif` are filled from
+    the store.
+    """
+    column = next((name for name in STRUCTURE_COLUMNS if name in table.columns), None)
+    if column is not None and table[column].null_count() == 0:
+        return table
+    if "cif" not in table.columns:
+        table = table.with_columns(pl.lit(None, pl.String).alias("cif"))
+    gaps = rows.filter(table["cif"].is_null())
+    texts = [
+        cif_text(cell, positions, species, name=label)
+        for label, (cell, species, positions) in zip(
+            gaps["label"], given_structures(connection, gaps, "then_structures"), strict=True
+        )
+    ]
+    filled = dict(zip(gaps["record_id"], texts, strict=True))
+    here = [filled.get(record) for record in rows["record_id"]]
+    return table.with_columns(pl.coalesce("cif", pl.Series(here, dtype=pl.String)))
 
 
 def _original(

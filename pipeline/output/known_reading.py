@@ -1,0 +1,79 @@
+"""New structures of any format, read and brought to their canonical form beside the store, without touching it."""
+
+from __future__ import annotations
+
+from collections.abc import Callable, Iterator, Sequence
+from pathlib import Path
+
+import polars as pl
+
+from ..errors import UsageError
+from ..ingest.pool import WorkerPool
+from ..ingest.progress import Progress
+from ..ingest.reduce import ReduceJob, accepted_part, reduce_chunk, rejects_part
+from ..ingest.scan import FileToRead, SourceToRead
+from ..ingest.split import raw_chunks
+from ..readers.walk import walk
+from ..settings import Settings, SourceSettings
+
+ACCEPTED = (
+    "file", "position", "label", "content_hash", "crystal_key", "composition", "formula", "volume_angstrom3_per_site",
+    "cell_angstrom", "species", "positions_fractional", "periodicity",
+)  # fmt: skip
+REFUSED = ("file", "position", "label", "reason", "message")
+
+
+def read_new(
+    paths: Sequence[Path],
+    settings: Settings,
+    of_source: Callable[[str], SourceSettings],
+    pool: WorkerPool,
+    folder: Path,
+    progress: Progress,
+) -> tuple[pl.DataFrame, pl.DataFrame]:
+    """The accepted (columns ACCEPTED) and the refused (columns REFUSED) records of files or folders.
+
+    of_source: where the tables of a path keep what, by the path's name. folder: an empty one for parts on their way.
+    Raises UsageError for a path that is not there.
+    """
+    progress.start("reading", None)
+    accepted, refused = [], []
+    for job, records in pool.ordered_results(reduce_chunk, _jobs(paths, settings, of_source, folder)):
+        part = pl.read_parquet(accepted_part(job.part))
+        if len(part):
+            accepted.append(part.select(ACCEPTED))
+        refused.append(pl.read_parquet(rejects_part(job.part)).select(REFUSED))
+        for path in (job.raw, accepted_part(job.part), rejects_part(job.part)):
+            path.unlink()
+        progress.advance(records)
+    return (
+        pl.concat(accepted) if accepted else pl.DataFrame(),
+        pl.concat(refused) if refused else pl.DataFrame(schema=dict.fromkeys(REFUSED, pl.String)),
+    )
+
+
+def _jobs(
+    paths: Sequence[Path], settings: Settings, of_source: Callable[[str], SourceSettings], folder: Path
+) -> Iterator[ReduceJob]:
+    number = 0
+    for path in paths:
+        if not path.exists():
+            raise UsageError(f"There is no file or folder {path}.")
+        root = path.resolve()
+        name = path.name or root.name
+        told = of_source(name)
+        prefix = f"{name}/" if root.is_dir() else ""
+        for relative, place in walk(root):
+            try:
+                size, mark = place.stat().st_size, ""
+            except OSError as error:
+                size, mark = 0, f"unreadable: {error.strerror}"
+            file = FileToRead(prefix + relative, place, mark, size, True)
+            kind = "folder" if root.is_dir() else "file"
+            source = SourceToRead(name, root, kind, told, (file,), (), True)
+            for chunk in raw_chunks(source, settings):
+                part = folder / f"new-{number}"
+                raw = part.with_name(part.name + ".raw.parquet")
+                chunk.records.write_parquet(raw, compression="lz4")
+                yield ReduceJob(number, raw, part, settings, told)
+                number += 1
