@@ -69,7 +69,25 @@ class KeepPlan:
 
 def default_grade(connection: duckdb.DuckDBPyConnection) -> str:
     """`near` where it was computed, else `key`. Read-only."""
-    return "near" if one_row(connection, "SELECT 1 FROM members WHERE grade = 'near' LIMIT 1") else "key"
+    return "near" if has_grade(connection, "near") else "key"
+
+
+def has_grade(connection: duckdb.DuckDBPyConnection, grade: str) -> bool:
+    """True where groups of the grade were computed, also where they wait to be computed anew. Read-only."""
+    found = one_row(
+        connection,
+        "SELECT 1 FROM (SELECT grade FROM members UNION ALL SELECT grade FROM outdated_members) WHERE grade = ? LIMIT 1",
+        [grade],
+    )
+    return found is not None
+
+
+def require_grade(connection: duckdb.DuckDBPyConnection, grade: str) -> None:
+    """UsageError naming the grades there are, unless groups of the grade were computed. Read-only."""
+    if not has_grade(connection, grade):
+        rows = connection.execute("SELECT DISTINCT grade FROM members ORDER BY grade").fetchall()
+        grades = ", ".join(g for (g,) in rows) or "none"
+        raise UsageError(f"The store has no groups of grade {grade!r}; it has: {grades}.")
 
 
 def plan_keep(
@@ -79,9 +97,7 @@ def plan_keep(
 
     again: ids of held records that may be decided again. Raises UsageError where the store has no groups of the grade.
     """
-    if not one_row(connection, "SELECT 1 FROM members WHERE grade = ? LIMIT 1", [grade]):
-        grades = [g for (g,) in connection.execute("SELECT DISTINCT grade FROM members ORDER BY grade").fetchall()]
-        raise UsageError(f"The store has no groups of grade {grade!r}; it has: {', '.join(grades) or 'none'}.")
+    require_grade(connection, grade)
     rank_records(connection, settings)
     free = (
         "m.group_id NOT IN (SELECT group_id FROM holds WHERE grade = $grade AND group_id IS NOT NULL) AND (m.record_id "

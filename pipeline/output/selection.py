@@ -13,7 +13,7 @@ import duckdb
 import numpy as np
 import polars as pl
 
-from ..decisions.ledger import SET_ASIDE_REASONS, default_grade
+from ..decisions.ledger import SET_ASIDE_REASONS, default_grade, require_grade
 from ..errors import UsageError
 from ..model.batch import batch_from_lists
 from ..model.species import formulas_of
@@ -34,9 +34,7 @@ class Selection:
 def select_records(connection: duckdb.DuckDBPyConnection, grade: str | None, as_of: int | None) -> Selection:
     """Make the temporary tables of what takes part and what is set aside. Raises UsageError (no such grade or run)."""
     grade = grade or default_grade(connection)
-    if not one_row(connection, "SELECT 1 FROM members WHERE grade = ? LIMIT 1", [grade]):
-        grades = [g for (g,) in connection.execute("SELECT DISTINCT grade FROM members ORDER BY grade").fetchall()]
-        raise UsageError(f"The store has no groups of grade {grade!r}; it has: {', '.join(grades) or 'none'}.")
+    require_grade(connection, grade)
     if as_of is None:
         _records_now(connection)
     else:
