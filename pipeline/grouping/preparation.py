@@ -15,7 +15,7 @@ from numpy.typing import NDArray
 
 from ..fingerprint.distributions import Distributions, distributions
 from ..kernels.lattice_maps import reduced_bases
-from ..kernels.match import Crystals
+from ..kernels.match_columns import Crystals
 from ..kernels.near_translations import COMMON_ORDER, all_near_translations
 from ..kernels.rows_filter import sort_columns
 from ..model.batch import CrystalBatch, Floats, Ints

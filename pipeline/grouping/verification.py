@@ -16,7 +16,8 @@ from dataclasses import dataclass, fields
 import numpy as np
 from numpy.typing import NDArray
 
-from ..kernels.match import Matches, match_pairs
+from ..kernels.match import match_pairs
+from ..kernels.match_columns import Matches
 from ..model.batch import CrystalBatch, Floats, Ints
 from ..tolerances import Tolerances
 from .preparation import Prepared, prepare

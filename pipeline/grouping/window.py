@@ -12,7 +12,7 @@ from dataclasses import dataclass
 
 import numpy as np
 
-from ..kernels.match import Limits
+from ..kernels.match_columns import Limits
 from ..tolerances import Tolerances
 
 

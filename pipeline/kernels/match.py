@@ -17,7 +17,6 @@ the limit, and the limit is applied after the mean is removed.
 from __future__ import annotations
 
 import math
-from typing import NamedTuple
 
 import numpy as np
 from numpy.typing import NDArray
@@ -25,94 +24,15 @@ from numpy.typing import NDArray
 from .compiled import inner, kernel
 from .hermite import hermite, multiples_in
 from .lattice_maps import adjugate3, determinant3, inverse3, lattice_maps, product3
-from .pairing import bottleneck_pairing, length2, nearest_pairing
-
-Floats = NDArray[np.float64]
-Ints = NDArray[np.int64]
-
-UNIT = 1e-9
-"""Shifts and strains are compared after rounding to this (angstrom; dimensionless)."""
+from .match_columns import Crystals, Floats, Ints, Limits, Matches
+from .paired_sites import UNIT, images_of, mean_metric, pair_up
+from .pairing import length2
 
 KEY = 24
 """Length of the integers that order matches: grade, shift, strain, P, Q, origin shift."""
 
 PINS = 12
 """At most so many sites of the rarest species are tried as the pinned one."""
-
-
-class Crystals(NamedTuple):
-    """Crystals ready to be matched; sites sorted by species within each crystal."""
-
-    cells: Floats
-    """(n, 3, 3), angstrom, rows."""
-
-    offsets: Ints
-    """(n + 1,)"""
-
-    positions: Floats
-    """(m, 3), fractional."""
-
-    blocks: Ints
-    """(n, kinds + 1): where the sites of each species begin, counted over the batch."""
-
-    rows: NDArray[np.float32]
-    """(m, k): ln(d + c / (exp(s) - 1)) of the distances of each site (grouping/candidates.py)."""
-
-    slack: float
-    """Two rows of a pair within the window differ by at most this in every column."""
-
-    planar: NDArray[np.bool_]
-    """(n,)"""
-
-    clear: Floats
-    """(n,): the smaller of the least distance of equal species and the least height of the cell, angstrom."""
-
-    variants: Ints
-    """(n + 1,): where the variants of each crystal begin; the first of each is the crystal's own lattice."""
-
-    bases: Floats
-    """(v, 3, 3): reduced basis of each variant's lattice, in the frame of `cells`."""
-
-    matrices: Ints
-    """(v, 3, 3): cell = matrix @ basis."""
-
-    orders: Ints
-    """(v,): |det| of the matrix."""
-
-    moved: Floats
-    """(v,): the largest displacement of a site under a translation of the variant, angstrom."""
-
-
-class Limits(NamedTuple):
-    """Limits of a search, from the strictest: `same`, `near`, the window. Shifts in angstrom."""
-
-    shifts: Floats
-    """(3,)"""
-
-    strains: Floats
-    """(3,)"""
-
-
-class Matches(NamedTuple):
-    """Best proper (column 0) and best improper (column 1) match of each pair, first crystal to second.
-
-    The improper one is given only where it beats the proper one.
-    """
-
-    grade: Ints
-    """(p, 2): 0 within `same`, 1 within `near`, 2 within the window, 3 none."""
-
-    measures: Floats
-    """(p, 2, 2): largest shift, root mean square shift; NaN where there is no match."""
-
-    p: Ints
-    """(p, 2, 3, 3): P of the first crystal's cell."""
-
-    q: Ints
-    """(p, 2, 3, 3): Q of the second crystal's cell."""
-
-    shift: Floats
-    """(p, 2, 3): fractions of the common cell: site of the first + shift = site of the second, up to its own shift."""
 
 
 @inner
@@ -176,132 +96,6 @@ def _cap(best: Ints, map_class: int, shifts: Floats) -> float:
     if map_class < best[0]:
         cap = max(cap, shifts[best[0] - 1])
     return cap
-
-
-@inner
-def mean_metric(cell_a: Floats, cell_b: Floats, w: Floats) -> Floats:
-    """(G_A + G_B) / 2 of matched cells, for vectors in fractions of cell_b; w takes fractions of cell_a to those."""
-    image = product3(inverse3(w), cell_a)
-    g = np.empty((3, 3))
-    for i in range(3):
-        for j in range(3):
-            total = 0.0
-            for k in range(3):
-                total += image[i, k] * image[j, k] + cell_b[i, k] * cell_b[j, k]
-            g[i, j] = 0.5 * total
-    return g
-
-
-@inner
-def images_of(c: Crystals, a: int, p: Ints, w: Floats) -> tuple[Floats, Ints]:
-    """Sites of crystal `a` in its cell p @ cell, in fractions of the other cell, and where its species begin.
-
-    Site i in coset j (hermite.py) of p is row i |det p| + j.
-    """
-    h = hermite(p)
-    index = h[0, 0] * h[1, 1] * h[2, 2]
-    first = c.offsets[a]
-    count = c.offsets[a + 1] - first
-    out = np.empty((count * index, 3))
-    k = 0
-    for i in range(first, first + count):
-        for n0 in range(h[0, 0]):
-            for n1 in range(h[1, 1]):
-                for n2 in range(h[2, 2]):
-                    x, y, z = c.positions[i, 0] + n0, c.positions[i, 1] + n1, c.positions[i, 2] + n2
-                    for m in range(3):
-                        out[k, m] = x * w[0, m] + y * w[1, m] + z * w[2, m]
-                    k += 1
-    kinds = c.blocks.shape[1]
-    blocks = np.empty(kinds, np.int64)
-    for s in range(kinds):
-        blocks[s] = (c.blocks[a, s] - first) * index
-    return out, blocks
-
-
-@inner
-def pair_up(
-    c: Crystals,
-    a: int,
-    b: int,
-    unambiguous: bool,
-    targets: Floats,
-    target_blocks: Ints,
-    g: Floats,
-    s: Floats,
-    limit: float,
-    cap: float,
-    common: Ints,
-    partner: Ints,
-    images: Ints,
-    d: Floats,
-) -> float:
-    """Pair the sites for origin shift `s` (fractions of b's cell), take the mean out, return the largest shift.
-
-    Negative when a site finds no partner within `limit` or the result is above `cap`. `s` is changed to the shift with
-    the mean taken in, d and partner belong to it. Where the pairing is ambiguous it is taken again at the new origin
-    until it stays as it is.
-    """
-    count = targets.shape[0]
-    largest2 = -1.0
-    reach = limit
-    previous = np.empty((0, 4), np.int64)
-    for _ in range(1 if unambiguous else 20):
-        if unambiguous:
-            ok = nearest_pairing(
-                targets, target_blocks, c.positions, c.blocks[b], g, s[0], s[1], s[2], reach * reach, partner, images, d
-            )
-        else:
-            first = c.offsets[b]
-            ok = bottleneck_pairing(
-                targets,
-                target_blocks,
-                c.positions[first : c.offsets[b + 1]],
-                c.blocks[b] - first,
-                g,
-                s[0],
-                s[1],
-                s[2],
-                reach * reach,
-                common,
-                partner,
-                images,
-                d,
-            )
-            if ok:
-                for t in range(count):
-                    partner[t] += first
-        if not ok:
-            return -1.0
-        x, y, z = 0.0, 0.0, 0.0
-        for t in range(count):
-            x, y, z = x + d[t, 0], y + d[t, 1], z + d[t, 2]
-        x, y, z = x / count, y / count, z / count
-        s[0], s[1], s[2] = s[0] + x, s[1] + y, s[2] + z
-        largest2 = 0.0
-        for t in range(count):
-            d[t, 0], d[t, 1], d[t, 2] = d[t, 0] - x, d[t, 1] - y, d[t, 2] - z
-            largest2 = max(largest2, length2(g, d[t, 0], d[t, 1], d[t, 2]))
-        if unambiguous:
-            break
-        same = previous.shape[0] == count
-        if same:
-            for t in range(count):
-                if previous[t, 0] != partner[t]:
-                    same = False
-                for m in range(3):
-                    if previous[t, m + 1] != images[t, m]:
-                        same = False
-        if same:
-            break
-        previous = np.empty((count, 4), np.int64)
-        for t in range(count):
-            previous[t, 0] = partner[t]
-            for m in range(3):
-                previous[t, m + 1] = images[t, m]
-        reach = math.sqrt(largest2) + UNIT
-    largest = math.sqrt(largest2)
-    return largest if largest <= cap + UNIT else -1.0
 
 
 @inner

@@ -9,7 +9,9 @@ from numpy.typing import NDArray
 from .compiled import kernel
 from .hermite import coset_index, hermite
 from .lattice_maps import inverse3, product3
-from .match import Crystals, float_of, images_of, mean_metric, one_site, pair_up
+from .match import float_of, one_site
+from .match_columns import Crystals
+from .paired_sites import images_of, mean_metric, pair_up
 
 Floats = NDArray[np.float64]
 Ints = NDArray[np.int64]
