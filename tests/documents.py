@@ -77,7 +77,7 @@ def modules() -> str:
         for path in sorted((ROOT / folder).rglob("*.py")):
             if path.name != "__init__.py":
                 text = " ".join((ast.get_docstring(ast.parse(path.read_text(encoding="utf-8"))) or "").split())
-                first = re.split(r"(?<=[.:;]) ", text, maxsplit=1)[0].rstrip(".:;")
+                first = re.split(r"(?<=[.]) ", text, maxsplit=1)[0].rstrip(".")
                 lines.append(f"- `{path.relative_to(ROOT).as_posix()}`: {first}.")
     return "\n".join(lines)
 
