@@ -41,6 +41,14 @@ def _status_text(facts: dict[str, Any]) -> str:
             f"grade {group['grade']}: {group['groups']:,} groups, {group['set_aside']:,} records set aside, "
             f"the largest group holds {group['largest']:,}"
         )
+    for grade, count in facts["decisions"].items():
+        lines.append(f"decided at grade {grade}: {count:,} records set aside")
+    if facts["held"]:
+        lines.append("held: " + ", ".join(f"{reason} {n:,}" for reason, n in facts["held"].items()))
+    if facts["pins"]:
+        lines.append(f"pins: {facts['pins']:,}")
+    if facts["findings"]:
+        lines.append("findings: " + ", ".join(f"{code} {n:,}" for code, n in facts["findings"].items()))
     if facts["refusals"]:
         lines.append("refused: " + ", ".join(f"{reason} {n:,}" for reason, n in facts["refusals"].items()))
     for source in facts["sources"]:

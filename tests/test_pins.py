@@ -180,7 +180,8 @@ def test_pins_last_through_five_further_runs(tmp_path: Path):
     ids = names(store)
     more = copies(3, 8)
     for night in range(5):
-        rows += [row(f"{i}-{3 + night}", c, energy=-2.0 - night, theory="scan") for i, j, c in more if j == 3 + night]
+        new = [(f"{i}-{j}", c) for i, j, c in more if j == 3 + night]
+        rows += [row(label, c, energy=-2.0 - night, theory="scan") for label, c in new]
         write_csv(path, rows)
         run_night(store, path)
         near = dict(query(store, "SELECT record_id, group_id FROM members WHERE grade = 'near'"))
@@ -191,7 +192,8 @@ def test_pins_last_through_five_further_runs(tmp_path: Path):
     assert [p["kind"] for p in pins_of(store)] == ["keep", "keep", "apart"]
     fresh = tmp_path / "fresh.duckdb"
     run_night(fresh, path)
-    import_pins(fresh, [(p["kind"], tuple(r["record_id"] for r in p["records"]), p["reason"]) for p in pins_of(store)])
+    listed = [(p["kind"], tuple(r["record_id"] for r in p["records"]), p["reason"]) for p in pins_of(store)]
+    import_pins(fresh, listed)
     assert query(fresh, MEMBERS) == query(store, MEMBERS)
 
 
@@ -202,8 +204,9 @@ def test_pins_go_through_a_file(store: Path, tmp_path: Path):
     file.write_text(pins_text(pins_of(store)), encoding="utf-8")
     ids = names(store)
     assert read_pins(file) == [
-        ("keep", (ids["a"],), 'because "it" is\nbest \\ and\x7f'), ("apart", tuple(sorted((ids["a"], ids["b"]))), "spins"),
-    ]  # fmt: skip
+        ("keep", (ids["a"],), 'because "it" is\nbest \\ and\x7f'),
+        ("apart", tuple(sorted((ids["a"], ids["b"]))), "spins"),
+    ]
     assert import_pins(store, read_pins(file))["known"] == 2
     for p in pins_of(store):
         unpin(store, p["pin"])

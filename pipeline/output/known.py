@@ -58,17 +58,12 @@ def known(
     rows = [
         {"file": file, "label": label, "verdict": "refused", "grade": None, "record": None, "record_id": None,
          "kept_record": None, "shift_angstrom": None, "strain": None, "message": f"{reason}: {message}",
-         "position": position}
-        for file, position, label, reason, message in refused.iter_rows()
+         "place": place}
+        for place, file, _, label, reason, message in refused.iter_rows()
     ]  # fmt: skip
     rows += found
-    order = {file: i for i, file in enumerate(dict.fromkeys([*_files(accepted), *_files(refused)]))}
-    rows.sort(key=lambda row: (order[row["file"]], row["position"]))
+    rows.sort(key=lambda row: int(row["place"]))
     return [{name: row[name] for name in COLUMNS} for row in rows]
-
-
-def _files(frame: pl.DataFrame) -> list[str]:
-    return frame["file"].to_list() if "file" in frame.columns else []
 
 
 def _matched(
@@ -84,7 +79,7 @@ def _matched(
     names = _names(connection, ids)
     kept = _kept(connection, ids)
     out = []
-    for row in accepted.select("file", "position", "label", "content_hash", "crystal_key").iter_rows(named=True):
+    for row in accepted.select("place", "file", "label", "content_hash", "crystal_key").iter_rows(named=True):
         record, grade, shift, strain = None, None, None, None
         neighbour = close.get(row["crystal_key"])
         if row["content_hash"] in by_content:
@@ -95,7 +90,7 @@ def _matched(
             record, grade, shift, strain = neighbour.record_id, neighbour.grade, neighbour.shift, neighbour.strain
         there = grade in GRADES and GRADES.index(grade) <= GRADES.index(asked)
         out.append(
-            {"file": row["file"], "position": row["position"], "label": row["label"],
+            {"file": row["file"], "place": row["place"], "label": row["label"],
              "verdict": "known" if there else "new", "grade": grade,
              "record": names.get(record) if record else None, "record_id": record,
              "kept_record": names.get(kept.get(record, record)) if record else None,

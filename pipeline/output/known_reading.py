@@ -17,10 +17,10 @@ from ..readers.walk import walk
 from ..settings import Settings, SourceSettings
 
 ACCEPTED = (
-    "file", "position", "label", "content_hash", "crystal_key", "composition", "formula", "volume_angstrom3_per_site",
-    "cell_angstrom", "species", "positions_fractional", "periodicity",
+    "place", "file", "position", "label", "content_hash", "crystal_key", "composition", "formula",
+    "volume_angstrom3_per_site", "cell_angstrom", "species", "positions_fractional", "periodicity",
 )  # fmt: skip
-REFUSED = ("file", "position", "label", "reason", "message")
+REFUSED = ("place", "file", "position", "label", "reason", "message")
 
 
 def read_new(
@@ -31,18 +31,21 @@ def read_new(
     folder: Path,
     progress: Progress,
 ) -> tuple[pl.DataFrame, pl.DataFrame]:
-    """The accepted (columns ACCEPTED) and the refused (columns REFUSED) records of files or folders.
+    """The accepted (columns ACCEPTED) and the refused (columns REFUSED) records of files or folders; `place` counts
+    them as they are read.
 
     of_source: where the tables of a path keep what, by the path's name. folder: an empty one for parts on their way.
     Raises UsageError for a path that is not there.
     """
     progress.start("reading", None)
-    accepted, refused = [], []
+    accepted, refused, begun = [], [], 0
     for job, records in pool.ordered_results(reduce_chunk, _jobs(paths, settings, of_source, folder)):
+        where = pl.read_parquet(job.raw, columns=["file", "position"]).with_row_index("place", begun)
+        begun += records
         part = pl.read_parquet(accepted_part(job.part))
         if len(part):
-            accepted.append(part.select(ACCEPTED))
-        refused.append(pl.read_parquet(rejects_part(job.part)).select(REFUSED))
+            accepted.append(part.join(where, on=["file", "position"]).select(ACCEPTED))
+        refused.append(pl.read_parquet(rejects_part(job.part)).join(where, on=["file", "position"]).select(REFUSED))
         for path in (job.raw, accepted_part(job.part), rejects_part(job.part)):
             path.unlink()
         progress.advance(records)

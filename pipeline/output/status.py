@@ -7,11 +7,11 @@ from typing import Any
 
 import duckdb
 
-from ..store.rows import one_row
+from ..store.rows import one_number, one_row
 
 
 def status(connection: duckdb.DuckDBPyConnection) -> dict[str, Any]:
-    """Counts of records, crystals, groups and refusals, the sources, and the last runs; ready for JSON."""
+    """Counts of records, groups, decisions, findings and refusals, the sources, and the last runs; ready for JSON."""
     row = one_row(
         connection,
         "SELECT (SELECT count(*) FROM records), (SELECT count(*) FROM current_records), "
@@ -30,6 +30,16 @@ def status(connection: duckdb.DuckDBPyConnection) -> dict[str, Any]:
             "ORDER BY list_position(['copy', 'key', 'same', 'near', 'rescaled', 'isotypic'], grade)"
         ).fetchall()
     ]
+    out["findings"] = dict(
+        connection.execute("SELECT code, count(*) FROM findings GROUP BY code ORDER BY code").fetchall()
+    )
+    out["decisions"] = dict(
+        connection.execute("SELECT grade, count(*) FROM decisions_in_force GROUP BY grade ORDER BY grade").fetchall()
+    )
+    out["held"] = dict(
+        connection.execute("SELECT reason, count(*) FROM holds GROUP BY reason ORDER BY reason").fetchall()
+    )
+    out["pins"] = one_number(connection, "SELECT count(*) FROM pins_in_force")
     out["refusals"] = dict(
         connection.execute("SELECT reason, count(*) FROM rejects GROUP BY reason ORDER BY 2 DESC, 1").fetchall()
     )
