@@ -51,6 +51,9 @@ def keep(
         list[str] | None,
         typer.Option("--again", metavar="RECORD", help="Decide again on a record whose decision was taken back."),
     ] = None,
+    recompute: Annotated[
+        bool, typer.Option("--recompute", help="Bring the groups up to date with changed keep rules first.")
+    ] = False,
     dry_run: Annotated[bool, typer.Option("--dry-run", help="Show what would change and why; change nothing.")] = False,
     top: Annotated[int, typer.Option("--top", help="Most rows that a dry run shows; --json shows all.")] = 40,
     wait: WaitOption = 0.0,
@@ -65,7 +68,8 @@ def keep(
     from .keeping import KeepJob
     from .keeping import keep as steps
 
-    job = KeepJob(store, settings_from(settings, assignments, store), grade, note, tuple(again or ()), dry_run, wait)
+    resolved = settings_from(settings, assignments, store)
+    job = KeepJob(store, resolved, grade, note, tuple(again or ()), recompute, dry_run, wait)
     counts = steps(job, call_directly)
     if as_json:
         typer.echo(json.dumps(counts))

@@ -16,11 +16,12 @@ from lattice_census.decisions.ledger import (
     planned_rows,
     release,
 )
-from lattice_census.ingest.progress import Step
+from lattice_census.ingest.pool import WorkerPool
+from lattice_census.ingest.progress import Silent, Step
 from lattice_census.output.findings import find_all
 from lattice_census.settings import Settings
 from lattice_census.store.runs import begin_run, end_run
-from lattice_census.store.stages import refuse_mixed
+from lattice_census.store.stages import changed_stages, refuse_mixed
 from lattice_census.store.workspace import Workspace
 
 from .ingest import finish
@@ -39,13 +40,25 @@ class KeepJob:
     again: tuple[str, ...] = ()
     """Records whose decisions were taken back and may be made again."""
 
+    recompute: bool = False
+    """Other keep rules than those of the stored groups are taken, and the groups brought up to date first."""
+
     dry_run: bool = False
     wait_seconds: float = 0.0
 
 
 def keep(job: KeepJob, step: Step) -> dict[str, Any]:
-    """Decide, publish, and return the counts; a dry run also returns what would change, row by row."""
+    """Decide, publish, and return the counts; a dry run also returns what would change, row by row.
+
+    With `recompute`, or in a dry run with other keep rules, the groups are brought up to date first (a dry run works on
+    a copy that is thrown away).
+    """
     with Workspace(job.store, "keep", job.wait_seconds, scratch=job.dry_run, must_exist=True) as workspace:
+        if job.recompute or (job.dry_run and "keep" in changed_stages(workspace.connection, job.settings)):
+            from .group import GroupJob, group_into
+
+            with WorkerPool(1) as pool:
+                group_into(workspace, GroupJob(job.store, job.settings, recompute=True), pool, step, Silent())
         counts = keep_into(workspace, job, step)
         if not job.dry_run:
             finish(workspace, step)

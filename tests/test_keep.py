@@ -11,10 +11,14 @@ import pytest
 
 from lattice_census.errors import UsageError
 from lattice_census.flows.deciding import pin, undo, withdraw
+from lattice_census.flows.keeping import KeepJob, keep
+from lattice_census.ingest.progress import call_directly
 from lattice_census.output.export import export
+from lattice_census.settings import resolve_settings
 from lattice_census.store.connect import open_for_reading
+from lattice_census.store.stages import settings_of_store
 
-from .curated import OF_SOURCE, copies, names, row, run_group, run_keep, run_night
+from .curated import OF_SOURCE, OPTIONS, copies, names, row, run_group, run_keep, run_night
 from .tables_of_structures import query, whole_store, write_csv
 
 IN_FORCE = "SELECT grade, record_id, kept_record_id, rule, note FROM decisions_in_force ORDER BY ALL"
@@ -93,6 +97,29 @@ def test_a_dry_run_says_what_would_change_and_changes_nothing(store: Path):
     assert {r["rule"] for r in told} <= {"sites", "date"}
     assert all(r["shift_angstrom"] == 0 for r in told)
     assert whole_store(store) == before
+
+
+def test_a_dry_run_tells_what_other_rules_would_change(store: Path):
+    before = whole_store(store)
+    told = keep_with(store, dry_run=True, keep_rules=["date"])
+    assert told["superseded"] + told["set_aside"] + told["kept_again"] > 0
+    assert {r["rule"] for r in told["rows"] if r["change"] != "kept again"} == {"date"}
+    assert whole_store(store) == before
+    with pytest.raises(UsageError, match="keep_rules"):
+        keep_with(store, keep_rules=["date"])
+    done = keep_with(store, recompute=True, keep_rules=["date"])
+    assert {k: done[k] for k in ("set_aside", "superseded", "in_force")} == {
+        k: told[k] for k in ("set_aside", "superseded", "in_force")
+    }
+    newest = query(
+        store, "SELECT r.label FROM members m JOIN records r USING (record_id) WHERE m.grade = 'near' AND kept"
+    )
+    assert {label.split("-")[1] for (label,) in newest} == {"2"}
+
+
+def keep_with(store: Path, dry_run: bool = False, recompute: bool = False, **settings) -> dict:
+    resolved = resolve_settings({**OPTIONS, **settings}, {}, stored=settings_of_store(store))
+    return keep(KeepJob(store, resolved, dry_run=dry_run, recompute=recompute), call_directly)
 
 
 def test_undo_takes_back_and_holds_until_again(store: Path):
