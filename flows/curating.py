@@ -89,13 +89,14 @@ def keep_text(counts: dict[str, Any], dry_run: bool = False) -> str:
         text = f"Nothing new to decide at grade {counts['grade']}; {counts['in_force']:,} records are set aside."
     else:
         head = "A dry run; nothing was changed. It would be: " if dry_run else f"Run {counts['run']}: "
+        records = "1 record" if counts["set_aside"] == 1 else f"{counts['set_aside']:,} records"
         text = (
-            f"{head}{counts['set_aside']:,} records set aside at grade {counts['grade']}, "
+            f"{head}{records} set aside at grade {counts['grade']}, "
             f"{counts['superseded']:,} for another kept record than before, {counts['kept_again']:,} kept again; "
             f"{counts['in_force']:,} in all."
         )
     if counts["held"]:
-        text += f" {counts['held']:,} are held: `ask --sql 'FROM holds'` says why."
+        text += f" {counts['held']:,} {'is' if counts['held'] == 1 else 'are'} held: `ask --sql 'FROM holds'` says why."
     return text
 
 
@@ -233,5 +234,5 @@ def pin_import(
     from .deciding import import_pins
 
     done = import_pins(store, read_pins(file), wait)
-    told = f"Run {done['run']}: {done['added']} pins set, {done['known']} held already."
+    told = f"Run {done['run']}: pins set: {done['added']}, held already: {done['known']}."
     typer.echo(json.dumps(done) if as_json else told)

@@ -298,16 +298,22 @@ def undo(
     typer.echo(json.dumps(done) if as_json else f"Run {done['run']}: {_undone_text(done)}.")
 
 
+def _counted(count: int, word: str) -> str:
+    return f"{count:,} {word}{'' if count == 1 else 's'}"
+
+
 def _undone_text(done: dict[str, Any]) -> str:
     parts = []
     if done["restored"]:
         parts.append(f"restored {', '.join(done['restored'])}")
     if done["decisions"]:
-        parts.append(f"{done['decisions']:,} decisions taken back; `keep --again RECORD` lets one be made again")
+        parts.append(
+            f"{_counted(done['decisions'], 'decision')} taken back; `keep --again RECORD` lets one be made again"
+        )
     if done["decided_again"]:
-        parts.append(f"{done['decided_again']:,} earlier decisions in force again")
+        parts.append(f"{_counted(done['decided_again'], 'earlier decision')} in force again")
     if done["pins"]:
-        parts.append(f"{done['pins']:,} pins as they were")
+        parts.append(f"{_counted(done['pins'], 'pin')} as before")
     return "; ".join(parts)
 
 

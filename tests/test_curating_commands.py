@@ -65,8 +65,8 @@ def test_keep_and_undo(folder: Path):
     assert "set aside  t.csv:" in done.stdout and "It would be: 4 records set aside at grade key" in done.stdout
     record = json.loads(census("ask", "decisions", "--json", cwd=folder).stdout)["rows"][0]["record"]
     done = census("undo", record, cwd=folder)
-    assert "1 decisions taken back; `keep --again RECORD`" in done.stdout
-    assert "1 are held" in census("keep", cwd=folder).stdout
+    assert "1 decision taken back; `keep --again RECORD`" in done.stdout
+    assert "1 is held" in census("keep", cwd=folder).stdout
     status = census("status", cwd=folder).stdout
     assert "decided at grade near: 7 records set aside" in status and "held: undone 1" in status
     assert "findings: leak 4" in status
@@ -84,7 +84,7 @@ def test_pins(folder: Path):
     assert census("pin", "export", "pins.toml", cwd=folder).returncode == 2
     assert f"pin {number} removed" in census("pin", "remove", number, cwd=folder).stdout
     assert "(no pins)" in census("pin", "list", cwd=folder).stdout
-    assert "1 pins set, 0 held already" in census("pin", "import", "pins.toml", cwd=folder).stdout
+    assert "pins set: 1, held already: 0" in census("pin", "import", "pins.toml", cwd=folder).stdout
     done = census("pin", "together", "t.csv:0-0", "t.csv:1-0", "--reason", "hope", cwd=folder)
     assert done.returncode == 0 and "takes no part" in done.stderr
     for _ in range(2):

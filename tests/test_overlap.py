@@ -15,6 +15,7 @@ from lattice_census.output.export import export
 from lattice_census.output.overlap import overlap, overlap_matrix
 from lattice_census.store.connect import open_for_reading
 
+from . import strategies
 from .curated import copies, row, run_night
 from .tables_of_structures import query, write_csv
 
@@ -145,3 +146,22 @@ def test_pairs_pinned_apart_are_no_overlap(tmp_path: Path):
     pin(store, "apart", ("t.csv:a", "t.csv:b"), "two magnetic orders")
     with reading(store) as connection:
         assert overlap_matrix(connection, "split", "near") == []
+
+
+def test_where_the_list_of_matches_is_cut_families_count_and_it_is_said(tmp_path: Path):
+    """Sixteen noisy copies of one crystal, each of its own key, with one match a record: many pairs are not listed."""
+    rng = np.random.default_rng(5)
+    base = copies(1, 1)[0][2]
+    made = [strategies.disguise(rng, base, 1, noise=0.02, strain=0.001) for _ in range(16)]
+    rows = [
+        row(f"{n}", c, split="train" if n < 14 else "test", date="2030-01-01" if n == 0 else None)
+        for n, c in enumerate(made)
+    ]
+    store = tmp_path / "census.duckdb"
+    run_night(store, write_csv(tmp_path / "t.csv", rows), matches_per_record=1)
+    with reading(store) as connection:
+        found = overlap(connection, "split", "train", "test", "near")
+    assert (len(found.rows), found.counts[-1]["of_first"], found.counts[-1]["of_second"]) == (14, 14, 2)
+    by_family = [r for r in found.rows if r["criterion"] == "family"]
+    assert 0 < len(by_family) < 14
+    assert all(r["shift_angstrom"] is None for r in by_family)

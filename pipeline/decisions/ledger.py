@@ -76,7 +76,8 @@ def has_grade(connection: duckdb.DuckDBPyConnection, grade: str) -> bool:
     """True where groups of the grade were computed, also where they wait to be computed anew. Read-only."""
     found = one_row(
         connection,
-        "SELECT 1 FROM (SELECT grade FROM members UNION ALL SELECT grade FROM outdated_members) WHERE grade = ? LIMIT 1",
+        "SELECT 1 FROM (SELECT grade FROM members UNION ALL SELECT grade FROM outdated_members) WHERE grade = ? "
+        "LIMIT 1",
         [grade],
     )
     return found is not None
@@ -150,7 +151,7 @@ def plan_keep(
 def planned_rows(connection: duckdb.DuckDBPyConnection, grade: str) -> list[dict[str, Any]]:
     """What `plan_keep` found, a row a record: what would change, for which kept record, and why. Read-only."""
     cursor = connection.execute(
-        "SELECT CASE WHEN e.record_id IS NULL THEN 'set aside' ELSE 'set aside for another' END AS change, "
+        "FROM (SELECT CASE WHEN e.record_id IS NULL THEN 'set aside' ELSE 'set aside for another' END AS change, "
         "n.record_id, r.source || ':' || r.label AS record, n.kept_record_id, k.source || ':' || k.label AS kept, "
         "g.rule, n.reason, n.witness_shift_angstrom AS shift_angstrom, n.witness_strain AS strain "
         "FROM keep_new n JOIN deciding_rules g USING (record_id, kept_record_id) JOIN records r USING (record_id) "
@@ -163,7 +164,9 @@ def planned_rows(connection: duckdb.DuckDBPyConnection, grade: str) -> list[dict
         "FROM members m JOIN records k ON k.record_id = m.group_id JOIN holds h ON h.grade = m.grade "
         "AND (h.group_id = m.group_id OR h.record_id = m.record_id) "
         "WHERE m.grade = ? AND NOT m.kept AND m.record_id NOT IN (SELECT record_id FROM keep_free) "
-        "AND m.record_id NOT IN (SELECT record_id FROM decisions_in_force d WHERE d.grade = m.grade) ORDER BY ALL",
+        "AND m.record_id NOT IN (SELECT record_id FROM decisions_in_force d WHERE d.grade = m.grade)) "
+        "ORDER BY list_position(['set aside', 'set aside for another', 'kept again', 'held'], change), record, "
+        "record_id, kept, rule, reason",
         [grade],
     )
     names = [d[0] for d in cursor.description or []]
