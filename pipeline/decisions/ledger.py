@@ -7,7 +7,6 @@ decided on.
 
 from __future__ import annotations
 
-import hashlib
 from collections.abc import Sequence
 from dataclasses import dataclass
 from typing import Any
@@ -127,10 +126,13 @@ def plan_keep(
     )
     deciding_rules(connection, settings, "SELECT record_id, kept_record_id FROM keep_new")
     ended = dict(connection.execute("SELECT ending, count(*) FROM keep_ended GROUP BY ending").fetchall())
-    rows = connection.execute(
-        "SELECT record_id, kept_record_id, '' FROM keep_new UNION ALL SELECT record_id, kept_record_id, ending "
-        "FROM keep_ended ORDER BY ALL"
-    ).fetchall()
+    told = one_row(
+        connection,
+        "SELECT sha256(coalesce(string_agg(record_id || kept_record_id || ending, '' "
+        "ORDER BY record_id, kept_record_id, ending), '')) FROM ("
+        "SELECT record_id, kept_record_id, '' AS ending FROM keep_new UNION ALL "
+        "SELECT record_id, kept_record_id, ending FROM keep_ended)",
+    )
     return KeepPlan(
         grade,
         one_number(connection, "SELECT count(*) FROM keep_new") - ended.get("superseded", 0),
@@ -144,7 +146,7 @@ def plan_keep(
             [grade],
         ),
         one_number(connection, "SELECT count(*) FROM decisions_in_force WHERE grade = ?", [grade]),
-        hashlib.sha256(repr((grade, sorted(again), rows)).encode()).hexdigest(),
+        f"keep {grade} {' '.join(sorted(again))} {told[0] if told else ''}",
     )
 
 
