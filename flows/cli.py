@@ -15,7 +15,7 @@ import typer
 from lattice_census import __version__
 from lattice_census.errors import CensusError
 
-from . import asking, comparing, curating, proving, reading, writing
+from . import asking, comparing, curating, proving, reading, reporting, writing
 
 app = typer.Typer(
     name="lattice-census",
@@ -51,6 +51,7 @@ comparing.register(app)
 reading.register(app)
 asking.register(app)
 proving.register(app)
+reporting.register(app)
 
 
 def main() -> None:

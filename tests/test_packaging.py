@@ -38,7 +38,7 @@ def test_every_package_and_data_file_is_in_the_wheel(wheel: Path):
     folders = {"pipeline": "lattice_census", "flows": "lattice_census/flows", "sql": "lattice_census/sql"}
     for folder, package in folders.items():
         for path in (ROOT / folder).rglob("*"):
-            if path.suffix in (".py", ".sql", ".csv", ".typed"):
+            if path.suffix in (".py", ".sql", ".csv", ".css", ".js", ".typed"):
                 assert f"{package}/{path.relative_to(ROOT / folder).as_posix()}" in names
     tops = {name.split("/")[0] for name in names}
     assert {t for t in tops if not t.endswith(".dist-info")} == {"lattice_census"}
