@@ -189,3 +189,18 @@ def test_a_changed_limit_is_not_mixed_with_old_rows(tmp_path: Path, ingest, rows
     job = GroupJob(store, resolve_settings(options, {}), recompute=True)
     assert group(job, call_directly, Silent())["compositions"] == 4
     assert query(store, "SELECT value FROM stage_settings WHERE name = 'near_shift'") == [("0.02",)]
+
+
+def test_the_number_of_neighbours_changes_the_work_and_not_the_groups(tmp_path: Path, ingest, rows):
+    table = write_csv(tmp_path / "t.csv", rows)
+    found = []
+    for k in (8, 64):
+        store = tmp_path / f"{k}.duckdb"
+        ingest(table, store=store, fingerprint_k=k)
+        run_group(store, fingerprint_k=k)
+        found.append((query(store, MEMBERS), query(store, MATCHES)))
+        ((length, species),) = query(
+            store, "SELECT len(mean_distances_angstrom), len(list_distinct(species)) FROM crystals LIMIT 1"
+        )
+        assert length == k * species
+    assert found[0] == found[1]

@@ -82,8 +82,9 @@ def quantile_coordinates(prepared: Prepared) -> Floats:
     """
     c = prepared.crystals
     first, size = c.blocks[:, :-1], np.diff(c.blocks, axis=1)
+    columns = [c for c in QUANTILE_COLUMNS if c < prepared.ordered.shape[1]]
     parts = [
-        prepared.ordered[first + np.minimum((size * u).astype(np.int64), size - 1)][:, :, QUANTILE_COLUMNS]
+        prepared.ordered[first + np.minimum((size * u).astype(np.int64), size - 1)][:, :, columns]
         for u in (0.0, 0.26, 0.51, 0.76, 1.0)
     ]
     return np.stack(parts, axis=2).reshape(len(first), -1).astype(np.float64)

@@ -15,6 +15,7 @@ from numpy.typing import NDArray
 from scipy.spatial import cKDTree
 
 from ..errors import UsageError
+from ..fingerprint.distributions import NEIGHBOURS
 from ..model.batch import CrystalBatch, Floats, Ints, select
 from ..tolerances import Tolerances
 from .candidates import Search, filtered
@@ -45,6 +46,9 @@ class Options:
 
     search: str = "near"
     """`near` (grades same and near), `rescaled`, or `isotypic`."""
+
+    neighbours: int = NEIGHBOURS
+    """k of the distance distributions that the filters use: the groups do not depend on it, the work does."""
 
     matches_per_record: int = 32
     crowded: int = CROWDED
@@ -132,7 +136,7 @@ def group_composition(
     node_rank = np.full(len(stands), len(names), dtype=np.int64)
     np.minimum.at(node_rank, node_of, place)
 
-    by = searcher(select(batch, order[stands]), tolerances, chosen.search, chosen.mirror_images)
+    by = searcher(select(batch, order[stands]), tolerances, chosen.search, chosen.mirror_images, chosen.neighbours)
     store = PairStore(len(stands), by.verify, node_of[together], node_of[apart])
     crowded, candidates = _verify_plain(by, store, chosen.crowded)
     members: dict[str, Members] = {}

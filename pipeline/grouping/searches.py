@@ -9,6 +9,7 @@ from dataclasses import dataclass, replace
 import numpy as np
 
 from ..errors import UsageError
+from ..fingerprint.distributions import NEIGHBOURS, distributions
 from ..model.batch import CrystalBatch, Ints
 from ..tolerances import Tolerances
 from .candidates import Search, start_search
@@ -40,13 +41,15 @@ class Searcher:
     """The grades this search gives, with their limits, in angstrom (isotypic: units of (V/site)^(1/3))."""
 
 
-def searcher(batch: CrystalBatch, tolerances: Tolerances, kind: str, mirror_images: str) -> Searcher:
-    """Set up a search over n nodes. kind: near, rescaled, isotypic."""
+def searcher(
+    batch: CrystalBatch, tolerances: Tolerances, kind: str, mirror_images: str, neighbours: int = NEIGHBOURS
+) -> Searcher:
+    """Set up a search over n nodes. kind: near, rescaled, isotypic. neighbours: k of the distance distributions."""
     separate = mirror_images == "separate"
     nodes = np.arange(len(batch), dtype=np.int64)
     near = Limit(1, tolerances.near_shift, tolerances.near_strain, separate)
     if kind == "near":
-        search = start_search(batch, near_window(tolerances))
+        search = start_search(batch, near_window(tolerances), None, distributions(batch, neighbours))
         return Searcher(
             search,
             nodes,
@@ -56,7 +59,9 @@ def searcher(batch: CrystalBatch, tolerances: Tolerances, kind: str, mirror_imag
         )
     if kind == "rescaled":
         smallest = float(volumes_per_site(batch).min())
-        search = start_search(batch, rescaled_window(tolerances, smallest), unit_scales(batch))
+        search = start_search(
+            batch, rescaled_window(tolerances, smallest), unit_scales(batch), distributions(batch, neighbours)
+        )
         given_window = near_window(tolerances)
         as_given = prepare(batch, given_window, None, search.rows)
         return Searcher(
@@ -73,7 +78,9 @@ def searcher(batch: CrystalBatch, tolerances: Tolerances, kind: str, mirror_imag
         )
     if kind == "isotypic":
         versions, owner = renamings(batch)
-        search = start_search(versions, isotypic_window(tolerances), unit_scales(versions))
+        search = start_search(
+            versions, isotypic_window(tolerances), unit_scales(versions), distributions(versions, neighbours)
+        )
 
         def witness(found: Verified) -> Witnesses:
             _, second = verify_renamed(search, owner, found.pairs, mirror_images)

@@ -85,6 +85,7 @@ def group_chunk(job: GroupJob) -> int:
             Options(
                 job.settings.mirror_images,
                 "near",
+                job.settings.fingerprint_k,
                 job.settings.matches_per_record,
                 together=tuple(pair.ids for pair in together),
                 apart=tuple((pin.record_a, pin.record_b) for pin in pins if pin.kind == "apart"),
