@@ -23,6 +23,10 @@ ALONE = "SET group_id = record_id, family_id = record_id, kept = true"
 PAIR = "(SELECT record_id FROM records WHERE label IN ('n1', 'n2'))"
 
 DAMAGE: dict[str, tuple[str, ...]] = {
+    "decisions-are-single": (
+        "INSERT INTO decisions SELECT i, record_id, group_id, grade, 'sites', 'other_cell', 0, 0, 1, now()::TIMESTAMP, "
+        "'x', NULL, NULL, NULL, NULL FROM members, range(2) t(i) WHERE grade = 'near' AND NOT kept",
+    ),
     "record-ids-are-unique": ("INSERT INTO structures SELECT * FROM structures LIMIT 1",),
     "record-ids-are-hashes": ("UPDATE records SET label = 'elsewhere' WHERE label = 'gone'",),
     "records-are-complete": (
