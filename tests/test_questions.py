@@ -223,6 +223,8 @@ EXPECTED: dict[str, list[tuple[dict[str, str], list[tuple[Any, ...]]]]] = {
         ({}, [("PBE", "alpha", 3, 3, -8.1, -8.0), ("PBE", "beta", 3, 3, -8.02, -5.0),
               ("SCAN", "beta", 1, 1, -9.0, -9.0), (None, "alpha", 2, 0, None, None), (None, "beta", 1, 0, None, None)]),
     ],
+    # The store has no limits of near in its settings; test_tolerance_curve.py has one that does.
+    "tolerance-curve": [({}, []), ({"step": "0.5"}, [])],
     "versions": [
         ({"record": "beta:b3"},
          [(1, "replaced", 2, "rutile", -7.0, "PBE", "train", None, "c0"),

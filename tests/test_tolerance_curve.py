@@ -12,6 +12,7 @@ import pytest
 
 from lattice_census.output.pair_match import match_of
 from lattice_census.output.pair_sides import side_of
+from lattice_census.output.questions import question_named
 from lattice_census.output.tolerance_curve import ToleranceCurve, counted_at, forest_steps, tolerance_curve
 from lattice_census.store.connect import open_for_reading
 from lattice_census.tolerances import Tolerances
@@ -118,6 +119,19 @@ def test_the_curve_equals_a_whole_run_at_other_limits(store: Path, tmp_path: Pat
     assert curve.groups[int(np.argmin(np.abs(curve.counted_at - t)))] == groups
     assert np.abs(curve.counted_at - t).min() < 1e-12
     assert curve_of(other).families(1.0) == families
+
+
+def test_the_question_answers_as_the_curve(store: Path):
+    """`ask tolerance-curve` counts components by another way, in the database."""
+    question = question_named("tolerance-curve")
+    connection = open_for_reading(store)
+    for step in (0.125, 0.03):
+        rows = connection.execute(question.sql, {"step": step}).fetchall()
+        assert rows[0][0] == 0 and NEAR.window_factor - step < rows[-1][0] <= NEAR.window_factor
+        curve = curve_of(store)
+        assert [families for *_, families in rows] == [curve.families(t) for t, *_ in rows]
+        assert rows[1][1:3] == pytest.approx((step * NEAR.near_shift, step * NEAR.near_strain))
+    connection.close()
 
 
 def test_plateaus_are_the_longest_stretches():
