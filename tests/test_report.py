@@ -21,9 +21,11 @@ from lattice_census.output import report_groups, report_pairs
 from lattice_census.output.overlay import best_axis, mean_cell, overlay, plane_along, with_images
 from lattice_census.output.overlay_picture import bar_for, factor_for, overlay_figure
 from lattice_census.output.report import check_target, report_html, write_report
+from lattice_census.output.report_figures import curve_figure, lattice_map, map_figures, size_figure
 from lattice_census.output.report_groups import COLUMNS, Groups, find_groups, groups_html
 from lattice_census.output.report_page import data_block, page, table, text, words
 from lattice_census.output.svg import inline_svg, raw_svg
+from lattice_census.output.tolerance_curve import tolerance_curve
 from lattice_census.store.connect import open_for_reading
 
 from . import strategies as draw
@@ -356,6 +358,28 @@ def test_a_cell_of_too_many_sites_is_said_and_not_drawn(store: Path, monkeypatch
     monkeypatch.setattr(report_pairs, "MOST_SITES", 2)
     shown = overlays(store)[0][0]
     assert "too many to be told apart" in report_pairs.pair_html(shown, "x")
+
+
+def test_the_figures_of_the_store_draw_its_numbers(store: Path):
+    connection = open_for_reading(store)
+    curve, shapes = tolerance_curve(connection), lattice_map(connection)
+    crystals = connection.execute("SELECT count(DISTINCT crystal_key) FROM crystals").fetchall()[0][0]
+    connection.close()
+    assert curve is not None
+    axes = curve_figure(curve).axes[0]
+    lines = {line.get_label(): line for line in axes.lines}
+    t, families = (np.asarray(v) for v in lines["families"].get_data())
+    assert [curve.families(x) for x in t.tolist()] == families.tolist() and set(curve.steps.tolist()) <= set(t.tolist())
+    assert lines["groups"].get_ydata().tolist() == curve.groups.tolist()
+    assert list(lines["chosen tolerance"].get_xdata()) == [1.0, 1.0]
+    for figure in map_figures(shapes):
+        marks = [(line.get_marker(), line.get_color()) for line in figure.axes[0].lines]
+        assert len({m for m, _ in marks}) == len(marks) and len({c for _, c in marks}) > 1
+        assert sum(len(line.get_xdata()) for line in figure.axes[0].lines) == crystals == len(shapes.a_to_b)
+    assert (shapes.a_to_b <= 1 + 1e-9).all() and (shapes.b_to_c <= 1 + 1e-9).all()
+    assert (shapes.openness > 0.5).all() and (shapes.openness <= 1 + 1e-9).all()  # of Niggli cells
+    bars = size_figure([(1, 396), (2, 48)]).axes[0].patches
+    assert [b.get_height() for b in bars] == [396, 48]
 
 
 # The table of groups

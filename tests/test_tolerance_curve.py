@@ -134,6 +134,21 @@ def test_the_question_answers_as_the_curve(store: Path):
     connection.close()
 
 
+def test_what_holds_where_matches_are_left_out(store: Path, tmp_path: Path):
+    """One match a record: exact up to t = 1 (no crowds here), an upper bound beyond, and said."""
+    other = tmp_path / "census.duckdb"
+    shutil.copy(store, other)
+    run_group(other, recompute=True, matches_per_record=1)
+    whole, less = curve_of(store), curve_of(other)
+    assert less.more > 0 and len(query(other, "SELECT 1 FROM matches")) < len(query(store, "SELECT 1 FROM matches"))
+    for t in np.linspace(0, 1, 41).tolist():
+        assert less.families(t) == whole.families(t)
+    for t in np.linspace(1, 1.5, 21).tolist():
+        assert less.families(t) >= whole.families(t)
+    groups = query(other, "SELECT count(DISTINCT group_id) FROM members WHERE grade = 'near'")[0][0]
+    assert less.groups[4] == whole.groups[4] == groups and less.counted_at[4] == 1.0
+
+
 def test_plateaus_are_the_longest_stretches():
     curve = ToleranceCurve(
         7, np.array([0.1, 0.1, 0.5, 0.9, 1.4]), 1.5, 0.05, 0.01, counted_at(1.5), np.zeros(10, np.int64), 0

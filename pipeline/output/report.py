@@ -248,8 +248,8 @@ def _tolerance(facts: _Facts) -> str:
     exact = (
         "No record has more matches than are stored, so the curve is exact."
         if curve.more == 0
-        else f"{curve.more:,} records have, or may have, more matches than are stored: away from t = 1 the numbers are "
-        "upper bounds, at t = 1 the families are exact."
+        else f"{curve.more:,} records have, or may have, more matches than are stored: at t = 1 the numbers are exact, "
+        "elsewhere they are upper bounds of the families and estimates of the groups."
     )
     stretches = [(p.start, p.end, p.end - p.start, p.families) for p in curve.plateaus()]
     svg = inline_svg(

@@ -5,9 +5,10 @@ of near_shift and near_strain, both multiplied by t. Families at t are the compo
 a minimum spanning forest in t (Kruskal 1956) has the same components at every t, so that its edges are all the steps
 of the curve. What that proves, with what `matches` promises:
 
-- at t = 1 the count is that of the families at grade near;
-- below 1 it is exact while no composition was grouped as a crowd, because the forest of the near families is stored;
-- between 1 and the window it is exact while no record has more matches in the window than are stored;
+- at t = 1 families and groups are those of grade near: the forest is stored, and every set-aside record with its kept
+  one (groups.py: a record that is kept has no earlier kept match, and one that is not finds its own);
+- below 1 families are exact while no composition was grouped as a crowd, because the forest is one in t;
+- all else is exact while no record has more matches in the window than are stored;
 - elsewhere matches may be missing, which could only join families: the count is an upper bound. `more` counts the
   records concerned.
 
