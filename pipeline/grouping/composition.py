@@ -1,8 +1,9 @@
-"""Group the records of one composition: candidates, verification, families and groups at each grade.
+"""Group the records of a composition: candidates, verification, families and groups at each grade.
 
 Records of one crystal_key are one node; the record with the smallest id stands for it, and a stored match between two
 such records stands for all records of the two keys. Everything is sorted by id first: the result depends on the records
-alone, not on their order, and not on how many runs it took.
+alone, not on their order, and not on how many runs it took. Many small compositions may be worked on in one call: what
+each costs beside its pairs is paid once.
 """
 
 from __future__ import annotations
@@ -99,6 +100,12 @@ class Grouping:
     counts: dict[str, int]
     """Nodes, candidates, verified pairs, matches, crowded nodes."""
 
+    candidates: Ints
+    """(parts,): candidate pairs of each part."""
+
+    verified: Ints
+    """(parts,): pairs of each part that were compared site by site."""
+
 
 def group_composition(
     batch: CrystalBatch,
@@ -107,15 +114,20 @@ def group_composition(
     rank: Sequence[int] | Ints,
     tolerances: Tolerances,
     options: Options | None = None,
+    parts: Ints | None = None,
 ) -> Grouping:
     """Matches, families and groups of the records of one composition (for `isotypic`: one species renamed to
-    another's).
+    another's), or of several small ones.
 
     batch: n exact primitive crystals with the same species in the same proportions; keys: crystal_key of each; ids:
-    distinct record ids; rank: smaller is kept first, ties by id. Deterministic under any order of the records.
+    distinct record ids; rank: smaller is kept first, ties by id. parts (n,): number from 0 of the composition of each
+    record, where there are several; all have equally many species, and at most `crowded` records. Records of different
+    parts are not compared. Deterministic under any order of the records, and whatever other parts there are.
     Raises UsageError for repeated or unknown ids.
     """
     chosen = options or Options()
+    if parts is not None and (chosen.search != "near" or np.bincount(parts).max(initial=0) > chosen.crowded):
+        raise UsageError("several compositions in one call must be small, and are searched for near matches alone")
     order = np.argsort(np.array(ids, dtype=str), kind="stable").astype(np.int64)
     names = np.array(ids, dtype=str)[order]
     if len(np.unique(names)) != len(names):
@@ -138,7 +150,11 @@ def group_composition(
 
     by = searcher(select(batch, order[stands]), tolerances, chosen.search, chosen.mirror_images, chosen.neighbours)
     store = PairStore(len(stands), by.verify, node_of[together], node_of[apart])
-    crowded, candidates = _verify_plain(by, store, chosen.crowded)
+    part = None if parts is None else parts[order[stands]]
+    if part is None:
+        crowded, candidates = _verify_plain(by, store, chosen.crowded)
+    else:
+        crowded, candidates = np.zeros(0, np.int64), _verify_parts(by, store, part)
     members: dict[str, Members] = {}
     keep_pairs: list[Ints] = []
     for grade, limit in by.limits:
@@ -157,17 +173,21 @@ def group_composition(
     more[crowded] = True
     matches = found.take(wanted)
     witness = by.witness(matches)
+    if part is None:
+        of_part, verified = np.array([len(candidates)]), np.array([store.computed])
+    else:
+        of_part = verified = np.bincount(part[candidates[:, 0]], minlength=int(part.max(initial=-1)) + 1)
     counts = {
         "records": len(names),
         "nodes": len(stands),
-        "candidates": candidates,
+        "candidates": len(candidates),
         "verified": store.computed,
         "matches": len(found),
         "stored": len(matches),
         "crowded": len(crowded),
     }
     in_records = replace(matches, pairs=stands[matches.pairs])
-    return Grouping(names, stands[node_of], in_records, witness, more[node_of], members, counts)
+    return Grouping(names, stands[node_of], in_records, witness, more[node_of], members, counts, of_part, verified)
 
 
 def _pins(pairs: tuple[tuple[str, str], ...], names: NDArray[np.str_]) -> Ints:
@@ -180,9 +200,22 @@ def _pins(pairs: tuple[tuple[str, str], ...], names: NDArray[np.str_]) -> Ints:
     return np.array([[place[a], place[b]] for a, b in pairs], dtype=np.int64).reshape(-1, 2)
 
 
-def _verify_plain(by: Searcher, store: PairStore, crowded_at: int) -> tuple[Ints, int]:
-    """Verify every candidate pair but those of two crowded nodes; returns the crowded nodes and the number of
-    candidates.
+def _verify_parts(by: Searcher, store: PairStore, part: Ints) -> Ints:
+    """Verify every candidate pair of nodes of one part; returns the candidates. Small parts need no tree."""
+    by_part = np.argsort(part, kind="stable")
+    sizes = np.bincount(part)
+    place = np.arange(len(part)) - np.repeat(np.cumsum(sizes) - sizes, sizes)
+    earlier = np.arange(int(place.sum())) - np.repeat(np.cumsum(place) - place, place)  # 0 ... place - 1 of each
+    second = np.repeat(np.arange(len(part)), place)
+    first = second - np.repeat(place, place) + earlier
+    pairs = np.sort(np.stack([by_part[first], by_part[second]], axis=1), axis=1)
+    pairs = filtered(by.search.prepared, by.search.coordinates, pairs, by.search.slack)
+    store.ensure(pairs)
+    return pairs
+
+
+def _verify_plain(by: Searcher, store: PairStore, crowded_at: int) -> tuple[Ints, Ints]:
+    """Verify every candidate pair but those of two crowded nodes; returns the crowded nodes and the candidates.
 
     Where the tree alone leaves over DENSE pairs a node, its pairs are not even listed between nodes that have more than
     that; elsewhere a node is crowded that has more than `crowded_at` candidates after all filters.
@@ -209,7 +242,7 @@ def _verify_plain(by: Searcher, store: PairStore, crowded_at: int) -> tuple[Ints
     if n == store.nodes:  # with several versions of a node every pair is verified
         crowded = dense | (np.bincount(pairs.ravel(), minlength=n) > crowded_at)
     store.ensure(pairs[~crowded[pairs].all(axis=1)])
-    return np.flatnonzero(crowded), len(pairs)
+    return np.flatnonzero(crowded), pairs
 
 
 def _families_and_groups(search: Search, store: PairStore, limit: Limit, crowded: Ints, node_rank: Ints) -> Ints:

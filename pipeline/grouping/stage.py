@@ -7,18 +7,17 @@ goes on with those that are left. Compositions with one key need no comparison a
 
 from __future__ import annotations
 
-import hashlib
 import json
 from collections.abc import Callable, Iterator
 from dataclasses import dataclass
 from functools import partial
-from pathlib import Path
 
 import duckdb
 
-from ..ingest.pool import WorkerPool
+from ..ingest.engine import Engine, done_in_order
 from ..ingest.progress import Progress
 from ..settings import Settings
+from ..store.parts import Part, raw_and_part
 from ..store.rows import one_number, one_row
 from ..store.workspace import Workspace
 from .exact import note_id_changes
@@ -31,7 +30,8 @@ GRADES = ("same", "near")
 MOST_PAIRS = 3_000_000
 """A job ends at so many possible pairs of keys (the square of the keys of its compositions)."""
 
-MOST_COMPOSITIONS = 400
+MOST_RECORDS = 10_000
+"""A job ends at so many records: each job reads the store once from end to end, and holds its rows in memory."""
 
 LITTLE_WORK = 100_000
 """Possible pairs of keys that are compared before workers would have started."""
@@ -64,7 +64,7 @@ def group_records(
     workspace: Workspace,
     run_id: int,
     settings: Settings,
-    pool: WorkerPool,
+    pool: Engine,
     progress: Progress,
     everything: bool = False,
 ) -> GroupCounts:
@@ -72,7 +72,7 @@ def group_records(
 
     everything: work on every composition again. Each job's rows are committed in one transaction with its digests.
     """
-    connection = workspace.connection
+    connection, manifest = workspace.connection, workspace.manifest
     rank_records(connection, settings)
     _find_changed(connection, settings, everything)
     _in_transaction(connection, partial(_drop_left, connection, run_id))
@@ -82,10 +82,10 @@ def group_records(
         progress.start("comparing and grouping", records)
         pairs = one_number(connection, "SELECT sum(keys * keys) FROM changed_compositions WHERE keys > 1")
         few = 4 if pairs < LITTLE_WORK else 1
-        for job, done in pool.ordered_results(group_chunk, _jobs(workspace, settings), few):
-            _in_transaction(connection, partial(_commit, connection, job.part, run_id))
-            for path in (job.raw, matches_part(job.part), members_part(job.part), summary_part(job.part)):
-                path.unlink()
+        for job, done in done_in_order(pool, group_chunk, _jobs(workspace, settings), manifest, few):
+            _in_transaction(connection, partial(_commit, connection, manifest.checked(job.part), run_id))
+            job.raw.unlink()
+            manifest.drop(job.part)
             progress.advance(done)
     return _counts(connection, run_id)
 
@@ -246,42 +246,46 @@ def _write_single(connection: duckdb.DuckDBPyConnection, run_id: int) -> None:
 def _jobs(workspace: Workspace, settings: Settings) -> Iterator[GroupJob]:
     """Jobs of whole compositions, the largest first, so that the last ones to end are short."""
     rows = workspace.connection.execute(
-        "SELECT composition, digest, keys FROM changed_compositions WHERE NOT plain ORDER BY keys DESC, composition"
+        "SELECT composition, digest, keys, records FROM changed_compositions WHERE NOT plain "
+        "ORDER BY keys DESC, composition"
     ).fetchall()
     pack: list[tuple[str, str]] = []
     pairs = 0
+    held = 0
     number = 0
-    for composition, digest, keys in rows:
+    for composition, digest, keys, records in rows:
         pack.append((composition, digest))
         pairs += keys * keys
-        if pairs >= MOST_PAIRS or len(pack) >= MOST_COMPOSITIONS:
+        held += records
+        if pairs >= MOST_PAIRS or held >= MOST_RECORDS:
             yield _job(workspace, settings, number, pack)
-            pack, pairs, number = [], 0, number + 1
+            pack, pairs, held, number = [], 0, 0, number + 1
     if pack:
         yield _job(workspace, settings, number, pack)
 
 
 def _job(workspace: Workspace, settings: Settings, number: int, pack: list[tuple[str, str]]) -> GroupJob:
-    digest = hashlib.sha256(json.dumps(pack).encode()).hexdigest()[:32]
-    part = workspace.parts / f"group-{digest}"
-    raw = part.with_name(part.name + ".raw.parquet")
     connection = workspace.connection
-    connection.execute("CREATE OR REPLACE TEMP TABLE packed (composition VARCHAR, digest VARCHAR)")
-    connection.executemany("INSERT INTO packed VALUES (?, ?)", pack)
+    names, digests = zip(*pack, strict=True)
+    connection.execute(
+        "CREATE OR REPLACE TEMP TABLE packed AS SELECT unnest(?::VARCHAR[]) AS composition, "
+        "unnest(?::VARCHAR[]) AS digest", [list(names), list(digests)],
+    )  # fmt: skip
     frame = connection.sql(
         "SELECT r.composition, p.digest, r.record_id, f.crystal_key, k.rank, f.cell_angstrom, f.species, "
         "f.positions_fractional, r.periodicity, f.matrix FROM packed p JOIN current_records r USING (composition) "
         "JOIN canonical_forms f USING (record_id) JOIN ranks k USING (record_id) ORDER BY r.composition, r.record_id"
     ).pl()
-    frame.write_parquet(raw, compression="lz4")
     pins = connection.execute(
         f"SELECT composition, pin_id, kind, record_a, record_b FROM {PAIR_PINS} JOIN packed USING (composition) "
         "ORDER BY pin_id"
     ).fetchall()
+    decisive = [settings.of_stage(stage) for stage in ("canonical", "fingerprint", "verify")]
+    raw, part = raw_and_part(workspace.place, "group", frame, decisive, pins)
     return GroupJob(number, raw, part, settings, tuple(PairPin(*pin) for pin in pins))
 
 
-def _commit(connection: duckdb.DuckDBPyConnection, part: Path, run_id: int) -> None:
+def _commit(connection: duckdb.DuckDBPyConnection, part: Part, run_id: int) -> None:
     matches, members, summary = (str(name(part)) for name in (matches_part, members_part, summary_part))
     connection.execute("CREATE OR REPLACE TEMP TABLE done AS SELECT * FROM read_parquet(?)", [summary])
     connection.execute("CREATE OR REPLACE TEMP TABLE grouped AS SELECT * FROM read_parquet(?)", [members])

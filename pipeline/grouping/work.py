@@ -2,18 +2,20 @@
 
 from __future__ import annotations
 
+from collections.abc import Iterator
 from dataclasses import dataclass
-from pathlib import Path
 from typing import Any
 
 import numpy as np
 import polars as pl
+import pyarrow as pa
 
 from ..ingest.recompute import stored_batch
-from ..ingest.reduce import write_part
-from ..model.batch import CrystalBatch
+from ..model.batch import CrystalBatch, Ints
 from ..settings import Settings
-from .composition import Grouping, Options, group_composition
+from ..store.manifest import Done
+from ..store.parts import Part, files_there
+from .composition import CROWDED, Grouping, Options, group_composition
 from .pinned_matches import by_key, measured, verified_together
 from .reasons import reasons
 from .verification import Verified
@@ -37,87 +39,99 @@ class PairPin:
 
 @dataclass(frozen=True, slots=True)
 class GroupJob:
-    """One job: paths and settings only."""
+    """One job: names and settings only."""
 
     number: int
-    raw: Path
+    raw: Part
     """Parquet of records: composition, digest, record_id, crystal_key, rank, canonical form, matrix."""
 
-    part: Path
+    part: Part
     """Stem of the parts to write."""
 
     settings: Settings
     pins: tuple[PairPin, ...] = ()
 
 
-def matches_part(part: Path) -> Path:
+def matches_part(part: Part) -> Part:
     """The part with the rows of `matches`."""
     return part.with_name(part.name + ".matches.parquet")
 
 
-def members_part(part: Path) -> Path:
+def members_part(part: Part) -> Part:
     """The part with one row a record: group, family, shift and strain at each grade; whether it has more matches."""
     return part.with_name(part.name + ".members.parquet")
 
 
-def summary_part(part: Path) -> Path:
-    """The part with one row a composition; written last, so its presence says that all are there."""
+def summary_part(part: Part) -> Part:
+    """The part with one row a composition."""
     return part.with_name(part.name + ".summary.parquet")
 
 
-def group_chunk(job: GroupJob) -> int:
-    """Group every composition of the job, unless its parts are there already; returns the number of records."""
-    frame = pl.read_parquet(job.raw)
-    if summary_part(job.part).exists():
-        return len(frame)
-    matches, members, summary = [], [], []
-    for (composition, digest), rows in frame.group_by(["composition", "digest"], maintain_order=True):
-        batch = stored_batch(rows)
-        pins = [pin for pin in job.pins if pin.composition == composition]
-        ids = rows["record_id"].to_list()
-        together, refused = verified_together(batch, ids, pins, job.settings)
-        found = group_composition(
-            batch,
-            rows["crystal_key"].to_list(),
-            ids,
-            rows["rank"].to_list(),
-            job.settings.tolerances,
-            Options(
-                job.settings.mirror_images,
-                "near",
-                job.settings.fingerprint_k,
-                job.settings.matches_per_record,
-                together=tuple(pair.ids for pair in together),
-                apart=tuple((pin.record_a, pin.record_b) for pin in pins if pin.kind == "apart"),
-            ),
-        )
-        frame_of = _matches_frame(str(composition), rows, batch, found.matches, found.witnesses, job.settings)
-        of_members = _members_frame(found)
-        if pins:
-            more = [
-                _matches_frame(str(composition), rows[p.places], p.batch, p.match, p.witness, job.settings)
-                for p in together
-            ]
-            frame_of = by_key(pl.concat([frame_of, *more]), rows)
-            of_members = measured(of_members, frame_of, rows, job.settings.mirror_images == "separate")
-        matches.append(frame_of)
-        members.append(of_members)
-        summary.append(
-            {
-                "composition": composition,
-                "digest": digest,
-                "records": len(rows),
-                "keys": rows["crystal_key"].n_unique(),
-                "candidates": found.counts["candidates"],
-                "verified": found.counts["verified"],
-                "refused": refused,
-            }
-        )
-    write_part(pl.concat(matches).to_arrow(), matches_part(job.part))
-    write_part(pl.concat(members).to_arrow(), members_part(job.part))
-    told = pl.DataFrame(summary, schema_overrides={"refused": pl.List(pl.Int64)}, infer_schema_length=None)
-    write_part(told.to_arrow(), summary_part(job.part))
-    return len(frame)
+def group_chunk(job: GroupJob) -> Done:
+    """Group every composition of the job, unless its parts are there already."""
+    frame = job.raw.frame()
+    there = files_there((matches_part(job.part), members_part(job.part), summary_part(job.part)))
+    if there is not None:
+        return Done(len(frame), there)
+    done = [_grouped(rows, job) for rows in _bundles(frame, {pin.composition for pin in job.pins})]
+    matches, members, summary = zip(*done, strict=True)
+    files = (
+        matches_part(job.part).write(pl.concat(matches).to_arrow()),
+        members_part(job.part).write(pl.concat(members).to_arrow()),
+        summary_part(job.part).write(pl.concat(summary).to_arrow()),
+    )
+    return Done(len(frame), files)
+
+
+def _bundles(frame: pl.DataFrame, pinned: set[str]) -> Iterator[pl.DataFrame]:
+    """The rows of what is grouped in one call: a composition that is large or has pins by itself, all others with those
+    of equally many species. Ascending by record id."""
+    told = frame.with_columns(
+        pl.len().over("composition").gt(CROWDED).or_(pl.col("composition").is_in(list(pinned))).alias("alone"),
+        pl.col("species").list.n_unique().alias("kinds"),
+    )
+    alone = told.filter("alone").partition_by("composition", maintain_order=True)
+    for rows in alone + told.filter(~pl.col("alone")).partition_by("kinds", maintain_order=True):
+        yield rows.sort("record_id")
+
+
+def _grouped(rows: pl.DataFrame, job: GroupJob) -> tuple[pl.DataFrame, pl.DataFrame, pl.DataFrame]:
+    """The rows of matches, members and summary of one bundle."""
+    batch = stored_batch(rows)
+    ids = rows["record_id"].to_list()
+    part = rows["composition"].rank("dense").to_numpy().astype(np.int64) - 1
+    told = pl.col("digest").first(), pl.len().alias("records"), pl.col("crystal_key").n_unique().alias("keys")
+    of_part = rows.group_by("composition").agg(*told).sort("composition")
+    pins = [pin for pin in job.pins if pin.composition in set(of_part["composition"])] if job.pins else []
+    together, refused = verified_together(batch, ids, pins, job.settings)
+    found = group_composition(
+        batch,
+        rows["crystal_key"].to_list(),
+        ids,
+        rows["rank"].to_list(),
+        job.settings.tolerances,
+        Options(
+            job.settings.mirror_images,
+            "near",
+            job.settings.fingerprint_k,
+            job.settings.matches_per_record,
+            together=tuple(pair.ids for pair in together),
+            apart=tuple((pin.record_a, pin.record_b) for pin in pins if pin.kind == "apart"),
+        ),
+        part if len(of_part) > 1 else None,
+    )
+    matches = _matches_frame(rows, batch, found.matches, found.witnesses, job.settings)
+    members = _members_frame(found)
+    if pins:
+        more = [_matches_frame(rows[p.places], p.batch, p.match, p.witness, job.settings) for p in together]
+        matches = by_key(pl.concat([matches, *more]), rows)
+        members = measured(members, matches, rows, job.settings.mirror_images == "separate")
+    summary = of_part.with_columns(
+        candidates=found.candidates,
+        verified=found.verified,
+        refused=pl.Series([refused] * len(of_part), dtype=pl.List(pl.Int64)),
+    )
+    return matches, members, summary
 
 
 def _members_frame(found: Grouping) -> pl.DataFrame:
@@ -130,10 +144,15 @@ def _members_frame(found: Grouping) -> pl.DataFrame:
     return pl.DataFrame(columns)
 
 
-def _lists(values: np.ndarray[Any, Any], inner: Any) -> pl.Series:
+def _lists(values: np.ndarray[Any, Any], number: type[np.generic]) -> pl.Series:
     """(n, ...) as lists of a row each."""
-    flat = np.ascontiguousarray(values).reshape(len(values), -1)
-    return pl.Series(flat.tolist(), dtype=pl.List(inner))
+    flat = np.ascontiguousarray(values, number).reshape(len(values), -1)
+    return _cut(flat, np.arange(len(flat) + 1, dtype=np.int64) * flat.shape[1])
+
+
+def _cut(values: np.ndarray[Any, Any], offsets: Ints) -> pl.Series:
+    """Row i holds values[offsets[i]:offsets[i + 1]]."""
+    return pl.Series(pl.from_arrow(pa.LargeListArray.from_arrays(pa.array(offsets), pa.array(values.reshape(-1)))))
 
 
 _SCHEMA: dict[str, Any] = {
@@ -164,7 +183,7 @@ _NO_MATCHES = pl.DataFrame(schema=_SCHEMA)
 
 
 def _matches_frame(
-    composition: str, rows: pl.DataFrame, batch: CrystalBatch, match: Verified, witness: Witnesses, settings: Settings
+    rows: pl.DataFrame, batch: CrystalBatch, match: Verified, witness: Witnesses, settings: Settings
 ) -> pl.DataFrame:
     """The rows of `matches`. `rows` and `batch` are in ascending order of record id, as the result is."""
     pairs = match.pairs
@@ -179,14 +198,13 @@ def _matches_frame(
     )  # fmt: skip
     grade = match.proper_grade if settings.mirror_images == "separate" else match.grade
     larger = np.where(match.larger == 0, ids[first], ids[second])
-    pairing = [witness.pairing[witness.offsets[i] : witness.offsets[i + 1]].tolist() for i in range(len(pairs))]
     return pl.DataFrame(
         {
             "record_a": ids[first].tolist(),
             "record_b": ids[second].tolist(),
             "crystal_key_a": keys[first].tolist(),
             "crystal_key_b": keys[second].tolist(),
-            "composition": [composition] * len(pairs),
+            "composition": rows["composition"].gather(first),
             "grade": [_GRADE_NAMES[g] if g < len(_GRADE_NAMES) else None for g in grade.tolist()],
             "largest_shift_angstrom": match.largest_shift,
             "rms_shift_angstrom": match.rms_shift,
@@ -199,11 +217,11 @@ def _matches_frame(
             "proper_shift_angstrom": pl.Series(match.proper_shift).fill_nan(None),
             "proper_strain": pl.Series(match.proper_strain).fill_nan(None),
             "reason": why.tolist(),
-            "p_matrix": _lists(match.p_matrix, pl.Int32),
-            "q_matrix": _lists(match.q_matrix, pl.Int32),
-            "orthogonal": _lists(witness.orthogonal, pl.Float64),
-            "shift_fractional": _lists(match.shift, pl.Float64),
-            "pairing": pl.Series(pairing, dtype=pl.List(pl.Int32)),
+            "p_matrix": _lists(match.p_matrix, np.int32),
+            "q_matrix": _lists(match.q_matrix, np.int32),
+            "orthogonal": _lists(witness.orthogonal, np.float64),
+            "shift_fractional": _lists(match.shift, np.float64),
+            "pairing": _cut(witness.pairing.astype(np.int32), witness.offsets),
         },
         schema=_SCHEMA,
     )
