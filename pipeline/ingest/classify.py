@@ -2,7 +2,6 @@
 
 from __future__ import annotations
 
-import hashlib
 from collections.abc import Iterator
 
 import duckdb
@@ -15,13 +14,15 @@ from ..cell.lattice_type import classify_lattices
 from ..fingerprint.distributions import Fingerprint, column_means, distributions
 from ..lattice.point_groups import point_group_order
 from ..model.columns import TABLES
-from ..settings import Settings, SourceSettings
+from ..settings import Settings
+from ..store.manifest import Done
+from ..store.parts import files_there
 from ..store.rows import one_number
 from ..store.workspace import Workspace
-from .pool import WorkerPool
+from .engine import Engine, done_in_order
 from .progress import Progress
 from .recompute import stored_batch
-from .reduce import ReduceJob, accepted_part, fixed, ragged, token_lists, write_part
+from .reduce import ReduceJob, accepted_part, fixed, ragged, stored_job, token_lists
 
 # The record with the smallest id of each key, where the types of that key are missing or came from another record: so
 # the types are a function of the records that are there, whatever order they came in.
@@ -32,7 +33,7 @@ TO_CLASSIFY = (
 )
 
 
-def classify_keys(workspace: Workspace, settings: Settings, pool: WorkerPool, progress: Progress) -> int:
+def classify_keys(workspace: Workspace, settings: Settings, pool: Engine, progress: Progress) -> int:
     """Classify every key that needs it, and drop the types of keys that no record has any more; returns how many.
 
     Each chunk is committed by itself; after a kill what is missing is found again.
@@ -44,10 +45,10 @@ def classify_keys(workspace: Workspace, settings: Settings, pool: WorkerPool, pr
     if not total:
         return 0
     progress.start("lattice types and space groups", total)
-    for job, count in pool.ordered_results(_classify, _jobs(workspace, settings, total)):
-        _commit(connection, str(accepted_part(job.part)))
+    for job, count in done_in_order(pool, _classify, _jobs(workspace, settings, total), workspace.manifest):
+        _commit(connection, str(accepted_part(workspace.manifest.checked(job.part))))
         job.raw.unlink()
-        accepted_part(job.part).unlink()
+        workspace.manifest.drop(job.part)
         progress.advance(count)
     return total
 
@@ -60,16 +61,15 @@ def _jobs(workspace: Workspace, settings: Settings, total: int) -> Iterator[Redu
             f"LIMIT {settings.chunk_records} OFFSET {start}) w "
             "JOIN canonical_forms f USING (record_id) JOIN records r USING (record_id) ORDER BY f.crystal_key"
         ).pl()
-        digest = hashlib.sha256("\0".join(frame["record_id"]).encode() + repr(settings).encode()).hexdigest()[:32]
-        part = workspace.parts / f"types-{digest}"
-        raw = part.with_name(part.name + ".raw.parquet")
-        frame.write_parquet(raw, compression="lz4")
-        yield ReduceJob(number, raw, part, settings, SourceSettings())
+        yield stored_job(workspace.place, "types", number, frame, settings)
 
 
-def _classify(job: ReduceJob) -> int:
+def _classify(job: ReduceJob) -> Done:
     """One chunk's types, as a part with the columns of `crystal_types`."""
-    frame = pl.read_parquet(job.raw)
+    frame = job.raw.frame()
+    there = files_there((accepted_part(job.part),))
+    if there is not None:
+        return Done(len(frame), there)
     batch = stored_batch(frame)
     tolerances = job.settings.tolerances
     lattices = classify_lattices(batch.cells, tolerances, batch.periodicity)
@@ -121,8 +121,8 @@ def _classify(job: ReduceJob) -> int:
         .join(failures, on="row", how="left")
         .sort("row")
     )
-    write_part(types.select(c.name for c in TABLES["crystal_types"].columns).to_arrow(), accepted_part(job.part))
-    return len(frame)
+    table = types.select(c.name for c in TABLES["crystal_types"].columns).to_arrow()
+    return Done(len(frame), (accepted_part(job.part).write(table),))
 
 
 def _by_crystal(prints: Fingerprint, k: int) -> pa.Array:

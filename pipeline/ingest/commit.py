@@ -4,12 +4,12 @@ from __future__ import annotations
 
 from collections.abc import Sequence
 from dataclasses import dataclass
-from pathlib import Path
 
 import duckdb
 import polars as pl
 
 from ..model.columns import TABLES
+from ..store.parts import Part
 from ..store.rows import one_number, one_row
 from .reduce import accepted_part, rejects_part
 from .split import RawChunk
@@ -31,19 +31,18 @@ class ChunkToCommit:
     unchanged: pl.DataFrame
     """record_id, position, file of raw records that the store holds just so: they were not worked on again."""
 
-    part: Path
     recompute: bool
     """Canonical rows of known records are replaced even where the content is equal."""
 
 
-def commit_chunk(connection: duckdb.DuckDBPyConnection, work: ChunkToCommit) -> dict[str, int]:
-    """Write the chunk; a chunk that is already written (same run, number and digest) is left alone.
+def commit_chunk(connection: duckdb.DuckDBPyConnection, work: ChunkToCommit, part: Part) -> dict[str, int]:
+    """Write the chunk, whose part is on this machine and as the manifest lists it.
 
     Returns the counts of the chunk's row in `chunks`.
     """
     connection.execute("BEGIN")
     try:
-        counts = _commit(connection, work)
+        counts = _commit(connection, work, part)
         connection.execute("COMMIT")
     except BaseException:
         connection.execute("ROLLBACK")
@@ -61,13 +60,13 @@ def is_committed(connection: duckdb.DuckDBPyConnection, run_id: int, source: str
     return row is not None
 
 
-def _commit(connection: duckdb.DuckDBPyConnection, work: ChunkToCommit) -> dict[str, int]:
+def _commit(connection: duckdb.DuckDBPyConnection, work: ChunkToCommit, part: Part) -> dict[str, int]:
     run, source = work.run_id, work.source
     for file in work.chunk.begins:
         connection.execute(
             "DELETE FROM rejects WHERE source = $1 AND (file = $2 OR starts_with(file, $2 || '/'))", [source, file]
         )
-    parquet = str(rejects_part(work.part))
+    parquet = str(rejects_part(part))
     connection.execute(
         "INSERT INTO rejects SELECT ?, file, position, label, stage, reason, message, ? FROM read_parquet(?)",
         [source, run, parquet],
@@ -75,8 +74,8 @@ def _commit(connection: duckdb.DuckDBPyConnection, work: ChunkToCommit) -> dict[
     rejected = one_number(connection, "SELECT count(*) FROM read_parquet(?)", [parquet])
     counts = {"found": len(work.chunk.records), "rejected": rejected, "unchanged": len(work.unchanged)}
     worked = {"new": 0, "amended": 0, "replaced": 0, "unchanged": 0}
-    if one_number(connection, "SELECT count(*) FROM read_parquet(?)", [str(accepted_part(work.part))]):
-        worked = _commit_incoming(connection, work)
+    if one_number(connection, "SELECT count(*) FROM read_parquet(?)", [str(accepted_part(part))]):
+        worked = _commit_incoming(connection, work, str(accepted_part(part)))
     if len(work.unchanged):
         connection.register("unchanged_frame", work.unchanged.to_arrow())
         connection.execute(
@@ -97,8 +96,8 @@ def _commit(connection: duckdb.DuckDBPyConnection, work: ChunkToCommit) -> dict[
     return counts
 
 
-def _commit_incoming(connection: duckdb.DuckDBPyConnection, work: ChunkToCommit) -> dict[str, int]:
-    run, source, part = work.run_id, work.source, str(accepted_part(work.part))
+def _commit_incoming(connection: duckdb.DuckDBPyConnection, work: ChunkToCommit, part: str) -> dict[str, int]:
+    run, source = work.run_id, work.source
     same_facts = " AND ".join(f"r.{c} IS NOT DISTINCT FROM i.{c}" for c in FACT_COLUMNS)
     connection.execute(
         "CREATE OR REPLACE TEMP TABLE change AS SELECT i.record_id, "

@@ -13,15 +13,16 @@ import duckdb
 import polars as pl
 
 from ..settings import Settings
+from ..store.parts import Part
 from ..store.rows import one_number, one_row
 from ..store.runs import Run, begin_run
 from ..store.stages import changed_stages, record_settings, refuse_mixed, stored_settings
 from ..store.workspace import Workspace
 from .commit import ChunkToCommit, commit_chunk, is_committed
+from .engine import Engine, done_in_order
 from .finish import finish_source
-from .pool import WorkerPool
 from .progress import Progress
-from .reduce import ReduceJob, accepted_part, part_name, reduce_chunk, rejects_part
+from .reduce import ReduceJob, part_name, reduce_chunk
 from .scan import IngestRequest, Plan, SourceToRead, scan
 from .split import RawChunk, raw_chunks
 
@@ -63,9 +64,7 @@ def prepare_ingest(workspace: Workspace, request: IngestRequest, settings: Setti
     return IngestWork(run, plan, settings, request.recompute and bool({"canonical", "fingerprint"} & set(changed)))
 
 
-def read_source(
-    workspace: Workspace, work: IngestWork, source: SourceToRead, pool: WorkerPool, progress: Progress
-) -> None:
+def read_source(workspace: Workspace, work: IngestWork, source: SourceToRead, pool: Engine, progress: Progress) -> None:
     """Read, reduce and commit all changed files of a source, chunk by chunk in order, then finish it."""
     connection = workspace.connection
     found: Counter[str] = Counter({f.file: 0 for f in source.files if f.changed})
@@ -81,12 +80,11 @@ def read_source(
                 continue
             yield _job(workspace, work, source, chunk, waiting)
 
-    for job, _ in pool.ordered_results(reduce_chunk, jobs()):
+    for job, _ in done_in_order(pool, reduce_chunk, jobs(), workspace.manifest):
         todo = waiting.pop(job.number)
-        commit_chunk(connection, todo)
+        commit_chunk(connection, todo, workspace.manifest.checked(job.part))
         job.raw.unlink()
-        accepted_part(job.part).unlink()
-        rejects_part(job.part).unlink()
+        workspace.manifest.drop(job.part)
         progress.advance(len(todo.chunk.records))
     finish_source(connection, work.run.run_id, source, dict(found))
 
@@ -99,14 +97,14 @@ def _job(
     if not source.force and one_row(workspace.connection, _KNOWN, [source.source]):
         unchanged = _unchanged(workspace.connection, chunk)
     todo = chunk.records.join(unchanged, on="record_id", how="anti", maintain_order="left")
-    part = workspace.parts / part_name(chunk.digest, unchanged["record_id"].to_list(), work.settings, source.settings)
-    raw = part.with_name(part.name + ".raw.parquet")
-    todo.write_parquet(raw, compression="lz4")
+    name = part_name(chunk.digest, unchanged["record_id"].to_list(), work.settings, source.settings)
+    raw = Part(workspace.place, name + ".raw.parquet")
+    raw.write_frame(todo)
     light = RawChunk(
         chunk.number, chunk.records.select("record_id"), chunk.begins, chunk.found, chunk.digest
     )  # the texts are on disk now: do not hold them while the chunk is in flight
-    waiting[chunk.number] = ChunkToCommit(work.run.run_id, source.source, light, unchanged, part, source.force)
-    return ReduceJob(chunk.number, raw, part, work.settings, source.settings)
+    waiting[chunk.number] = ChunkToCommit(work.run.run_id, source.source, light, unchanged, source.force)
+    return ReduceJob(chunk.number, raw, raw.with_name(name), work.settings, source.settings)
 
 
 _KNOWN = "SELECT 1 FROM records WHERE source = ? LIMIT 1"

@@ -15,13 +15,10 @@ from types import TracebackType
 from typing import TypeVar
 
 from ..errors import WorkError
+from .engine import FEW
 
 J = TypeVar("J")
 R = TypeVar("R")
-
-
-FEW = 4
-"""So many chunks of ordinary size take less time than a worker needs to start."""
 
 
 def _leave_with_parent(parent: int) -> None:

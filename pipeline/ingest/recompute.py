@@ -2,9 +2,7 @@
 
 from __future__ import annotations
 
-import hashlib
 from collections.abc import Iterator
-from pathlib import Path
 
 import duckdb
 import numpy as np
@@ -14,16 +12,18 @@ import pyarrow as pa
 from ..cell.canonical import canonicalise
 from ..errors import NumericsError
 from ..model.batch import CrystalBatch
-from ..settings import Settings, SourceSettings
+from ..settings import Settings
+from ..store.manifest import Done
+from ..store.parts import Part, files_there
 from ..store.rows import one_number
 from ..store.workspace import Workspace
 from .commit import insert_canonical_forms
-from .pool import WorkerPool
+from .engine import Engine, done_in_order
 from .progress import Progress
-from .reduce import ReduceJob, accepted_part, crystal_columns, write_part
+from .reduce import ReduceJob, accepted_part, crystal_columns, stored_job
 
 
-def recompute_canonical(workspace: Workspace, settings: Settings, pool: WorkerPool, progress: Progress) -> int:
+def recompute_canonical(workspace: Workspace, settings: Settings, pool: Engine, progress: Progress) -> int:
     """Reduce every stored structure anew, replace the rows of `canonical_forms` and drop `crystal_types`; their number.
 
     Chunks already replaced are replaced again after a kill: the result is the same.
@@ -32,10 +32,10 @@ def recompute_canonical(workspace: Workspace, settings: Settings, pool: WorkerPo
     total = one_number(connection, "SELECT count(*) FROM structures")
     progress.start("reducing stored structures anew", total)
     done = 0
-    for job, count in pool.ordered_results(_reduce_stored, _jobs(workspace, settings, total)):
-        _replace(connection, accepted_part(job.part))
+    for job, count in done_in_order(pool, _reduce_stored, _jobs(workspace, settings, total), workspace.manifest):
+        _replace(connection, accepted_part(workspace.manifest.checked(job.part)))
         job.raw.unlink()
-        accepted_part(job.part).unlink()
+        workspace.manifest.drop(job.part)
         progress.advance(count)
         done += count
     connection.execute("DELETE FROM crystal_types")  # their tolerances may be the ones that changed
@@ -48,11 +48,7 @@ def _jobs(workspace: Workspace, settings: Settings, total: int) -> Iterator[Redu
             "SELECT s.record_id, s.cell_angstrom, s.species, s.positions_fractional, r.periodicity FROM structures s "
             f"JOIN records r USING (record_id) ORDER BY s.record_id LIMIT {settings.chunk_records} OFFSET {start}"
         ).pl()
-        digest = hashlib.sha256("\0".join(frame["record_id"]).encode() + repr(settings).encode()).hexdigest()[:32]
-        part = workspace.parts / f"again-{digest}"
-        raw = part.with_name(part.name + ".raw.parquet")
-        frame.write_parquet(raw, compression="lz4")
-        yield ReduceJob(number, raw, part, settings, SourceSettings())
+        yield stored_job(workspace.place, "again", number, frame, settings)
 
 
 def stored_batch(frame: pl.DataFrame) -> CrystalBatch:
@@ -71,8 +67,11 @@ def stored_batch(frame: pl.DataFrame) -> CrystalBatch:
     )
 
 
-def _reduce_stored(job: ReduceJob) -> int:
-    frame = pl.read_parquet(job.raw)
+def _reduce_stored(job: ReduceJob) -> Done:
+    frame = job.raw.frame()
+    there = files_there((accepted_part(job.part),))
+    if there is not None:
+        return Done(len(frame), there)
     batch = stored_batch(frame)
     canonical = canonicalise(batch, job.settings.tolerances)
     if canonical.refusals:
@@ -86,11 +85,10 @@ def _reduce_stored(job: ReduceJob) -> int:
         "record_id": frame["record_id"].to_arrow(),
         **crystal_columns(batch, canonical),
     }
-    write_part(pa.table(columns), accepted_part(job.part))
-    return len(frame)
+    return Done(len(frame), (accepted_part(job.part).write(pa.table(columns)),))
 
 
-def _replace(connection: duckdb.DuckDBPyConnection, part: Path) -> None:
+def _replace(connection: duckdb.DuckDBPyConnection, part: Part) -> None:
     connection.execute("BEGIN")
     try:
         connection.execute("CREATE OR REPLACE TEMP TABLE again AS SELECT * FROM read_parquet(?)", [str(part)])

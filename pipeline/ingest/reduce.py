@@ -1,23 +1,21 @@
 """The work on one chunk: raw records to parsed, canonical crystals, written as two Parquet parts.
 
-Runs in a worker; takes and returns paths and counts. A part is written to a temporary name, synced and renamed, so that
-a part that is there is whole; it is named by the digest of what it was made from.
+Runs in a worker; takes and returns names and counts. A part that is there is whole (store/parts.py), and named by the
+digest of what it was made from.
 """
 
 from __future__ import annotations
 
 import hashlib
-import os
 from collections import defaultdict
 from dataclasses import dataclass
-from pathlib import Path
 from typing import Any
 
 import numpy as np
 import polars as pl
 import pyarrow as pa
-import pyarrow.parquet as pq
 
+from .. import __version__
 from ..cell.canonical import CanonicalBatch, canonicalise
 from ..model.batch import CrystalBatch, select
 from ..model.raw import ParseOptions
@@ -25,6 +23,8 @@ from ..model.refusals import Refusal
 from ..model.species import formulas_of
 from ..readers import reader_named
 from ..settings import Settings, SourceSettings
+from ..store.manifest import Done
+from ..store.parts import Part, files_there, raw_and_part
 from .energies import RecordFacts, record_facts
 
 STAGE_VERSION = 1
@@ -33,13 +33,13 @@ STAGE_VERSION = 1
 
 @dataclass(frozen=True, slots=True)
 class ReduceJob:
-    """One chunk's work: paths and settings only."""
+    """One chunk's work: names and settings only."""
 
     number: int
-    raw: Path
+    raw: Part
     """Parquet of raw records (split.RAW_SCHEMA) that need work."""
 
-    part: Path
+    part: Part
     """Stem of the parts to write: PART.accepted.parquet and PART.rejects.parquet."""
 
     settings: Settings
@@ -48,27 +48,35 @@ class ReduceJob:
 
 def part_name(digest: str, left_out: list[str], settings: Settings, source: SourceSettings) -> str:
     """Name of a chunk's parts: digest of its raw records, of those left out as unchanged, and of the settings."""
-    h = hashlib.sha256(f"{STAGE_VERSION}\0{digest}\0{settings.of_stage('parse')}\0".encode())
+    h = hashlib.sha256(f"{__version__}\0{STAGE_VERSION}\0{digest}\0{settings.of_stage('parse')}\0".encode())
     h.update(f"{settings.of_stage('canonical')}\0{source.model_dump()}\0".encode())
     h.update("\0".join(left_out).encode())
     return h.hexdigest()[:32]
 
 
-def accepted_part(part: Path) -> Path:
-    """The part of accepted records; written last, so its presence says that both are there."""
+def stored_job(place: str, kind: str, number: int, frame: pl.DataFrame, settings: Settings) -> ReduceJob:
+    """A job on rows of the store: they are written down for a worker, and its part is named by what they are."""
+    stages = ("parse", "canonical", "fingerprint")
+    raw, part = raw_and_part(place, kind, frame, STAGE_VERSION, [settings.of_stage(stage) for stage in stages])
+    return ReduceJob(number, raw, part, settings, SourceSettings())
+
+
+def accepted_part(part: Part) -> Part:
+    """The part of accepted records."""
     return part.with_name(part.name + ".accepted.parquet")
 
 
-def rejects_part(part: Path) -> Path:
+def rejects_part(part: Part) -> Part:
     """The part of refused records."""
     return part.with_name(part.name + ".rejects.parquet")
 
 
-def reduce_chunk(job: ReduceJob) -> int:
-    """Do the work unless its parts are there already; returns the number of raw records."""
-    raw = pl.read_parquet(job.raw).with_row_index("row")
-    if accepted_part(job.part).exists():
-        return len(raw)
+def reduce_chunk(job: ReduceJob) -> Done:
+    """Do the work unless its parts are there already."""
+    raw = job.raw.frame().with_row_index("row")
+    there = files_there((rejects_part(job.part), accepted_part(job.part)))
+    if there is not None:
+        return Done(len(raw), there)
     rejects: list[tuple[int, Refusal]] = []
     accepted: list[pa.Table] = []
     refused = raw["reason"].to_list()
@@ -101,10 +109,9 @@ def reduce_chunk(job: ReduceJob) -> int:
             accepted.append(_table(raw[kept], given, canonical, facts))
     rejects.sort(key=lambda r: r[0])
     where = raw.select("record_id", "file", "position", "label")
-    write_part(_rejects_table(where, rejects), rejects_part(job.part))
-    table = pa.concat_tables(accepted).sort_by("row") if accepted else None
-    write_part(table if table is not None else pa.table({"row": pa.array([], pa.uint32())}), accepted_part(job.part))
-    return len(raw)
+    refused_file = rejects_part(job.part).write(_rejects_table(where, rejects))
+    table = pa.concat_tables(accepted).sort_by("row") if accepted else pa.table({"row": pa.array([], pa.uint32())})
+    return Done(len(raw), (refused_file, accepted_part(job.part).write(table)))
 
 
 def content_hashes(batch: CrystalBatch) -> list[str]:
@@ -213,12 +220,3 @@ def _rejects_table(where: pl.DataFrame, rejects: list[tuple[int, Refusal]]) -> p
             "message": pa.array([r.message for _, r in rejects], pa.string()),
         }
     )
-
-
-def write_part(table: pa.Table, path: Path) -> None:
-    """Write a part whole or not at all."""
-    temporary = path.with_name(f"{path.name}.{os.getpid()}.new")
-    pq.write_table(table, temporary, compression="lz4")
-    with temporary.open("rb") as f:
-        os.fsync(f.fileno())
-    temporary.replace(path)

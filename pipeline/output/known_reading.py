@@ -8,13 +8,14 @@ from pathlib import Path
 import polars as pl
 
 from ..errors import UsageError
-from ..ingest.pool import WorkerPool
+from ..ingest.engine import Engine
 from ..ingest.progress import Progress
 from ..ingest.reduce import ReduceJob, accepted_part, reduce_chunk, rejects_part
 from ..ingest.scan import FileToRead, SourceToRead
 from ..ingest.split import raw_chunks
 from ..readers.walk import walk
 from ..settings import Settings, SourceSettings
+from ..store.parts import Part
 
 ACCEPTED = (
     "place", "file", "position", "label", "content_hash", "crystal_key", "composition", "formula",
@@ -27,7 +28,7 @@ def read_new(
     paths: Sequence[Path],
     settings: Settings,
     of_source: Callable[[str], SourceSettings],
-    pool: WorkerPool,
+    pool: Engine,
     folder: Path,
     progress: Progress,
 ) -> tuple[pl.DataFrame, pl.DataFrame]:
@@ -39,16 +40,16 @@ def read_new(
     """
     progress.start("reading", None)
     accepted, refused, begun = [], [], 0
-    for job, records in pool.ordered_results(reduce_chunk, _jobs(paths, settings, of_source, folder)):
-        where = pl.read_parquet(job.raw, columns=["file", "position"]).with_row_index("place", begun)
-        begun += records
-        part = pl.read_parquet(accepted_part(job.part))
+    for job, done in pool.ordered_results(reduce_chunk, _jobs(paths, settings, of_source, folder)):
+        where = job.raw.frame().select("file", "position").with_row_index("place", begun)
+        begun += done.records
+        part = accepted_part(job.part).frame()
         if len(part):
             accepted.append(part.join(where, on=["file", "position"]).select(ACCEPTED))
-        refused.append(pl.read_parquet(rejects_part(job.part)).join(where, on=["file", "position"]).select(REFUSED))
-        for path in (job.raw, accepted_part(job.part), rejects_part(job.part)):
-            path.unlink()
-        progress.advance(records)
+        refused.append(rejects_part(job.part).frame().join(where, on=["file", "position"]).select(REFUSED))
+        for file in (job.raw, accepted_part(job.part), rejects_part(job.part)):
+            file.unlink()
+        progress.advance(done.records)
     return (
         pl.concat(accepted) if accepted else pl.DataFrame(),
         pl.concat(refused) if refused else pl.DataFrame(schema=dict.fromkeys(REFUSED, pl.String)),
@@ -75,8 +76,8 @@ def _jobs(
             kind = "folder" if root.is_dir() else "file"
             source = SourceToRead(name, root, kind, told, (file,), (), True)
             for chunk in raw_chunks(source, settings):
-                part = folder / f"new-{number}"
+                part = Part(str(folder), f"new-{number}")
                 raw = part.with_name(part.name + ".raw.parquet")
-                chunk.records.write_parquet(raw, compression="lz4")
+                raw.write_frame(chunk.records)
                 yield ReduceJob(number, raw, part, settings, told)
                 number += 1

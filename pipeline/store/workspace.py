@@ -16,8 +16,10 @@ import duckdb
 from ..errors import StoreError
 from .connect import no_store, open_for_reading, open_for_writing
 from .lock import WriterLock
+from .manifest import Manifest
+from .parts import empty_place, make_place, place_named
 from .publish import mark_of, publish
-from .rows import one_number
+from .rows import one_number, one_row
 from .schema import migrate
 from .stages import stored_settings
 
@@ -25,8 +27,9 @@ from .stages import stored_settings
 class Workspace:
     """The right to write to a store. Use as a context; nothing is visible to readers before `publish`.
 
-    The folder FILE.work/ holds `work.duckdb` (the store that is worked on), `parts/` (results of chunks on their way),
-    `lock`, and `published.json` (how the published file looked when it was last put in place).
+    The folder FILE.work/ holds `work.duckdb` (the store that is worked on), `parts/` (results of chunks on their way,
+    unless they are kept elsewhere), `manifest.jsonl` (which of them are whole), `lock`, and `published.json` (how the
+    published file looked when it was last put in place).
     """
 
     def __init__(
@@ -36,16 +39,22 @@ class Workspace:
         wait_seconds: float = 0.0,
         scratch: bool = False,
         must_exist: bool = False,
+        parts: str | None = None,
     ) -> None:
-        """scratch: work on a copy that is thrown away at the end (a dry run). must_exist: make no new store."""
+        """scratch: work on a copy that is thrown away at the end (a dry run). must_exist: make no new store.
+
+        parts: a folder or URL in which parts are kept, in a folder of this store's own; None: in the work folder.
+        """
         self.published = published.absolute()
         self.folder = self.published.with_name(self.published.name + ".work")
         self.work_file = self.folder / "work.duckdb"
-        self.parts = self.folder / "parts"
+        self.place = str(self.folder / "parts")
+        self._parts = parts
         self._scratch = scratch
         self._must_exist = must_exist
         self._lock = WriterLock(self.folder / "lock", command, wait_seconds)
         self._connection: duckdb.DuckDBPyConnection | None = None
+        self._manifest: Manifest | None = None
 
     def __enter__(self) -> Workspace:
         if self.published.is_dir():
@@ -60,7 +69,6 @@ class Workspace:
             self._settle_which_store()
             if self._scratch:
                 self._work_on_a_copy()
-            self.parts.mkdir(exist_ok=True)
             self._connection = open_for_writing(self.work_file)
             migrate(self._connection)
             self._connection.execute(
@@ -69,6 +77,7 @@ class Workspace:
                 [uuid.uuid4().hex],
             )
             self._connection.execute("SET preserve_insertion_order = true")
+            self._choose_place()
         except BaseException:
             self.__exit__(None, None, None)
             raise
@@ -80,6 +89,8 @@ class Workspace:
                 self._connection.close()
             self._connection = None
         if self._scratch:
+            if self._manifest is not None and self._parts:
+                empty_place(self.place)
             shutil.rmtree(self.folder / "scratch", ignore_errors=True)
         self._lock.__exit__(None, None, None)
 
@@ -89,6 +100,13 @@ class Workspace:
         if self._connection is None:
             raise RuntimeError("the workspace is not open")
         return self._connection
+
+    @property
+    def manifest(self) -> Manifest:
+        """The parts that are done and not yet in the store."""
+        if self._manifest is None:
+            raise RuntimeError("the workspace is not open")
+        return self._manifest
 
     @property
     def ahead_of_published(self) -> bool:
@@ -117,8 +135,19 @@ class Workspace:
 
     def clear_parts(self) -> None:
         """Remove the results of chunks that are all in the store by now."""
-        shutil.rmtree(self.parts, ignore_errors=True)
-        self.parts.mkdir(exist_ok=True)
+        self.manifest.clear()
+        empty_place(self.place)
+        make_place(self.place)
+
+    def _choose_place(self) -> None:
+        """Where parts are kept, and the manifest of those that are done; it stays on this machine."""
+        folder = self.work_file.parent
+        if self._parts:
+            row = one_row(self.connection, "SELECT value FROM store_facts WHERE name = 'store_id'")
+            store_id = row[0] if row else ""
+            self.place = f"{place_named(self._parts)}/census-{store_id[:16]}{'-dry' if self._scratch else ''}"
+        make_place(self.place)
+        self._manifest = Manifest(folder / "manifest.jsonl", folder / "fetched")
 
     def _settle_which_store(self) -> None:
         """Go on from the work store, or from the published file where only that is there.
@@ -167,7 +196,7 @@ class Workspace:
             open_for_writing(self.work_file).close()
             shutil.copyfile(self.work_file, scratch / "work.duckdb")
         self.work_file = scratch / "work.duckdb"
-        self.parts = scratch / "parts"
+        self.place = str(scratch / "parts")
 
     def _copy_published_to(self, target: Path) -> None:
         temporary = target.with_name(f"{target.name}.{os.getpid()}.new")
