@@ -81,7 +81,7 @@ def test_order_chunks_and_number_of_runs_change_nothing(tmp_path: Path, ingest, 
 
 @pytest.mark.slow
 def test_two_workers_change_nothing(tmp_path: Path, ingest, rows, monkeypatch):
-    monkeypatch.setattr(stage, "MOST_COMPOSITIONS", 1)
+    monkeypatch.setattr(stage, "MOST_RECORDS", 1)
     monkeypatch.setattr(stage, "LITTLE_WORK", 0)
     stores = [tmp_path / "one.duckdb", tmp_path / "two.duckdb"]
     for workers, store in enumerate(stores, start=1):
@@ -136,7 +136,7 @@ def test_changed_and_withdrawn_records_leave_no_trace(tmp_path: Path, ingest, ro
 
 
 def test_a_grouping_that_dies_halfway_goes_on(tmp_path: Path, ingest, rows, monkeypatch):
-    monkeypatch.setattr(stage, "MOST_COMPOSITIONS", 1)
+    monkeypatch.setattr(stage, "MOST_RECORDS", 1)
     store, other = tmp_path / "census.duckdb", tmp_path / "other.duckdb"
     table = write_csv(tmp_path / "t.csv", rows)
     ingest(table)
