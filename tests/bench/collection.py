@@ -57,8 +57,8 @@ class Kind:
     """Share of records that show a crystal again; 1: all show crystal 0."""
 
     common: float = 0.01
-    """Chance of a crystal to have one of the common formulas drawn for it (about twice as many have one in the end, since
-    later crystals take their formula from it); 1: all have them."""
+    """Chance of a crystal to have one of the common formulas drawn for it; 1: all have them. (About twice as many have
+    one in the end, since later crystals take their formula from earlier ones.)"""
 
     noise: float = 0.02
     """Largest distance that sites are moved by, angstrom; strains are a tenth of the number."""

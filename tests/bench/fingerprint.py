@@ -2,33 +2,35 @@
 
 from __future__ import annotations
 
-from pathlib import Path
-from typing import Any
-
 import numpy as np
 
 from lattice_census.fingerprint.distributions import column_means, distributions
 from lattice_census.model.batch import CrystalBatch, select
 
-from .structures import canonical_of, load
-from .timing import against, reference_seconds, timed
+from .figures import Options, Report
+from .structures import canonical_of, mixed
+from .timing import each, ratio, reference, timed
 
 
-def run(file: Path | None, repeat: int) -> dict[str, Any]:
+def run(options: Options) -> Report:
     """Time the fingerprint and check it."""
-    batch = load(file)
+    batch, repeat = mixed(options, 2000), options.times(3)
     crystals = canonical_of(batch).crystals
     distributions(select(crystals, np.arange(1)))
     rows, seconds = timed(lambda: distributions(crystals, 64), repeat)
-    column_means(crystals, rows)
+    _, means = timed(lambda: column_means(crystals, rows), repeat)
     for i in range(0, len(crystals), max(1, len(crystals) // 10)):
         np.testing.assert_allclose(rows.total[crystals.sites(i)], _plain(crystals, i, 64), atol=1e-8)
-    reference = reference_seconds(batch)
-    return {
-        "structures": len(batch),
-        "reference_us_per_structure": reference * 1e6,
-        "fingerprint": against(reference, seconds, len(batch)),
-    }
+    theirs = reference(batch, repeat)
+    return Report(
+        "fingerprint",
+        {"structures": len(batch), "sites_mean": f"{len(crystals.species) / len(crystals):.4g}", "k": 64},
+        (
+            each("distributions", seconds, len(batch)),
+            each("means", means, len(batch)),
+            ratio("fingerprint", seconds + means, len(batch), theirs),
+        ),
+    )
 
 
 def _plain(crystals: CrystalBatch, i: int, k: int) -> np.ndarray:

@@ -2,47 +2,54 @@
 
 from __future__ import annotations
 
-import time
-from pathlib import Path
-from typing import Any
-
 import numpy as np
 
-from lattice_census.grouping.composition import group_composition
+from lattice_census.grouping.composition import Grouping, group_composition
+from lattice_census.kernels import warm_up
 from lattice_census.model.batch import select
 from lattice_census.tolerances import Tolerances
 from tests.invariants import check_matches
 
-from .structures import canonical_of, largest_composition, load
-from .timing import reference_seconds, summary
+from .figures import Options, Report
+from .structures import one_composition
+from .timing import ratio, reference, timed
 
 
-def run(file: Path | None, repeat: int) -> dict[str, Any]:
-    """Seconds for the largest composition; the same records in another order must give the same groups."""
-    crystals, keys = largest_composition(canonical_of(load(file)))
+def run(options: Options) -> Report:
+    """Seconds for one composition; the same records in another order must give the same groups."""
+    warm_up()
+    crystals, keys, known = one_composition(options, 2000)
     count = len(crystals)
     ids = [f"{i:020x}" for i in range(count)]
-    group_composition(select(crystals, np.arange(4)), keys[:4], ids[:4], [0, 1, 2, 3], Tolerances())
-    seconds, found = [], None
-    for _ in range(repeat):
-        begun = time.perf_counter()
-        found = group_composition(crystals, keys, ids, list(range(count)), Tolerances())
-        seconds.append(time.perf_counter() - begun)
-    assert found is not None
+    found, seconds = timed(
+        lambda: group_composition(crystals, keys, ids, list(range(count)), Tolerances()), options.times(3)
+    )
     check_matches(found)
     order = np.random.default_rng(2).permutation(count)
     other = group_composition(
         select(crystals, order), [keys[i] for i in order], [ids[i] for i in order], order, Tolerances()
     )
     for grade, members in found.members.items():
-        assert (members.group_id == other.members[grade].group_id).all()
-    reference = reference_seconds(crystals) * count
-    taken = summary(seconds)
-    return {
-        "records": count,
-        **found.counts,
-        "families": {g: len(set(m.family_id.tolist())) for g, m in found.members.items()},
-        "groups": {g: len(set(m.group_id.tolist())) for g, m in found.members.items()},
-        "reference_s": reference,
-        "group": {**taken, "ratio_to_reference": taken["median_s"] / reference},
-    }
+        assert (members.group_id == other.members[grade].group_id).all(), f"groups at {grade} hang on the order"
+    if known is not None:
+        check_families(found, known)
+    theirs = reference(crystals, options.times(3))
+    sizes = {"records": count, **{k: found.counts[k] for k in ("nodes", "candidates", "verified", "crowded")}}
+    sizes |= {f"families_{g}": len(set(m.family_id.tolist())) for g, m in found.members.items()}
+    return Report(
+        "group",
+        sizes,
+        (seconds.figure("group"), ratio("group", seconds, count, theirs, 1.0)),
+    )
+
+
+def check_families(found: Grouping, known: np.ndarray, share: float = 0.999) -> None:
+    """Families at near against the crystal of each record: none holds two, and so much of the copies is found."""
+    families = found.members["near"].family_id.tolist()
+    pieces = set(zip(families, known.tolist(), strict=True))
+    merged = len(pieces) - len(set(families))
+    assert merged == 0, f"{merged} families hold different crystals"
+    crystals = len(set(known.tolist()))
+    assert len(families) - len(pieces) >= share * (len(families) - crystals), (
+        f"{crystals} crystals fall into {len(pieces)} families"
+    )

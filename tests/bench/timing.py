@@ -4,7 +4,8 @@ from __future__ import annotations
 
 import statistics
 import time
-from collections.abc import Callable
+from collections.abc import Callable, Sequence
+from dataclasses import dataclass
 from typing import Any
 
 import numpy as np
@@ -12,42 +13,69 @@ import spglib
 
 from lattice_census.model.batch import CrystalBatch
 
+from .figures import Figure
 
-def timed(work: Callable[[], Any], repeat: int) -> tuple[Any, dict[str, float]]:
-    """The result of the last of `repeat` calls, and seconds: median, least and greatest."""
+
+@dataclass(frozen=True, slots=True)
+class Seconds:
+    """Repeated timings of one thing."""
+
+    taken: tuple[float, ...]
+
+    @property
+    def median(self) -> float:
+        """The one that counts."""
+        return statistics.median(self.taken)
+
+    def __add__(self, other: Seconds) -> Seconds:
+        return Seconds(tuple(a + b for a, b in zip(self.taken, other.taken, strict=True)))
+
+    def figure(self, what: str, unit: str = "s", factor: float = 1.0, reach: float | None = None) -> Figure:
+        """Median and spread times a factor."""
+        least, greatest = min(self.taken) * factor, max(self.taken) * factor
+        return Figure(what, self.median * factor, unit, least, greatest, reach)
+
+
+def timed(work: Callable[[], Any], repeat: int) -> tuple[Any, Seconds]:
+    """The result of the last of `repeat` calls, and their seconds."""
     seconds = []
     result = None
     for _ in range(repeat):
         begun = time.perf_counter()
         result = work()
         seconds.append(time.perf_counter() - begun)
-    return result, summary(seconds)
+    return result, Seconds(tuple(seconds))
 
 
-def summary(seconds: list[float]) -> dict[str, float]:
-    """Median, least and greatest of repeated timings."""
-    return {"median_s": statistics.median(seconds), "least_s": min(seconds), "greatest_s": max(seconds)}
-
-
-def reference_seconds(batch: CrystalBatch, most: int = 500) -> float:
+def reference(batch: CrystalBatch, repeat: int, most: int = 500) -> Seconds:
     """Seconds a structure of spglib.get_symmetry_dataset at symprec 0.01 on one core, over `most` of the structures."""
-    rows = np.linspace(0, len(batch) - 1, min(most, len(batch))).astype(int)
-    cells = [(batch.cells[i], batch.positions[batch.sites(i)], batch.species[batch.sites(i)] + 1) for i in rows]
-    begun = time.perf_counter()
-    for cell in cells:
-        spglib.get_symmetry_dataset(cell, symprec=0.01)
-    return (time.perf_counter() - begun) / len(cells)
+    cells = [(batch.cells[i], batch.positions[batch.sites(i)], batch.species[batch.sites(i)] + 1) for i in
+             np.linspace(0, len(batch) - 1, min(most, len(batch))).astype(int)]  # fmt: skip
+    spglib.get_symmetry_dataset(cells[0], symprec=0.01)
+
+    def work() -> None:
+        for cell in cells:
+            spglib.get_symmetry_dataset(cell, symprec=0.01)
+
+    _, seconds = timed(work, repeat)
+    return Seconds(tuple(s / len(cells) for s in seconds.taken))
 
 
-def against(reference: float, seconds: dict[str, float], count: int) -> dict[str, float]:
-    """Structures a second and the ratio of the time a structure to the reference."""
-    each = seconds["median_s"] / count
-    return {
-        **seconds,
-        "structures_per_s": 1 / each,
-        "us_per_structure": each * 1e6,
-        "ratio_to_reference": each / reference,
-    }
+def ratio(what: str, ours: Seconds, count: int, theirs: Seconds, reach: float | None = None) -> Figure:
+    """Our time a structure over the reference's; the spread is that of both."""
+    least = min(ours.taken) / count / max(theirs.taken)
+    greatest = max(ours.taken) / count / min(theirs.taken)
+    return Figure(what, ours.median / count / theirs.median, "x reference", least, greatest, reach)
+
+
+def each(what: str, ours: Seconds, count: int) -> Figure:
+    """Microseconds a structure."""
+    return ours.figure(what, "us/structure", 1e6 / count)
+
+
+def exponent(sizes: Sequence[float], values: Sequence[float]) -> float:
+    """The slope of log value over log size: 1 is linear, 2 quadratic."""
+    return float(np.polyfit(np.log(sizes), np.log(values), 1)[0])
 
 
 def reference_numbers(batch: CrystalBatch, most: int = 300) -> list[int]:
@@ -55,8 +83,7 @@ def reference_numbers(batch: CrystalBatch, most: int = 300) -> list[int]:
     out = []
     for i in range(min(most, len(batch))):
         sites = batch.sites(i)
-        found = spglib.get_symmetry_dataset(
-            (batch.cells[i], batch.positions[sites], batch.species[sites] + 1), symprec=0.01
-        )
+        cell = (batch.cells[i], batch.positions[sites], batch.species[sites] + 1)
+        found = spglib.get_symmetry_dataset(cell, symprec=0.01)
         out.append(found.number if found is not None else 0)
     return out

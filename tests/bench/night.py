@@ -1,0 +1,87 @@
+"""A night on a collection in a process of its own: seconds by stage, processor time, peak memory, size of the store."""
+
+from __future__ import annotations
+
+import json
+import shutil
+import subprocess
+import sys
+from dataclasses import dataclass
+from functools import cache
+from pathlib import Path
+from typing import Any
+
+from .collection import Kind, write_collection
+from .process_tree import MemoryOfTree
+
+ROOT = Path(__file__).parents[2]
+START_UP = ("imports", "compile kernels")
+"""Stages that do not depend on what is read: loading libraries, and kernels from their cache."""
+
+
+@dataclass(frozen=True, slots=True)
+class Night:
+    """What one night took."""
+
+    store: Path
+    seconds: float
+    processor_s: float
+    """Of the process and its workers."""
+
+    stages: dict[str, float]
+    counts: dict[str, Any]
+    peak_bytes: int
+    peak_processes: int
+    measure: str
+    """How memory was added up: PSS or RSS."""
+
+    store_bytes: int
+
+    @property
+    def work_s(self) -> float:
+        """Seconds without start-up."""
+        return self.seconds - self.start_up_s
+
+    @property
+    def start_up_s(self) -> float:
+        """Seconds of START_UP."""
+        return sum(self.stages.get(name, 0.0) for name in START_UP)
+
+
+def run_night(path: Path, store: Path, workers: int, **settings: Any) -> Night:
+    """`run PATH` into a store, new or not. Raises AssertionError where the run fails."""
+    asked = {"path": str(path), "store": str(store), "settings": {"workers": workers, **settings}}
+    command = [sys.executable, "-m", "tests.bench.night_child", json.dumps(asked)]
+    process = subprocess.Popen(command, cwd=ROOT, stdout=subprocess.PIPE, text=True)
+    with MemoryOfTree(process.pid) as memory:
+        told, _ = process.communicate()
+    assert process.returncode == 0, f"the night on {path.name} ended with exit code {process.returncode}"
+    found = json.loads(told)
+    return Night(
+        store, found["seconds"], found["processor_s"], found["stages"], found["counts"], memory.peak_bytes,
+        memory.peak_processes, memory.measure, store.stat().st_size,
+    )  # fmt: skip
+
+
+def collection(scratch: Path, kind: Kind, count: int, workers: int, start: int = 0) -> Path:
+    """The folder of an invented collection; made once in a scratch folder."""
+    folder = scratch / f"collection-{abs(hash(kind)):x}-{start}-{count}"
+    if not (folder / "whole").exists():
+        write_collection(folder / "records", kind, start, count, workers)
+        (folder / "whole").touch()
+    return folder / "records"
+
+
+@cache
+def nights(scratch: Path, kind: Kind, count: int, workers: int, repeat: int) -> tuple[Night, ...]:
+    """Nights on an invented collection, each on a new store; the last one's store stays. Parts share them."""
+    path = collection(scratch, kind, count, workers)
+    store = scratch / f"night-{abs(hash(kind)):x}-{count}-{workers}.duckdb"
+    return tuple(run_night(path, fresh(store), workers) for _ in range(repeat))
+
+
+def fresh(store: Path) -> Path:
+    """The path of a store, with what was there taken away."""
+    store.unlink(missing_ok=True)
+    shutil.rmtree(store.with_name(store.name + ".work"), ignore_errors=True)
+    return store
