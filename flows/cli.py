@@ -15,7 +15,7 @@ import typer
 from lattice_census import __version__
 from lattice_census.errors import CensusError
 
-from . import asking, comparing, curating, proving, reading, reporting, writing
+from . import asking, comparing, curating, proving, reading, reporting, scheduling, writing
 
 app = typer.Typer(
     name="lattice-census",
@@ -46,6 +46,7 @@ def _root(
 _WRONG_WORDS: type[Exception] = typer.BadParameter.__bases__[0]
 
 writing.register(app)
+scheduling.register(app)
 curating.register(app)
 comparing.register(app)
 reading.register(app)

@@ -115,12 +115,13 @@ def group(
     failing = fail_on(fails, ("findings",))
     from .group import GroupJob
     from .group import group as steps
+    from .night import findings_of
 
     resolved = _resolved(store, settings, assignments, direct, workers)
     job = GroupJob(store, resolved, everything, recompute, wait)
     counts = _orchestrated("group", resolved.orchestrator, quiet, lambda step, progress: steps(job, step, progress))
     typer.echo(json.dumps(counts) if as_json else group_text(counts))
-    return 1 if "findings" in failing and _findings(store) else 0
+    return 1 if "findings" in failing and findings_of(store) else 0
 
 
 def run(
@@ -128,7 +129,12 @@ def run(
     store: StoreOption = DEFAULT_STORE,
     source: SourceOption = None,
     export: Annotated[
-        Path | None, typer.Option("--export", metavar="DIR", help="Export the kept records into this new folder.")
+        Path | None,
+        typer.Option(
+            "--export",
+            metavar="DIR",
+            help="Export the kept records into this new folder; {time} in it is the time of the run.",
+        ),
     ] = None,
     recompute: RecomputeOption = False,
     direct: DirectOption = False,
@@ -141,47 +147,29 @@ def run(
     fails: FailOnOption = None,
 ) -> int:
     """What a night does: ingest, group, keep, and, where a folder is given, export."""
-    failing = fail_on(fails, ("rejects", "findings"))
-    from .group import night
-    from .ingest import IngestJob
+    from .night import FAILS, Night, occurred, run_night, text_of
 
-    resolved = _resolved(store, settings, assignments, direct, workers)
-    job = IngestJob(store, _request(paths, source, recompute), resolved, wait)
-    counts = _orchestrated("run", resolved.orchestrator, quiet, lambda step, progress: night(job, step, progress))
-    told = None
-    if export is not None:
-        from lattice_census.output.export import export as export_to
-        from lattice_census.store.connect import open_for_reading
-
-        connection = open_for_reading(store)
-        try:
-            exported = export_to(connection, export)
-        finally:
-            connection.close()
-        told = {"kept": exported.kept, "set_aside": exported.set_aside, "folder": str(export)}
-    if as_json:
-        typer.echo(json.dumps({**counts, "export": told}))
-    else:
-        typer.echo(ingest_text(counts["ingest"], False))
-        typer.echo(group_text(counts["group"]))
-        from .curating import keep_text
-
-        typer.echo(keep_text(counts["keep"]))
-        if told:
-            typer.echo(f"Exported to {export}: {told['kept']:,} kept, {told['set_aside']:,} set aside.")
-    rejected = "rejects" in failing and counts["ingest"].get("rejected")
-    return 1 if rejected or ("findings" in failing and _findings(store)) else 0
+    night = Night(
+        tuple(map(str, paths)), str(store), source, text_of(export), recompute, text_of(settings),
+        tuple(assignments or ()), workers, "direct" if direct else None, wait, tuple(sorted(fail_on(fails, FAILS))),
+    )  # fmt: skip
+    resolved = night.resolved()
+    counts = _orchestrated(
+        "run", resolved.orchestrator, quiet, lambda step, progress: run_night(night, resolved, step, progress)
+    )
+    typer.echo(json.dumps(counts) if as_json else night_text(counts))
+    return 1 if occurred(night, counts) else 0
 
 
-def _findings(store: Path) -> int:
-    from lattice_census.store.connect import open_for_reading
-    from lattice_census.store.rows import one_number
+def night_text(counts: dict[str, Any]) -> str:
+    """The counts of a night in sentences."""
+    from .curating import keep_text
 
-    connection = open_for_reading(store)
-    try:
-        return one_number(connection, "SELECT count(*) FROM findings")
-    finally:
-        connection.close()
+    lines = [ingest_text(counts["ingest"], False), group_text(counts["group"]), keep_text(counts["keep"])]
+    if counts["export"]:
+        told = counts["export"]
+        lines.append(f"Exported to {told['folder']}: {told['kept']:,} kept, {told['set_aside']:,} set aside.")
+    return "\n".join(lines)
 
 
 def _request(paths: list[Path], source: str | None, recompute: bool, **source_settings: Any) -> IngestRequest:
