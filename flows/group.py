@@ -9,7 +9,7 @@ from typing import Any
 from lattice_census.decisions.ledger import lapse
 from lattice_census.grouping.exact import group_exact
 from lattice_census.grouping.stage import GroupCounts, find_work, group_records
-from lattice_census.ingest.pool import WorkerPool
+from lattice_census.ingest.engine import Engine
 from lattice_census.ingest.progress import Progress, Step
 from lattice_census.output.findings import find_all
 from lattice_census.settings import Settings
@@ -17,6 +17,7 @@ from lattice_census.store.runs import Run, begin_run, end_run
 from lattice_census.store.stages import record_settings, refuse_mixed
 from lattice_census.store.workspace import Workspace
 
+from .engine import engine_for
 from .ingest import IngestJob, compile_kernels, finish, ingest_into
 from .keeping import KeepJob, keep_into
 
@@ -35,8 +36,8 @@ class GroupJob:
 def group(job: GroupJob, step: Step, progress: Progress) -> dict[str, Any]:
     """Group what has changed, publish, and return the counts."""
     with (
-        Workspace(job.store, "group", job.wait_seconds, must_exist=True) as workspace,
-        WorkerPool(job.settings.worker_count) as pool,
+        Workspace(job.store, "group", job.wait_seconds, must_exist=True, parts=job.settings.parts) as workspace,
+        engine_for(job.settings, workspace) as pool,
     ):
         counts = group_into(workspace, job, pool, step, progress)
         finish(workspace, step)
@@ -46,8 +47,8 @@ def group(job: GroupJob, step: Step, progress: Progress) -> dict[str, Any]:
 def night(job: IngestJob, step: Step, progress: Progress) -> dict[str, Any]:
     """What a night does: ingest, then group, then keep, then publish once."""
     with (
-        Workspace(job.store, "run", job.wait_seconds) as workspace,
-        WorkerPool(job.settings.worker_count) as pool,
+        Workspace(job.store, "run", job.wait_seconds, parts=job.settings.parts) as workspace,
+        engine_for(job.settings, workspace) as pool,
     ):
         read = ingest_into(workspace, job, pool, step, progress, "ingest")
         again = GroupJob(job.store, job.settings, recompute=job.request.recompute)
@@ -57,7 +58,7 @@ def night(job: IngestJob, step: Step, progress: Progress) -> dict[str, Any]:
         return {"ingest": read, "group": grouped, "keep": kept}
 
 
-def group_into(workspace: Workspace, job: GroupJob, pool: WorkerPool, step: Step, progress: Progress) -> dict[str, Any]:
+def group_into(workspace: Workspace, job: GroupJob, pool: Engine, step: Step, progress: Progress) -> dict[str, Any]:
     """The steps of a grouping in an open workspace, up to the end of its run; not published yet."""
     connection = workspace.connection
     if not job.recompute:
@@ -67,7 +68,7 @@ def group_into(workspace: Workspace, job: GroupJob, pool: WorkerPool, step: Step
         return {"nothing_new": True}
     arguments = {"everything": job.everything}
     run = begin_run(connection, "group", arguments, work, job.settings.model_dump(mode="json"), job.recompute)
-    step("compile kernels", compile_kernels, progress)
+    step("compile kernels", compile_kernels, job.settings, progress)
     done = step("compare and group", group_records, workspace, run.run_id, job.settings, pool, progress, job.everything)
     return step("findings", _close, workspace, run, job.settings, done)
 

@@ -10,6 +10,7 @@ from lattice_census.decisions.ledger import lapse
 from lattice_census.grouping.exact import group_exact
 from lattice_census.grouping.stage import set_outdated_aside
 from lattice_census.ingest.classify import classify_keys
+from lattice_census.ingest.engine import Engine
 from lattice_census.ingest.ingest import (
     IngestWork,
     energies_without_unit,
@@ -17,7 +18,6 @@ from lattice_census.ingest.ingest import (
     prepare_ingest,
     read_source,
 )
-from lattice_census.ingest.pool import WorkerPool
 from lattice_census.ingest.progress import Progress, Step
 from lattice_census.ingest.recompute import recompute_canonical
 from lattice_census.ingest.scan import IngestRequest
@@ -27,6 +27,8 @@ from lattice_census.settings import Settings
 from lattice_census.store.runs import end_run
 from lattice_census.store.stages import record_settings
 from lattice_census.store.workspace import Workspace
+
+from .engine import engine_for
 
 
 @dataclass(frozen=True, slots=True)
@@ -43,8 +45,8 @@ class IngestJob:
 def ingest(job: IngestJob, step: Step, progress: Progress, command: str = "ingest") -> dict[str, Any]:
     """Run the job's steps, publish, and return the counts. A dry run does the same on a copy that is thrown away."""
     with (
-        Workspace(job.store, command, job.wait_seconds, scratch=job.dry_run) as workspace,
-        WorkerPool(job.settings.worker_count) as pool,
+        Workspace(job.store, command, job.wait_seconds, job.dry_run, parts=job.settings.parts) as workspace,
+        engine_for(job.settings, workspace) as pool,
     ):
         counts = ingest_into(workspace, job, pool, step, progress, command)
         if not job.dry_run:
@@ -53,13 +55,13 @@ def ingest(job: IngestJob, step: Step, progress: Progress, command: str = "inges
 
 
 def ingest_into(
-    workspace: Workspace, job: IngestJob, pool: WorkerPool, step: Step, progress: Progress, command: str
+    workspace: Workspace, job: IngestJob, pool: Engine, step: Step, progress: Progress, command: str
 ) -> dict[str, Any]:
     """The steps of an ingest in an open workspace, up to the end of its run; not published yet."""
     work = step("scan", prepare_ingest, workspace, job.request, job.settings, command)
     if work is None:
         return {"nothing_new": True}
-    step("compile kernels", compile_kernels, progress)
+    step("compile kernels", compile_kernels, job.settings, progress)
     if work.canonical_again:
         step("reduce stored structures anew", recompute_canonical, workspace, job.settings, pool, progress)
     for source in work.plan.sources:
@@ -78,8 +80,10 @@ def finish(workspace: Workspace, step: Step) -> None:
     workspace.clear_parts()
 
 
-def compile_kernels(progress: Progress) -> None:
-    """Compile the kernels or take them from the cache; a compilation is said."""
+def compile_kernels(settings: Settings, progress: Progress) -> None:
+    """Compile the kernels or take them from the cache; a compilation is said. Workers elsewhere do it themselves."""
+    if settings.engine != "processes":
+        return
     seconds = warm_up()
     if seconds > 5:
         progress.note(f"Compiled the kernels in {seconds:.0f} s; later runs take them from the cache.")

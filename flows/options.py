@@ -28,10 +28,30 @@ QuietOption = Annotated[bool, typer.Option("--quiet", help="No progress on stder
 WaitOption = Annotated[float, typer.Option("--wait", metavar="SECONDS", help="Wait so long for another run to end.")]
 DirectOption = Annotated[bool, typer.Option("--direct", help="Run without Prefect, with the same functions.")]
 WorkersOption = Annotated[int | None, typer.Option("--workers", help="Worker processes [default: one a core].")]
+EngineOption = Annotated[
+    str | None, typer.Option("--engine", metavar="ENGINE", help="Who does the work: processes (here), or dask.")
+]
+SchedulerOption = Annotated[
+    str | None,
+    typer.Option("--scheduler", metavar="ADDRESS", help="Dask scheduler [default: workers on this machine]."),
+]
+PartsOption = Annotated[
+    str | None,
+    typer.Option("--parts", metavar="PLACE", help="Folder or URL, seen by every worker, for parts on their way."),
+]
 FailOnOption = Annotated[
     list[str] | None,
     typer.Option("--fail-on", metavar="WHAT", help="Exit with 1 when there are: rejects. Several with commas."),
 ]
+
+
+def elsewhere(engine: str | None, scheduler: str | None, parts: str | None) -> list[str]:
+    """The options of an engine as settings in the form NAME=VALUE, a folder as a whole path."""
+    if parts and "://" not in parts:
+        parts = str(Path(parts).expanduser().absolute())
+    given = {"engine": engine, "scheduler": scheduler, "parts": parts}
+    return [f"{name}={json.dumps(value)}" for name, value in given.items() if value is not None]
+
 
 DEFAULT_STORE = Path("census.duckdb")
 

@@ -7,6 +7,7 @@ from __future__ import annotations
 
 import os
 from collections.abc import Callable
+from contextvars import ContextVar
 from typing import Any, TypeVar
 
 R = TypeVar("R")
@@ -39,4 +40,18 @@ def run_as_flow(name: str, body: Callable[[], R]) -> R:
     """body() inside a Prefect flow of this name; its steps are the flow's tasks."""
     from prefect import flow
 
-    return decorated(flow(name=name, persist_result=False, validate_parameters=False), body)
+    token = _BODY.set(body)
+    try:
+        result: R = decorated(flow(name=name, persist_result=False, validate_parameters=False), run_body)
+        return result
+    finally:
+        _BODY.reset(token)
+
+
+_BODY: ContextVar[Callable[[], Any]] = ContextVar("body of the flow")
+
+
+def run_body() -> Any:
+    """What a flow does, in this process. Tasks elsewhere are told of their flow by this name: the body stays here, with
+    all that is open in it."""
+    return _BODY.get()()

@@ -11,14 +11,18 @@ import typer
 from .options import (
     DEFAULT_STORE,
     DirectOption,
+    EngineOption,
     FailOnOption,
     JsonOption,
+    PartsOption,
     QuietOption,
+    SchedulerOption,
     SetOption,
     SettingsOption,
     StoreOption,
     WaitOption,
     WorkersOption,
+    elsewhere,
     fail_on,
     settings_from,
 )
@@ -74,6 +78,9 @@ def ingest(
     dry_run: DryRunOption = False,
     direct: DirectOption = False,
     workers: WorkersOption = None,
+    engine: EngineOption = None,
+    scheduler: SchedulerOption = None,
+    parts: PartsOption = None,
     wait: WaitOption = 0.0,
     settings: SettingsOption = None,
     assignments: SetOption = None,
@@ -91,7 +98,8 @@ def ingest(
         energy_unit=energy_unit, theory=theory, theory_column=theory_column, split_column=split_column,
         date_column=date_column,
     )  # fmt: skip
-    resolved = _resolved(store, settings, assignments, direct, workers)
+    told = [*(assignments or []), *elsewhere(engine, scheduler, parts)]
+    resolved = _resolved(store, settings, told, direct, workers)
     job = IngestJob(store, request, resolved, wait, dry_run)
     counts = _orchestrated("ingest", resolved.orchestrator, quiet, lambda step, progress: steps(job, step, progress))
     typer.echo(json.dumps(counts) if as_json else ingest_text(counts, dry_run))
@@ -104,6 +112,9 @@ def group(
     recompute: RecomputeOption = False,
     direct: DirectOption = False,
     workers: WorkersOption = None,
+    engine: EngineOption = None,
+    scheduler: SchedulerOption = None,
+    parts: PartsOption = None,
     wait: WaitOption = 0.0,
     settings: SettingsOption = None,
     assignments: SetOption = None,
@@ -117,7 +128,8 @@ def group(
     from .group import group as steps
     from .night import findings_of
 
-    resolved = _resolved(store, settings, assignments, direct, workers)
+    told = [*(assignments or []), *elsewhere(engine, scheduler, parts)]
+    resolved = _resolved(store, settings, told, direct, workers)
     job = GroupJob(store, resolved, everything, recompute, wait)
     counts = _orchestrated("group", resolved.orchestrator, quiet, lambda step, progress: steps(job, step, progress))
     typer.echo(json.dumps(counts) if as_json else group_text(counts))
@@ -139,6 +151,9 @@ def run(
     recompute: RecomputeOption = False,
     direct: DirectOption = False,
     workers: WorkersOption = None,
+    engine: EngineOption = None,
+    scheduler: SchedulerOption = None,
+    parts: PartsOption = None,
     wait: WaitOption = 0.0,
     settings: SettingsOption = None,
     assignments: SetOption = None,
@@ -151,7 +166,8 @@ def run(
 
     night = Night(
         tuple(map(str, paths)), str(store), source, text_of(export), recompute, text_of(settings),
-        tuple(assignments or ()), workers, "direct" if direct else None, wait, tuple(sorted(fail_on(fails, FAILS))),
+        (*(assignments or ()), *elsewhere(engine, scheduler, parts)), workers,
+        "direct" if direct else None, wait, tuple(sorted(fail_on(fails, FAILS))),
     )  # fmt: skip
     resolved = night.resolved()
     counts = _orchestrated(

@@ -12,7 +12,7 @@ from collections.abc import Mapping
 from pathlib import Path
 from typing import Any, Literal
 
-from pydantic import BaseModel, ConfigDict, Field, ValidationError, field_validator
+from pydantic import BaseModel, ConfigDict, Field, ValidationError, ValidationInfo, field_validator
 
 from .errors import UsageError
 from .tolerances import Tolerances
@@ -115,6 +115,11 @@ class Settings(BaseModel):
 
     chunk_records: int = _setting(2000, "Records in a chunk of work.", ge=1, le=100_000)
     workers: int = _setting(0, "Worker processes; 0: one a core.", ge=0, le=256)
+    engine: Literal["processes", "dask"] = _setting(
+        "processes", "Who does the work: processes of this machine, or workers of a Dask scheduler."
+    )
+    scheduler: str = _setting("", "Address of the Dask scheduler; without one, workers are started on this machine.")
+    parts: str = _setting("", "Folder or URL that every worker sees, for parts; without one, the work folder.")
     orchestrator: Literal["prefect", "direct"] = _setting(
         "prefect", "Run as Prefect flows, or the same functions directly."
     )
@@ -128,6 +133,13 @@ class Settings(BaseModel):
         """A text with commas, as an environment variable or option gives it, is a list."""
         if isinstance(value, str):
             return [word.strip() for word in value.split(",") if word.strip()]
+        return value
+
+    @field_validator("scheduler")
+    @classmethod
+    def _of_dask(cls, value: str, info: ValidationInfo) -> str:
+        if value and info.data.get("engine") != "dask":
+            raise ValueError("a scheduler is used with engine = dask alone")
         return value
 
     @field_validator("keep_rules", "theory_preference", "source_preference")
