@@ -34,3 +34,19 @@ def ingest(tmp_path: Path) -> Callable[..., dict[str, Any]]:
         return steps(job, call_directly, Silent())
 
     return run
+
+
+@pytest.fixture(scope="session")
+def report_store(tmp_path_factory: pytest.TempPathFactory) -> Path:
+    """A grouped store with hostile labels, for the exams of the report; nobody writes to it."""
+    from .report_pages import make_report_store
+
+    return make_report_store(tmp_path_factory.mktemp("report"))
+
+
+@pytest.fixture(scope="session")
+def report_page(report_store: Path) -> str:
+    """The report of that store."""
+    from .report_pages import page_of
+
+    return page_of(report_store)

@@ -21,27 +21,6 @@ from ..store.find import find_record
 from ..store.rows import one_number, one_row
 from .holds import make_holds
 
-# Why two records of one key are the same, from how they were given: equal content, another number of primitive cells,
-# an equal given cell (edges to 1e-3 angstrom), or else another description.
-EQUAL_KEY_REASON = (
-    "CASE WHEN r.content_hash = k.content_hash THEN 'copy' "
-    "WHEN x.supercell_index <> y.supercell_index THEN 'supercell' "
-    "WHEN list_max(list_transform(range(1, 10), lambda i: abs(s.cell_angstrom[i] - t.cell_angstrom[i]))) < 1e-3 "
-    "THEN 'rerun' ELSE 'other_cell' END"
-)
-
-SET_ASIDE_REASONS = (
-    "SELECT m.grade, m.record_id, m.group_id AS kept_record_id, m.witness_shift_angstrom, m.witness_strain, "
-    f"CASE WHEN x.crystal_key = y.crystal_key THEN {EQUAL_KEY_REASON} ELSE w.reason END AS reason "
-    "FROM members m JOIN records r USING (record_id) JOIN records k ON k.record_id = m.group_id "
-    "JOIN canonical_forms x ON x.record_id = m.record_id JOIN canonical_forms y ON y.record_id = m.group_id "
-    "JOIN structures s ON s.record_id = m.record_id JOIN structures t ON t.record_id = m.group_id "
-    "LEFT JOIN matches w ON least(w.crystal_key_a, w.crystal_key_b) = least(x.crystal_key, y.crystal_key) "
-    "AND greatest(w.crystal_key_a, w.crystal_key_b) = greatest(x.crystal_key, y.crystal_key) "
-    "WHERE m.grade = $grade AND NOT m.kept"
-)
-"""Records that are not kept, with their kept record, shift, strain and reason; takes $grade."""
-
 
 @dataclass(frozen=True, slots=True)
 class KeepPlan:
@@ -112,10 +91,9 @@ def plan_keep(
     )
     standing = "(SELECT * FROM decisions_in_force WHERE grade = $grade)"
     connection.execute(
-        f"CREATE OR REPLACE TEMP TABLE keep_new AS SELECT w.* FROM ({SET_ASIDE_REASONS}) w "
-        "JOIN keep_free f USING (record_id) "
+        "CREATE OR REPLACE TEMP TABLE keep_new AS SELECT w.* FROM repeats w JOIN keep_free f USING (record_id) "
         f"LEFT JOIN {standing} d ON d.record_id = w.record_id AND d.kept_record_id = w.kept_record_id "
-        "WHERE d.record_id IS NULL",
+        "WHERE w.grade = $grade AND d.record_id IS NULL",
         {"grade": grade},
     )
     connection.execute(

@@ -392,6 +392,8 @@ VIEWS: dict[str, str] = {
     "pins_in_force": "Pins that nobody has removed.",
     "crystals": "One row a record: its canonical form, lattice type, ladder and space group.",
     "record_matches": "Every verified match written out for all records of the two keys, and the pairs of one key.",
+    "repeats": "One row a record and grade that is not the kept one of its group: the kept record, how far off it is, "
+    "and why the two are the same.",
     "current_records": "Records that take part in results: neither missing from their file nor withdrawn.",
     "withdrawn_records": "Records that an open withdrawal takes out of every result, with the reason.",
 }

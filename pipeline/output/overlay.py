@@ -11,9 +11,9 @@ from dataclasses import dataclass
 import duckdb
 import numpy as np
 
-from ..lattice.hermite import hermite_rows
 from ..model.batch import Floats, Ints
 from ..store.rows import one_row
+from .common_sites import common_sites
 from .pair_sides import Side, side_of
 
 EDGE = 0.02
@@ -67,7 +67,7 @@ def overlay(connection: duckdb.DuckDBPyConnection, kept: str, aside: str) -> Ove
         pairing = np.arange(len(a.tokens))
         sites, delta = paired(a.positions, b.positions, one, one, np.zeros(3), pairing)
         cell = mean_cell(a.cell, b.cell)
-        reason = "copy" if a.content_hash == b.content_hash else "equal keys"
+        reason = _reason_of_equal_keys(connection, a.record_id, b.record_id)
         return Overlay(a, b, cell, sites, delta, a.tokens, 0.0, 0.0, 0.0, 1.0, reason, False)
     row = one_row(
         connection,
@@ -90,22 +90,27 @@ def overlay(connection: duckdb.DuckDBPyConnection, kept: str, aside: str) -> Ove
     return Overlay(a, b, mean_cell(first_cell, second_cell), sites, delta, tokens, *row[6:])
 
 
+def _reason_of_equal_keys(connection: duckdb.DuckDBPyConnection, a: str, b: str) -> str:
+    row = one_row(
+        connection,
+        "SELECT equal_key_reason(r.content_hash, s.content_hash, f.supercell_index, g.supercell_index, "
+        "v.cell_angstrom, w.cell_angstrom) FROM records r JOIN canonical_forms f USING (record_id) "
+        "JOIN structures v USING (record_id), records s JOIN canonical_forms g USING (record_id) "
+        "JOIN structures w USING (record_id) WHERE r.record_id = $1 AND s.record_id = $2",
+        [a, b],
+    )
+    assert row is not None  # both were read before
+    return str(row[0])
+
+
 def paired(
     first: Floats, second: Floats, p: Ints, q: Ints, shift: Floats, pairing: Ints
 ) -> tuple[Floats, Floats]:  # fmt: skip
     """Sites (n, 3) of the first in the common cell, and delta (n, 3) to their partners, both fractions of it."""
-    u, v = _placed(first, p), _placed(second, q)
+    (u, _), (v, _) = common_sites(first, p), common_sites(second, q)
     delta = v[pairing] - u - shift
     delta -= np.rint(delta)
     return u - np.floor(u + 1e-9), delta - delta.mean(axis=0)
-
-
-def _placed(positions: Floats, matrix: Ints) -> Floats:
-    """Site i in coset j has the number i |det| + j and lies at (position[i] + n) matrix^-1 (grouping/witness.py, 3)."""
-    a, b, c = np.diag(hermite_rows(matrix)).tolist()
-    j = np.arange(a * b * c)
-    cosets = np.stack([j // (b * c), j // c % b, j % c], axis=1)
-    return np.asarray(((positions[:, None, :] + cosets[None]) @ np.linalg.inv(matrix.astype(float))).reshape(-1, 3))
 
 
 def mean_cell(first: Floats, second: Floats) -> Floats:

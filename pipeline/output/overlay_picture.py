@@ -19,9 +19,12 @@ FACTORS = (1, 2, 5, 10, 20, 50, 100, 200, 500, 1000)
 BARS = (0.5, 1.0, 2.0, 5.0, 10.0, 20.0)
 """Lengths that a scale bar may have, angstrom."""
 
-WIDTH_INCHES, MOST_HEIGHT = 3.6, 3.6
-SMALLEST_SHIFT = 1e-6
-"""Shifts below this (angstrom) are rounding and are not drawn."""
+WIDTH_INCHES, MOST_HEIGHT = 3.6, 3.2
+WORDS_INCHES = (2.9, 0.45)
+"""Width and height that the words below the scale bar need."""
+
+SMALLEST_SHIFT = 5e-5
+"""Shifts below this (angstrom) are what equal keys leave open, are printed as 0.0000, and are not drawn."""
 
 
 def factor_for(distances: Floats, span: float) -> int:
@@ -56,12 +59,11 @@ def overlay_figure(found: Overlay) -> tuple[Figure, int]:
     tips = flat + factor * arrows
     low, high = np.minimum(low, tips.min(axis=0)), np.maximum(high, tips.max(axis=0))
     room = 0.06 * span
-    low, high = low - np.array([room, room + 0.17 * span]), high + room
-    wider = max(0.0, 0.75 * (high[1] - low[1]) - (high[0] - low[0])) / 2  # the words below the bar need room
-    low, high = low - np.array([wider, 0.0]), high + np.array([wider, 0.0])
-    size = high - low
-    scale = min(WIDTH_INCHES / size[0], MOST_HEIGHT / size[1])
-    figure = Figure(figsize=(size[0] * scale, size[1] * scale))
+    low, high = low - np.array([room, room]), high + room
+    scale = float(min(WIDTH_INCHES / (high - low)[0], MOST_HEIGHT / (high - low)[1]))  # inches an angstrom
+    wider = max(0.0, WORDS_INCHES[0] / scale - (high - low)[0]) / 2
+    low, high = low - np.array([wider, WORDS_INCHES[1] / scale]), high + np.array([wider, 0.0])
+    figure = Figure(figsize=tuple((high - low) * scale))
     axes = figure.add_axes((0.0, 0.0, 1.0, 1.0))
     axes.set_xlim(low[0], high[0])
     axes.set_ylim(low[1], high[1])
@@ -80,14 +82,14 @@ def overlay_figure(found: Overlay) -> tuple[Figure, int]:
     axes.add_collection(LineCollection(heads, colors=INK, linewidths=1.1, zorder=4))
 
     bar = bar_for(span)
-    start = (low[0] + room, low[1] + 0.13 * span)
+    start = (low[0] + room, low[1] + WORDS_INCHES[1] / scale)
     (line,) = axes.plot([start[0], start[0] + bar], [start[1]] * 2, color=INK, linewidth=2.2, solid_capstyle="butt",
                         zorder=5)  # fmt: skip
     line.set_gid("bar")
-    told = f"{bar:g} Å"
+    told = f"between sites: {bar:g} Å"
     if factor > 1:
-        told += f"\narrows {factor} times as long: {bar / factor:g} Å"
-    axes.text(start[0], start[1] - 0.02 * span, told, va="top", ha="left", fontsize=8, color=INK)
+        told += f"\nof an arrow: {bar / factor:g} Å ({factor} times as long)"
+    axes.text(start[0], start[1] - 0.05 / scale, told, va="top", ha="left", fontsize=9, color=INK)
     return figure, factor
 
 

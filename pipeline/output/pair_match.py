@@ -17,8 +17,8 @@ from ..grouping.reasons import reasons
 from ..grouping.verification import NO_MATCH, verify
 from ..grouping.window import Window
 from ..grouping.witness import witnesses
-from ..lattice.hermite import hermite_rows
 from ..model.batch import CrystalBatch, batch_from_lists
+from .common_sites import common_sites
 from .pair_sides import Side
 
 Floats = NDArray[np.float64]
@@ -195,13 +195,3 @@ def match_of(a: Side, b: Side, window: Window, mirror_images: str, strain_limit:
         delta=delta,
         distances=np.sqrt(np.einsum("ni,ij,nj->n", delta, metric, delta)),
     )
-
-
-def common_sites(positions: Floats, matrix: Ints) -> tuple[Floats, Ints]:
-    """Sites (n |det|, 3) of a crystal in its cell `matrix` . cell, in fractions of that, and the site each is an image
-    of: site i in coset j has the number i |det| + j (grouping/witness.py, 3)."""
-    a, b, c = np.diag(hermite_rows(matrix)).tolist()
-    j = np.arange(a * b * c)
-    cosets = np.stack([j // (b * c), j // c % b, j % c], axis=1)
-    sites = (positions[:, None, :] + cosets[None]) @ np.linalg.inv(matrix.astype(np.float64))
-    return sites.reshape(-1, 3), np.repeat(np.arange(len(positions)), len(j))

@@ -1,5 +1,6 @@
 "use strict";
 // The table of groups: sorted, filtered and paged in the page itself. Text only ever becomes text nodes.
+// Without this script the largest groups stand there, and every table is a stop of the Tab key.
 
 const PAGE_ROWS = 50;
 const collator = new Intl.Collator("en", { numeric: true, sensitivity: "base" });
@@ -47,7 +48,8 @@ function start() {
   const heads = [...table.tHead.rows[0].cells];
   const said = document.getElementById("groups-said");
   const [before, after] = ["groups-before", "groups-after"].map((id) => document.getElementById(id));
-  const state = { filter: "", least: 0, column: null, ascending: true, page: 0, recordsColumn: data.records };
+  // The rows come with the largest groups first.
+  const state = { filter: "", least: 0, column: data.records, ascending: false, page: 0, recordsColumn: data.records };
 
   function draw() {
     const all = arrange(data.rows, state);
@@ -69,8 +71,14 @@ function start() {
     said.textContent =
       `${all.length.toLocaleString("en")} of ${data.rows.length.toLocaleString("en")} groups; ` +
       `page ${view.page + 1} of ${view.pages}`;
-    before.disabled = view.page === 0;
-    after.disabled = view.page === view.pages - 1;
+    // Not `disabled`: the focus stays where it was when the last page is reached.
+    before.setAttribute("aria-disabled", view.page === 0);
+    after.setAttribute("aria-disabled", view.page === view.pages - 1);
+  }
+
+  function turn(pages) {
+    state.page += pages;  // `pageOf` keeps it among those there are
+    draw();
   }
 
   heads.forEach((head, i) => {
@@ -96,11 +104,23 @@ function start() {
     state.page = 0;
     draw();
   });
-  before.addEventListener("click", () => { state.page -= 1; draw(); });
-  after.addEventListener("click", () => { state.page += 1; draw(); });
+  before.addEventListener("click", () => turn(-1));
+  after.addEventListener("click", () => turn(1));
   document.getElementById("groups-controls").hidden = false;
   draw();
 }
 
-if (typeof document !== "undefined") start();
+// A table is a stop of the Tab key only where it has to be scrolled sideways.
+function markScrolling() {
+  for (const part of document.querySelectorAll(".wide")) {
+    if (part.scrollWidth > part.clientWidth) part.tabIndex = 0;
+    else part.removeAttribute("tabindex");
+  }
+}
+
+if (typeof document !== "undefined") {
+  start();
+  markScrolling();
+  window.addEventListener("resize", markScrolling);
+}
 if (typeof module !== "undefined") module.exports = { arrange, cellText, compareValues, pageOf };

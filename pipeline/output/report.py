@@ -14,28 +14,22 @@ import matplotlib
 
 from .. import __version__
 from ..errors import UsageError
-from ..settings import Settings
-from ..store.stages import stored_settings
-from .report_groups import find_groups, groups_html
+from .report_facts import read_facts, ungrouped
+from .report_groups import groups_html
 from .report_page import GENERATOR, page, paragraph
 from .report_pairs import pairs_html
 from .report_sections import (
-    Facts,
     findings_html,
     leakage_html,
     map_html,
     refusals_html,
     settings_html,
     sizes_html,
-    summary_html,
     tolerance_html,
     types_html,
-    ungrouped,
 )
-from .status import status
-from .survey import survey
+from .report_summary import summary_html
 from .svg import style
-from .tolerance_curve import tolerance_curve
 
 CAUTIONS = (
     "Structures are as good as their source; a parsed file is not a checked calculation.",
@@ -75,7 +69,7 @@ def check_target(path: Path) -> None:
 
 def report_html(connection: duckdb.DuckDBPyConnection) -> str:
     """The page."""
-    facts = _read(connection)
+    facts = read_facts(connection)
     with matplotlib.rc_context(style()):  # type: ignore[arg-type]
         sections = [
             ("summary", "Summary", summary_html(facts)),
@@ -97,13 +91,3 @@ def report_html(connection: duckdb.DuckDBPyConnection) -> str:
     if runs:
         state = f"As of run {runs[0]['run']} ({runs[0]['command']}), {str(runs[0]['started_at'])[:19]} UTC."
     return page("Report on a collection of crystal structures", f"{state} lattice-census {__version__}.", sections)
-
-
-def _read(connection: duckdb.DuckDBPyConnection) -> Facts:
-    settings = Settings.model_validate(stored_settings(connection))
-    told = status(connection)
-    computed = [g["grade"] for g in told["groups"]]
-    grade = next((g for g in ("near", "key") if g in computed), None)
-    groups = find_groups(connection, grade, settings.near_shift, settings.near_strain) if grade else None
-    found = survey(connection, "source", 1000)
-    return Facts(connection, settings, told, found, tolerance_curve(connection), grade, groups)

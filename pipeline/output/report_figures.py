@@ -9,7 +9,7 @@ from typing import Any
 import duckdb
 import numpy as np
 from matplotlib.figure import Figure
-from matplotlib.ticker import MaxNLocator
+from matplotlib.ticker import MaxNLocator, StrMethodFormatter
 from numpy.typing import NDArray
 
 from ..lattice.bravais import ALL_TYPES
@@ -56,15 +56,15 @@ def lattice_map(connection: duckdb.DuckDBPyConnection) -> LatticeMap:
 
 
 def map_figures(shapes: LatticeMap) -> tuple[Figure, Figure]:
-    """Two planes of the same points: the edges against one another, and the edges against the angles."""
+    """Two planes of the same points: the edges against the angles, and the edges against one another."""
     return (
-        _map(shapes, shapes.a_to_b, shapes.b_to_c, "a / b", "b / c"),
         _map(shapes, shapes.a_to_b * shapes.b_to_c, shapes.openness, "a / c", "V / (a b c)"),
+        _map(shapes, shapes.a_to_b, shapes.b_to_c, "a / b", "b / c"),
     )
 
 
 def _map(shapes: LatticeMap, x: Floats, y: Floats, x_name: str, y_name: str) -> Figure:
-    figure = Figure(figsize=(4.6, 4.3), layout="constrained")
+    figure = Figure(figsize=(4.6, 4.4), layout="constrained")
     axes = figure.add_subplot()
     present = set(shapes.lattice_type.tolist())
     types = [t for t in ALL_TYPES if t in present] + sorted(present - set(ALL_TYPES))
@@ -76,36 +76,48 @@ def _map(shapes: LatticeMap, x: Floats, y: Floats, x_name: str, y_name: str) -> 
             color=COLOURS[i % len(COLOURS)], markeredgecolor="white", markeredgewidth=0.4, alpha=0.85,
             rasterized=len(x) > MOST_VECTORS, label=f"{name} ({int(rows.sum()):,})", clip_on=False,
         )  # fmt: skip
+    axes.set_xlim(*_range_below_one(x))
+    axes.set_ylim(*_range_below_one(y))
     axes.set_xlabel(f"{x_name} of the reduced cell")
-    axes.set_ylabel(y_name)
+    axes.set_ylabel(f"{y_name} of the reduced cell")
     if types:
-        figure.legend(loc="outside lower center", ncols=5, fontsize=8, handletextpad=0.2, columnspacing=0.9)
+        figure.legend(loc="outside lower center", ncols=4, fontsize=9, handletextpad=0.2, columnspacing=0.9)
     figure.set_dpi(150)
     return figure
 
 
+def _range_below_one(values: Floats) -> tuple[float, float]:
+    """Limits of an axis of ratios that 1 is the end of: never so narrow that rounding is drawn as a difference."""
+    least = min(float(values.min(initial=1.0)), 0.9)
+    room = 0.04 * (1.0 - least)
+    return least - room, 1.0 + room
+
+
 def curve_figure(curve: ToleranceCurve) -> Figure:
     """Families as steps, groups as points, the longest plateaus shaded, the chosen tolerance drawn in."""
-    figure = Figure(figsize=(6.4, 3.5), layout="constrained")
+    figure = Figure(figsize=(4.9, 3.6), layout="constrained")
     axes = figure.add_subplot()
     t, families = curve_points(curve)
     longest = curve.plateaus()
     for i, plateau in enumerate(longest):
-        axes.axvspan(plateau.start, plateau.end, color="#dbe5ec", linewidth=0, zorder=0,
+        axes.axvspan(plateau.start, plateau.end, color="#d3e0e8", linewidth=0, zorder=0,
                      label="longest plateaus" if i == 0 else None)  # fmt: skip
     axes.step(t, families, where="post", color=COLOURS[0], linewidth=1.6, label="families", zorder=2)
     axes.plot(curve.counted_at, curve.groups, linestyle="none", marker="s", markersize=4.5, color=COLOURS[3],
               markerfacecolor="none", label="groups", zorder=3, clip_on=False)  # fmt: skip
     axes.axvline(1.0, color=ACCENT, linewidth=1.3, linestyle=(0, (5, 2)), label="chosen tolerance", zorder=1)
     axes.set_xlim(0, curve.window)
+    if not len(curve.steps):
+        axes.set_ylim(0, 1.2 * max(curve.nodes, 1))
     axes.set_xlabel("t (times the limits of near)")
-    axes.set_ylabel("number")
-    axes.yaxis.set_major_locator(MaxNLocator(integer=True))
-    strain = axes.secondary_xaxis(
+    axes.set_ylabel("number of families and groups")
+    axes.yaxis.set_major_locator(MaxNLocator(nbins=7, integer=True))
+    axes.yaxis.set_major_formatter(StrMethodFormatter("{x:,.0f}"))
+    shift = axes.secondary_xaxis(
         "top", functions=(lambda v: np.asarray(v) * curve.near_shift, lambda v: np.asarray(v) / curve.near_shift)
     )
-    strain.set_xlabel("largest shift (Å)")
-    figure.legend(loc="outside lower center", ncols=4, fontsize=8)
+    shift.set_xlabel("largest shift (Å)")
+    figure.legend(loc="outside lower center", ncols=2, fontsize=9, columnspacing=1.2)
     return figure
 
 
@@ -117,16 +129,22 @@ def curve_points(curve: ToleranceCurve) -> tuple[Floats, Floats]:
 
 def size_figure(rows: Sequence[tuple[Any, ...]]) -> Figure:
     """Records by how many primitive cells their given cell holds: rows (cells, records)."""
-    figure = Figure(figsize=(5.2, 2.6), layout="constrained")
+    figure = Figure(figsize=(4.6, 2.8), layout="constrained")
     axes = figure.add_subplot()
     names = [f"{cells:g}" for cells, _ in rows]
     numbers = [int(n) for _, n in rows]
     bars = axes.bar(range(len(rows)), numbers, color=[COLOURS[0] if n == "1" else PALE for n in names], width=0.7,
                     edgecolor=INK, linewidth=0.6)  # fmt: skip
-    axes.bar_label(bars, labels=[f"{n:,}" for n in numbers], fontsize=8, padding=1)
-    axes.set_xticks(range(len(rows)), names)
+    small = 8 if len(rows) <= 10 else 6
+    axes.bar_label(bars, labels=[f"{n:,}" for n in numbers], fontsize=small, padding=1)
+    axes.set_xticks(range(len(rows)), names, fontsize=9 if len(rows) <= 16 else 7)
+    axes.set_xlim(-0.6, max(len(rows), 5) - 0.4)  # few bars are no wider than many
     axes.set_xlabel("primitive cells in the given cell")
     axes.set_ylabel("records")
+    most = max(numbers, default=1)
     axes.set_yscale("symlog", linthresh=10)
-    axes.set_ylim(0, max(numbers, default=1) * 2)
+    axes.set_ylim(0, most * 2)
+    ticks = [0] + [10**i for i in range(1, 10) if 10**i <= most * 2]
+    axes.set_yticks(ticks, [f"{n:,}" for n in ticks])
+    axes.minorticks_off()
     return figure

@@ -116,12 +116,13 @@ def groups_html(groups: Groups) -> str:
     if not groups.rows:
         return paragraph(f"No group of grade {groups.grade} has more than one record.")
     rows = groups.rows[:MOST_GROUPS]
-    told = [f"{len(groups.rows):,} groups of grade {groups.grade} have more than one record."]
+    several = "1 group" if len(groups.rows) == 1 else f"{len(groups.rows):,} groups"
+    told = [f"{several} of grade {groups.grade} with more than one record."]
     if len(rows) < len(groups.rows):
         told.append(f"The {len(rows):,} largest stand here; `lattice-census ask largest-groups` lists all.")
     told.append(
-        "t is the farthest member's max(shift / limit, strain / limit): at 0 all have equal keys, near 1 the group "
-        "hangs on the limits. A page of the table is printed as it is shown."
+        "t is max(shift / limit, strain / limit) of the farthest member: at 0 all have equal keys, near 1 the group "
+        "depends on the limits. The table is printed as it is shown."
     )
     controls = (
         '<div class="controls" id="groups-controls" hidden>'

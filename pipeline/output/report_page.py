@@ -5,7 +5,7 @@ from __future__ import annotations
 import base64
 import hashlib
 import json
-from collections.abc import Iterable, Sequence
+from collections.abc import Iterable, Mapping, Sequence
 from html import escape
 from importlib.resources import files
 from typing import Any
@@ -20,10 +20,15 @@ LONGEST_TEXT = 400
 """Characters of a text in a table before it is cut."""
 
 
-def text(value: Any) -> str:
-    """A value as printed in tables, safe and escaped for HTML; texts are cut later than on a terminal."""
+def text(value: Any, digits: int | None = None) -> str:
+    """A value as printed in tables, safe and escaped for HTML; texts are cut later than on a terminal.
+
+    digits: so many after the point, for a number that is not whole.
+    """
     if isinstance(value, str):
         return words(value if len(value) <= LONGEST_TEXT else value[: LONGEST_TEXT - 3] + "...")
+    if digits is not None and isinstance(value, float):
+        return f"{value:,.{digits}f}"
     return escape(cell_text(value))
 
 
@@ -51,42 +56,53 @@ def table(
     most: int | None = None,
     name: str | None = None,
     right: Sequence[bool] | None = None,
+    digits: Mapping[str, int] | None = None,
 ) -> str:
-    """A table that scrolls sideways by itself; rows `chosen` stand out; beyond `most` rows only their number is said.
+    """A table that scrolls sideways by itself, its caption above it in the width of the page.
 
-    Columns are headed as in printed tables; columns whose values are all numbers stand to the right, if
-    `right` does not say otherwise.
+    Rows `chosen` stand out; beyond `most` rows only their number is said. Columns are headed as in printed tables;
+    columns whose values are all numbers stand to the right, if `right` does not say otherwise, with `digits` after the
+    point; shares have one. Zeros are pale, where a column of numbers is looked over for what is not zero.
     """
     if not rows:
         return paragraph(f"{caption}: none.")
     if right is None:
         values = [[row[i] for row in rows if row[i] is not None] for i in range(len(columns))]
         right = [bool(v) and all(map(is_number, v)) for v in values]
+    after_point = [(digits or {}).get(c, 1 if c.endswith("_percent") else None) for c in columns]
     marked = set(chosen)
     shown = rows if most is None else rows[:most]
-    lines = [f'<div class="wide" tabindex="0" role="region" aria-label="{words(caption)}">',
-             f"<table{f' id={chr(34)}{name}{chr(34)}' if name else ''}><caption>{words(caption)}</caption><thead><tr>",
+    own_id = f' id="{name}"' if name else ""
+    lines = [f'<figure class="table"><figcaption>{words(caption)}</figcaption>',
+             f'<div class="wide" tabindex="0" role="region" aria-label="{words(caption)}"><table{own_id}><thead><tr>',
              *(f'<th scope="col"{_class(right[i], "")}>{words(heading(c))}</th>' for i, c in enumerate(columns)),
              "</tr></thead><tbody>"]  # fmt: skip
     for number, row in enumerate(shown):
         lines.append('<tr class="chosen">' if number in marked else "<tr>")
-        lines += [f"<td{_class(right[i], v)}>{text(v)}</td>" for i, v in enumerate(row)]
+        lines += [f"<td{_class(right[i], v)}>{text(v, after_point[i])}</td>" for i, v in enumerate(row)]
         lines.append("</tr>")
-    lines.append("</tbody></table></div>")
-    if len(shown) < len(rows):
-        lines.append(paragraph(f"{len(rows) - len(shown):,} more rows are left out here.", note=True))
+    lines.append("</tbody></table></div></figure>")
+    left_out = len(rows) - len(shown)
+    if left_out:
+        told = "1 more row is left out here." if left_out == 1 else f"{left_out:,} more rows are left out here."
+        lines.append(paragraph(told, note=True))
     return "\n".join(lines)
 
 
 def _class(right: bool, value: Any) -> str:
     if right:
-        return ' class="number"'
+        return ' class="number zero"' if is_number(value) and value == 0 else ' class="number"'
     return ' class="long"' if isinstance(value, str) and len(value) > 40 else ""
 
 
 def figure(svg: str, caption: str) -> str:
     """A figure; the caption is escaped here, the SVG is ours."""
     return f"<figure>{svg}<figcaption>{words(caption)}</figcaption></figure>"
+
+
+def side_by_side(*parts: str) -> str:
+    """Parts beside each other where there is room, else below each other."""
+    return '<div class="row">' + "".join(parts) + "</div>"
 
 
 def measures(pairs: Sequence[tuple[str, Any]]) -> str:

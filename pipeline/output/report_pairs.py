@@ -4,9 +4,10 @@ from __future__ import annotations
 
 import duckdb
 
+from ..grouping.reasons import REASONS
 from .overlay import Overlay, overlay
-from .overlay_picture import MOST_SITES, overlay_figure
-from .report_groups import Groups, farthest_member
+from .overlay_picture import MOST_SITES, SMALLEST_SHIFT, overlay_figure
+from .report_groups import COLUMNS, Groups, farthest_member
 from .report_page import measures, paragraph, words
 from .svg import COLOURS, MARKERS, inline_svg
 
@@ -24,10 +25,10 @@ def pairs_html(connection: duckdb.DuckDBPyConnection, groups: Groups) -> str:
     largest = groups.largest(EACH)
     unsure = groups.least_certain(EACH, largest)
     intro = paragraph(
-        "Of each group the kept record (filled) and the set-aside one that is farthest from it (outlined), in the cell "
-        "that both have in common, seen along the axis that shows most. The mean shift is taken off and the strain is "
-        "not drawn. Arrows lead from each kept site to its partner; where they are drawn longer than they are, the "
-        "caption and the scale bar say by how much."
+        "Of each group the kept record (filled marks) and the set-aside one that is farthest from it (outlined marks), "
+        "in the cell that both have in common, seen along the axis that shows most. The mean shift is taken off and "
+        "the strain is not drawn. Arrows lead from each kept site to its partner. They are drawn longer than they "
+        "are: the bar is one length between sites and another one of an arrow."
     )
     parts = [intro, "<h3>The largest groups</h3>", _cards(connection, groups, largest)]
     parts.append("<h3>The least certain of the other groups</h3>")
@@ -45,7 +46,8 @@ def _cards(connection: duckdb.DuckDBPyConnection, groups: Groups, places: list[i
 
 def _card(connection: duckdb.DuckDBPyConnection, groups: Groups, i: int) -> str:
     found = overlay(connection, groups.ids[i], farthest_member(connection, groups, i))
-    head = f"<h3>{words(str(groups.rows[i][0]))}, {words(str(groups.rows[i][1]))}</h3>"
+    formula, records = (groups.rows[i][COLUMNS.index(name)] for name in ("formula", "records"))
+    head = f"<h4>{words(str(formula))}, {records:,} records</h4>"
     if found is None:
         return f'<article class="card">{head}{paragraph("The store holds no match of this pair.")}</article>'
     return f'<article class="card">{head}{pair_html(found, f"pair{i}")}</article>'
@@ -58,11 +60,13 @@ def pair_html(found: Overlay, name: str) -> str:
     else:
         picture, factor = overlay_figure(found)
         axis = "abc"[found.axis]
-        drawn = "no shift to draw" if found.distances.max() < 1e-4 else f"arrows drawn {factor} times as long"
+        drawn = "arrows as long as they are" if factor == 1 else f"arrows {factor} times as long as they are"
+        if found.distances.max() < SMALLEST_SHIFT:
+            drawn = "no shift to draw"
         svg = inline_svg(
             picture, name, f"{found.kept.name} and {found.aside.name}",
             f"{len(found.sites)} sites of the common cell along axis {axis}; largest shift "
-            f"{found.distances.max():.4f} angstrom.",
+            f"{found.distances.max():.4f} angstrom, {drawn}.",
         )  # fmt: skip
         caption = f"{_legend(found)}; along axis {axis} of the common cell; {words(drawn)}."
         drawing = f"<figure>{svg}<figcaption>{caption}</figcaption></figure>"
@@ -75,14 +79,15 @@ def pair_html(found: Overlay, name: str) -> str:
             ("rms shift", f"{found.rms_shift:.4f} Å"),
             ("strain", f"{found.strain:.5f}"),
             ("volume ratio", f"{found.volume_ratio:.5f}"),
-            ("sites drawn", len(found.sites)),
+            ("sites", len(found.sites)),
         ]
     )
 
 
 def _reason(found: Overlay) -> str:
-    reason = found.reason.replace("_", " ")
-    return f"{reason}, mirror image" if found.mirrored and found.reason != "mirror" else reason
+    """The reason and what it means."""
+    told = f"{found.reason.replace('_', ' ')}: {REASONS[found.reason]}"
+    return f"{told}; only the mirror image matches" if found.mirrored and found.reason != "mirror" else told
 
 
 def _legend(found: Overlay) -> str:

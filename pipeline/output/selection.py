@@ -13,7 +13,7 @@ import duckdb
 import numpy as np
 import polars as pl
 
-from ..decisions.ledger import SET_ASIDE_REASONS, default_grade, require_grade
+from ..decisions.ledger import default_grade, require_grade
 from ..errors import UsageError
 from ..model.batch import batch_from_lists
 from ..model.species import formulas_of
@@ -50,8 +50,8 @@ def select_records(connection: duckdb.DuckDBPyConnection, grade: str | None, as_
     connection.execute(
         "CREATE OR REPLACE TEMP TABLE then_aside AS SELECT record_id, kept_record_id, reason, witness_shift_angstrom, "
         "witness_strain, NULL::VARCHAR AS rule, NULL::VARCHAR AS note, NULL::BIGINT AS decided_in_run "
-        f"FROM ({SET_ASIDE_REASONS}) "
-        "WHERE kept_record_id NOT IN (SELECT group_id FROM holds WHERE grade = $grade AND group_id IS NOT NULL)",
+        "FROM repeats WHERE grade = $grade "
+        "AND kept_record_id NOT IN (SELECT group_id FROM holds WHERE grade = $grade AND group_id IS NOT NULL)",
         {"grade": grade},
     )
     return Selection(

@@ -17,9 +17,13 @@ ACCENT = "#b3400f"
 COLOURS = ("#2f5d8a", "#b3400f", "#3c7d4f", "#7a4a9e", "#8a6d1a", "#0f7f86", "#a02c5a", "#5a5f66")
 MARKERS = ("o", "s", "^", "D", "v", "P", "X", "p", "*", "<", ">", "h", "d", "H")
 
+WIDEST = 1.35
+"""Pixels of the page that a point of a figure takes at most: its words are then a little smaller than the page's."""
+
 _STYLE = {"svg.fonttype": "none", "font.family": "sans-serif", "font.size": 9, "axes.spines.top": False,
           "axes.spines.right": False, "axes.edgecolor": INK, "axes.labelcolor": INK, "xtick.color": INK,
-          "ytick.color": INK, "legend.frameon": False, "path.simplify": True}  # fmt: skip
+          "ytick.color": INK, "legend.frameon": False, "path.simplify": True,
+          "axes.formatter.useoffset": False}  # fmt: skip
 
 
 def style() -> dict[str, object]:
@@ -59,9 +63,8 @@ def inline(text: str, name: str, title: str, description: str) -> str:
     opening = re.sub(r'\s(width|height)="[^"]*"', "", text[:head])
     box = re.search(r'viewBox="\S+ \S+ (\S+)', opening)
     width = float(box[1]) if box else 480.0
-    opening = opening.replace(
-        "<svg", f'<svg role="img" aria-labelledby="{name}-title {name}-desc" style="max-width:{width * 1.35:.0f}px"', 1
-    )
+    named = f'aria-labelledby="{name}-title {name}-desc"'
+    opening = opening.replace("<svg", f'<svg role="img" {named} style="max-width:{width * WIDEST:.0f}px"', 1)
     title, description = escape(safe(title)), escape(safe(description))
-    named = f'<title id="{name}-title">{title}</title><desc id="{name}-desc">{description}</desc>'
-    return opening + named + text[head:]
+    inside = f'<title id="{name}-title">{title}</title><desc id="{name}-desc">{description}</desc>'
+    return opening + inside + text[head:]

@@ -102,6 +102,16 @@ COMMENT ON COLUMN outdated_members.group_id IS 'Group id before the change.';
 COMMENT ON COLUMN outdated_members.family_id IS 'Family id before the change.';
 COMMENT ON COLUMN outdated_members.record_id IS 'The record.';
 
+-- Why two records of one key are the same, from how they were given: equal content, another number of primitive cells,
+-- an equal given cell (vectors to 1e-3 angstrom), or else another description.
+CREATE MACRO equal_key_reason(content_a, content_b, cells_a, cells_b, vectors_a, vectors_b) AS
+    CASE
+        WHEN content_a = content_b THEN 'copy'
+        WHEN cells_a <> cells_b THEN 'supercell'
+        WHEN list_max(list_transform(range(1, 10), lambda i: abs(vectors_a[i] - vectors_b[i]))) < 1e-3 THEN 'rerun'
+        ELSE 'other_cell'
+    END;
+
 CREATE VIEW record_matches AS
 SELECT
     least(a.record_id, b.record_id) AS record_a,
@@ -119,13 +129,36 @@ JOIN canonical_forms a ON a.crystal_key = m.crystal_key_a
 JOIN canonical_forms b ON b.crystal_key = m.crystal_key_b
 UNION ALL
 SELECT a.record_id, b.record_id, 'key', 0.0, 0.0, 0.0, 0.0, 1.0, false,
-    CASE
-        WHEN r.content_hash = s.content_hash THEN 'copy'
-        WHEN a.supercell_index <> b.supercell_index THEN 'supercell'
-        ELSE 'other_cell'
-    END
+    equal_key_reason(r.content_hash, s.content_hash, a.supercell_index, b.supercell_index, v.cell_angstrom, w.cell_angstrom)
 FROM canonical_forms a
 JOIN canonical_forms b ON a.crystal_key = b.crystal_key AND a.record_id < b.record_id
 JOIN records r ON r.record_id = a.record_id
-JOIN records s ON s.record_id = b.record_id;
+JOIN records s ON s.record_id = b.record_id
+JOIN structures v ON v.record_id = a.record_id
+JOIN structures w ON w.record_id = b.record_id;
 COMMENT ON VIEW record_matches IS 'Every verified match written out for all records of the two keys, and the pairs of one key.';
+
+CREATE VIEW repeats AS
+SELECT
+    m.grade,
+    m.record_id,
+    m.group_id AS kept_record_id,
+    m.witness_shift_angstrom,
+    m.witness_strain,
+    CASE
+        WHEN x.crystal_key = y.crystal_key
+        THEN equal_key_reason(r.content_hash, k.content_hash, x.supercell_index, y.supercell_index, s.cell_angstrom, t.cell_angstrom)
+        ELSE w.reason
+    END AS reason
+FROM members m
+JOIN records r USING (record_id)
+JOIN records k ON k.record_id = m.group_id
+JOIN canonical_forms x ON x.record_id = m.record_id
+JOIN canonical_forms y ON y.record_id = m.group_id
+JOIN structures s ON s.record_id = m.record_id
+JOIN structures t ON t.record_id = m.group_id
+LEFT JOIN matches w
+    ON least(w.crystal_key_a, w.crystal_key_b) = least(x.crystal_key, y.crystal_key)
+    AND greatest(w.crystal_key_a, w.crystal_key_b) = greatest(x.crystal_key, y.crystal_key)
+WHERE NOT m.kept;
+COMMENT ON VIEW repeats IS 'One row a record and grade that is not the kept one of its group: the kept record, how far off it is, and why the two are the same.';
