@@ -21,7 +21,7 @@ from lattice_census.ingest.ingest import (
 from lattice_census.ingest.progress import Progress, Step
 from lattice_census.ingest.recompute import recompute_canonical
 from lattice_census.ingest.scan import IngestRequest
-from lattice_census.kernels import warm_up
+from lattice_census.kernels import all_kept, warm_up
 from lattice_census.output.findings import find_all
 from lattice_census.settings import Settings
 from lattice_census.store.runs import end_run
@@ -81,12 +81,17 @@ def finish(workspace: Workspace, step: Step) -> None:
 
 
 def compile_kernels(settings: Settings, progress: Progress) -> None:
-    """Compile the kernels or take them from the cache; a compilation is said. Workers elsewhere do it themselves."""
+    """Compile the kernels or take them from the cache; a compilation is said before and after.
+
+    Workers elsewhere do it themselves.
+    """
     if settings.engine != "processes":
         return
-    seconds = warm_up()
-    if seconds > 5:
-        progress.note(f"Compiled the kernels in {seconds:.0f} s; later runs take them from the cache.")
+    if all_kept():
+        warm_up()
+        return
+    progress.note("Compiling the kernels, once; this takes about half a minute.")
+    progress.note(f"Compiled the kernels in {warm_up():.0f} s; later runs take them from the cache.")
 
 
 def _close(workspace: Workspace, work: IngestWork) -> dict[str, Any]:

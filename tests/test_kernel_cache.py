@@ -6,12 +6,13 @@ import os
 import shutil
 import subprocess
 import sys
+import time
 from pathlib import Path
 
 import pytest
 
 import lattice_census
-from lattice_census.kernels import MODULES, cache
+from lattice_census.kernels import MODULES, SHARES, cache, sharing
 
 PIPELINE = Path(lattice_census.__file__).parent
 
@@ -81,3 +82,62 @@ def test_compiled_code_lands_in_the_folder(tmp_path):
 def test_every_module_that_can_be_warmed_up_is_named():
     able = {p.stem for p in (PIPELINE / "kernels").glob("*.py") if "\ndef warm_up() -> None:" in p.read_text("utf-8")}
     assert able == set(MODULES)
+
+
+def test_shares_of_two_processes_have_no_kernel_in_common():
+    """Each function is compiled by one process and called in the other's share by none: one writer a file."""
+    assert len(set(MODULES)) == len(MODULES)
+    first, second = (
+        {p.name for name in share for p in cache.sources(PIPELINE / "kernels" / f"{name}.py")} for share in SHARES
+    )
+    kernels = {p.name for p in (PIPELINE / "kernels").glob("*.py") if "\n@kernel\n" in p.read_text("utf-8")}
+    assert not first & second & kernels
+
+
+def test_another_process_compiles_its_share_into_the_same_folder(tmp_path):
+    code = (
+        "from lattice_census.kernels.sharing import kept, second_process\n"
+        "names = ('rows_filter',)\n"
+        "assert not kept(names)\n"
+        "with second_process(names) as shared:\n"
+        "    shared()\n"
+        "assert kept(names)\n"
+    )
+    subprocess.run([sys.executable, "-c", code], check=True, env={**os.environ, "NUMBA_CACHE_DIR": str(tmp_path)})
+
+
+def test_the_other_process_ends_when_the_first_is_killed(tmp_path):
+    code = (
+        "import os, signal\n"
+        "from lattice_census.kernels.sharing import _begin\n"
+        "print(_begin(('match',)).pid, flush=True)\n"
+        "os.kill(os.getpid(), signal.SIGKILL)\n"
+    )
+    killed = subprocess.run(
+        [sys.executable, "-c", code], env={**os.environ, "NUMBA_CACHE_DIR": str(tmp_path)}, capture_output=True
+    )
+    other = int(killed.stdout)
+    for _ in range(600):
+        try:
+            os.kill(other, 0)
+        except ProcessLookupError:
+            break
+        if _gone(other):
+            break
+        time.sleep(0.1)
+    else:
+        pytest.fail("still compiling for a process that is gone")
+
+
+def _gone(pid: int) -> bool:
+    """Whether the process has ended and nobody has asked for its outcome yet (no init process that does)."""
+    state = subprocess.run(["ps", "-o", "stat=", "-p", str(pid)], capture_output=True, text=True).stdout
+    return state.strip().startswith("Z") or not state.strip()
+
+
+def test_without_another_process_everything_goes_on_here(monkeypatch):
+    monkeypatch.setattr(sharing, "kept", lambda names: False)
+    monkeypatch.setattr(sharing, "cores", lambda: 2)
+    monkeypatch.setattr(sys, "executable", "/nowhere/python")
+    with sharing.second_process(("rows_filter",)) as shared:
+        shared()
