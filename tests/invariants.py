@@ -47,9 +47,34 @@ def integer_determinant(matrix: np.ndarray) -> int:
     )
 
 
+def close_layer(cell: np.ndarray, x: np.ndarray) -> tuple[np.ndarray, np.ndarray]:
+    """A canonical layer (third row 1024 along the normal) with a third row of twice its thickness and twice the longer
+    of its two shortest independent periods, found by trying."""
+    short = sorted(
+        (v for v in (i * cell[0] + j * cell[1] for i in range(-3, 4) for j in range(-3, 4) if (i, j) != (0, 0))),
+        key=lambda v: float(v @ v),
+    )
+    second = next(v for v in short if np.linalg.norm(np.cross(v, short[0])) > 1e-3 * np.linalg.norm(v))
+    third = 2 * np.ptp(x[:, 2] * 1024) + 2 * np.linalg.norm(second)
+    return cell * np.array([1, 1, third / 1024])[:, None], x * np.array([1, 1, 1024 / third])
+
+
+def described(crystals: CrystalBatch, i: int) -> tuple[np.ndarray, np.ndarray]:
+    """Cell and positions of canonical crystal i as its description is taken: of a layer, with the close third row."""
+    cell, x = crystals.cells[i], crystals.positions[crystals.sites(i)]
+    return (cell, x) if crystals.periodicity[i] == 3 else close_layer(cell, x)
+
+
 def check_cell(crystals: CrystalBatch) -> None:
-    """Canonical cells are lower triangular, right-handed, and Niggli-reduced at the tolerance or a level below it."""
-    cells = crystals.cells
+    """Canonical cells are lower triangular, right-handed, and Niggli-reduced at the tolerance or a level below it;
+    layers stand in one frame, and their plane is reduced."""
+    cells = np.array([described(crystals, i)[0] for i in range(len(crystals))]).reshape(-1, 3, 3)
+    layers = crystals.cells[crystals.periodicity == 2]
+    assert (layers[:, 2] == [0, 0, 1024]).all()
+    a, b = layers[:, 0, :2], layers[:, 1, :2]
+    aa, ab, bb = (a * a).sum(axis=1), (a * b).sum(axis=1), (b * b).sum(axis=1)
+    room = 1e-4 * bb
+    assert (aa <= bb + room).all() and (ab <= room).all() and (-2 * ab <= aa + room).all()
     assert (cells[:, [0, 0, 1], [1, 2, 2]] == 0).all()
     assert (cells[:, [0, 1, 2], [0, 1, 2]] > 0).all()
     metrics = cells @ cells.transpose(0, 2, 1)
@@ -59,9 +84,12 @@ def check_cell(crystals: CrystalBatch) -> None:
 def check_basis(crystals: CrystalBatch) -> None:
     """Sites stand sorted by species, rarest first, then by position on the grid; the first at the origin."""
     for i in range(len(crystals)):
-        x = crystals.positions[crystals.sites(i)]
+        x = described(crystals, i)[1]
         tokens = crystals.tokens_of(i)
         n = np.floor(x * GRID + GRID_OFFSET).astype(int)
+        if crystals.periodicity[i] == 2:  # heights are signed, and sorted modulo the close third row
+            assert (np.abs(x[:, 2]) < 0.5).all()
+            n[:, 2] %= GRID
         assert (n[0] == 0).all()
         assert ((n >= 0) & (n < GRID)).all()
         count = {t: tokens.count(t) for t in tokens}
@@ -74,7 +102,16 @@ def check_recovery(given: CrystalBatch, result: CanonicalBatch, within: float | 
     crystals = result.crystals
     for place, row in enumerate(result.rows):
         k, r = result.multiplicity_matrix[place], result.rotation[place]
-        cell = given.cells[row]
+        cell, positions = given.cells[row], given.positions[given.sites(row)]
+        sites = slice(int(result.given_offsets[place]), int(result.given_offsets[place + 1]))
+        to, shift = result.site_map[sites], result.site_shift[sites]
+        if given.periodicity[row] == 2:
+            place_of = (positions - shift * [0, 0, 1]) @ cell
+            normal = np.cross(cell[0], cell[1])
+            normal *= np.sign(normal @ cell[2]) / np.linalg.norm(normal)
+            cell = np.array([cell[0], cell[1], 1024 * normal])
+            positions, shift = place_of @ np.linalg.inv(cell), shift * [1, 1, 0]
+            assert (k[:2, 2] == 0).all() and (k[2, :2] == 0).all() and abs(k[2, 2]) == 1
         scale = np.abs(cell).max()
         d = integer_determinant(k)
         assert (
@@ -86,10 +123,8 @@ def check_recovery(given: CrystalBatch, result: CanonicalBatch, within: float | 
         assert np.abs(r @ r.T - np.eye(3)).max() < 1e-9
         assert np.linalg.det(r) > 0
         assert np.abs(k @ crystals.cells[place] @ r - cell).max() < 1e-8 * scale
-        sites = slice(int(result.given_offsets[place]), int(result.given_offsets[place + 1]))
-        to, shift = result.site_map[sites], result.site_shift[sites]
         x = crystals.positions[crystals.sites(place)][to] + shift + result.origin[place]
-        gap = given.positions[given.sites(row)] @ cell - x @ crystals.cells[place] @ r
+        gap = positions @ cell - x @ crystals.cells[place] @ r
         assert np.linalg.norm(gap, axis=1).max() <= result.residual[place] + 1e-7
         if within is not None:
             assert result.residual[place] <= within
@@ -124,7 +159,7 @@ def check_pseudo(result: CanonicalBatch) -> None:
 
 def key_of(crystals: CrystalBatch, i: int) -> str:
     """The key of canonical crystal i, written out once more from its definition."""
-    cell, x, tokens = crystals.cells[i], crystals.positions[crystals.sites(i)], crystals.tokens_of(i)
+    (cell, x), tokens = described(crystals, i), crystals.tokens_of(i)
     size = np.cbrt(abs(np.linalg.det(cell)) / len(x))
     g = cell @ cell.T / size**2
 

@@ -151,3 +151,98 @@ def type_crystals() -> tuple[Crystal, ...]:
 def batch(crystals: list[Crystal]) -> CrystalBatch:
     """The batch of a list of crystals."""
     return batch_from_lists([c[0] for c in crystals], [c[1] for c in crystals], [c[2] for c in crystals])
+
+
+# ---------------------------------------------------------------------------------------------------------------------
+# Layers: crystals whose third row is only a frame
+# ---------------------------------------------------------------------------------------------------------------------
+
+LAYER_TYPES = ("mp", "op", "oc", "tp", "hp")
+
+
+def plane_cell(rng: np.random.Generator, layer_type: str) -> np.ndarray:
+    """A random primitive plane cell (2, 2) of a layer type, kept away from every higher type."""
+    a, b = rng.uniform(3, 4), rng.uniform(4.5, 6)
+    if layer_type == "mp":
+        return np.array([[a, 0], [a * rng.uniform(0.15, 0.35), b]])
+    if layer_type == "op":
+        return np.diag([a, b])
+    if layer_type == "oc":
+        while min(abs(np.log(b / a)), abs(np.log(b / a / np.sqrt(3)))) < 0.05:
+            b = rng.uniform(4.5, 6)
+        return np.array([[a, b], [-a, b]]) / 1.6
+    return a * (np.eye(2) if layer_type == "tp" else np.array([[1, 0], [-0.5, np.sqrt(0.75)]]))
+
+
+def upright(plane: np.ndarray, cartesian: np.ndarray, vacuum: float = 12.0) -> tuple[np.ndarray, np.ndarray]:
+    """Cell and fractional positions of a layer with `vacuum` (angstrom) above it; cartesian (n, 3), heights along z."""
+    cell = np.zeros((3, 3))
+    cell[:2, :2] = plane
+    cell[2, 2] = np.ptp(cartesian[:, 2]) + vacuum
+    return cell, cartesian @ np.linalg.inv(cell)
+
+
+def random_layer(
+    rng: np.random.Generator,
+    layer_type: str = "mp",
+    sites: int = 4,
+    elements: tuple[str, ...] = ("Si", "O"),
+    thickness: float = 3.0,
+    apart: float = 1.2,
+) -> Crystal:
+    """A layer of random sites on a random plane lattice of the type: the basis has no symmetry."""
+    plane = plane_cell(rng, layer_type)
+    while True:
+        place = np.concatenate([rng.random((sites, 2)) @ plane, thickness * rng.random((sites, 1))], axis=1)
+        cell, positions = upright(plane, place)
+        if least_distance(cell, positions) > apart:
+            return cell, positions, [elements[i % len(elements)] for i in range(sites)]
+
+
+def plane_matrix(rng: np.random.Generator, index: int) -> np.ndarray:
+    """A random integer (3, 3) that makes an in-plane supercell of `index` and may turn the layer upside down."""
+    while True:
+        forms = [h for h in hermite_matrices(index) if h[2, 2] == 1]
+        m = np.array(forms[rng.integers(len(forms))])
+        for _ in range(3):
+            i = rng.integers(2)
+            m[i] += rng.integers(-2, 3) * m[1 - i]
+        m[rng.integers(3)] *= rng.choice((-1, 1))
+        m[:2, 2] = m[2, :2] = 0
+        m[2, 2] = rng.choice((-1, 1))
+        if abs(m).max() <= 20 and abs(round(np.linalg.det(m))) == index:
+            return m
+
+
+def disguise_layer(
+    rng: np.random.Generator, layer: Crystal, max_index: int = 6, noise: float = 0.0, strain: float = 0.0
+) -> Crystal:
+    """The same layer in another cell, order and orientation, with another vacuum, a tilted third row, somewhere along
+    the normal (across a face of the cell, too) and either way up.
+
+    noise: each site moves by a vector of length up to this (angstrom). strain: the two principal logarithmic stretches
+    in the plane are within this; heights are kept.
+    """
+    cell, positions, tokens = supercell(layer, plane_matrix(rng, int(rng.integers(1, max_index + 1))))
+    place = positions @ cell
+    if noise:
+        v = rng.normal(size=place.shape)
+        place = place + v * noise * rng.random((len(v), 1)) ** (1 / 3) / np.linalg.norm(v, axis=1, keepdims=True)
+    turn = rng.uniform(0, np.pi)
+    axes = np.array([[np.cos(turn), np.sin(turn)], [-np.sin(turn), np.cos(turn)]])
+    stretch = np.eye(3)
+    stretch[:2, :2] = axes.T @ np.diag(np.exp(rng.uniform(-strain, strain, 2))) @ axes
+    cell, place = cell @ stretch, place @ stretch
+    cell[2] *= (np.ptp(place[:, 2]) + rng.uniform(6, 30)) / abs(cell[2, 2])
+    cell[2] += rng.uniform(-1, 1, 2) @ cell[:2]
+    positions = place @ np.linalg.inv(cell) + rng.random(3)
+    order = rng.permutation(len(tokens))
+    positions = positions[order] - np.floor(positions[order])
+    return cell @ rotation(rng), positions, [tokens[i] for i in order]
+
+
+def layers(crystals: list[Crystal]) -> CrystalBatch:
+    """The batch of a list of layers."""
+    one = batch(crystals)
+    periodicity = np.full(len(one), 2, np.uint8)
+    return CrystalBatch(one.cells, one.offsets, one.positions, one.species, one.tokens, periodicity)

@@ -9,7 +9,6 @@ import pytest
 
 from lattice_census.cell.canonical import canonicalise
 from lattice_census.errors import UsageError
-from lattice_census.model.batch import CrystalBatch
 from lattice_census.tolerances import GRID, Tolerances
 from tests import slow_canonical
 from tests.invariants import check_accounting, check_canonical, check_fixed_point
@@ -217,16 +216,6 @@ def test_bad_records_are_refused_and_the_others_stay():
     assert result.crystal_key[0] == result.crystal_key[1] == canonicalise(batch([good]), TOLERANCES).crystal_key[0]
     reasons = [r.reason for _, r in result.refusals]
     assert reasons == ["cell_zero"] * 2 + ["cell_absurd"] * 3 + ["coordinates_nonfinite"] * 2 + ["sites_missing"]
-
-
-def test_layers_are_refused():
-    given = batch([random_crystal(np.random.default_rng(15), "tP", 2)] * 2)
-    given = CrystalBatch(
-        given.cells, given.offsets, given.positions, given.species, given.tokens, np.array([2, 3], np.uint8)
-    )
-    result = canonicalise(given, TOLERANCES)
-    assert result.rows.tolist() == [1]
-    assert [r.reason for _, r in result.refusals] == ["periodicity_unsupported"]
 
 
 def test_empty_batch():

@@ -34,7 +34,7 @@ DAMAGE: dict[str, tuple[str, ...]] = {
         "JOIN records USING (record_id) WHERE label = 'k1')",
     ),
     "keys-are-typed-once": ("INSERT INTO crystal_types SELECT * FROM crystal_types LIMIT 1",),
-    "keys-are-one-crystal": ("UPDATE records SET periodicity = 2 WHERE label = 'k2'",),
+    "keys-are-one-crystal": ("UPDATE records SET periodicity = 1 WHERE label = 'k2'",),
     "sites-are-counted": ("UPDATE records SET sites_given = sites_given + 1 WHERE label = 'k1'",),
     "counts-add-up": ("UPDATE files SET found = found + 1 WHERE file = 't.csv'",),
     "files-hold-what-they-say": (

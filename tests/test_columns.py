@@ -40,7 +40,9 @@ def test_quantities_name_their_unit():
     for table in TABLES.values():
         for column in table.columns:
             if column.type.startswith("DOUBLE"):
-                units = ("_angstrom", "_angstrom3_per_site", "_deg", "_fractional", "_ev_per_site")
+                units = (
+                    "_angstrom", "_angstrom2_per_site", "_angstrom3_per_site", "_deg", "_fractional", "_ev_per_site",
+                )  # fmt: skip
                 dimensionless = ("rotation", "orthogonal", "volume_ratio", "value")
                 assert column.name.endswith(units) or column.name in dimensionless or "strain" in column.name
 

@@ -3,6 +3,9 @@
 Steps: reduce the given lattice; refuse overlapping sites; divide out the exact translations; take, among all
 Niggli-reduced right-handed bases and all origins on the rarest species, the smallest description on integers; look for
 approximate translations of the result. The steps are in kernels/; here they are put together and checked.
+
+Layers go through the same steps in their close frame (lattice/layer.py) and come out in the wide one: cells with the
+third row (0, 0, FRAME), and heights above the first site over FRAME as third coordinates.
 """
 
 from __future__ import annotations
@@ -16,12 +19,13 @@ from ..errors import UsageError
 from ..kernels import canonical as kernel
 from ..kernels.ordering import MOST_KINDS
 from ..kernels.translations import approximate_translations
-from ..lattice.metric import lower_triangular, metric
-from ..lattice.niggli import is_niggli_reduced
-from ..model.batch import Codes, CrystalBatch, Floats, Ints
+from ..lattice.layer import close_layers
+from ..lattice.metric import lower_triangular
+from ..model.batch import Codes, CrystalBatch, Floats, Ints, select
 from ..model.refusals import Refusal
 from ..tolerances import NIGGLI_EPSILON, Tolerances
 from .key import crystal_keys, species_ranks
+from .layer_form import are_reduced, given_frames, origins, wide_layers
 
 
 @dataclass(frozen=True, slots=True)
@@ -35,6 +39,10 @@ class CanonicalBatch:
 
     so that the Cartesian given_position[j] given_cell equals (canonical_position[site_map[j]] + site_shift[j] + origin)
     L R up to `residual` angstrom. Arrays are read-only.
+
+    A layer's third row is no period. With w_j the third number of site_shift[j], the equations hold for the given layer
+    put upright: its cell U has the rows a and b as given and FRAME angstrom along the normal on the side of c, its
+    positions are (given_position[j] - (0, 0, w_j)) given_cell U^-1, and the third number of site_shift is taken for 0.
     """
 
     rows: Ints
@@ -45,7 +53,9 @@ class CanonicalBatch:
 
     crystals: CrystalBatch
     """The n canonical crystals: cells lower triangular with positive diagonal, Niggli-reduced; sites sorted by species
-    (rarest first, then by token) and position, the first at the origin; positions in [-phi/N, 1 - phi/N)."""
+    (rarest first, then by token) and position, the first at the origin; positions in [-phi/N, 1 - phi/N). Layers: the
+    plane reduced (lattice/layer.py, is_plane_reduced), the third row (0, 0, FRAME), the third coordinates in
+    (-1/2, 1/2) and the sites in the order of the close frame."""
 
     crystal_key: tuple[str, ...]
     """n keys of 64 hex digits (key.py)."""
@@ -72,7 +82,8 @@ class CanonicalBatch:
     """(m,) int32: the site, from 0 within its canonical crystal, that each given site is an image of."""
 
     site_shift: Codes
-    """(m, 3) int32: lattice translation, in the canonical cell, from that site to the given one."""
+    """(m, 3) int32: lattice translation, in the canonical cell, from that site to the given one; the third number of a
+    layer's counts given third rows (see above)."""
 
     pseudo_index: Ints
     """(n,) int64: cells of the approximate translation lattice per canonical cell; 1 where there is none."""
@@ -119,8 +130,9 @@ def canonicalise(batch: CrystalBatch, tolerances: Tolerances) -> CanonicalBatch:
     """Canonical crystals of a batch in any basis, handedness, origin, order and orientation.
 
     A record that has none is refused: sites_overlap, cell_zero, cell_absurd, coordinates_nonfinite, sites_missing,
-    reduction_failed; periodicity_unsupported for layers. Never raises for a bad record. Raises UsageError where the
-    tolerances contradict each other: the image of a site under an approximate translation must be unique.
+    reduction_failed; layer_unclear; periodicity_unsupported for fewer than two periods. Never raises for a bad record.
+    Raises UsageError where the tolerances contradict each other: the image of a site under an approximate translation
+    must be unique.
     """
     widest = max(tolerances.exact_tolerance, tolerances.primitive_tolerance)
     if not 0 < 4 * widest < tolerances.overlap_distance:
@@ -129,44 +141,49 @@ def canonicalise(batch: CrystalBatch, tolerances: Tolerances) -> CanonicalBatch:
             f"({tolerances.overlap_distance} angstrom); the larger is {widest}"
         )
     n = len(batch)
+    layers = batch.periodicity == 2
+    framed = given_frames(batch)
     found = kernel.canonical_columns(
-        batch.cells, batch.offsets, batch.positions, batch.species,
-        tolerances.exact_tolerance, tolerances.overlap_distance, NIGGLI_EPSILON,
+        framed.close.cells, batch.offsets, framed.close.positions, batch.species,
+        tolerances.exact_tolerance, tolerances.overlap_distance, NIGGLI_EPSILON, layers,
     )  # fmt: skip
-    outcome = found.outcome
     refused: dict[int, Refusal] = {
-        int(i): _refusal(int(outcome[i]), found.detail[i]) for i in np.flatnonzero(outcome != kernel.DONE)
+        int(i): _refusal(int(found.outcome[i]), found.detail[i]) for i in np.flatnonzero(found.outcome != kernel.DONE)
     }
-    for i in np.flatnonzero(batch.periodicity != 3):
+    refused |= {i: r for i, r in framed.refusals.items() if found.outcome[i] not in kernel.BROKEN}
+    for i in np.flatnonzero((batch.periodicity != 3) & ~layers):
         refused[int(i)] = Refusal(
-            "periodicity_unsupported", f"periodic in {int(batch.periodicity[i])} directions, not in 3", "canonical"
+            "periodicity_unsupported", f"periodic in {int(batch.periodicity[i])} directions, not in 2 or 3", "canonical"
         )
     accepted = np.ones(n, bool)
     accepted[list(refused)] = False
     rows = np.flatnonzero(accepted)
     cells, rotation = lower_triangular(found.frames[rows])
-    reduced = is_niggli_reduced(metric(cells), found.levels[rows])
+    counts = found.sites[rows]
+    crystals = wide_layers(
+        _crystals(batch, rows, cells, counts, found.positions, found.species), found.thirds[rows]
+    )  # fmt: skip
+    reduced = are_reduced(crystals, found.levels[rows], found.multiplicity[rows])
     for i in rows[~reduced]:
         refused[int(i)] = Refusal(
             "reduction_failed", "the reduced cell does not satisfy the conditions of a Niggli cell", "canonical"
         )
-    rows, cells, rotation = rows[reduced], cells[reduced], rotation[reduced]
+    if not reduced.all():
+        rows, rotation, counts = rows[reduced], rotation[reduced], counts[reduced]
+        crystals = select(crystals, np.flatnonzero(reduced))
 
-    counts = found.sites[rows]
-    crystals = _crystals(batch, rows, cells, counts, found.positions, found.species)
     given_counts = np.diff(batch.offsets)[rows]
     given_offsets = np.concatenate([[0], np.cumsum(given_counts)]).astype(np.int64)
     given = _ranges(batch.offsets[rows], given_counts)
-    shift, residual = _way_back(
-        batch.positions[given],
-        found.site_map[given],
-        given_offsets,
-        crystals,
-        found.multiplicity[rows],
-        found.origin[rows],
-    )
+    multiplicity, site_map = found.multiplicity[rows], found.site_map[given]
+    positions = framed.positions[given]
+    origin = origins(positions, site_map, given_offsets, crystals, multiplicity, found.origin[rows])
+    shift, residual = _way_back(positions, site_map, given_offsets, crystals, multiplicity, origin)
+    if framed.turns is not None:
+        shift[:, 2] += framed.turns[given].astype(np.int32)
+    packed = close_layers(crystals)
     pseudo_index, pseudo_matrix, pseudo_residual = approximate_translations(
-        crystals.cells, crystals.offsets, crystals.positions, species_ranks(crystals),
+        packed.cells, packed.offsets, packed.positions, species_ranks(packed),
         tolerances.primitive_tolerance, NIGGLI_EPSILON,
     )  # fmt: skip
     return CanonicalBatch(
@@ -174,13 +191,13 @@ def canonicalise(batch: CrystalBatch, tolerances: Tolerances) -> CanonicalBatch:
         refusals=tuple(sorted(refused.items())),
         crystals=crystals,
         crystal_key=tuple(crystal_keys(crystals)),
-        multiplicity_matrix=found.multiplicity[rows],
+        multiplicity_matrix=multiplicity,
         supercell_index=given_counts // np.maximum(counts, 1),
         rotation=rotation,
-        origin=found.origin[rows],
+        origin=origin,
         residual=residual,
         given_offsets=given_offsets,
-        site_map=found.site_map[given],
+        site_map=site_map,
         site_shift=shift,
         pseudo_index=pseudo_index,
         pseudo_matrix=pseudo_matrix,

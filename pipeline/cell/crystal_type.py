@@ -17,7 +17,7 @@ from __future__ import annotations
 import logging
 from collections import Counter
 from collections.abc import Sequence
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 from functools import cache
 
 import moyopy
@@ -35,6 +35,9 @@ from .lattice_type import LatticeTypes
 
 SYMMETRY_FAILED = "symmetry_failed"
 """Finding: the search for the space group of a crystal failed; its columns are null and the record stays."""
+
+VACUUM = 10.0
+"""angstrom above a layer in its standard cell."""
 
 # Notices about operations of cells that are not primitive; they would go to standard error line by line.
 logging.getLogger("moyo").setLevel(logging.ERROR)
@@ -76,11 +79,12 @@ class CrystalTypes:
     several: `e2ca`."""
 
     standard: CrystalBatch
-    """The k standard conventional cells, with the lattice and the positions made exactly symmetric."""
+    """The k standard conventional cells, with the lattice and the positions made exactly symmetric; of a layer with a
+    third row along the normal, VACUUM longer than it is thick."""
 
     standard_matrices: Floats
     """(k, 3, 3) float64: S, rows; standard_cell = (S @ cell) R, up to the strain that makes it exact, R a rotation.
-    Integer for primitive cells, up to rounding."""
+    Integer for primitive cells, up to rounding, but for the last number of a layer's."""
 
     standard_shifts: Floats
     """(k, 3) float64, fractional: standard_position = (position - shift) S^-1, before it is made exact."""
@@ -213,10 +217,21 @@ def _counts(batch: CrystalBatch, tolerance: float) -> Ints:
 
 
 def _search_layer(cell: Floats, positions: Floats, species: list[int], tolerance: float) -> tuple[_One, bool]:
-    """The symmetry of one layer, and whether its group is another at half or at twice the tolerance."""
+    """The symmetry of one layer, and whether its group is another at half or at twice the tolerance.
+
+    The search, and so the standard cell, has a third row of the thickness and VACUUM. Its way to the standard cell is
+    put in terms of the cell that came: with D = diag(1, 1, third row of the search / that of the cell) and b the bottom
+    of the layer, position = search position D + (0, 0, b), so that S becomes S D and the shift s D + (0, 0, b).
+    """
     cell, positions = upright_layer(cell, positions)
+    third, bottom = float(cell[2, 2]), float(positions[:, 2].min())
+    ratio = float(np.ptp(positions[:, 2])) + VACUUM / third
+    cell = cell * np.array([1.0, 1.0, ratio])[:, None]
+    positions = (positions - [0.0, 0.0, bottom]) / [1.0, 1.0, ratio]
     one = _search(cell, positions, species, tolerance, True)
     others = [_search(cell, positions, species, f * tolerance, True).number for f in (0.5, 2.0)]
+    change = np.diag([1.0, 1.0, ratio])
+    one = replace(one, matrix=one.matrix @ change, shift=one.shift @ change + [0.0, 0.0, bottom])
     return one, any(number != one.number for number in others)
 
 

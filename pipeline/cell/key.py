@@ -4,7 +4,9 @@ Every number is taken as n = floor(x N + phi), with N = GRID and phi = GRID_OFFS
 - the metric over (volume / sites)^(2/3), six numbers;
 - the cube root (angstrom) of the volume per site, so that its step is of the same relative size as that of the metric;
 - fractional positions, modulo N.
-Equal keys prove that two crystals are the same up to about 1e-5; unequal keys prove nothing.
+Layers are taken in their close frame (lattice/layer.py), whose third row follows the layer alone; the periodicity is
+hashed too, so that a layer never has the key of a bulk crystal. Equal keys prove that two crystals are the same up to
+about 1e-5; unequal keys prove nothing.
 """
 
 from __future__ import annotations
@@ -13,6 +15,7 @@ import hashlib
 
 import numpy as np
 
+from ..lattice.layer import close_layers
 from ..lattice.metric import characteristics, metric
 from ..model.batch import CrystalBatch, Floats, Ints
 from ..tolerances import GRID, GRID_OFFSET
@@ -33,6 +36,7 @@ def crystal_keys(crystals: CrystalBatch) -> list[str]:
     """
     if len(crystals) == 0:
         return []
+    crystals = close_layers(crystals)
     counts = np.diff(crystals.offsets)
     size = np.cbrt(crystals.volumes / counts)
     six = characteristics(metric(crystals.cells)) / (size**2)[:, None]

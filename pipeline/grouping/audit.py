@@ -7,8 +7,10 @@ with cell L, integer matrix K, rotation R, origin o, site map m and site shifts 
     given_cell = K L R,    given_position[j] K = position[m[j]] + t[j] + o + (a deviation).
 
 The audit takes given cell and positions and undoes these equations itself, so that a wrong K, R, o, m or t fails it
-too. Where the given structure is a supercell or a noisy one, its sites differ from the canonical ones by up to
-`deviation`, which is part of what is checked and is allowed for in comparing shifts.
+too. A layer is put upright first: its third row is replaced by one of LAYER_ROW angstrom along the normal of the other
+two, on its own side, after as many given third rows as the third number of t says are taken off each site; there is no
+lattice translation along the normal. Where the given structure is a supercell or a noisy one, its sites differ from the
+canonical ones by up to `deviation`, which is part of what is checked and is allowed for in comparing shifts.
 """
 
 from __future__ import annotations
@@ -23,6 +25,10 @@ Ints = NDArray[np.int64]
 
 AGREEMENT = 1e-6
 """Measures rebuilt and recorded agree to this (angstrom; dimensionless), deviations of the given sites apart."""
+
+
+LAYER_ROW = 1024.0
+"""Third row of the reduced cell of a layer, angstrom along its normal: stated, as the equations are."""
 
 
 @dataclass(frozen=True, slots=True)
@@ -56,6 +62,9 @@ class Given:
     residual: float
     """Largest distance of a given site from its image, angstrom, as recorded."""
 
+    layer: bool = False
+    """Periodic in the first two rows alone."""
+
 
 @dataclass(frozen=True, slots=True)
 class Claim:
@@ -74,12 +83,30 @@ class Claim:
     improper: bool
 
 
+def upright(given: Given) -> tuple[Floats, Floats, Ints]:
+    """Cell, positions and lattice translations of a given layer after it is put upright; of a bulk crystal as given."""
+    shift = np.array(given.site_shift, dtype=np.int64)
+    if not given.layer:
+        return given.cell, given.positions, shift
+    a, b, c = given.cell
+    normal = np.cross(a, b)
+    normal /= np.sqrt(normal @ normal)
+    cell = np.array([a, b, LAYER_ROW * (normal if normal @ c > 0 else -normal)])
+    taken_off = given.positions - shift * np.array([0, 0, 1])
+    shift[:, 2] = 0
+    return cell, taken_off @ given.cell @ np.linalg.inv(cell), shift
+
+
 def primitive_of(given: Given, failures: list[str], name: str) -> tuple[Floats, Floats, list[str], float]:
     """Primitive cell, positions and tokens by undoing the equations above, and the largest deviation found (angstrom).
 
     The position of a primitive site is the mean of its given images, which agree with it to the recorded residual.
     """
     k = np.asarray(given.matrix, dtype=np.int64)
+    if given.layer and ((k[2] != [0, 0, k[2, 2]]).any() or k[:2, 2].any() or abs(int(k[2, 2])) != 1):
+        failures.append(f"{name}: the matrix K mixes the normal of a layer with its plane")
+        return given.cell, given.positions, given.tokens, np.inf
+    given_cell, given_positions, site_shift = upright(given)
     index = round(abs(float(np.linalg.det(k))))
     if index < 1:
         failures.append(f"{name}: the matrix K has no inverse")
@@ -87,13 +114,13 @@ def primitive_of(given: Given, failures: list[str], name: str) -> tuple[Floats, 
     rotation = np.asarray(given.rotation)
     if not np.allclose(rotation @ rotation.T, np.eye(3), atol=1e-9):
         failures.append(f"{name}: the rotation R is not orthogonal")
-    cell = np.linalg.solve(k.astype(np.float64), given.cell) @ rotation.T
+    cell = np.linalg.solve(k.astype(np.float64), given_cell) @ rotation.T
     sites = len(given.positions) // index
     counts = np.bincount(given.site_map, minlength=sites)
     if len(given.positions) != sites * index or len(counts) != sites or (counts != index).any():
         failures.append(f"{name}: the site map does not give every primitive site {index} images")
         return cell, given.positions, given.tokens, np.inf
-    place = given.positions @ k - given.origin - given.site_shift
+    place = given_positions @ k - given.origin - site_shift
     positions = np.zeros((sites, 3))
     np.add.at(positions, given.site_map, place / index)
     tokens = [""] * sites
@@ -142,6 +169,11 @@ def audit(a: Given, b: Given, claim: Claim, allow: float = AGREEMENT) -> list[st
     for name, index in (("P", index_p), ("Q", index_q)):
         if not 1 <= index <= 8:
             failures.append(f"|det {name}| is {index}, not 1 to 8")
+    if a.layer != b.layer:
+        failures.append("one of the two is a layer, the other is not")
+    for name, m in (("P", p), ("Q", q)):
+        if a.layer and (m[2, :2].any() or m[:2, 2].any() or abs(int(m[2, 2])) != 1):
+            failures.append(f"{name} mixes the normal of a layer with its plane")
     if index_p * len(x) != index_q * len(y):
         failures.append(f"the common cell has {index_p * len(x)} sites of A and {index_q * len(y)} of B")
     if failures:
@@ -151,6 +183,10 @@ def audit(a: Given, b: Given, claim: Claim, allow: float = AGREEMENT) -> list[st
     f = np.linalg.solve(first, second)
     left, stretches, right = np.linalg.svd(f)
     logs = np.log(stretches)
+    if a.layer:  # the normal is kept, by P, Q and the frame; what is left are the two stretches of the plane
+        kept = int(np.abs(logs).argmin())
+        _compare(failures, "stretch along the normal", float(stretches[kept]), 1.0, allow)
+        logs = np.delete(logs, kept)
     orthogonal = np.asarray(claim.orthogonal)
     if not np.allclose(orthogonal @ orthogonal.T, np.eye(3), atol=1e-9):
         failures.append("the orthogonal part is not orthogonal")

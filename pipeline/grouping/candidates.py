@@ -26,6 +26,12 @@ On crystals scaled to equal volume (`rescaled`, `isotypic`) the strain is shape 
 window's own s; c is in the units of the scale. For a pair scaled to the geometric mean of its volumes per site, with D
 in angstrom, everything is divided by that length. (A pair that matches within s as it is has strain at most 4 s / 3
 there, (s, -s, -s) less its mean; it is found by the search that does not scale.)
+
+Layers. The strain stretches the plane alone and heights are kept, so that a vector still changes its length by a factor
+between exp(-s) and exp(s), and the sites nearest to p are those of the layer: all of the above holds word for word. The
+cells of two layers share their third row (lattice/layer.py), so that the ratio of the volumes is that of the areas per
+site, the product of two stretches: |ln(V_A / V_B)| <= 2 s, and the coordinate is ln(V) / 2. `rescaled` and `isotypic`
+bring layers to one area per site, heights by the same factor.
 """
 
 from __future__ import annotations
@@ -63,15 +69,17 @@ class Candidates:
     """Pairs after each step: volumes and tree, means, sorted columns, rows."""
 
 
-def mean_coordinates(means: NDArray[np.float32], volumes: Floats, window: Window) -> Floats:
+def mean_coordinates(
+    means: NDArray[np.float32], volumes: Floats, window: Window, periods: NDArray[np.uint8] | int = 3
+) -> Floats:
     """(n, 1 + r k): ln(V)/3 and the transformed means; two crystals of a match differ by at most the slack in each.
 
     means (n, r, k): column means of each species of the centre, angstrom (or units of the scale); volumes (n,): per
-    site.
+    site; periods (n,): 3, or 2 for layers, whose first coordinate is ln(V)/2.
     """
     n = len(means)
     y = transform(means.astype(np.float64), window.shift, window.strain).reshape(n, -1)
-    return np.concatenate([np.log(volumes)[:, None] / 3.0, y], axis=1)
+    return np.concatenate([(np.log(volumes) / periods)[:, None], y], axis=1)
 
 
 def quantile_coordinates(prepared: Prepared) -> Floats:
@@ -148,7 +156,7 @@ def start_search(
     means = column_means(batch, found).means
     k = means.shape[1]
     scaled = means.reshape(len(batch), -1, k) * scales[:, None, None].astype(np.float32)
-    averages = mean_coordinates(scaled, prepared.volumes, window)
+    averages = mean_coordinates(scaled, prepared.volumes, window, batch.periodicity)
     coordinates = np.concatenate([averages, quantile_coordinates(prepared)], axis=1)
     columns = np.concatenate([tree_columns(averages.shape[1], k), np.arange(averages.shape[1], coordinates.shape[1])])
     return Search(window, found, scales, prepared, coordinates, columns, transform_slack(window.strain))

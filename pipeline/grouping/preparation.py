@@ -52,7 +52,8 @@ class Prepared:
     """(m, kinds): how many of the k are of each species."""
 
     volumes: Floats
-    """(n,): cubic angstrom per site, after scaling."""
+    """(n,): cubic angstrom per site, after scaling; of layers with the third row of their frame, which is one for
+    all."""
 
     given_volumes: Floats
     """(n,): ln of the cubic angstrom per site, as the crystals came."""
@@ -164,8 +165,9 @@ def prepare(
     owner = np.repeat(np.arange(n), sizes)
     kinds = int(found.ranks.max()) + 1 if len(found.ranks) else 1
     order = np.lexsort((found.ranks, owner)).astype(np.int64)
-    cells = batch.cells * factor[:, None, None]
     planar = batch.periodicity == 2
+    cells = batch.cells * factor[:, None, None]
+    cells[planar, 2] = batch.cells[planar, 2]  # the frame of all layers; what is scaled is the heights in it
     offsets = batch.offsets.copy()  # arrays of the kernels can all be written: one compiled form each
     bins = np.bincount(owner * kinds + found.ranks, minlength=n * kinds).reshape(n, kinds)
     blocks = batch.offsets[:-1, None] + np.concatenate([np.zeros((n, 1), np.int64), np.cumsum(bins, axis=1)], axis=1)
@@ -174,6 +176,7 @@ def prepare(
     heights = 1.0 / np.linalg.norm(np.linalg.inv(cells), axis=1).max(axis=1)
     clear = np.minimum(np.minimum.reduceat(own, batch.offsets[:-1]) if n else np.zeros(0), heights)
     positions = np.ascontiguousarray(batch.positions[order])
+    positions[:, 2] *= np.where(planar, factor, 1.0)[owner]
     bases, t = reduced_bases(cells, planar)
     matrices = np.rint(np.linalg.inv(t.astype(np.float64))).astype(np.int64)
     variants = _variants(cells, offsets, positions, blocks, planar, bins, bases, matrices, window)

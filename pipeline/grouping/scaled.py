@@ -8,6 +8,7 @@ from dataclasses import replace
 import numpy as np
 from numpy.typing import NDArray
 
+from ..lattice.layer import areas
 from ..model.batch import CrystalBatch, Floats, Ints, select
 from ..tolerances import Tolerances
 from .candidates import Search
@@ -16,20 +17,23 @@ from .verification import NO_MATCH, Verified, verify
 from .window import Window
 
 
-def volumes_per_site(batch: CrystalBatch) -> Floats:
-    """(n,) cubic angstrom."""
-    return np.asarray(batch.volumes / np.diff(batch.offsets))
+def lengths_per_site(batch: CrystalBatch) -> Floats:
+    """(n,) angstrom: cubic root of the volume per site; of layers the square root of the area per site."""
+    lengths = np.cbrt(batch.volumes / np.diff(batch.offsets))
+    layers = batch.periodicity == 2
+    lengths[layers] = np.sqrt(areas(batch.cells[layers]) / np.diff(batch.offsets)[layers])
+    return np.asarray(lengths)
 
 
 def unit_scales(batch: CrystalBatch) -> Floats:
-    """(n,): the factor on lengths that brings each crystal to one cubic unit a site."""
-    return volumes_per_site(batch) ** (-1.0 / 3.0)
+    """(n,): the factor on lengths that brings each crystal to one cubic unit a site, each layer to one square unit."""
+    return 1.0 / lengths_per_site(batch)
 
 
 def pair_lengths(batch: CrystalBatch, pairs: Ints) -> Floats:
-    """(p,) angstrom: cubic root of the geometric mean of the volumes per site of each pair."""
-    per_site = volumes_per_site(batch)
-    return np.asarray((per_site[pairs[:, 0]] * per_site[pairs[:, 1]]) ** (1.0 / 6.0))
+    """(p,) angstrom: cubic root of the geometric mean of the volumes per site of each pair; of layers likewise."""
+    lengths = lengths_per_site(batch)
+    return np.asarray(np.sqrt(lengths[pairs[:, 0]] * lengths[pairs[:, 1]]))
 
 
 def verify_rescaled(

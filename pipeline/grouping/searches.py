@@ -15,7 +15,7 @@ from ..tolerances import Tolerances
 from .candidates import Search, start_search
 from .pair_store import Limit
 from .preparation import prepare
-from .scaled import pair_lengths, renamings, unit_scales, verify_renamed, verify_rescaled, volumes_per_site
+from .scaled import lengths_per_site, pair_lengths, renamings, unit_scales, verify_renamed, verify_rescaled
 from .verification import Verified, verify
 from .window import isotypic_window, near_window, rescaled_window
 from .witness import Witnesses, witnesses
@@ -58,7 +58,7 @@ def searcher(
             (("same", Limit(0, tolerances.same_shift, tolerances.same_strain, separate)), ("near", near)),
         )
     if kind == "rescaled":
-        smallest = float(volumes_per_site(batch).min())
+        smallest = float(lengths_per_site(batch).min()) ** 3
         search = start_search(
             batch, rescaled_window(tolerances, smallest), unit_scales(batch), distributions(batch, neighbours)
         )

@@ -39,13 +39,13 @@ class Verified:
     """(p,): 0 within the limits of `same`, 1 of `near`, 2 within the window, 3 no match."""
 
     strain: Floats
-    """(p,): largest |ln| of the principal stretches."""
+    """(p,): largest |ln| of the principal stretches; of layers, of the two in the plane."""
 
     shape_strain: Floats
     """(p,): the same after the mean of the three logarithms is taken off."""
 
     volume_ratio: Floats
-    """(p,): volume per site as the crystals came, larger over smaller, at least 1."""
+    """(p,): volume per site as the crystals came (layers: area per site), larger over smaller, at least 1."""
 
     larger: Ints
     """(p,): which of the pair has the larger volume per site: 0 for A, 1 for B, -1 where they are equal to rounding."""
@@ -103,14 +103,21 @@ def verify(prepared: Prepared, pairs: Ints, window: Window, mirror_images: str =
 
 
 def _log_stretches(prepared: Prepared, ordered: Ints, found: Matches, hand: Ints) -> Floats:
-    """(p, 3): logarithms of the principal stretches of the matches of the chosen hands; NaN where there is none."""
+    """(p, 3): logarithms of the principal stretches of the matches of the chosen hands; NaN where there is none.
+
+    A layer has two, in the plane: the third, which is 0, is given as their mean, so that the mean of all is theirs.
+    """
     index = np.arange(len(ordered))
     rows = np.flatnonzero(found.grade[index, hand] < NO_MATCH)
     cells = prepared.crystals.cells
     first = found.p[rows, hand[rows]] @ cells[ordered[rows, 0]]
     second = found.q[rows, hand[rows]] @ cells[ordered[rows, 1]]
     out = np.full((len(ordered), 3), np.nan)
-    out[rows] = np.log(np.linalg.svd(np.linalg.solve(first, second), compute_uv=False))
+    logs = np.log(np.linalg.svd(np.linalg.solve(first, second), compute_uv=False))
+    planar = np.flatnonzero(prepared.crystals.planar[ordered[rows, 0]])
+    along = np.abs(logs[planar]).argmin(axis=1)
+    logs[planar, along] = (logs[planar].sum(axis=1) - logs[planar, along]) / 2.0
+    out[rows] = logs
     return out
 
 

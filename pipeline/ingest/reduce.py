@@ -17,6 +17,7 @@ import pyarrow as pa
 
 from .. import __version__
 from ..cell.canonical import CanonicalBatch, canonicalise
+from ..lattice.layer import areas
 from ..model.batch import CrystalBatch, select
 from ..model.raw import ParseOptions
 from ..model.refusals import Refusal
@@ -163,10 +164,13 @@ def crystal_columns(given: CrystalBatch, canonical: CanonicalBatch) -> dict[str,
     crystal = canonical.crystals
     cells = crystal.cells
     edges = np.linalg.norm(cells, axis=2)
+    sites = np.diff(crystal.offsets)
+    layers = crystal.periodicity == 2  # the third row of theirs is only a frame
     columns: dict[str, Any] = {
-        "sites_primitive": pa.array(np.diff(crystal.offsets).astype(np.int32)),
+        "sites_primitive": pa.array(sites.astype(np.int32)),
         "crystal_key": pa.array(canonical.crystal_key),
-        "volume_angstrom3_per_site": pa.array(crystal.volumes / np.diff(crystal.offsets)),
+        "volume_angstrom3_per_site": pa.array(crystal.volumes / sites, mask=layers),
+        "area_angstrom2_per_site": pa.array(areas(cells) / sites, mask=~layers),
         "supercell_index": pa.array(canonical.supercell_index.astype(np.int32)),
         "residual_angstrom": pa.array(canonical.residual),
         "pseudo_index": pa.array(canonical.pseudo_index.astype(np.int32)),
@@ -182,10 +186,11 @@ def crystal_columns(given: CrystalBatch, canonical: CanonicalBatch) -> dict[str,
         "pseudo_matrix": fixed(canonical.pseudo_matrix.astype(np.int32)),
     }
     for i, name in enumerate("abc"):
-        columns[f"{name}_angstrom"] = pa.array(edges[:, i])
+        columns[f"{name}_angstrom"] = pa.array(edges[:, i], mask=layers if name == "c" else None)
     for name, i, j in (("alpha", 1, 2), ("beta", 0, 2), ("gamma", 0, 1)):
         cosine = np.einsum("nx,nx->n", cells[:, i], cells[:, j]) / (edges[:, i] * edges[:, j])
-        columns[f"{name}_deg"] = pa.array(np.degrees(np.arccos(np.clip(cosine, -1, 1))))
+        degrees = np.degrees(np.arccos(np.clip(cosine, -1, 1)))
+        columns[f"{name}_deg"] = pa.array(degrees, mask=layers if name != "gamma" else None)
     return columns
 
 

@@ -11,7 +11,9 @@ from __future__ import annotations
 from dataclasses import dataclass
 
 import numpy as np
+from numpy.typing import NDArray
 
+from ..lattice.layer import close_lengths, spread, with_third_row
 from ..model.batch import Codes, Floats, Ints
 from ..tolerances import GRID, GRID_OFFSET
 from .bases import MOST_BASES, reduced_bases
@@ -25,6 +27,9 @@ from .vectors import row_dot, through, transform, volume, wrapped
 
 DONE, CELL_ABSURD, CELL_ZERO, NOT_REDUCED, OVERLAP, NO_SITES, TOO_MANY_KINDS, NOT_FINITE = range(8)
 """Outcomes of a crystal, in the column `outcome`."""
+
+BROKEN = (CELL_ABSURD, CELL_ZERO, NO_SITES, NOT_FINITE)
+"""Outcomes of records whose numbers mean nothing."""
 
 ZERO_VOLUME = 1e-12
 FLAT_VOLUME = 1e-9
@@ -326,18 +331,25 @@ class CanonicalColumns:
     """(m,) int32: their species."""
     site_map: Codes
     """(m,) int32: the canonical site, from 0 a crystal, of each given site."""
+    thirds: Floats
+    """(n,) angstrom: length of the third reduced row, which the third coordinates of layers refer to."""
 
 
 def canonical_columns(
     cells: Floats, offsets: Ints, positions: Floats, species: Codes,
-    exact_tolerance: float, overlap_distance: float, epsilon: float,
+    exact_tolerance: float, overlap_distance: float, epsilon: float, layers: NDArray[np.bool_] | None = None,
 ) -> CanonicalColumns:  # fmt: skip
-    """Run the stages over a batch; the first four arguments as in CrystalBatch, lengths in angstrom."""
+    """Run the stages over a batch; the first four arguments as in CrystalBatch, lengths in angstrom.
+
+    layers (n,): crystals that are layers in the close frame (lattice/layer.py) of the cell they are given in, their
+    slab around the middle of the third row. They are described in the close frame of their primitive cell; frames and
+    multiplicity are those of the third row that came in, positions and origin those of the other.
+    """
     n, m = len(cells), len(species)
     outcome, index = np.empty(n, np.int64), np.ones(n, np.int64)
     detail, residual = np.zeros((n, 3)), np.empty(n)
     hands, matrices = np.empty(n, np.int64), np.empty((n, 3, 3), np.int64)
-    reduced, x = np.empty((n, 3, 3)), np.empty((m, 3))
+    reduced, x = np.zeros((n, 3, 3)), np.empty((m, 3))
     kinds, order = np.empty(m, np.int64), np.empty(m, np.int64)
     prepare(
         cells, offsets, positions, species, overlap_distance, epsilon,
@@ -351,6 +363,8 @@ def canonical_columns(
     )
     outcome[index == 0] = NOT_REDUCED
     sites = np.diff(own_offsets) // np.maximum(index, 1)
+    if layers is not None and layers.any():
+        close_again(layers & (outcome == DONE), reduced, own_offsets, sites, x)
     last, place = np.empty((n, 3, 3), np.int64), np.empty(m, np.int64)
     origin, new_positions = np.empty((n, 3)), np.empty((m, 3))
     levels = np.ones(n)
@@ -362,8 +376,29 @@ def canonical_columns(
         multiplicity, frames, site_map, new_species,
     )  # fmt: skip
     return CanonicalColumns(
-        outcome, detail, levels, sites, frames, multiplicity, origin, new_positions, new_species, site_map
-    )
+        outcome, detail, levels, sites, frames, multiplicity, origin, new_positions, new_species, site_map,
+        np.linalg.norm(reduced[:, 2], axis=1),
+    )  # fmt: skip
+
+
+def close_again(layers: NDArray[np.bool_], cells: Floats, offsets: Ints, sites: Ints, x: Floats) -> None:
+    """Bring primitive layers, (n,) bool, to the close frame of their own plane lattice, in place.
+
+    cells (n, 3, 3), sites (n,) and x (m, 3) as primitive_crystals left them: the slab lies around x = 1/2.
+    """
+    rows = np.flatnonzero(layers)
+    if not len(rows):
+        return
+    ends = np.cumsum(sites[rows])
+    index = np.repeat(offsets[rows] - (ends - sites[rows]), sites[rows]) + np.arange(ends[-1])
+    inner_offsets = np.concatenate([[0], ends]).astype(np.int64)
+    old, place = cells[rows], x[index]
+    place[:, 2] -= 0.5
+    height = place[:, 2] * np.repeat(np.linalg.norm(old[:, 2], axis=1), sites[rows])
+    lengths = close_lengths(old, spread(height, inner_offsets))
+    cells[rows], place = with_third_row(old, place, inner_offsets, lengths)
+    place[:, 2] += 0.5
+    x[index] = place
 
 
 def warm_up() -> None:

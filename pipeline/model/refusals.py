@@ -21,6 +21,7 @@ REASONS: dict[str, str] = {
     "sites_too_many": "more sites than the setting max_sites allows",
     "symmetry_unreadable": "the symmetry operations or the space-group name cannot be understood",
     "periodicity_unsupported": "periodic in fewer than two directions",
+    "layer_unclear": "a layer whose heights are not known: no clear gap along its normal, or over 500 angstrom thick",
     "archive_unsafe": "an archive member with a path outside the archive, a link, or over the limits on size and ratio",
     "text_too_long": "the structure text is longer than the setting max_text_bytes allows",
     "reduction_failed": "the cell reduction did not reach a form that its own predicate accepts",

@@ -11,7 +11,7 @@ from __future__ import annotations
 import math
 import re
 from collections.abc import Iterable, Sequence
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 from functools import lru_cache
 
 import numpy as np
@@ -120,8 +120,9 @@ class Formula:
     """Element symbols in alphabetical order."""
 
     composition: str
-    """Species tokens with reduced counts, such as `O2 Ti` or `(Fe0.5Ni0.5)3 O4`: equal exactly where two crystals have
-    the same reduced composition over tokens, which a match requires."""
+    """Species tokens with reduced counts, such as `O2 Ti` or `(Fe0.5Ni0.5)3 O4`, and `layer` after those of a layer:
+    equal exactly where two crystals have the same periodicity and the same reduced composition over tokens, which a
+    match requires."""
 
 
 def formula_of(tokens: Sequence[str]) -> Formula:
@@ -141,13 +142,17 @@ def formulas_of(batch: CrystalBatch) -> list[Formula]:
     starts = np.searchsorted(keys, np.arange(n + 1, dtype=np.int64) * width)
     codes = (keys % width).tolist()
     numbers = counts.tolist()
-    seen: dict[tuple[tuple[int, ...], tuple[int, ...]], Formula] = {}
+    layers = (batch.periodicity == 2).tolist()
+    seen: dict[tuple[tuple[int, ...], tuple[int, ...], bool], Formula] = {}
     result: list[Formula] = []
-    for low, high in zip(starts[:-1].tolist(), starts[1:].tolist(), strict=True):
-        key = (tuple(codes[low:high]), tuple(numbers[low:high]))
+    for low, high, layer in zip(starts[:-1].tolist(), starts[1:].tolist(), layers, strict=True):
+        key = (tuple(codes[low:high]), tuple(numbers[low:high]), layer)
         formula = seen.get(key)
         if formula is None:
-            formula = seen[key] = _formula(tuple(batch.tokens[c] for c in key[0]), _reduced(key[1]))
+            formula = _formula(tuple(batch.tokens[c] for c in key[0]), _reduced(key[1]))
+            if layer:
+                formula = replace(formula, composition=f"{formula.composition} layer")
+            seen[key] = formula
         result.append(formula)
     return result
 

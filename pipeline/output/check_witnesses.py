@@ -76,9 +76,9 @@ def given_of(connection: duckdb.DuckDBPyConnection, records: set[str]) -> dict[s
     """Structures as they came, with the way to their primitive crystals, by record id. Read-only."""
     rows = connection.execute(
         "SELECT s.record_id, s.cell_angstrom, s.positions_fractional, s.species, f.matrix, f.rotation, "
-        "f.origin_fractional, f.site_map, f.site_shift, f.residual_angstrom "
+        "f.origin_fractional, f.site_map, f.site_shift, f.residual_angstrom, r.periodicity = 2 "
         "FROM (SELECT unnest($1) AS record_id) w JOIN structures s USING (record_id) "
-        "JOIN canonical_forms f USING (record_id)",
+        "JOIN canonical_forms f USING (record_id) JOIN records r USING (record_id)",
         [sorted(records)],
     ).fetchall()
     return {
@@ -92,8 +92,9 @@ def given_of(connection: duckdb.DuckDBPyConnection, records: set[str]) -> dict[s
             site_map=np.array(site_map, np.int64),
             site_shift=np.array(site_shift, np.int64).reshape(-1, 3),
             residual=float(residual),
+            layer=bool(layer),
         )
-        for identity, cell, positions, species, matrix, rotation, origin, site_map, site_shift, residual in rows
+        for identity, cell, positions, species, matrix, rotation, origin, site_map, site_shift, residual, layer in rows
     }
 
 
@@ -128,6 +129,11 @@ def audit_equal(a: Given, b: Given) -> list[str]:
         return failures
     if tokens_a != tokens_b:
         return ["the species of the canonical sites differ"]
+    if a.layer != b.layer:
+        return ["one of the two is a layer, the other is not"]
+    if a.layer:
+        cell_a, x = _close(cell_a, x)
+        cell_b, y = _close(cell_b, y)
     # The key takes G / size^2 and size (cube root of the volume per site) in steps of 1 / GRID each.
     size = (abs(float(np.linalg.det(cell_a))) / len(x)) ** (1 / 3)
     first, second = cell_a @ cell_a.T, cell_b @ cell_b.T
@@ -141,3 +147,14 @@ def audit_equal(a: Given, b: Given) -> list[str]:
     if largest > STEPS / GRID:
         failures.append(f"canonical sites differ by {largest:.2e} of an edge")
     return failures
+
+
+def _close(cell: np.ndarray[Any, Any], positions: np.ndarray[Any, Any]) -> tuple[Any, Any]:
+    """A canonical layer with the third row that its key is taken with: twice the thickness and twice the longer of the
+    two shortest independent periods, which are rows of a reduced cell."""
+    heights = positions[:, 2] * np.linalg.norm(cell[2])
+    third = 2 * float(np.ptp(heights)) + 2 * float(np.linalg.norm(cell[1]))
+    return (
+        np.array([cell[0], cell[1], cell[2] * third / np.linalg.norm(cell[2])]),
+        np.column_stack([positions[:, :2], heights / third]),
+    )

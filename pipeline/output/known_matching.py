@@ -23,6 +23,7 @@ from ..grouping.verification import NO_MATCH, Verified, verify
 from ..grouping.window import Window, near_window
 from ..ingest.progress import Progress
 from ..ingest.recompute import stored_batch
+from ..lattice.layer import areas
 from ..model.batch import CrystalBatch, Floats, Ints
 from ..settings import Settings
 
@@ -31,6 +32,9 @@ NAMES = ("same", "near", "window")
 FIRST_TRIED = 200
 """Candidates of one new crystal that are verified at first, nearest in the fingerprint first; the others only where
 none of these matches at the grade asked for."""
+
+SIZE = "coalesce({0}.volume_angstrom3_per_site, {0}.area_angstrom2_per_site)"
+"""What limits the stretches of two crystals of one composition, which are both bulk crystals or both layers."""
 
 TOGETHER = 500
 """New crystals of one composition that are prepared together."""
@@ -80,21 +84,21 @@ def _stored_keys(connection: duckdb.DuckDBPyConnection, new: pl.DataFrame, windo
     """One row a stored key of the compositions of `new` whose volume could match: composition, record_id, volume,
     means.
 
-    |ln(V_A / V_B)| <= 3 s (candidates.py, step 2).
+    |ln(V_A / V_B)| <= 3 s (candidates.py, step 2); the volume of a layer is its area.
     """
     factor = math.exp(3.0 * window.strain) * (1.0 + 1e-9)
-    volume = pl.col("volume_angstrom3_per_site")
+    volume = pl.coalesce("volume_angstrom3_per_site", "area_angstrom2_per_site")
     touched = new.group_by("composition").agg(
         (volume.min() / factor).alias("low"), (volume.max() * factor).alias("high")
     )
     connection.register("touched", touched.to_arrow())
     try:
         frame: pl.DataFrame = connection.sql(
-            "SELECT s.composition, s.record_id, f.volume_angstrom3_per_site AS volume, "
+            f"SELECT s.composition, s.record_id, {SIZE.format('f')} AS volume, "
             "t.mean_distances_angstrom AS means "
             "FROM (SELECT r.composition, min(r.record_id) AS record_id FROM current_records r "
             "JOIN canonical_forms g USING (record_id) JOIN touched n ON n.composition = r.composition "
-            "AND g.volume_angstrom3_per_site BETWEEN n.low AND n.high GROUP BY r.composition, g.crystal_key) s "
+            f"AND {SIZE.format('g')} BETWEEN n.low AND n.high GROUP BY r.composition, g.crystal_key) s "
             "JOIN canonical_forms f USING (record_id) LEFT JOIN crystal_types t USING (crystal_key) "
             "ORDER BY s.composition, s.record_id"
         ).pl()
@@ -140,15 +144,16 @@ def _allowed_by_means(batch: CrystalBatch, stored: pl.DataFrame, window: Window)
     means = column_means(batch, distributions(batch)).means
     k = means.shape[1]
     own = means.reshape(len(batch), -1, k)
-    per_site = batch.volumes / np.diff(batch.offsets)
+    periods = int(batch.periodicity[0])
+    per_site = (batch.volumes if periods == 3 else areas(batch.cells)) / np.diff(batch.offsets)
     has = stored["means"].list.len().fill_null(0).to_numpy() == own.shape[1] * k
     with_means, without = np.flatnonzero(has), np.flatnonzero(~has)
     pairs = [np.stack(np.meshgrid(np.arange(len(batch)), without, indexing="ij"), axis=-1).reshape(-1, 2)]
     if len(with_means):
         rows = stored[with_means]
         theirs = rows["means"].explode(empty_as_null=False).to_numpy().astype(np.float32).reshape(len(rows), -1, k)
-        y_new = mean_coordinates(own, per_site, window)
-        y_stored = mean_coordinates(theirs, rows["volume"].to_numpy(), window)
+        y_new = mean_coordinates(own, per_site, window, periods)
+        y_stored = mean_coordinates(theirs, rows["volume"].to_numpy(), window, periods)
         slack = transform_slack(window.strain)
         columns = tree_columns(y_new.shape[1], k)
         balls = cKDTree(y_stored[:, columns]).query_ball_point(y_new[:, columns], slack, p=np.inf)

@@ -19,7 +19,8 @@ from ..store.parts import Part
 
 ACCEPTED = (
     "place", "file", "position", "label", "content_hash", "crystal_key", "composition", "formula",
-    "volume_angstrom3_per_site", "cell_angstrom", "species", "positions_fractional", "periodicity",
+    "volume_angstrom3_per_site", "area_angstrom2_per_site", "cell_angstrom", "species", "positions_fractional",
+    "periodicity",
 )  # fmt: skip
 REFUSED = ("place", "file", "position", "label", "reason", "message")
 

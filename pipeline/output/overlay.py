@@ -16,6 +16,9 @@ from ..store.rows import one_row
 from .common_sites import common_sites
 from .pair_sides import Side, side_of
 
+ROOM = 3.0
+"""angstrom above and below a layer in the cell that it is drawn in."""
+
 EDGE = 0.02
 """A site this close (fraction) to a face of the cell is drawn at the opposite face too."""
 
@@ -66,7 +69,7 @@ def overlay(connection: duckdb.DuckDBPyConnection, kept: str, aside: str) -> Ove
         one = np.eye(3, dtype=np.int64)
         pairing = np.arange(len(a.tokens))
         sites, delta = paired(a.positions, b.positions, one, one, np.zeros(3), pairing)
-        cell = mean_cell(a.cell, b.cell)
+        cell, sites, delta = drawn(mean_cell(a.cell, b.cell), sites, delta, a.periodicity)
         reason = _reason_of_equal_keys(connection, a.record_id, b.record_id)
         return Overlay(a, b, cell, sites, delta, a.tokens, 0.0, 0.0, 0.0, 1.0, reason, False)
     row = one_row(
@@ -87,7 +90,23 @@ def overlay(connection: duckdb.DuckDBPyConnection, kept: str, aside: str) -> Ove
     if not forward:
         sites, delta = sites + delta, -delta
     sites = sites - np.floor(sites + 1e-9)
-    return Overlay(a, b, mean_cell(first_cell, second_cell), sites, delta, tokens, *row[6:])
+    cell, sites, delta = drawn(mean_cell(first_cell, second_cell), sites, delta, a.periodicity)
+    return Overlay(a, b, cell, sites, delta, tokens, *row[6:])
+
+
+def drawn(cell: Floats, sites: Floats, delta: Floats, periodicity: int) -> tuple[Floats, Floats, Floats]:
+    """Cell, sites and delta as they are drawn: those of a layer with a third row ROOM longer on both sides than it is
+    thick, not that of its frame; of a bulk crystal as they are."""
+    if periodicity == 3:
+        return cell, sites, delta
+    third = float(np.linalg.norm(cell[2]))
+    heights = (sites[:, 2] - np.rint(sites[:, 2])) * third
+    length = float(np.ptp(heights)) + 2 * ROOM
+    cell, sites, delta = cell.copy(), sites.copy(), delta.copy()
+    cell[2] *= length / third
+    sites[:, 2] = (heights - heights.min() + ROOM) / length
+    delta[:, 2] *= third / length
+    return cell, sites, delta
 
 
 def _reason_of_equal_keys(connection: duckdb.DuckDBPyConnection, a: str, b: str) -> str:

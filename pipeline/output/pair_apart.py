@@ -64,13 +64,15 @@ Bound = tuple[str, str, float, float]
 def _first_bound(a: Side, b: Side, search: Search) -> Bound | None:
     """The first bound that rules the pair out."""
     window, prepared, slack = search.window, search.prepared, search.slack
-    logs = np.log(prepared.volumes) / 3
+    periods = a.periodicity
+    logs = np.log(prepared.volumes) / periods
     apart = abs(float(logs[0] - logs[1]))
     if apart > slack:
-        ratio, most = math.exp(3 * apart), math.exp(3 * window.strain)
+        ratio, most = math.exp(periods * apart), math.exp(periods * window.strain)
         return (
             "volume",
-            f"the volumes per site are {a.volume_per_site:.4f} and {b.volume_per_site:.4f} Å3, a ratio of {ratio:.4f}; "
+            f"the {'volumes' if periods == 3 else 'areas'} per site are {a.size_told} and {b.size_told}, "
+            f"a ratio of {ratio:.4f}; "
             f"a strain of {window.strain:g} allows up to {most:.4f}",
             ratio,
             most,
@@ -78,7 +80,7 @@ def _first_bound(a: Side, b: Side, search: Search) -> Bound | None:
     kinds = list(dict.fromkeys(sorted(a.tokens)))
     means = column_means(prepared.batch, search.rows).means
     k = means.shape[1]
-    coordinates = mean_coordinates(means.reshape(2, -1, k), prepared.volumes, window)[:, 1:]
+    coordinates = mean_coordinates(means.reshape(2, -1, k), prepared.volumes, window, periods)[:, 1:]
     place = int(np.argmax(np.abs(coordinates[0] - coordinates[1])))
     value = abs(float(coordinates[0, place] - coordinates[1, place]))
     if value > slack:
@@ -190,7 +192,10 @@ def nearest_lattice_strain(first: Floats, second: Floats, planar: bool = False) 
     """
     up = math.exp(LATTICE_REACH)
     lengths = np.linalg.norm(first, axis=1)
-    box = np.floor(lengths.max() * up * np.linalg.norm(np.linalg.inv(second), axis=0) + 1e-9).astype(int)
+    longest = lengths[:2].max() if planar else lengths.max()
+    box = np.floor(longest * up * np.linalg.norm(np.linalg.inv(second), axis=0) + 1e-9).astype(int)
+    if planar:
+        box[2] = 1  # the third rows of two layers are one length, along the normal
     axes = [np.arange(-n, n + 1) for n in box]
     integers = np.stack(np.meshgrid(*axes, indexing="ij"), axis=-1).reshape(-1, 3)
     sizes = np.linalg.norm(integers @ second, axis=1)

@@ -60,10 +60,10 @@ def outright(a: Side, b: Side) -> Apart | None:
 
 
 def _cause(a: Side, b: Side) -> tuple[str, str] | None:
-    if a.composition != b.composition:
-        return "composition", f"the compositions differ: A is {a.composition}, B is {b.composition}"
     if a.periodicity != b.periodicity:
         return "periodicity", f"A is periodic in {a.periodicity} directions, B in {b.periodicity}"
+    if a.composition != b.composition:
+        return "composition", f"the compositions differ: A is {a.composition}, B is {b.composition}"
     n, m = len(a.tokens), len(b.tokens)
     both = math.lcm(n, m)
     if max(both // n, both // m) > MAX_SUPERCELL:

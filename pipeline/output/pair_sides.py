@@ -21,7 +21,8 @@ class Side:
     """One record of a pair.
 
     The way back from the canonical form: given cell = K L R, and K given position = canonical position of the mapped
-    site + site shift + origin, up to `residual` angstrom (rows; given positions as row vectors times K).
+    site + site shift + origin, up to `residual` angstrom (rows; given positions as row vectors times K). For a
+    layer the given structure is first put upright (cell/canonical.py).
     """
 
     record_id: str
@@ -76,9 +77,22 @@ class Side:
         return f"{self.source}:{self.label}"
 
     @property
-    def volume_per_site(self) -> float:
-        """Cubic angstrom."""
-        return abs(float(np.linalg.det(self.cell))) / len(self.tokens)
+    def volume_per_site(self) -> float | None:
+        """Cubic angstrom; None for a layer."""
+        return abs(float(np.linalg.det(self.cell))) / len(self.tokens) if self.periodicity == 3 else None
+
+    @property
+    def area_per_site(self) -> float | None:
+        """Square angstrom of a layer; None for a bulk crystal."""
+        if self.periodicity == 3:
+            return None
+        return float(np.linalg.norm(np.cross(self.cell[0], self.cell[1]))) / len(self.tokens)
+
+    @property
+    def size_told(self) -> str:
+        """Volume per site, or area per site of a layer, with its unit."""
+        volume = self.volume_per_site
+        return f"{volume:.4f} Å3" if volume is not None else f"{self.area_per_site:.4f} Å2"
 
     def given_sites(self, site: int) -> list[int]:
         """Numbers, from 1, of the given sites that are images of a canonical site (from 0)."""
@@ -97,6 +111,7 @@ class Side:
             "content_hash": self.content_hash,
             "crystal_key": self.crystal_key,
             "volume_angstrom3_per_site": self.volume_per_site,
+            "area_angstrom2_per_site": self.area_per_site,
             "given": {
                 "cell_angstrom": self.given_cell.tolist(),
                 "species": self.given_tokens,

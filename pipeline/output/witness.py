@@ -143,7 +143,7 @@ def _side_line(name: str, side: Side) -> str:
     given = f"{len(side.given_tokens)} site{'' if len(side.given_tokens) == 1 else 's'} given"
     return (
         f"{name}  {safe(side.name)}  {side.record_id}  {side.formula}, {given}, "
-        f"{len(side.tokens)} primitive{kind}, {side.volume_per_site:.4f} Å3/site, file {safe(side.file)}"
+        f"{len(side.tokens)} primitive{kind}, {side.size_told}/site, file {safe(side.file)}"
     )
 
 

@@ -221,6 +221,7 @@ CREATE TABLE canonical_forms (
     beta_deg DOUBLE,
     gamma_deg DOUBLE,
     volume_angstrom3_per_site DOUBLE,
+    area_angstrom2_per_site DOUBLE,
     supercell_index INTEGER,
     residual_angstrom DOUBLE,
     pseudo_index INTEGER,
@@ -240,23 +241,24 @@ COMMENT ON COLUMN canonical_forms.record_id IS 'The record.';
 COMMENT ON COLUMN canonical_forms.crystal_key IS 'SHA-256 of the canonical integers: equal keys prove one crystal.';
 COMMENT ON COLUMN canonical_forms.a_angstrom IS 'Edge a of the reduced cell, angstrom.';
 COMMENT ON COLUMN canonical_forms.b_angstrom IS 'Edge b of the reduced cell, angstrom.';
-COMMENT ON COLUMN canonical_forms.c_angstrom IS 'Edge c of the reduced cell, angstrom.';
-COMMENT ON COLUMN canonical_forms.alpha_deg IS 'Angle alpha of the reduced cell, degrees.';
-COMMENT ON COLUMN canonical_forms.beta_deg IS 'Angle beta of the reduced cell, degrees.';
+COMMENT ON COLUMN canonical_forms.c_angstrom IS 'Edge c of the reduced cell, angstrom; NULL for a layer.';
+COMMENT ON COLUMN canonical_forms.alpha_deg IS 'Angle alpha of the reduced cell, degrees; NULL for a layer.';
+COMMENT ON COLUMN canonical_forms.beta_deg IS 'Angle beta of the reduced cell, degrees; NULL for a layer.';
 COMMENT ON COLUMN canonical_forms.gamma_deg IS 'Angle gamma of the reduced cell, degrees.';
-COMMENT ON COLUMN canonical_forms.volume_angstrom3_per_site IS 'Volume per site, cubic angstrom.';
+COMMENT ON COLUMN canonical_forms.volume_angstrom3_per_site IS 'Volume per site, cubic angstrom; NULL for a layer.';
+COMMENT ON COLUMN canonical_forms.area_angstrom2_per_site IS 'Area per site of a layer, square angstrom; NULL for a bulk crystal.';
 COMMENT ON COLUMN canonical_forms.supercell_index IS 'How many primitive cells the given cell holds.';
 COMMENT ON COLUMN canonical_forms.residual_angstrom IS 'Largest distance of a given site from its canonical place, angstrom.';
 COMMENT ON COLUMN canonical_forms.pseudo_index IS 'How many approximate primitive cells the primitive cell holds; 1 if none.';
 COMMENT ON COLUMN canonical_forms.pseudo_residual_angstrom IS 'Largest distance of a site from the mean of its approximate images.';
-COMMENT ON COLUMN canonical_forms.cell_angstrom IS 'Reduced cell, rows a, b, c; a along x, b in the xy plane; angstrom.';
+COMMENT ON COLUMN canonical_forms.cell_angstrom IS 'Reduced cell, rows a, b, c, angstrom; a along x, b in xy; c of layers: 1024.';
 COMMENT ON COLUMN canonical_forms.species IS 'Species tokens of the sorted basis.';
-COMMENT ON COLUMN canonical_forms.positions_fractional IS 'Sorted basis, x y z a site, fractional in the reduced cell.';
-COMMENT ON COLUMN canonical_forms.matrix IS 'Integer matrix: given cell = matrix . reduced cell . rotation.';
+COMMENT ON COLUMN canonical_forms.positions_fractional IS 'Sorted basis, x y z a site, fractional; z of a layer: height / 1024.';
+COMMENT ON COLUMN canonical_forms.matrix IS 'Integer matrix: given cell (a layer: upright) = matrix . reduced cell . rotation.';
 COMMENT ON COLUMN canonical_forms.rotation IS 'Proper rotation that turns the reduced cell into the given frame (row vectors).';
 COMMENT ON COLUMN canonical_forms.origin_fractional IS 'Origin of the sorted basis in the given structure, in the reduced cell.';
 COMMENT ON COLUMN canonical_forms.site_map IS 'For each given site, the canonical site it is an image of, from 0.';
-COMMENT ON COLUMN canonical_forms.site_shift IS 'For each given site, the lattice translation to it, x y z a site.';
+COMMENT ON COLUMN canonical_forms.site_shift IS 'Lattice translation to each given site, x y z; z of a layer: its third rows.';
 COMMENT ON COLUMN canonical_forms.pseudo_matrix IS 'Integer matrix: reduced cell = pseudo_matrix . approximate primitive cell.';
 
 CREATE TABLE rejects (
