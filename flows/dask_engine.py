@@ -147,8 +147,7 @@ class DaskEngine:
                 return threads
             if time.monotonic() > until:
                 raise WorkError(
-                    f"No worker is connected to the scheduler {self._client.scheduler.address}. Start some, and give "
-                    "the same command again to go on."
+                    "No worker is connected to the Dask scheduler. Start some; the same command goes on where it was."
                 )
             if not told:
                 log.warning("All workers are gone; waiting for one.")

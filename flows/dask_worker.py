@@ -23,7 +23,7 @@ from lattice_census.store.parts import Part
 DECISIVE = ("numpy", "scipy", "numba", "polars", "pyarrow", "networkx", "gemmi", "moyopy", "extxyz", "pydantic")
 """Libraries whose version may change a result or how parts are read."""
 
-CARRYING = ("dask", "distributed", "cloudpickle")
+CARRYING = ("dask", "distributed", "cloudpickle", "prefect")
 """Libraries that both ends of a connection must have alike."""
 
 _warming = threading.Lock()

@@ -193,7 +193,7 @@ def _from_environment(environment: Mapping[str, str]) -> dict[str, Any]:
         if not variable.startswith(prefix):
             continue
         name = variable.removeprefix(prefix).lower()
-        if name in ("store", "settings"):  # options of the same name, read by the commands
+        if name in ("store", "settings", "debug"):  # read by the commands
             continue
         if name == "sources" or name not in Settings.model_fields:
             raise UsageError(f"The environment variable {variable} names no setting.")

@@ -15,7 +15,7 @@ from lattice_census.tolerances import Tolerances
 def test_precedence_option_environment_file_store_default(tmp_path: Path):
     file = tmp_path / "s.toml"
     file.write_text("near_shift = 0.03\nmax_sites = 300\nsame_shift = 0.004\n")
-    environment = {"LATTICE_CENSUS_NEAR_SHIFT": "0.02", "LATTICE_CENSUS_MAX_SITES": "200"}
+    environment = {"LATTICE_CENSUS_NEAR_SHIFT": "0.02", "LATTICE_CENSUS_MAX_SITES": "200", "LATTICE_CENSUS_DEBUG": "1"}
     stored = {"near_shift": 0.04, "near_strain": 0.004, "same_shift": 0.009, "max_sites": 400}
     found = resolve_settings({"near_shift": 0.01}, environment, file, stored)
     assert found.near_shift == 0.01
