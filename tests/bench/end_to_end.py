@@ -34,13 +34,13 @@ def run(options: Options) -> Report:
         Seconds(tuple(n.seconds for n in nights)).figure("night"),
         Seconds(tuple(n.work_s for n in nights)).figure("night, start-up apart"),
         Seconds(tuple(n.work_s for n in nights)).figure("night, start-up apart", "us/record", 1e6 / found),
-        Seconds(tuple(n.processor_s for n in nights)).figure("processor time", "s"),
+        Seconds(tuple(n.processor_s for n in nights)).figure("processor time"),
         memory_figure(nights, 4.0 if count >= 1_000_000 else None),
         Figure("store", last.store_bytes / 2**20, "MiB"),
         Figure("store", last.store_bytes / found, "bytes/record"),
     ]
     figures += [Figure(f"stage: {name}", seconds, "s") for name, seconds in last.stages.items()]
-    details: dict[str, Any] = {"counts": last.counts}
+    details: dict[str, Any] = {"counts": last.counts, "processor_stages_s": last.processor_stages}
     if options.file is None:
         answer = check_answer(last.store, count, len(set(truth(Kind(), 0, count).tolist())))
         figures += [

@@ -21,17 +21,14 @@ def run(options: Options) -> Report:
         Seconds(tuple(n.work_s for n in few)).figure(f"night, {small} records, start-up apart"),
         Seconds(tuple(n.work_s for n in many)).figure(f"night, {large} records, start-up apart"),
         _times("time, 10 x the records", [n.work_s for n in few], [n.work_s for n in many], 11.0),
-        _times("processor time, 10 x the records", [_work(n) for n in few], [_work(n) for n in many]),
+        _times(
+            "processor time, 10 x the records", [n.processor_work_s for n in few], [n.processor_work_s for n in many]
+        ),
     ]
     for name in ("read", "classify", "compare and group"):
         a, b = ([n.stages[name] for n in done] for done in (few, many))
         figures.append(_times(f"stage: {name}, 10 x the records", a, b))
     return Report("grow", {"records": f"{small} and {large}", "workers": options.workers}, tuple(figures))
-
-
-def _work(night) -> float:  # type: ignore[no-untyped-def]
-    """Processor seconds without those of start-up, which keeps one core busy."""
-    return float(night.processor_s - night.start_up_s)
 
 
 def _times(what: str, few: list[float], many: list[float], reach: float | None = None) -> Figure:

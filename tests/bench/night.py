@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import json
+import os
 import shutil
 import subprocess
 import sys
@@ -15,8 +16,9 @@ from .collection import Kind, write_collection
 from .process_tree import MemoryOfTree
 
 ROOT = Path(__file__).parents[2]
-START_UP = ("imports", "compile kernels")
-"""Stages that do not depend on what is read: loading libraries, and kernels from their cache."""
+START_UP = ("imports", "compile kernels", "start workers")
+"""Stages that do not depend on what is read: loading libraries, and kernels from their cache; and making workers, where
+a night is asked to have them ready (else they are made in the first stage that needs them)."""
 
 
 @dataclass(frozen=True, slots=True)
@@ -29,6 +31,11 @@ class Night:
     """Of the process and its workers."""
 
     stages: dict[str, float]
+    """Seconds by step; `the rest` is what stands between them."""
+
+    processor_stages: dict[str, float]
+    """Processor time of the process itself, without its workers, by step."""
+
     counts: dict[str, Any]
     peak_bytes: int
     peak_processes: int
@@ -47,18 +54,29 @@ class Night:
         """Seconds of START_UP."""
         return sum(self.stages.get(name, 0.0) for name in START_UP)
 
+    @property
+    def processor_work_s(self) -> float:
+        """Processor time without that of START_UP in the process itself; workers load libraries in it."""
+        return self.processor_s - sum(self.processor_stages.get(name, 0.0) for name in START_UP)
 
-def run_night(path: Path, store: Path, workers: int, **settings: Any) -> Night:
+
+def run_night(
+    path: Path, store: Path, workers: int, ready_workers: bool = False, environment: dict[str, str] | None = None,
+    **settings: Any,
+) -> Night:  # fmt: skip
     """`run PATH` into a store, new or not. Raises AssertionError where the run fails."""
-    asked = {"path": str(path), "store": str(store), "settings": {"workers": workers, **settings}}
+    given = {"workers": workers, **settings}
+    asked = {"path": str(path), "store": str(store), "settings": given, "ready_workers": ready_workers}
     command = [sys.executable, "-m", "tests.bench.night_child", json.dumps(asked)]
-    process = subprocess.Popen(command, cwd=ROOT, stdout=subprocess.PIPE, text=True)
+    process = subprocess.Popen(
+        command, cwd=ROOT, env={**os.environ, **(environment or {})}, stdout=subprocess.PIPE, text=True
+    )
     with MemoryOfTree(process.pid) as memory:
         told, _ = process.communicate()
     assert process.returncode == 0, f"the night on {path.name} ended with exit code {process.returncode}"
     found = json.loads(told)
     return Night(
-        store, found["seconds"], found["processor_s"], found["stages"], found["counts"], memory.peak_bytes,
+        store, found["seconds"], found["processor_s"], found["stages"], found["processor_stages"], found["counts"], memory.peak_bytes,
         memory.peak_processes, memory.measure, store.stat().st_size,
     )  # fmt: skip
 

@@ -38,6 +38,7 @@ def run(options: Options) -> Report:
     check_answer(idle.store, whole, len(set(truth(Kind(), 0, whole).tolist())))
     full, part = (Seconds(tuple(n.work_s for n in done)) for done in (first, later))
     least, greatest = min(part.taken) / max(full.taken), max(part.taken) / min(full.taken)
+    busy = [Seconds(tuple(n.processor_work_s for n in done)).median for done in (first, later)]
     compositions = later[-1].counts["group"]["compositions"]
     return Report(
         "nightly",
@@ -48,6 +49,7 @@ def run(options: Options) -> Report:
             Seconds(tuple(n.start_up_s for n in later)).figure("start-up"),
             Figure("nothing new, start-up apart", idle.work_s, "s"),
             Figure("1 % new / first night", 100 * part.median / full.median, "%", 100 * least, 100 * greatest, 3.0),
+            Figure("processor time, 1 % new / first night", 100 * busy[1] / busy[0], "%"),
         ),
         {"stages_first_s": first[-1].stages, "stages_last_s": later[-1].stages},
     )
