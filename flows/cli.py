@@ -13,9 +13,9 @@ from typing import Annotated
 import typer
 
 from lattice_census import __version__
-from lattice_census.errors import CensusError
 
 from . import asking, comparing, curating, proving, reading, reporting, scheduling, writing
+from .failures import STOPPED, told
 
 app = typer.Typer(
     name="lattice-census",
@@ -42,9 +42,6 @@ def _root(
     """Survey the lattices in a collection of crystal structures and find the records that are the same crystal."""
 
 
-# The class of every error in the words of a command. It is click's, of which typer carries a copy of its own.
-_WRONG_WORDS: type[Exception] = typer.BadParameter.__bases__[0]
-
 writing.register(app)
 scheduling.register(app)
 curating.register(app)
@@ -63,32 +60,40 @@ def main() -> None:
     sys.exit(_run())
 
 
+_INTERRUPTED = 130
+"""What typer makes of Ctrl-C; no command returns it."""
+
+
 def _run() -> int:
     try:
         result = app(standalone_mode=False)
+        sys.stdout.flush()
     except typer.Exit as error:
         return error.exit_code
     except (KeyboardInterrupt, typer.Abort):
-        print("Stopped. Nothing is half-written; the same command goes on where it was.", file=sys.stderr)
-        return 4
-    except CensusError as error:
-        print(f"lattice-census: {error}", file=sys.stderr)
-        return error.exit_code
+        return _stopped()
     except BrokenPipeError:
-        os.dup2(os.open(os.devnull, os.O_WRONLY), sys.stdout.fileno())
-        return 0
+        return _nobody_reads()
+    except SystemExit as error:
+        # typer ends the process where a pipe is closed, and otherwise only after a shell completion.
+        if type(sys.stdout).__name__ == "PacifyFlushWrapper":
+            return _nobody_reads()
+        return error.code if isinstance(error.code, int) else 0
     except Exception as error:
-        if isinstance(error, _WRONG_WORDS):
-            error.show()  # type: ignore[attr-defined]
-            return 2
-        logging.getLogger("lattice_census").debug("", exc_info=True)
-        if os.environ.get("LATTICE_CENSUS_DEBUG"):
-            raise
-        print(
-            f"lattice-census: failed with {type(error).__name__}: {error}\n"
-            "Nothing is half-written; the same command goes on where it was. "
-            "With LATTICE_CENSUS_DEBUG=1 in the environment the whole traceback is shown.",
-            file=sys.stderr,
-        )
-        return 4
+        message, code = told(error)
+        print(message, file=sys.stderr)
+        return code
+    if result == _INTERRUPTED:
+        return _stopped()
     return result if isinstance(result, int) else 0
+
+
+def _stopped() -> int:
+    print(f"\n{STOPPED}", file=sys.stderr)
+    return 4
+
+
+def _nobody_reads() -> int:
+    """The reader of stdout has gone, as `head` does: no error, and nothing more to say there."""
+    os.dup2(os.open(os.devnull, os.O_WRONLY), 1)
+    return 0

@@ -4,12 +4,14 @@ from __future__ import annotations
 
 import multiprocessing
 import os
+import signal
 import threading
 import time
 from collections import deque
 from collections.abc import Callable, Iterable, Iterator
 from concurrent.futures import Future, ProcessPoolExecutor
 from concurrent.futures.process import BrokenProcessPool
+from contextlib import contextmanager
 from itertools import chain, islice
 from types import TracebackType
 from typing import TypeVar
@@ -32,6 +34,16 @@ def _leave_with_parent(parent: int) -> None:
     threading.Thread(target=watch, daemon=True).start()
 
 
+@contextmanager
+def _deaf_to_interruption() -> Iterator[None]:
+    """Processes made inside never see Ctrl-C, which is for the one that drives them: a mask of signals is inherited."""
+    before = signal.pthread_sigmask(signal.SIG_BLOCK, {signal.SIGINT})
+    try:
+        yield
+    finally:
+        signal.pthread_sigmask(signal.SIG_SETMASK, before)
+
+
 class WorkerPool:
     """The pool of a run: made when it is first needed, kept until the run ends. Use as a context."""
 
@@ -45,6 +57,10 @@ class WorkerPool:
 
     def __exit__(self, kind: type[BaseException] | None, error: BaseException | None, at: TracebackType | None) -> None:
         if self._executor is not None:
+            if kind is not None and not issubclass(kind, Exception):
+                # Interrupted: nobody wants to wait for jobs in flight, and a part that is not whole has no name.
+                for process in multiprocessing.active_children():
+                    process.terminate()
             self._executor.shutdown(wait=True, cancel_futures=True)
             self._executor = None
 
@@ -64,7 +80,9 @@ class WorkerPool:
         flying: deque[tuple[J, Future[R]]] = deque()
         try:
             for job in chain(ahead, coming):
-                flying.append((job, self._processes().submit(work, job)))
+                with _deaf_to_interruption():
+                    future = self._processes().submit(work, job)
+                flying.append((job, future))
                 if len(flying) >= 2 * self._workers:
                     first, future = flying.popleft()
                     yield first, future.result()
