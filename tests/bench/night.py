@@ -76,8 +76,8 @@ def run_night(
     assert process.returncode == 0, f"the night on {path.name} ended with exit code {process.returncode}"
     found = json.loads(told)
     return Night(
-        store, found["seconds"], found["processor_s"], found["stages"], found["processor_stages"], found["counts"], memory.peak_bytes,
-        memory.peak_processes, memory.measure, store.stat().st_size,
+        store, found["seconds"], found["processor_s"], found["stages"], found["processor_stages"], found["counts"],
+        memory.peak_bytes, memory.peak_processes, memory.measure, store.stat().st_size,
     )  # fmt: skip
 
 
