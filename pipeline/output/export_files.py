@@ -71,6 +71,7 @@ def _text(form: str, record: Mapping[str, Any], structure: tuple[Any, list[str],
             "_census_record_id": record["record_id"],
             "_census_source": record["source"],
             "_census_label": label,
+            **({"_census_periodic_directions": 2} if record["periodicity"] == 2 else {}),
         }
         return cif_text(cell, positions, species, name=label, extra=extra)
     facts = {"census_record_id": record["record_id"], "census_source": record["source"]}

@@ -131,7 +131,8 @@ def _records_then(connection: duckdb.DuckDBPyConnection, run: int) -> None:
     connection.register("replaced_frame", replaced.to_arrow())
     connection.execute(
         "UPDATE then_records SET formula = p.formula, sites_given = p.sites, sites_primitive = NULL, "
-        "volume_angstrom3_per_site = p.volume FROM replaced_frame p WHERE then_records.record_id = p.record_id"
+        "volume_angstrom3_per_site = CASE WHEN then_records.periodicity = 3 THEN p.volume END "
+        "FROM replaced_frame p WHERE then_records.record_id = p.record_id"
     )
     connection.unregister("replaced_frame")
 

@@ -19,6 +19,7 @@ from ..grouping.reasons import REASONS
 from ..settings import Settings
 from ..store.stages import stored_settings
 from .cif import cif_text
+from .overlay import drawn
 from .pair_outright import Apart, outright
 from .pair_sides import Side, side_of
 from .tables import safe, table_text
@@ -41,6 +42,11 @@ EQUATIONS = (
     "largest and rms shift are of sqrt(delta G delta^T), G = (P L_A (P L_A)^T + Q L_B (Q L_B)^T) / 2.",
     "In a.cif and b.cif both structures stand in the common cell with A's orientation and origin; site k of the one is "
     "paired with site k of the other. b.cif has the cell Q L_B O^T and the positions u + delta.",
+    "Layers: the third row is no period. The given structure is put upright first: its cell gets the rows a and b and "
+    "1024 angstrom along their normal, on the side of c, and the third number of site_shift says how many given rows c "
+    "are taken off each site before; in the sum above it counts as 0. Strain and shape_strain are of the two stretches "
+    "in the plane, volume_ratio is that of the areas. The files have a third row 6 angstrom longer than the layer is "
+    "thick.",
 )
 """How a referee computes the numbers again."""
 
@@ -176,6 +182,7 @@ def _measures(found: Examined, match: PairMatch) -> list[str]:
     limits = f"same {s.same_shift:g}, near {s.near_shift:g}, window {s.near_shift * s.window_factor:g} Å"
     strains = f"same {s.same_strain:g}, near {s.near_strain:g}, window {s.near_strain * s.window_factor:g}"
     larger = f", {match.larger.upper()} the larger" if match.larger else ""
+    size = "volume" if found.a.periodicity == 3 else "area"
     hand = "yes: only the mirror image of the one matches" if match.mirrored else "no"
     if match.improper and not match.mirrored:
         hand = "no (this match is one, and one without mirror image keeps the same limits)"
@@ -184,14 +191,26 @@ def _measures(found: Examined, match: PairMatch) -> list[str]:
         f"rms shift        {match.rms_shift:.6f} Å",
         f"strain           {match.strain:.6f} ({strains})",
         f"shape strain     {match.shape_strain:.6f}",
-        f"volume ratio     {match.volume_ratio:.6f} per site{larger}",
+        f"{size} ratio".ljust(17) + f"{match.volume_ratio:.6f} per site{larger}",
         f"stretches        {_numbers(match.stretches, '.6f')}",
         f"mirror image     {hand}",
         f"P                {_matrix(match.p_matrix, 'd')}  |det| {_index(match.p_matrix)}, on the reduced cell of A",
         f"Q                {_matrix(match.q_matrix, 'd')}  |det| {_index(match.q_matrix)}, on the reduced cell of B",
         f"orthogonal part  {_matrix(match.orthogonal, '.6f')}  from the frame of A to that of B",
-        f"origin shift     {_numbers(match.shift, '.6f')} of the common cell",
+        f"origin shift     {_origin_shift(found, match)}",
     ]
+
+
+def _origin_shift(found: Examined, match: PairMatch) -> str:
+    if found.a.periodicity == 3:
+        return f"{_numbers(match.shift, '.6f')} of the common cell"
+    height = _height(float(match.shift[2]), match)
+    return f"{_numbers(match.shift[:2], '.6f')} of the common cell, {_numbers([height], '.6f')} Å along the normal"
+
+
+def _height(z: float, match: PairMatch) -> float:
+    """Angstrom along the normal of a layer for a fraction of its third row."""
+    return (z - round(z)) * float(np.linalg.norm(match.first_cell[2]))
 
 
 def _numbers(values: Any, form: str) -> str:
@@ -210,6 +229,7 @@ def _index(matrix: Any) -> int:
 def _sites(found: Examined, match: PairMatch, rows: int) -> list[str]:
     """The table of paired sites."""
     count = len(match.distances)
+    layer = found.a.periodicity == 2
     order = np.lexsort((np.arange(count), -np.round(match.distances, 9)))[:rows]
     listed = []
     for k in order.tolist():
@@ -218,8 +238,11 @@ def _sites(found: Examined, match: PairMatch, rows: int) -> list[str]:
         x, y, z = (np.round(match.first_sites[k], 5) % 1.0).tolist()
         given = (", ".join(map(str, side.given_sites(site))) for side, site in ((found.a, i), (found.b, j)))
         place = [f"{v:.5f}" for v in (x, y, z)]
+        if layer:
+            place[2] = _numbers([_height(float(match.first_sites[k, 2]), match)], ".4f")
         listed.append((k + 1, found.a.tokens[i], next(given), *place, m + 1, next(given), f"{match.distances[k]:.6f}"))
-    headings = ("site of A", "species", "as given", "x", "y", "z", "site of B", "as given", "distance (Å)")
+    z = "height (Å)" if layer else "z"
+    headings = ("site of A", "species", "as given", "x", "y", z, "site of B", "as given", "distance (Å)")
     said = f"Paired sites of the common cell, {count:,} of each, the farthest first"
     if len(order) < count:
         said += f" ({len(order):,} shown)"
@@ -256,9 +279,10 @@ def cif_texts(found: Examined) -> tuple[str, str]:
     match = found.match or (found.apart.closest if found.apart is not None else None)
     if match is None:
         note = "reduced primitive cell, in a frame of its own: there is no match with the other"
+        alone = [drawn(s.cell, s.positions, np.zeros_like(s.positions), s.periodicity)[:2] for s in (a, b)]
         return (
-            cif_text(a.cell, a.positions, a.tokens, a.name, _tags(a, b, note)),
-            cif_text(b.cell, b.positions, b.tokens, b.name, _tags(b, a, note)),
+            cif_text(*alone[0], a.tokens, a.name, _tags(a, b, note)),
+            cif_text(*alone[1], b.tokens, b.name, _tags(b, a, note)),
         )
     species_a = [a.tokens[i] for i in match.first_of.tolist()]
     species_b = [b.tokens[i] for i in match.second_of[match.pairing].tolist()]
@@ -268,20 +292,19 @@ def cif_texts(found: Examined) -> tuple[str, str]:
     back = (
         f"{image}mapped through the witness into the frame of the other file; site k is paired with site k there{far}"
     )
+    first, sites, delta = drawn(match.first_cell, match.first_sites, match.delta, a.periodicity)
+    second = match.second_cell @ match.orthogonal.T
+    second[2] *= np.linalg.norm(first[2]) / np.linalg.norm(match.first_cell[2])  # by 1 where it is no layer
     return (
-        cif_text(match.first_cell, match.first_sites, species_a, a.name, _tags(a, b, note)),
-        cif_text(
-            match.second_cell @ match.orthogonal.T,
-            match.first_sites + match.delta,
-            species_b,
-            b.name,
-            _tags(b, a, back),
-        ),
+        cif_text(first, sites, species_a, a.name, _tags(a, b, note)),
+        cif_text(second, sites + delta, species_b, b.name, _tags(b, a, back)),
     )
 
 
 def _tags(side: Side, other: Side, note: str) -> dict[str, object]:
+    layer = {"_lattice_census_periodic_directions": 2} if side.periodicity == 2 else {}
     return {
+        **layer,
         "_lattice_census_record_id": side.record_id,
         "_lattice_census_source": side.source,
         "_lattice_census_label": side.label,
