@@ -190,6 +190,9 @@ def smallest_integers(amounts: Sequence[float]) -> tuple[int, ...]:
     the n, divided by their common divisor, are the formula. Amounts are multiples of 1e-4 (occupancies are rounded to
     that), so that k = 10000 always does and the search ends.
     """
+    whole = [round(a) for a in amounts]
+    if all(n >= 1 and abs(a - n) <= AMOUNT_TOLERANCE + 1e-12 for a, n in zip(amounts, whole, strict=True)):
+        return _reduced(tuple(whole))  # k = 1, as in every crystal without mixed sites
     x = np.asarray(amounts, dtype=np.float64)
     k = np.arange(1, 10**OCCUPANCY_DECIMALS + 1)[:, None]
     n = np.rint(x * k)
