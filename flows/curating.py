@@ -10,7 +10,9 @@ import typer
 
 from .options import (
     DEFAULT_STORE,
+    DirectOption,
     JsonOption,
+    QuietOption,
     SetOption,
     SettingsOption,
     StoreOption,
@@ -56,21 +58,24 @@ def keep(
     ] = False,
     dry_run: Annotated[bool, typer.Option("--dry-run", help="Show what would change and why; change nothing.")] = False,
     top: Annotated[int, typer.Option("--top", help="Most rows that a dry run shows; --json shows all.")] = 40,
+    direct: DirectOption = False,
     wait: WaitOption = 0.0,
     settings: SettingsOption = None,
     assignments: SetOption = None,
     as_json: JsonOption = False,
+    quiet: QuietOption = False,
 ) -> None:
     """Set the records aside that repeat a better one, each by a decision that can be taken back."""
-    from lattice_census.ingest.progress import call_directly
     from lattice_census.output.tables import number, table_text
 
     from .keeping import KeepJob
     from .keeping import keep as steps
+    from .orchestrate import orchestrated
 
-    resolved = settings_from(settings, assignments, store)
+    resolved = settings_from(settings, assignments, store, {"orchestrator": "direct" if direct else None})
     job = KeepJob(store, resolved, grade, note, tuple(again or ()), recompute, dry_run, wait)
-    counts = steps(job, call_directly)
+    way = "direct" if dry_run else resolved.orchestrator  # what changes nothing is no flow to look back on
+    counts = orchestrated("keep", way, quiet, store, lambda step, _: steps(job, step))
     if as_json:
         typer.echo(json.dumps(counts))
         return

@@ -9,7 +9,6 @@ import typer
 
 from lattice_census.demo.collection import SETTINGS, make_collection, sources_of
 from lattice_census.errors import UsageError
-from lattice_census.ingest.progress import call_directly
 from lattice_census.ingest.scan import IngestRequest
 from lattice_census.output.export import export
 from lattice_census.settings import resolve_settings
@@ -17,7 +16,7 @@ from lattice_census.store.connect import open_for_reading
 
 from .group import night
 from .ingest import IngestJob
-from .progress import progress_for
+from .orchestrate import orchestrated
 
 
 def run_demo(folder: Path, direct: bool, workers: int | None, quiet: bool) -> int:
@@ -42,13 +41,9 @@ def run_demo(folder: Path, direct: bool, workers: int | None, quiet: bool) -> in
     options = {"workers": 1 if workers is None else workers, "orchestrator": "direct" if direct else None}
     settings = resolve_settings(options, file=settings_file)
     job = IngestJob(store, IngestRequest(sources_of(collection)), settings)
-    with progress_for(quiet) as progress:
-        if settings.orchestrator == "direct":
-            counts = night(job, call_directly, progress)
-        else:
-            from .orchestrate import run_as_flow, task_step
-
-            counts = run_as_flow("demo", lambda: night(job, task_step, progress))
+    counts = orchestrated(
+        "demo", settings.orchestrator, quiet, store, lambda step, progress: night(job, step, progress)
+    )
     read, grouped = counts["ingest"], counts["group"]
     typer.echo(
         f"Read {read['found']} records: {read['accepted']} accepted, {read['rejected']} refused with a reason each."

@@ -21,7 +21,7 @@ from prefect.states import Completed
 from lattice_census.errors import UsageError, WorkError
 
 from .night import Night, occurred, run_night
-from .orchestrate import task_step
+from .orchestrate import shown, task_step
 from .progress import progress_for
 
 FLOW = "run"
@@ -39,7 +39,7 @@ def nightly(night: dict[str, Any]) -> State[Any]:
     order = Night(**{**night, **{name: tuple(night[name]) for name in ("paths", "assignments", "fail_on")}})
     settings = order.resolved()
     with progress_for(True) as progress:
-        counts = run_night(order, settings, task_step, progress)
+        counts = shown(FLOW, Path(order.store), run_night(order, settings, task_step, progress))
     there = occurred(order, counts)
     if there:
         raise WorkError(f"The store is published, and there are {', '.join(there)}.\n{night_text(counts)}")

@@ -28,9 +28,6 @@ from .options import (
 )
 
 if TYPE_CHECKING:
-    from collections.abc import Callable
-
-    from lattice_census.ingest.progress import Progress, Step
     from lattice_census.ingest.scan import IngestRequest
     from lattice_census.settings import Settings
 
@@ -92,6 +89,7 @@ def ingest(
     failing = fail_on(fails, ("rejects",))
     from .ingest import IngestJob
     from .ingest import ingest as steps
+    from .orchestrate import orchestrated
 
     request = _request(
         paths, source, recompute, id_column=id_column, structure_column=structure_column, energy_column=energy_column,
@@ -101,7 +99,8 @@ def ingest(
     told = [*(assignments or []), *elsewhere(engine, scheduler, parts)]
     resolved = _resolved(store, settings, told, direct, workers)
     job = IngestJob(store, request, resolved, wait, dry_run)
-    counts = _orchestrated("ingest", resolved.orchestrator, quiet, lambda step, progress: steps(job, step, progress))
+    way = "direct" if dry_run else resolved.orchestrator  # what changes nothing is no flow to look back on
+    counts = orchestrated("ingest", way, quiet, store, lambda step, progress: steps(job, step, progress))
     typer.echo(json.dumps(counts) if as_json else ingest_text(counts, dry_run))
     return 1 if "rejects" in failing and counts.get("rejected") else 0
 
@@ -127,11 +126,14 @@ def group(
     from .group import GroupJob
     from .group import group as steps
     from .night import findings_of
+    from .orchestrate import orchestrated
 
     told = [*(assignments or []), *elsewhere(engine, scheduler, parts)]
     resolved = _resolved(store, settings, told, direct, workers)
     job = GroupJob(store, resolved, everything, recompute, wait)
-    counts = _orchestrated("group", resolved.orchestrator, quiet, lambda step, progress: steps(job, step, progress))
+    counts = orchestrated(
+        "group", resolved.orchestrator, quiet, store, lambda step, progress: steps(job, step, progress)
+    )
     typer.echo(json.dumps(counts) if as_json else group_text(counts))
     return 1 if "findings" in failing and findings_of(store) else 0
 
@@ -163,6 +165,7 @@ def run(
 ) -> int:
     """What a night does: ingest, group, keep, and, where a folder is given, export."""
     from .night import FAILS, Night, occurred, run_night, text_of
+    from .orchestrate import orchestrated
 
     night = Night(
         tuple(map(str, paths)), str(store), source, text_of(export), recompute, text_of(settings),
@@ -170,8 +173,8 @@ def run(
         "direct" if direct else None, wait, tuple(sorted(fail_on(fails, FAILS))),
     )  # fmt: skip
     resolved = night.resolved()
-    counts = _orchestrated(
-        "run", resolved.orchestrator, quiet, lambda step, progress: run_night(night, resolved, step, progress)
+    counts = orchestrated(
+        "run", resolved.orchestrator, quiet, store, lambda step, progress: run_night(night, resolved, step, progress)
     )
     typer.echo(json.dumps(counts) if as_json else night_text(counts))
     return 1 if occurred(night, counts) else 0
@@ -210,22 +213,6 @@ def _resolved(
 ) -> Settings:
     options = {"workers": workers, "orchestrator": "direct" if direct else None}
     return settings_from(settings, assignments, store, options)
-
-
-def _orchestrated(
-    name: str, orchestrator: str, quiet: bool, body: Callable[[Step, Progress], dict[str, Any]]
-) -> dict[str, Any]:
-    """body(step, progress), as a Prefect flow or directly."""
-    from .progress import progress_for
-
-    with progress_for(quiet) as progress:
-        if orchestrator == "direct":
-            from lattice_census.ingest.progress import call_directly
-
-            return body(call_directly, progress)
-        from .orchestrate import run_as_flow, task_step
-
-        return run_as_flow(name, lambda: body(task_step, progress))
 
 
 def group_text(counts: dict[str, Any]) -> str:

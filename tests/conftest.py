@@ -2,7 +2,7 @@
 
 from __future__ import annotations
 
-from collections.abc import Callable
+from collections.abc import Callable, Iterator
 from pathlib import Path
 from typing import Any
 
@@ -50,3 +50,14 @@ def report_page(report_store: Path) -> str:
     from .report_pages import page_of
 
     return page_of(report_store)
+
+
+@pytest.fixture(scope="session")
+def prefect_server() -> Iterator[None]:
+    """One temporary Prefect server with an empty database for all tests that need it: entering takes ten seconds."""
+    from prefect.testing.utilities import prefect_test_harness
+
+    import lattice_census.flows.orchestrate  # noqa: F401 - sets what Prefect is to be quiet about
+
+    with prefect_test_harness(server_startup_timeout=90):
+        yield

@@ -59,21 +59,21 @@ def folder(tmp_path_factory: pytest.TempPathFactory) -> Path:
 
 
 def test_keep_and_undo(folder: Path):
-    done = census("keep", cwd=folder)
+    done = census("keep", "--direct", cwd=folder)
     assert done.returncode == 0 and "Nothing new to decide at grade near; 8 records are set aside" in done.stdout
     done = census("keep", "--grade", "key", "--dry-run", cwd=folder)
     assert "set aside  t.csv:" in done.stdout and "It would be: 4 records set aside at grade key" in done.stdout
     record = json.loads(census("ask", "decisions", "--json", cwd=folder).stdout)["rows"][0]["record"]
     done = census("undo", record, cwd=folder)
     assert "1 decision taken back; `keep --again RECORD`" in done.stdout
-    assert "1 is held" in census("keep", cwd=folder).stdout
+    assert "1 is held" in census("keep", "--direct", cwd=folder).stdout
     status = census("status", cwd=folder).stdout
     assert "decided at grade near: 7 records set aside" in status and "held: undone 1" in status
     assert "findings: leak 4" in status
-    done = census("keep", "--again", record, "--note", "after all", "--json", cwd=folder)
+    done = census("keep", "--again", record, "--note", "after all", "--json", "--direct", cwd=folder)
     assert json.loads(done.stdout)["set_aside"] == 1
-    assert census("keep", "--again", record, cwd=folder).returncode == 2
-    assert census("keep", "--grade", "best", cwd=folder).returncode == 2
+    assert census("keep", "--again", record, "--direct", cwd=folder).returncode == 2
+    assert census("keep", "--grade", "best", "--direct", cwd=folder).returncode == 2
 
 
 def test_pins(folder: Path):
