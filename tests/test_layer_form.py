@@ -11,6 +11,7 @@ from lattice_census.cell.crystal_type import classify_crystals
 from lattice_census.cell.lattice_type import classify_lattices
 from lattice_census.lattice.layer import FRAME, heights_of, is_plane_reduced, plane_minima
 from lattice_census.model.batch import CrystalBatch
+from lattice_census.readers.layers import oriented_cell
 from lattice_census.tolerances import Tolerances
 
 from .invariants import check_canonical, check_fixed_point
@@ -224,6 +225,18 @@ def test_bad_layers_are_refused_and_the_others_stay():
     assert reasons == ["cell_zero"] * 3 + ["cell_absurd"] + ["coordinates_nonfinite"] * 2 + [
         "sites_missing", "sites_overlap",
     ]  # fmt: skip
+
+
+def test_a_layer_without_a_third_vector_is_read_as_it_stands():
+    """The reader makes a third row that leaves more room above the layer than there is inside it."""
+    cell = [4.0, 0, 0, 0, 5, 0, 0, 0, 0]
+    flat = [0.0, 0, 0, 1, 1, 14]
+    rows, periodicity = oriented_cell(cell, (True, True, False), flat)
+    made = np.array(rows).reshape(3, 3)
+    place = np.array(flat).reshape(2, 3)
+    tall = np.diag([4.0, 5, 60])
+    assert periodicity == 2
+    assert key((made, place @ np.linalg.inv(made), ["C", "C"])) == key((tall, place @ np.linalg.inv(tall), ["C", "C"]))
 
 
 def test_fewer_than_two_periods_are_refused():

@@ -15,7 +15,7 @@ from lattice_census.grouping.candidates import candidate_pairs, start_search
 from lattice_census.grouping.composition import Options, group_composition
 from lattice_census.grouping.preparation import prepare
 from lattice_census.grouping.verification import match, verify
-from lattice_census.grouping.window import near_window
+from lattice_census.grouping.window import Window, near_window
 from lattice_census.model.batch import CrystalBatch, select
 from lattice_census.tolerances import Tolerances
 
@@ -83,6 +83,25 @@ def test_matches_agree_with_brute_force(number):
             assert ours.rms_shift[i] == pytest.approx(twin.rms, abs=1e-7)
             assert ours.improper[i] != twin.proper
     assert compared >= 2 * number
+
+
+def test_ambiguous_pairings_agree_with_brute_force():
+    """In a window wider than the sites are apart the nearest site need not be the partner: the assignment decides."""
+    wide = Window((0.2, 0.3, 0.4), (0.004, 0.008, 0.012))
+    compared = ambiguous = 0
+    for seed in range(15):
+        rng = np.random.default_rng(870 + seed)
+        crystals = relatives(rng, LAYER_TYPES[seed % 5], (1, 1), noise=0.25, strain=0.004, sites=4)
+        prepared = prepare(canonical(crystals), wide)
+        ambiguous += int(4 * wide.shift > prepared.crystals.clear.min())
+        ours = verify(prepared, np.array([[0, 1]]), wide)
+        twin = slow_layer_match(*crystals, wide.shifts, wide.strains)
+        assert ours.grade[0] == (3 if twin is None else twin.grade)
+        if twin is not None:
+            compared += 1
+            assert ours.largest_shift[0] == pytest.approx(twin.shift, abs=1e-7)
+            assert ours.strain[0] == pytest.approx(twin.strain, abs=1e-9)
+    assert compared > 8 and ambiguous > 5
 
 
 @pytest.mark.parametrize("number", [20, pytest.param(150, marks=pytest.mark.slow)])

@@ -116,8 +116,8 @@ def test_a_layer_without_a_third_vector():
     batch = one('2\nLattice="4 0 0 0 0 0 1 5 0" pbc="T F T"\nSi 0 0 1\nSi 0 0 4\n')
     assert batch.periodicity.tolist() == [2]
     assert np.allclose(batch.positions @ batch.cells[0], [[0, 0, 1], [0, 0, 4]])
-    # 10 angstrom more than the layer is thick, along its normal; the hand of the other two decides the sign.
-    assert batch.cells[0][2].tolist() == [0, 0, -13]
+    # 10 angstrom more than twice its thickness, along its normal; the hand of the other two decides the sign.
+    assert batch.cells[0][2].tolist() == [0, 0, -16]
 
 
 def test_occupancy_column_makes_mixed_sites():

@@ -9,7 +9,8 @@ import numpy as np
 from .sites import StructureRefused
 
 ROOM = 10.0
-"""angstrom added to the extent of a layer where a file gives no vector for the aperiodic direction."""
+"""angstrom added to twice the extent of a layer where a file gives no vector for the aperiodic direction: the gap above
+it is then wider than any inside it, so that the heights are read as they stand (lattice/layer.py)."""
 
 
 def oriented_cell(
@@ -19,7 +20,7 @@ def oriented_cell(
 
     cell: nine numbers (rows a, b, c, angstrom). periodic: three flags. cartesian: flat Cartesian positions, which stay
     as they are (fractional ones follow from the new cell). Rows are exchanged cyclically, so that handedness is kept. A
-    missing (zero) aperiodic vector is set along the normal of the layer, as long as the layer is thick plus ROOM.
+    missing (zero) aperiodic vector is set along the normal of the layer, twice as long as the layer is thick plus ROOM.
     Raises StructureRefused (periodicity_unsupported) for fewer than two periodic directions.
     """
     count = sum(map(bool, periodic))
@@ -36,6 +37,6 @@ def oriented_cell(
             raise StructureRefused("cell_zero", "the two periodic directions are parallel, or one has length 0")
         normal /= length
         heights = np.array(cartesian, np.float64).reshape(-1, 3) @ normal
-        rows[2] = normal * (ROOM + (float(np.ptp(heights)) if len(heights) else 0.0))
+        rows[2] = normal * (ROOM + (2.0 * float(np.ptp(heights)) if len(heights) else 0.0))
     flat: list[float] = rows.ravel().tolist()
     return flat, 2
