@@ -178,6 +178,11 @@ def _add_runs(connection: duckdb.DuckDBPyConnection) -> None:
          made_by="curator", removed_by_run=3)  # fmt: skip
     _add(connection, "pins", pin_id=2, kind="apart", record_id=record_id(7), other_record_id=record_id(8),
          reason="spins", run_id=3, made_at=DAY, made_by="curator")  # fmt: skip
+    _add(connection, "matches", record_a=record_id(5), record_b=record_id(6), crystal_key_a="anatase",
+         crystal_key_b="nearly_cubic", grade="near", largest_shift_angstrom=0.03, strain=0.004,
+         reason="mirror")  # fmt: skip
+    for name, value in (("near_shift", 0.05), ("near_strain", 0.01), ("window_factor", 1.5)):
+        _add(connection, "stage_settings", stage="verify", name=name, value=str(value))
     _add(connection, "findings", code="leak", record_id=record_id(1), other_record_id=record_id(2), grade="key",
          group_id=record_id(1), value=2.0, message="one family stands in several splits")  # fmt: skip
     _add(connection, "findings", code="symmetry_failed", record_id=record_id(10), message="no cell found")

@@ -43,6 +43,7 @@ EXPECTED: dict[str, list[tuple[dict[str, str], list[tuple[Any, ...]]]]] = {
     "duplicates-by-reason": [
         ({}, [("copy", 1, 1, 0), ("other_cell", 1, 0, 1), ("rerun", 1, 0, 1), ("supercell", 1, 0, 1)]),
         ({"grade": "copy"}, [("copy", 1, 1, 0)]),
+        ({"grade": "near"}, [("mirror", 1, 0, 1)]),  # the reason of the match: by their cells it would be rerun
     ],
     "duplicates-by-source": [
         ({}, [("alpha", "beta", 3, 2), ("alpha", "alpha", 1, 1)]),
@@ -199,7 +200,10 @@ EXPECTED: dict[str, list[tuple[dict[str, str], list[tuple[Any, ...]]]]] = {
               (2, "ingest", "done", DAY, DAY, "1", "{}", '{"replaced": 1}'),
               (1, "ingest", "done", DAY, DAY, "1", "{}", '{"new": 11}')]),
     ],
-    "settings": [({}, [("parse", "alpha", "2.5"), ("keep", "zeta", "1")])],
+    "settings": [
+        ({}, [("parse", "alpha", "2.5"), ("verify", "near_shift", "0.05"), ("verify", "near_strain", "0.01"),
+              ("verify", "window_factor", "1.5"), ("keep", "zeta", "1")]),
+    ],
     "sources": [
         ({}, [("alpha", "file", "/in/alpha", 1, 7, 5, 2, 3), ("beta", "folder", "/in/beta", 2, 5, 5, 1, 3)]),
     ],
@@ -223,8 +227,11 @@ EXPECTED: dict[str, list[tuple[dict[str, str], list[tuple[Any, ...]]]]] = {
         ({}, [("PBE", "alpha", 3, 3, -8.1, -8.0), ("PBE", "beta", 3, 3, -8.02, -5.0),
               ("SCAN", "beta", 1, 1, -9.0, -9.0), (None, "alpha", 2, 0, None, None), (None, "beta", 1, 0, None, None)]),
     ],
-    # The store has no limits of near in its settings; test_tolerance_curve.py has one that does.
-    "tolerance-curve": [({}, []), ({"step": "0.5"}, [])],
+    # Two crystals, joined by a match at t = max(0.03 / 0.05, 0.004 / 0.01) = 0.6.
+    "tolerance-curve": [
+        ({}, [(i / 8, i / 8 * 0.05, i / 8 * 0.01, 2 if i / 8 < 0.6 else 1) for i in range(13)]),
+        ({"step": "0.5"}, [(0.0, 0.0, 0.0, 2), (0.5, 0.025, 0.005, 2), (1.0, 0.05, 0.01, 1), (1.5, 0.075, 0.015, 1)]),
+    ],
     "versions": [
         ({"record": "beta:b3"},
          [(1, "replaced", 2, "rutile", -7.0, "PBE", "train", None, "c0"),
@@ -299,6 +306,8 @@ def test_every_question_has_an_expected_answer_and_every_parameter_is_tried():
     assert set(EXPECTED) == set(questions())
     assert len(questions()) >= 25
     for name, question in questions().items():
+        if name != "symmetry-failures":  # test_layers_and_crystals_without_a_space_group has one
+            assert any(rows for _, rows in EXPECTED[name]), name
         tried = {p.replace("-", "_") for given, _ in EXPECTED[name] for p in given}
         assert {p.name for p in question.parameters} == tried, name
 

@@ -17,7 +17,7 @@ from ..model.batch import Floats
 from .svg import ACCENT, COLOURS, INK, MARKERS, PALE
 from .tolerance_curve import ToleranceCurve
 
-MOST_VECTORS = 4000
+MOST_VECTORS = 1500
 """Beyond so many points the map's points are one image in the figure, so that the page stays small."""
 
 LATTICES = """
@@ -82,7 +82,7 @@ def _map(shapes: LatticeMap, x: Floats, y: Floats, x_name: str, y_name: str) -> 
     axes.set_ylabel(f"{y_name} of the reduced cell")
     if types:
         figure.legend(loc="outside lower center", ncols=4, fontsize=9, handletextpad=0.2, columnspacing=0.9)
-    figure.set_dpi(150)
+    figure.set_dpi(200)  # of points that are one image
     return figure
 
 
