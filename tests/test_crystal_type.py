@@ -172,8 +172,10 @@ def plain_counts(crystal, limits):
             shifts = np.array(shifts)
             if (shifts**2).sum(axis=1).max() > 4 * limits[-1] ** 2:
                 continue
-            residuals.append(max(lattice, np.linalg.norm(shifts - shifts.mean(axis=0), axis=1).max()))
-    return [sum(r <= limit for r in residuals) for limit in limits]
+            left = np.linalg.norm(shifts - shifts.mean(axis=0), axis=1)
+            residuals.append((max(lattice, left.max()), np.sqrt((left**2).mean())))
+    possible = sum(r <= limits[-1] and mean <= limits[-1] / 2 for r, mean in residuals)
+    return [sum(r <= limit for r, _ in residuals) for limit in limits] + [possible]
 
 
 def test_count_equals_the_slow_twin():
@@ -186,27 +188,43 @@ def test_count_equals_the_slow_twin():
     given.append(strategies.random_crystal(rng, "aP", 4))
     batch = strategies.batch(given)
     limits = np.array([0.005, 0.01, 0.02])
-    counts = np.zeros((len(batch), 3), np.int64)
-    count_operations(batch.cells, batch.offsets, batch.positions, batch.species, limits, counts)
-    assert counts.tolist() == [plain_counts(c, limits) for c in given]
+    counts, possible = np.zeros((len(batch), 3), np.int64), np.zeros(len(batch), np.int64)
+    count_operations(batch.cells, batch.offsets, batch.positions, batch.species, limits, counts, possible)
+    assert np.c_[counts, possible].tolist() == [plain_counts(c, limits) for c in given]
     assert (counts[:, 0] < counts[:, 2]).any()
+    assert (counts[:, 1] <= possible).all() and (possible < counts[:, 2]).any()
 
 
-def test_without_operations_there_is_p1():
-    """The search that is left out would have found the same (moyopy)."""
-    rng = np.random.default_rng(17)
-    given = []
-    for crystal in strategies.type_crystals()[:60]:
+def near_p1(rng, count):
+    """Crystals whose operations are broken by about the tolerance, and triclinic ones with and without an inversion
+    that is just there or just not."""
+    for crystal in strategies.type_crystals()[:count]:
         cell, positions, tokens = primitive(crystal)
-        for size in (0.01, 0.02, 0.05):
+        for size in (0.006, 0.01, 0.013, 0.02, 0.05):
             v = rng.normal(size=positions.shape)
             v *= size / np.linalg.norm(v, axis=1, keepdims=True)
-            given.append((cell, positions + v @ np.linalg.inv(cell), tokens))
+            yield cell, positions + v @ np.linalg.inv(cell), tokens
+    for i in range(2 * count):
+        cell, positions, tokens = strategies.random_crystal(rng, "aP", 1 + i % 5, ("Al", "O"))
+        if i % 2:
+            positions = np.concatenate([positions, -positions])
+            tokens = [*tokens, *tokens]
+        v = rng.normal(size=positions.shape)
+        v *= 10 ** rng.uniform(-2.5, -1.5) / np.linalg.norm(v, axis=1, keepdims=True)
+        crystal = cell, positions + v @ np.linalg.inv(cell), tokens
+        if not canonicalise(strategies.batch([crystal]), DEFAULT).refusals:  # two sites may overlap
+            yield primitive(crystal)
+
+
+def check_p1(count):
+    """The searches that are left out would have found the same (moyopy)."""
+    given = list(near_p1(np.random.default_rng(17), count))
     _, found = classified(given)
     batch = strategies.batch(given)
-    counts = crystal_type._counts(batch, DEFAULT.symmetry_tolerance)
-    alone = np.flatnonzero(counts[:, 1] == 1)
-    assert len(alone) > 20
+    counts, possible = crystal_type._counts(batch, DEFAULT.symmetry_tolerance)
+    alone = np.flatnonzero(possible == 1)
+    assert len(alone) > count
+    assert (counts[alone, 1] > 1).any()
     for i in alone.tolist():
         cell, positions, tokens = given[i]
         codes = [batch.tokens.index(t) + 1 for t in tokens]
@@ -214,6 +232,16 @@ def test_without_operations_there_is_p1():
         mine = crystal_type._without_symmetry(cell, positions, codes)
         assert (one.number, one.hall_number, one.wyckoff) == (1, 1, mine.wyckoff)
         assert len(one.species) == len(mine.species)
+        assert found.numbers[i] == 1
+
+
+def test_without_possible_operations_there_is_p1():
+    check_p1(30)
+
+
+@pytest.mark.slow
+def test_without_possible_operations_there_is_p1_on_a_thousand():
+    check_p1(140)
 
 
 # --- against spglib

@@ -7,9 +7,10 @@ from the number of operations whose residual stays within half, once and twice t
 loses
   between the two has its residual between them, so that this asks for a change of the group itself; three searches at
   three tolerances would ask the same at twice the cost.
-- A crystal without any operation but the identity at twice the tolerance has space group P1, and no search is made. A
-  search at the tolerance accepts operations that bring every site within the tolerance of its partner, whose residual
-  is at most twice that, because taking out the mean shift can add no more than the mean shift itself.
+- A crystal for which no operation but the identity can bring every site within the tolerance of its partner has space
+  group P1, and no search is made: a search at the tolerance accepts no other operations. Whether one can is decided
+  from what the mean shift leaves: at most twice the tolerance, because taking it out can add no more than itself, and
+  in the root mean square at most the tolerance, because no other shift leaves less.
 """
 
 from __future__ import annotations
@@ -17,8 +18,9 @@ from __future__ import annotations
 import logging
 from collections import Counter
 from collections.abc import Sequence
-from dataclasses import dataclass, replace
-from functools import cache
+from dataclasses import dataclass
+from functools import cache, lru_cache
+from typing import NamedTuple
 
 import moyopy
 import numpy as np
@@ -132,9 +134,8 @@ class CrystalTypes:
         )
 
 
-@dataclass(frozen=True, slots=True)
-class _One:
-    """What is kept of one crystal."""
+class _One(NamedTuple):
+    """What is kept of one crystal: arrays and no lists of lists, which Python would look through for rubbish."""
 
     number: int
     hall_number: int
@@ -144,6 +145,9 @@ class _One:
     species: list[int]
     matrix: Floats
     shift: Floats
+
+
+_UNIT, _NO_SHIFT = np.eye(3), np.zeros(3)
 
 
 @cache
@@ -165,7 +169,13 @@ def wyckoff_sequence(letters: Sequence[str], orbits: Sequence[int]) -> str:
 
     letters, orbits: for each site its Wyckoff letter and a number common to its orbit. Capital A (after z) is the last.
     """
-    counts = Counter(dict(zip(orbits, letters, strict=True)).values())
+    return _sequence("".join(sorted(dict(zip(orbits, letters, strict=True)).values())))
+
+
+@lru_cache(4096)
+def _sequence(letters: str) -> str:
+    """The sequence from the letter of each orbit, sorted."""
+    counts = Counter(letters)
     order = sorted(counts, key=lambda c: (c.isupper(), c), reverse=True)
     return "".join(c + (str(counts[c]) if counts[c] > 1 else "") for c in order)
 
@@ -181,7 +191,7 @@ def _search(cell: Floats, positions: Floats, species: list[int], tolerance: floa
         wyckoff_sequence(found.wyckoffs, found.orbits),
         np.array(standard.basis),
         np.array(standard.positions),
-        list(standard.numbers),
+        standard.numbers,
         np.array(found.std_linear).T,
         np.array(found.std_origin_shift),
     )
@@ -190,7 +200,7 @@ def _search(cell: Floats, positions: Floats, species: list[int], tolerance: floa
 def _without_symmetry(cell: Floats, positions: Floats, species: list[int]) -> _One:
     """P1: the given cell is standard, every site an orbit of its own."""
     n = len(species)
-    return _One(1, 1, "a" + (str(n) if n > 1 else ""), cell, positions, species, np.eye(3), np.zeros(3))
+    return _One(1, 1, "a" + (str(n) if n > 1 else ""), cell, positions, species, _UNIT, _NO_SHIFT)
 
 
 def upright_layer(cell: Floats, positions: Floats) -> tuple[Floats, Floats]:
@@ -204,16 +214,17 @@ def upright_layer(cell: Floats, positions: Floats) -> tuple[Floats, Floats]:
     return upright, positions @ lower @ np.linalg.inv(upright)
 
 
-def _counts(batch: CrystalBatch, tolerance: float) -> Ints:
-    """(n, 2) int64: operations at half and at twice the tolerance; for layers 0, 0 (found by searching)."""
-    counts = np.zeros((len(batch), 2), np.int64)
+def _counts(batch: CrystalBatch, tolerance: float) -> tuple[Ints, Ints]:
+    """(n, 2) int64: operations at half and at twice the tolerance, and (n,) int64: operations that a search can accept;
+    for layers 0 (found by searching)."""
+    counts, possible = np.zeros((len(batch), 2), np.int64), np.zeros(len(batch), np.int64)
     bulk = np.flatnonzero(batch.periodicity == 3)
     chosen = batch if len(bulk) == len(batch) else select(batch, bulk)
-    found = np.zeros((len(bulk), 2), np.int64)
+    found, able = np.zeros((len(bulk), 2), np.int64), np.zeros(len(bulk), np.int64)
     limits = np.array([0.5 * tolerance, 2.0 * tolerance])
-    count_operations(chosen.cells, chosen.offsets, chosen.positions, chosen.species, limits, found)
-    counts[bulk] = found
-    return counts
+    count_operations(chosen.cells, chosen.offsets, chosen.positions, chosen.species, limits, found, able)
+    counts[bulk], possible[bulk] = found, able
+    return counts, possible
 
 
 def _search_layer(cell: Floats, positions: Floats, species: list[int], tolerance: float) -> tuple[_One, bool]:
@@ -231,7 +242,7 @@ def _search_layer(cell: Floats, positions: Floats, species: list[int], tolerance
     one = _search(cell, positions, species, tolerance, True)
     others = [_search(cell, positions, species, f * tolerance, True).number for f in (0.5, 2.0)]
     change = np.diag([1.0, 1.0, ratio])
-    one = replace(one, matrix=one.matrix @ change, shift=one.shift @ change + [0.0, 0.0, bottom])
+    one = one._replace(matrix=one.matrix @ change, shift=one.shift @ change + [0.0, 0.0, bottom])
     return one, any(number != one.number for number in others)
 
 
@@ -252,21 +263,22 @@ def classify_crystals(
     distinct = np.array(list(first.values()), np.int64)
     chosen = select(batch, distinct)
     tolerance = tolerances.symmetry_tolerance
-    counts = _counts(chosen, tolerance)
-    unsure = counts[:, 0] != counts[:, 1]
-    codes = batch.species.astype(np.int64) + 1
+    counts, possible = _counts(chosen, tolerance)
+    unsure = (counts[:, 0] != counts[:, 1]).tolist()
+    cells, codes = chosen.cells, (chosen.species + 1).tolist()
+    starts, planar = chosen.offsets.tolist(), (chosen.periodicity == 2).tolist()
     found: dict[int, tuple[_One, bool]] = {}
     failed: dict[int, str] = {}
     for k, i in enumerate(distinct.tolist()):
-        sites = batch.sites(i)
-        cell, positions, species = batch.cells[i], batch.positions[sites], codes[sites].tolist()
+        a, b = starts[k], starts[k + 1]
+        cell, positions, species = cells[k], chosen.positions[a:b], codes[a:b]
         try:
-            if batch.periodicity[i] == 2:
+            if planar[k]:
                 found[i] = _search_layer(cell, positions, species, tolerance)
-            elif counts[k, 1] == 1:
-                found[i] = _without_symmetry(cell, positions, species), False
+            elif possible[k] == 1:
+                found[i] = _without_symmetry(cell, positions, species), unsure[k]
             else:
-                found[i] = _search(cell, positions, species, tolerance, False), bool(unsure[k])
+                found[i] = _search(cell, positions, species, tolerance, False), unsure[k]
         except BaseException as error:
             # A panic of the library is no Exception; a wish to stop is passed on.
             if isinstance(error, KeyboardInterrupt | SystemExit | GeneratorExit):
@@ -297,7 +309,7 @@ def _gather(
         np.array([one.cell for one in ones]).reshape(-1, 3, 3),
         np.concatenate([[0], np.cumsum(sites)]).astype(np.int64),
         np.concatenate([one.positions for one in ones] or [np.zeros((0, 3))]),
-        np.array([c - 1 for one in ones for c in one.species], np.int32),
+        np.array([c for one in ones for c in one.species], np.int32) - 1,
         batch.tokens,
         periodicity,
     )

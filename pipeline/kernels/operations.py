@@ -77,8 +77,9 @@ def _lattice_residual(m: Ints, metric: Floats) -> float:
 @inner
 def _site_residual(
     rotated: Floats, site: int, positions: Floats, species: Codes, base: int, target: int, cell: Floats, limit: float
-) -> float:
-    """Site part of the residual, angstrom, for rotated positions (n, 3) moved so that `site` falls on `target`.
+) -> tuple[float, float]:
+    """Site part of the residual and its root mean square, angstrom, for rotated positions (n, 3) moved so that `site`
+    falls on `target`.
 
     Infinite where a site is farther than 2 `limit` from every site of its species.
     """
@@ -109,27 +110,34 @@ def _site_residual(
                 if d <= cut:
                     break
         if best > cut:
-            return np.inf
+            return np.inf, np.inf
         mx += shifts[i, 0]
         my += shifts[i, 1]
         mz += shifts[i, 2]
     mx, my, mz = mx / n, my / n, mz / n
-    largest = 0.0
+    largest, total = 0.0, 0.0
     for i in range(n):
         dx, dy, dz = shifts[i, 0] - mx, shifts[i, 1] - my, shifts[i, 2] - mz
-        largest = max(largest, dx * dx + dy * dy + dz * dz)
-    return float(np.sqrt(largest))
+        square = dx * dx + dy * dy + dz * dz
+        largest = max(largest, square)
+        total += square
+    return np.sqrt(largest), np.sqrt(total / n)
 
 
 @kernel
 def count_operations(
-    cells: Floats, offsets: Ints, positions: Floats, species: Codes, limits: Floats, counts: Ints
+    cells: Floats, offsets: Ints, positions: Floats, species: Codes, limits: Floats, counts: Ints, possible: Ints
 ) -> None:
     """For each crystal and limit the number of operations (modulo lattice translations) with a residual up to it.
 
     cells (n, 3, 3), rows are vectors, reduced; offsets (n + 1,); positions (m, 3) fractional; species (m,) int32;
-    limits (k,) ascending, angstrom; fills counts (n, k) int64, at least 1: the identity. Precondition: four times the
-    largest limit is below the least distance of two sites of a species, or partners can be confused.
+    limits (k,) ascending, angstrom; fills counts (n, k) int64, at least 1: the identity. possible (n,) int64 is filled
+    with the number of operations that some shift of origin could bring every site within half the largest limit of its
+    partner. Precondition: four times the largest limit is below the least distance of two sites of a species, or
+    partners can be confused.
+
+    `possible` never counts too few: for displacements d_i of at most r the residual is at most 2 r, and of all shifts
+    the mean leaves the least root mean square, which is at most r.
     """
     axes = np.empty((MAX_AXES, 7), np.int64)
     strains = np.empty(MAX_AXES)
@@ -189,7 +197,9 @@ def count_operations(
             if c < least:
                 site, least = i, c
         rotated = np.empty((sites, 3))
-        counts[row] = 0
+        possible[row] = 0
+        for k in range(len(limits)):
+            counts[row, k] = 0
         for i in range(found):
             lattice = _lattice_residual(rotations[i], metric)
             if lattice > largest:
@@ -204,8 +214,10 @@ def count_operations(
                 for target in range(sites):
                     if species[first + target] != species[first + site]:
                         continue
-                    residual = _site_residual(rotated, site, here, species, first, target, cell, largest)
+                    residual, mean = _site_residual(rotated, site, here, species, first, target, cell, largest)
                     residual = max(residual, lattice)
+                    if residual <= largest and mean <= 0.5 * largest * (1.0 + 1e-6):
+                        possible[row] += 1
                     for k in range(len(limits)):
                         if residual <= limits[k]:
                             counts[row, k] += 1
@@ -215,5 +227,5 @@ def warm_up() -> None:
     """Compile the kernel of this file."""
     count_operations(
         np.eye(3)[None] * 4.0, np.array([0, 1]), np.zeros((1, 3)), np.zeros(1, np.int32),
-        np.array([0.005, 0.02]), np.zeros((1, 2), np.int64),
+        np.array([0.005, 0.02]), np.zeros((1, 2), np.int64), np.zeros(1, np.int64),
     )  # fmt: skip
