@@ -23,8 +23,8 @@ JSON_LINE_LIMIT = 1 << 30
 """Bytes of one JSON line; the reader's own limit was held when the file was read."""
 
 OURS = (
-    "record_id", "source", "label", "formula", "sites_given", "sites_primitive", "crystal_key",
-    "volume_angstrom3_per_site", "energy_ev_per_site", "theory", "split", "group_size",
+    "record_id", "source", "label", "formula", "sites_given", "sites_primitive", "periodicity", "crystal_key",
+    "volume_angstrom3_per_site", "area_angstrom2_per_site", "energy_ev_per_site", "theory", "split", "group_size",
     "held", "dealt_split",
 )  # fmt: skip
 

@@ -15,6 +15,7 @@ import polars as pl
 
 from ..decisions.ledger import default_grade, require_grade
 from ..errors import UsageError
+from ..lattice.layer import areas
 from ..model.batch import batch_from_lists
 from ..model.species import formulas_of
 from ..store.rows import one_number, one_row
@@ -66,7 +67,8 @@ def select_records(connection: duckdb.DuckDBPyConnection, grade: str | None, as_
 
 _FACTS = (
     "r.record_id, r.source, r.label, r.file, r.reader, r.position, r.formula, r.sites_given, r.sites_primitive, "
-    "r.periodicity, f.crystal_key, f.volume_angstrom3_per_site, r.energy_ev_per_site, r.theory, r.split, r.properties"
+    "r.periodicity, f.crystal_key, f.volume_angstrom3_per_site, f.area_angstrom2_per_site, r.energy_ev_per_site, "
+    "r.theory, r.split, r.properties"
 )
 
 
@@ -126,12 +128,14 @@ def _records_then(connection: duckdb.DuckDBPyConnection, run: int) -> None:
             "formula": [described.formula for described in formulas_of(batch)],
             "sites": sites,
             "volume": batch.volumes / sites,
+            "area": areas(batch.cells) / sites,
         }
     )
     connection.register("replaced_frame", replaced.to_arrow())
     connection.execute(
         "UPDATE then_records SET formula = p.formula, sites_given = p.sites, sites_primitive = NULL, "
-        "volume_angstrom3_per_site = CASE WHEN then_records.periodicity = 3 THEN p.volume END "
+        "volume_angstrom3_per_site = CASE WHEN then_records.periodicity = 3 THEN p.volume END, "
+        "area_angstrom2_per_site = CASE WHEN then_records.periodicity = 2 THEN p.area END "
         "FROM replaced_frame p WHERE then_records.record_id = p.record_id"
     )
     connection.unregister("replaced_frame")
