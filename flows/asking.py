@@ -12,6 +12,7 @@ import typer
 
 from lattice_census.errors import StoreError, UsageError
 
+from .completion import one_of, question_names
 from .options import DEFAULT_STORE, JsonOption, StoreOption
 
 if TYPE_CHECKING:
@@ -31,7 +32,11 @@ def ask(
     context: typer.Context,
     name: Annotated[
         str | None,
-        typer.Argument(metavar="[QUESTION [--PARAMETER VALUE]...]", help="A named question; without one, the list."),
+        typer.Argument(
+            metavar="[QUESTION [--PARAMETER VALUE]...]",
+            help="A named question; without one, the list.",
+            autocompletion=question_names,
+        ),
     ] = None,
     sql: Annotated[str | None, typer.Option("--sql", metavar="SELECT", help="One SELECT of your own.")] = None,
     tables: Annotated[bool, typer.Option("--tables", help="Print the tables and columns with their meaning.")] = False,
@@ -200,7 +205,12 @@ def _end_process(message: str) -> None:
 def survey(
     store: StoreOption = DEFAULT_STORE,
     by: Annotated[
-        str | None, typer.Option("--by", help="Divide also by source, split, theory, formula or elements.")
+        str | None,
+        typer.Option(
+            "--by",
+            help="Divide also by source, split, theory, formula or elements.",
+            autocompletion=one_of("source", "split", "theory", "formula", "elements"),
+        ),
     ] = None,
     top: Annotated[int, typer.Option("--top", help="Most rows of a long table.")] = 20,
     as_json: JsonOption = False,

@@ -66,7 +66,7 @@ _INTERRUPTED = 130
 
 def _run() -> int:
     try:
-        result = app(standalone_mode=False)
+        result = app(prog_name="lattice-census", standalone_mode=False)
         sys.stdout.flush()
     except typer.Exit as error:
         return error.exit_code

@@ -11,6 +11,7 @@ from typing import Annotated, Any
 
 import typer
 
+from .completion import grades, one_of, source_names
 from .options import DEFAULT_STORE, JsonOption, QuietOption, StoreOption, WorkersOption, fail_on
 
 
@@ -21,9 +22,11 @@ def register(app: typer.Typer) -> None:
 
 
 def known(
-    files: Annotated[list[Path], typer.Argument(metavar="FILE...", help="Files or folders of structures.")],
+    files: Annotated[list[Path], typer.Argument(metavar="FILE", help="Files or folders of structures.")],
     store: StoreOption = DEFAULT_STORE,
-    grade: Annotated[str, typer.Option("--grade", help="copy, key, same or near: what counts as known.")] = "near",
+    grade: Annotated[
+        str, typer.Option("--grade", autocompletion=grades, help="copy, key, same or near: what counts as known.")
+    ] = "near",
     id_column: Annotated[str | None, typer.Option("--id-column", help="Column of the label.")] = None,
     structure_column: Annotated[
         str | None, typer.Option("--structure-column", help="Column of the structure text.")
@@ -77,11 +80,17 @@ def known(
 
 
 def overlap(
-    first: Annotated[str | None, typer.Argument(metavar="[A", help="A source or split.")] = None,
-    second: Annotated[str | None, typer.Argument(metavar="B]", help="Another one.")] = None,
+    first: Annotated[
+        str | None, typer.Argument(metavar="[A", autocompletion=source_names, help="A source or split.")
+    ] = None,
+    second: Annotated[
+        str | None, typer.Argument(metavar="B]", autocompletion=source_names, help="Another one.")
+    ] = None,
     store: StoreOption = DEFAULT_STORE,
-    by: Annotated[str, typer.Option("--by", help="source or split: what A and B are.")] = "source",
-    grade: Annotated[str, typer.Option("--grade", help="copy, key, same or near.")] = "near",
+    by: Annotated[
+        str, typer.Option("--by", autocompletion=one_of("source", "split"), help="source or split: what A and B are.")
+    ] = "source",
+    grade: Annotated[str, typer.Option("--grade", autocompletion=grades, help="copy, key, same or near.")] = "near",
     top: Annotated[int, typer.Option("--top", help="Most rows printed; --json has all.")] = 40,
     as_json: JsonOption = False,
     fails: Annotated[

@@ -8,6 +8,7 @@ from typing import Annotated, Any
 
 import typer
 
+from .completion import grades
 from .options import (
     DEFAULT_STORE,
     DirectOption,
@@ -46,7 +47,10 @@ def register(app: typer.Typer) -> None:
 def keep(
     store: StoreOption = DEFAULT_STORE,
     grade: Annotated[
-        str | None, typer.Option("--grade", help="At which grade [default: near where it was computed, else key].")
+        str | None,
+        typer.Option(
+            "--grade", autocompletion=grades, help="At which grade [default: near where it was computed, else key]."
+        ),
     ] = None,
     note: Annotated[str | None, typer.Option("--note", help="A remark that stands beside every decision.")] = None,
     again: Annotated[
@@ -68,14 +72,14 @@ def keep(
     """Set the records aside that repeat a better one, each by a decision that can be taken back."""
     from lattice_census.output.tables import number, table_text
 
+    from .driving import drive
     from .keeping import KeepJob
     from .keeping import keep as steps
-    from .orchestrate import orchestrated
 
     resolved = settings_from(settings, assignments, store, {"orchestrator": "direct" if direct else None})
     job = KeepJob(store, resolved, grade, note, tuple(again or ()), recompute, dry_run, wait)
     way = "direct" if dry_run else resolved.orchestrator  # what changes nothing is no flow to look back on
-    counts = orchestrated("keep", way, quiet, store, lambda step, _: steps(job, step))
+    counts = drive("keep", way, quiet, store, lambda step, _: steps(job, step))
     if as_json:
         typer.echo(json.dumps(counts))
         return

@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import re
 import uuid
 from collections.abc import Callable, Sequence
 from pathlib import Path
@@ -20,6 +21,7 @@ from lattice_census.ingest.withdraw import undo_withdrawals
 from lattice_census.ingest.withdraw import withdraw as note_withdrawal
 from lattice_census.output.findings import find_all
 from lattice_census.settings import Settings
+from lattice_census.store.connect import open_for_reading
 from lattice_census.store.rows import one_row
 from lattice_census.store.runs import begin_run, end_run
 from lattice_census.store.stages import stored_settings
@@ -30,6 +32,7 @@ from .ingest import finish
 
 def withdraw(store: Path, what: str, reason: str, wait: float = 0.0) -> dict[str, Any]:
     """Withdraw a source or record, group anew, publish."""
+    _refuse_nameless(store, what, "a source or record")
     return _act(store, "withdraw", {"what": what, "reason": reason}, wait,
                 lambda connection, run: note_withdrawal(connection, run, what, reason))  # fmt: skip
 
@@ -40,6 +43,8 @@ def undo(store: Path, what: str, wait: float = 0.0) -> dict[str, Any]:
     What a run that is taken back had superseded or let lapse is decided again in the same words.
     """
     run_given = int(what) if what.isdigit() and len(what) < 20 else None
+    if run_given is None:
+        _refuse_nameless(store, what, "a run, source or record")
 
     def act(connection: duckdb.DuckDBPyConnection, run: int) -> dict[str, Any]:
         restored = undo_withdrawals(connection, run, what)
@@ -57,6 +62,23 @@ def undo(store: Path, what: str, wait: float = 0.0) -> dict[str, Any]:
         return {"decided_again": restore_ended(connection, run, run_given) if run_given is not None else 0}
 
     return _act(store, "undo", {"what": what}, wait, act, after)
+
+
+def _refuse_nameless(store: Path, what: str, wanted: str) -> None:
+    """UsageError for a text that can name nothing of what is wanted."""
+    if ":" in what or re.fullmatch(r"[0-9a-f]{20}", what) or not store.is_file():
+        return
+    connection = open_for_reading(store)
+    try:
+        rows = connection.execute("SELECT source FROM sources ORDER BY source").fetchall()
+    finally:
+        connection.close()
+    names = [name for (name,) in rows]
+    if what not in names:
+        raise UsageError(
+            f"{what!r} names no {wanted.removeprefix('a ')}. A record is given by its id (20 hex digits) or as "
+            f"SOURCE:LABEL; sources: {', '.join(names) or 'none'}."
+        )
 
 
 def pin(store: Path, kind: str, records: Sequence[str], reason: str, wait: float = 0.0) -> dict[str, Any]:

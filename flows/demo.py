@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import json
 from pathlib import Path
 from shlex import quote
 
@@ -14,12 +15,12 @@ from lattice_census.output.export import export
 from lattice_census.settings import resolve_settings
 from lattice_census.store.connect import open_for_reading
 
+from .driving import drive
 from .group import night
 from .ingest import IngestJob
-from .orchestrate import orchestrated
 
 
-def run_demo(folder: Path, direct: bool, workers: int | None, quiet: bool) -> int:
+def run_demo(folder: Path, direct: bool, workers: int | None, quiet: bool, as_json: bool = False) -> int:
     """Make the collection, ingest all its sources in one run, export the kept records, and say what to try next.
 
     The folder gets collection/, manifest.json, demo.toml, census.duckdb and clean/. Raises UsageError where it is there
@@ -32,18 +33,28 @@ def run_demo(folder: Path, direct: bool, workers: int | None, quiet: bool) -> in
     manifest = make_collection(collection)
     manifest.write(folder / "manifest.json")
     settings_file.write_text(SETTINGS, encoding="utf-8")
-    typer.echo(
-        f"Made {collection}: {len(manifest.records)} records of an invented survey in {len(sources_of(collection))} "
-        f"sources; what they are stands in {folder / 'manifest.json'}. No number in it is real."
-    )
-
+    if not as_json:
+        typer.echo(
+            f"Made {collection}: {len(manifest.records)} records of an invented survey in "
+            f"{len(sources_of(collection))} sources; what they are stands in {folder / 'manifest.json'}. "
+            "No number in it is real."
+        )
     # So few records are read sooner than worker processes begin.
     options = {"workers": 1 if workers is None else workers, "orchestrator": "direct" if direct else None}
     settings = resolve_settings(options, file=settings_file)
     job = IngestJob(store, IngestRequest(sources_of(collection)), settings)
-    counts = orchestrated(
-        "demo", settings.orchestrator, quiet, store, lambda step, progress: night(job, step, progress)
-    )
+    counts = drive("demo", settings.orchestrator, quiet, store, lambda step, progress: night(job, step, progress))
+    clean = folder / "clean"
+    connection = open_for_reading(store)
+    try:
+        exported = export(connection, clean)
+    finally:
+        connection.close()
+    if as_json:
+        facts = {"folder": str(folder), "records": len(manifest.records), "kept": exported.kept,
+                 "set_aside": exported.set_aside, **counts}  # fmt: skip
+        typer.echo(json.dumps(facts))
+        return 0
     read, grouped = counts["ingest"], counts["group"]
     typer.echo(
         f"Read {read['found']} records: {read['accepted']} accepted, {read['rejected']} refused with a reason each."
@@ -54,12 +65,6 @@ def run_demo(folder: Path, direct: bool, workers: int | None, quiet: bool) -> in
     )
     typer.echo("Findings: " + ", ".join(f"{code} {number}" for code, number in grouped["findings"].items()) + ".")
 
-    clean = folder / "clean"
-    connection = open_for_reading(store)
-    try:
-        exported = export(connection, clean)
-    finally:
-        connection.close()
     typer.echo(f"Exported {clean}: {exported.kept} structures, and set_aside.csv with {exported.set_aside} rows.")
     typer.echo(_next_steps(folder, store, settings_file))
     return 0

@@ -5,6 +5,7 @@ from __future__ import annotations
 import errno
 import logging
 import os
+import sys
 from pathlib import Path
 
 import typer
@@ -28,6 +29,11 @@ def told(error: Exception) -> tuple[str, int]:
         return f"lattice-census: {error}", error.exit_code
     if isinstance(error, _WRONG_WORDS):
         return _wrong_words(error), 2
+    if isinstance(error, _duckdb_errors("IOException", "SerializationException", "FatalException")):
+        line = str(error).splitlines()[0].rstrip(".!")
+        if not any(words in line.lower() for words in _FULL_WORDS):
+            what = "If it is damaged, put a sound copy in its place. Nothing was changed."
+            return f"lattice-census: The store cannot be read or written: {line}. {what}", 3
     text = _foreseen(error)
     if text is not None:
         return f"lattice-census: {text} {AGAIN}", 4
@@ -62,12 +68,18 @@ def _foreseen(error: Exception) -> str | None:
             return f"{_short(error.filename)} cannot be opened: {error.strerror}."
         return None
     text = str(error)
-    if type(error).__module__.split(".")[0] in ("duckdb", "_duckdb"):
+    if isinstance(error, _duckdb_errors("Error")):
         if any(words in text.lower() for words in _FULL_WORDS):
             return f"No room is left where the store is written ({text.splitlines()[0]}). Make room."
-        if type(error).__name__ == "OutOfMemoryException":
+        if isinstance(error, _duckdb_errors("OutOfMemoryException")):
             return f"Memory ran out in the store ({text.splitlines()[0]})."
     return None
+
+
+def _duckdb_errors(*names: str) -> tuple[type[Exception], ...]:
+    """Classes of errors of DuckDB; none where nothing has imported it, so that nothing can have raised one."""
+    module = sys.modules.get("duckdb")
+    return () if module is None else tuple(getattr(module, name) for name in names)
 
 
 def _short(path: str | bytes | int) -> str:

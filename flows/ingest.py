@@ -23,6 +23,7 @@ from lattice_census.ingest.recompute import recompute_canonical
 from lattice_census.ingest.scan import IngestRequest
 from lattice_census.kernels import all_kept, warm_up
 from lattice_census.output.findings import find_all
+from lattice_census.readers.walk import walk
 from lattice_census.settings import Settings
 from lattice_census.store.runs import end_run
 from lattice_census.store.stages import record_settings
@@ -60,7 +61,7 @@ def ingest_into(
     """The steps of an ingest in an open workspace, up to the end of its run; not published yet."""
     work = step("scan", prepare_ingest, workspace, job.request, job.settings, command)
     if work is None:
-        return {"nothing_new": True}
+        return {"nothing_new": True, "files": sum(1 for path in job.request.paths for _ in walk(path))}
     step("compile kernels", compile_kernels, job.settings, progress)
     if work.canonical_again:
         step("reduce stored structures anew", recompute_canonical, workspace, job.settings, pool, progress)

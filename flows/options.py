@@ -8,7 +8,7 @@ from typing import TYPE_CHECKING, Annotated, Any
 
 import typer
 
-from lattice_census.errors import UsageError
+from lattice_census.errors import StoreError, UsageError
 
 if TYPE_CHECKING:
     from lattice_census.settings import Settings
@@ -24,8 +24,19 @@ SetOption = Annotated[
     list[str] | None, typer.Option("--set", metavar="NAME=VALUE", help="One setting; may be given several times.")
 ]
 JsonOption = Annotated[bool, typer.Option("--json", help="Print the result as JSON.")]
-QuietOption = Annotated[bool, typer.Option("--quiet", help="No progress on stderr.")]
-WaitOption = Annotated[float, typer.Option("--wait", metavar="SECONDS", help="Wait so long for another run to end.")]
+QuietOption = Annotated[bool, typer.Option("--quiet", help="No progress and no remarks on stderr.")]
+
+
+def seconds(value: float) -> float:
+    """A time to wait, checked."""
+    if not 0 <= value <= 1e7:  # also false for a value that is no number
+        raise UsageError(f"--wait {value:g}: give seconds, 0 or more.")
+    return value
+
+
+WaitOption = Annotated[
+    float, typer.Option("--wait", metavar="SECONDS", callback=seconds, help="Wait so long for another run to end.")
+]
 DirectOption = Annotated[bool, typer.Option("--direct", help="Run without Prefect, with the same functions.")]
 WorkersOption = Annotated[int | None, typer.Option("--workers", help="Worker processes [default: one a core].")]
 EngineOption = Annotated[
@@ -41,7 +52,7 @@ PartsOption = Annotated[
 ]
 FailOnOption = Annotated[
     list[str] | None,
-    typer.Option("--fail-on", metavar="WHAT", help="Exit with 1 when there are: rejects. Several with commas."),
+    typer.Option("--fail-on", metavar="WHAT", help="Exit with 1 where there are some: rejects or findings."),
 ]
 
 
@@ -63,6 +74,10 @@ def settings_from(
     from lattice_census.settings import resolve_settings
     from lattice_census.store.stages import settings_of_store
 
+    if store.is_dir():
+        raise StoreError(f"{store} is a folder; --store names a file.")
+    if not store.absolute().parent.is_dir():
+        raise UsageError(f"--store {store}: there is no folder {store.absolute().parent}. Make it, or give another.")
     given = dict(options or {})
     for text in assignments or []:
         name, equals, value = text.partition("=")

@@ -8,7 +8,7 @@ from typing import TYPE_CHECKING, Annotated
 
 import typer
 
-from .options import DEFAULT_STORE, JsonOption, StoreOption
+from .options import DEFAULT_STORE, JsonOption, QuietOption, StoreOption
 
 if TYPE_CHECKING:
     from lattice_census.output.check import Outcome
@@ -36,6 +36,7 @@ def witness(
         typer.Option("--out", metavar="DIR", help="New folder for a.cif, b.cif and witness.json, to check by hand."),
     ] = None,
     as_json: JsonOption = False,
+    quiet: QuietOption = False,
 ) -> None:
     """Prove that two records are the same crystal, or say with numbers what keeps them apart."""
     from lattice_census.output.witness import check_folder, examine, witness_text, write_witness
@@ -44,14 +45,16 @@ def witness(
 
     if out is not None:
         check_folder(out)
+    say = (lambda: None) if quiet else _say_compiling
     connection = open_for_reading(store)
     try:
-        found = examine(connection, find_record(connection, first), find_record(connection, second), _say_compiling)
+        found = examine(connection, find_record(connection, first), find_record(connection, second), say)
     finally:
         connection.close()
     if out is not None:
         write_witness(found, out)
-        typer.echo(f"Wrote a.cif, b.cif and witness.json to {out}.", err=True)
+        if not quiet:
+            typer.echo(f"Wrote a.cif, b.cif and witness.json to {out}.", err=True)
     typer.echo(json.dumps(found.as_json()) if as_json else witness_text(found, rows))
 
 

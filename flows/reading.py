@@ -8,7 +8,8 @@ from typing import Annotated, Any
 
 import typer
 
-from .options import DEFAULT_STORE, JsonOption, StoreOption
+from .completion import grades, one_of
+from .options import DEFAULT_STORE, JsonOption, QuietOption, StoreOption
 
 
 def register(app: typer.Typer) -> None:
@@ -66,10 +67,19 @@ def export(
     store: StoreOption = DEFAULT_STORE,
     grade: Annotated[
         str | None,
-        typer.Option("--grade", help="Which records count as the same [default: near where computed, else key]."),
+        typer.Option(
+            "--grade",
+            autocompletion=grades,
+            help="Which records count as the same [default: near where computed, else key].",
+        ),
     ] = None,
     form: Annotated[
-        str, typer.Option("--form", help="cif, poscar (a file a structure), extxyz, csv or parquet (one file).")
+        str,
+        typer.Option(
+            "--form",
+            autocompletion=one_of("cif", "poscar", "extxyz", "csv", "parquet"),
+            help="cif, poscar (a file a structure), extxyz, csv or parquet (one file).",
+        ),
     ] = "cif",
     where: Annotated[
         str | None, typer.Option("--where", metavar="SQL", help="A condition on the columns of the kept records.")
@@ -83,6 +93,7 @@ def export(
     ] = None,
     seed: Annotated[int, typer.Option("--seed", help="Another seed deals otherwise.")] = 0,
     as_json: JsonOption = False,
+    quiet: QuietOption = False,
 ) -> None:
     """Write the kept structures into a new folder, with the list of what was set aside and why."""
     from lattice_census.errors import UsageError
@@ -98,7 +109,7 @@ def export(
         done = write(connection, folder, grade, chosen, where=where, as_of=as_of, splits=splits, seed=seed)
     finally:
         connection.close()
-    for note in done.notes:
+    for note in () if quiet else done.notes:
         typer.echo(note, err=True)
     if as_json:
         facts = {"folder": str(folder), "grade": done.grade, "kept": done.kept, "set_aside": done.set_aside,

@@ -14,7 +14,21 @@ import typer
 
 from lattice_census.errors import StoreError, UsageError
 
-from .options import DEFAULT_STORE, QuietOption, SetOption, SettingsOption, StoreOption, WorkersOption, fail_on
+from .completion import one_of
+from .options import (
+    DEFAULT_STORE,
+    EngineOption,
+    PartsOption,
+    QuietOption,
+    SchedulerOption,
+    SetOption,
+    SettingsOption,
+    StoreOption,
+    WorkersOption,
+    elsewhere,
+    fail_on,
+    seconds,
+)
 
 if TYPE_CHECKING:
     from .night import Night
@@ -26,7 +40,7 @@ def register(app: typer.Typer) -> None:
 
 
 def schedule(
-    paths: Annotated[list[Path], typer.Argument(metavar="PATH...", help="Files or folders of structures.")],
+    paths: Annotated[list[Path], typer.Argument(metavar="PATH", help="Files or folders of structures.")],
     cron: Annotated[
         str,
         typer.Option("--cron", metavar="TIME", help="When: minute, hour, day of the month, month, day of the week."),
@@ -37,7 +51,8 @@ def schedule(
     name: Annotated[str | None, typer.Option("--name", help="Name of the schedule [default: the store's].")] = None,
     show: Annotated[
         str | None,
-        typer.Option("--print", metavar="KEEPER", help="Serve nothing; print what crontab or systemd takes instead."),
+        typer.Option("--print", metavar="KEEPER", autocompletion=one_of("crontab", "systemd"),
+ help="Serve nothing; print what crontab or systemd takes instead."),
     ] = None,
     store: StoreOption = DEFAULT_STORE,
     source: Annotated[
@@ -49,8 +64,11 @@ def schedule(
                      "{time} in it is the time of the run."),
     ] = None,
     workers: WorkersOption = None,
+    engine: EngineOption = None,
+    scheduler: SchedulerOption = None,
+    parts: PartsOption = None,
     wait: Annotated[
-        float, typer.Option("--wait", metavar="SECONDS", help="Wait so long for another run to end.")
+        float, typer.Option("--wait", metavar="SECONDS", callback=seconds, help="Wait so long for another run to end.")
     ] = 3600.0,
     settings: SettingsOption = None,
     assignments: SetOption = None,
@@ -72,7 +90,7 @@ def schedule(
         raise UsageError(f"--name {called!r}: give letters, digits, hyphens, points; at most 100.")
     night = Night(
         tuple(map(str, paths)), str(store), source, text_of(export), settings=text_of(settings),
-        assignments=tuple(assignments or ()), workers=workers, wait=wait,
+        assignments=(*(assignments or ()), *elsewhere(engine, scheduler, parts)), workers=workers, wait=wait,
         fail_on=tuple(sorted(fail_on(fails, FAILS))), orchestrator=None,
     ).whole()  # fmt: skip
     _check(night)

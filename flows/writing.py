@@ -8,6 +8,8 @@ from typing import TYPE_CHECKING, Annotated, Any
 
 import typer
 
+from .completion import source_names
+from .driving import drive
 from .options import (
     DEFAULT_STORE,
     DirectOption,
@@ -31,7 +33,7 @@ if TYPE_CHECKING:
     from lattice_census.ingest.scan import IngestRequest
     from lattice_census.settings import Settings
 
-PathsArgument = Annotated[list[Path], typer.Argument(metavar="PATH...", help="Files or folders of structures.")]
+PathsArgument = Annotated[list[Path], typer.Argument(metavar="PATH", help="Files or folders of structures.")]
 SourceOption = Annotated[str | None, typer.Option("--source", help="Name of the source [default: the PATH's own].")]
 IdColumn = Annotated[str | None, typer.Option("--id-column", help="Column of the label.")]
 StructureColumn = Annotated[str | None, typer.Option("--structure-column", help="Column of the structure text.")]
@@ -89,7 +91,6 @@ def ingest(
     failing = fail_on(fails, ("rejects",))
     from .ingest import IngestJob
     from .ingest import ingest as steps
-    from .orchestrate import orchestrated
 
     request = _request(
         paths, source, recompute, id_column=id_column, structure_column=structure_column, energy_column=energy_column,
@@ -100,7 +101,7 @@ def ingest(
     resolved = _resolved(store, settings, told, direct, workers)
     job = IngestJob(store, request, resolved, wait, dry_run)
     way = "direct" if dry_run else resolved.orchestrator  # what changes nothing is no flow to look back on
-    counts = orchestrated("ingest", way, quiet, store, lambda step, progress: steps(job, step, progress))
+    counts = drive("ingest", way, quiet, store, lambda step, progress: steps(job, step, progress))
     typer.echo(json.dumps(counts) if as_json else ingest_text(counts, dry_run))
     return 1 if "rejects" in failing and counts.get("rejected") else 0
 
@@ -126,14 +127,11 @@ def group(
     from .group import GroupJob
     from .group import group as steps
     from .night import findings_of
-    from .orchestrate import orchestrated
 
     told = [*(assignments or []), *elsewhere(engine, scheduler, parts)]
     resolved = _resolved(store, settings, told, direct, workers)
     job = GroupJob(store, resolved, everything, recompute, wait)
-    counts = orchestrated(
-        "group", resolved.orchestrator, quiet, store, lambda step, progress: steps(job, step, progress)
-    )
+    counts = drive("group", resolved.orchestrator, quiet, store, lambda step, progress: steps(job, step, progress))
     typer.echo(json.dumps(counts) if as_json else group_text(counts))
     return 1 if "findings" in failing and findings_of(store) else 0
 
@@ -165,7 +163,6 @@ def run(
 ) -> int:
     """What a night does: ingest, group, keep, and, where a folder is given, export."""
     from .night import FAILS, Night, occurred, run_night, text_of
-    from .orchestrate import orchestrated
 
     night = Night(
         tuple(map(str, paths)), str(store), source, text_of(export), recompute, text_of(settings),
@@ -173,7 +170,7 @@ def run(
         "direct" if direct else None, wait, tuple(sorted(fail_on(fails, FAILS))),
     )  # fmt: skip
     resolved = night.resolved()
-    counts = orchestrated(
+    counts = drive(
         "run", resolved.orchestrator, quiet, store, lambda step, progress: run_night(night, resolved, step, progress)
     )
     typer.echo(json.dumps(counts) if as_json else night_text(counts))
@@ -238,6 +235,8 @@ def group_text(counts: dict[str, Any]) -> str:
 def ingest_text(counts: dict[str, Any], dry_run: bool) -> str:
     """The counts of an ingest in sentences."""
     if counts.get("nothing_new"):
+        if not counts["files"]:
+            return "Nothing to read: there is no file in what was named (hidden ones are passed over)."
         return "Nothing new: every file is as it was read before."
     lines = [
         ("A dry run; nothing was changed. It would be:\n" if dry_run else f"Run {counts['run']}: ")
@@ -262,7 +261,12 @@ def ingest_text(counts: dict[str, Any], dry_run: bool) -> str:
 
 
 def withdraw(
-    what: Annotated[str, typer.Argument(metavar="SOURCE|RECORD", help="A source, a record id, or SOURCE:LABEL.")],
+    what: Annotated[
+        str,
+        typer.Argument(
+            metavar="SOURCE|RECORD", autocompletion=source_names, help="A source, a record id, or SOURCE:LABEL."
+        ),
+    ],
     reason: Annotated[str, typer.Option("--reason", help="Why, for those who come after.")],
     store: StoreOption = DEFAULT_STORE,
     wait: WaitOption = 0.0,
@@ -314,9 +318,10 @@ def demo(
     ),
     direct: DirectOption = False,
     workers: WorkersOption = None,
+    as_json: JsonOption = False,
     quiet: QuietOption = False,
 ) -> int:
     """Make a small invented collection and run everything on it."""
     from .demo import run_demo
 
-    return run_demo(folder, direct, workers, quiet)
+    return run_demo(folder, direct, workers, quiet, as_json)

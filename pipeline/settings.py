@@ -5,6 +5,7 @@ Precedence: option, environment (LATTICE_CENSUS_NAME), settings file, what the s
 
 from __future__ import annotations
 
+import difflib
 import json
 import os
 import tomllib
@@ -196,7 +197,9 @@ def _from_environment(environment: Mapping[str, str]) -> dict[str, Any]:
         if name in ("store", "settings", "debug"):  # read by the commands
             continue
         if name == "sources" or name not in Settings.model_fields:
-            raise UsageError(f"The environment variable {variable} names no setting.")
+            close = difflib.get_close_matches(name, Settings.model_fields, n=1)
+            hint = f" Did you mean {prefix}{close[0].upper()}?" if close else " Unset it."
+            raise UsageError(f"The environment variable {variable} names no setting.{hint}")
         found[name] = environment[variable]
     return found
 
@@ -208,18 +211,33 @@ def resolve_settings(
     stored: Mapping[str, Any] | None = None,
 ) -> Settings:
     """The settings in force, by the precedence of this module. Raises UsageError naming the setting and the limit."""
-    merged: dict[str, Any] = dict(stored or {})
-    merged.update(read_settings_file(file) if file is not None else {})
-    merged.update(_from_environment(os.environ if environment is None else environment))
-    merged.update({k: v for k, v in (options or {}).items() if v is not None})
+    given = (
+        ("the store", dict(stored or {})),
+        (str(file), read_settings_file(file) if file is not None else {}),
+        ("the environment", _from_environment(os.environ if environment is None else environment)),
+        ("an option", {k: v for k, v in (options or {}).items() if v is not None}),
+    )
+    merged: dict[str, Any] = {}
+    origins: dict[str, str] = {}
+    for origin, values in given:
+        merged.update(values)
+        origins.update(dict.fromkeys(values, origin))
     try:
         return Settings.model_validate(merged)
     except ValidationError as error:
-        lines = []
-        for e in error.errors():
-            where = ".".join(str(x) for x in e["loc"])
-            if e["type"] == "extra_forbidden":
-                lines.append(f"  {where}: there is no such setting")
-            else:
-                lines.append(f"  {where}: {e['msg']} (given: {json.dumps(e['input'], default=str)})")
+        lines = [_complaint(e["loc"], e["type"], e["msg"], e["input"], origins) for e in error.errors()]
         raise UsageError("These settings cannot be used:\n" + "\n".join(lines)) from error
+
+
+def _complaint(loc: tuple[int | str, ...], kind: str, message: str, value: Any, origins: Mapping[str, str]) -> str:
+    """One line: which setting, from where, what is wrong with it."""
+    where = ".".join(str(part) for part in loc)
+    origin = origins.get(str(loc[0]), "an option")
+    if kind == "extra_forbidden":
+        known = Settings.model_fields if len(loc) == 1 else SourceSettings.model_fields
+        close = difflib.get_close_matches(str(loc[-1]), known, n=1)
+        hint = f"; did you mean {close[0]}?" if close else ""
+        return f"  {where} (from {origin}): there is no such setting{hint}"
+    if kind in ("model_type", "model_attributes_type", "dict_type"):
+        message = "Input should be a table of settings"
+    return f"  {where} (from {origin}): {message} (given: {json.dumps(value, default=str)})"

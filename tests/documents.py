@@ -28,7 +28,8 @@ def commands() -> str:
     """Every command with its first sentence."""
     rows = [("command", "what it does")]
     for name, command in get_command(app).commands.items():  # type: ignore[attr-defined]
-        words = [p.metavar or p.name.upper() for p in command.params if p.param_type_name == "argument"]
+        arguments = [p for p in command.params if p.param_type_name == "argument"]
+        words = [(p.metavar or p.name.upper()) + ("..." if p.nargs == -1 else "") for p in arguments]
         rows.append((f"`{' '.join([name, *words])}`", command.help.strip().splitlines()[0]))
     return _table(*rows)
 

@@ -29,12 +29,22 @@ def test_precedence_option_environment_file_store_default(tmp_path: Path):
 @pytest.mark.parametrize(
     ("options", "environment", "text", "told"),
     [
-        ({"near_shfit": 1}, {}, "", "near_shfit: there is no such setting"),
+        (
+            {"near_shfit": 1},
+            {},
+            "",
+            r"near_shfit \(from an option\): there is no such setting; did you",
+        ),
         ({}, {"LATTICE_CENSUS_NEAR_SHFIT": "1"}, "", "LATTICE_CENSUS_NEAR_SHFIT"),
-        ({}, {}, "nearshift = 1", "nearshift: there is no such setting"),
+        ({}, {}, "nearshift = 1", "nearshift \\(from .*s.toml\\): there is no such setting"),
         ({"max_sites": 0}, {}, "", "max_sites"),
         ({"mirror_images": "flip"}, {}, "", "mirror_images"),
-        ({}, {}, "[sources.a]\nenergie_column = 'e'", r"sources\.a\.energie_column: there is no such setting"),
+        (
+            {},
+            {},
+            "[sources.a]\nenergie_column = 'e'",
+            r"a\.energie_column \(from .*s.toml\): there is no such .*mean energy_column",
+        ),
         ({}, {}, "near_shift = = 3", "not TOML"),
     ],
 )

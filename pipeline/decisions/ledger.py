@@ -65,8 +65,12 @@ def require_grade(connection: duckdb.DuckDBPyConnection, grade: str) -> None:
     """UsageError naming the grades there are, unless groups of the grade were computed. Read-only."""
     if not has_grade(connection, grade):
         rows = connection.execute("SELECT DISTINCT grade FROM members ORDER BY grade").fetchall()
-        grades = ", ".join(g for (g,) in rows) or "none"
-        raise UsageError(f"The store has no groups of grade {grade!r}; it has: {grades}.")
+        if not rows:
+            raise UsageError("The store holds no records yet. Read some with: lattice-census ingest PATH")
+        grades = ", ".join(g for (g,) in rows)
+        raise UsageError(
+            f"The store has no groups of grade {grade!r}; it has: {grades}. `lattice-census group` makes same and near."
+        )
 
 
 def plan_keep(

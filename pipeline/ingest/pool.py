@@ -13,6 +13,7 @@ from concurrent.futures import Future, ProcessPoolExecutor
 from concurrent.futures.process import BrokenProcessPool
 from contextlib import contextmanager
 from itertools import chain, islice
+from multiprocessing.resource_tracker import ensure_running
 from types import TracebackType
 from typing import TypeVar
 
@@ -37,6 +38,7 @@ def _leave_with_parent(parent: int) -> None:
 @contextmanager
 def _deaf_to_interruption() -> Iterator[None]:
     """Processes made inside never see Ctrl-C, which is for the one that drives them: a mask of signals is inherited."""
+    ensure_running()  # else the start of the first process makes one that ends with the mask taken off
     before = signal.pthread_sigmask(signal.SIG_BLOCK, {signal.SIGINT})
     try:
         yield

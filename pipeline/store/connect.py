@@ -42,7 +42,15 @@ def _connect(path: Path, read_only: bool) -> duckdb.DuckDBPyConnection:
             holder = re.search(r"PID (\d+)", text)
             who = f"process {holder[1]}" if holder else "another process"
             raise StoreError(f"{path} is held open for writing by {who}. Close it there and try again.") from error
-        raise StoreError(f"{path} cannot be opened as a store: {text.splitlines()[0]}") from error
+        if path.is_dir():
+            raise StoreError(f"{path} is a folder; --store names a file.") from error
+        beside = path.with_name(path.name + ".work")
+        if (beside / "work.duckdb").exists():
+            what = f"Move it away: the next `lattice-census ingest PATH` publishes the store again from {beside}."
+        else:
+            what = "Give another --store, or put a sound copy in its place."
+        first = text.splitlines()[0].rstrip(".!")
+        raise StoreError(f"{path} cannot be opened as a store: {first}. {what}") from error
 
 
 def _check_version(connection: duckdb.DuckDBPyConnection, path: Path) -> None:
