@@ -118,7 +118,11 @@ class Browser:
         self.send("Page.navigate", url=page.absolute().as_uri())
         while not any(e.get("method") == "Page.loadEventFired" for e in self.events):
             self.events.append(self._receive())
-        self.evaluate("new Promise((done) => requestAnimationFrame(() => requestAnimationFrame(done)))")
+        self._drawn()
+
+    def _drawn(self) -> None:
+        """Wait for two frames: then the page knows of its size."""
+        self.evaluate("new Promise((done) => requestAnimationFrame(() => requestAnimationFrame(() => done(0))))")
 
     def evaluate(self, code: str) -> Any:
         """The value of an expression in the page (JSON); a promise is awaited."""
@@ -129,6 +133,7 @@ class Browser:
     def window(self, width: int, height: int) -> None:
         """The size of the view in CSS pixels."""
         self.send("Emulation.setDeviceMetricsOverride", width=width, height=height, deviceScaleFactor=1, mobile=False)
+        self._drawn()
 
     def media(self, name: str) -> None:
         """`print`, or `` for the screen."""

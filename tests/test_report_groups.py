@@ -58,9 +58,11 @@ def test_rows_of_groups_are_those_of_the_store(report_store: Path):
 
 
 def test_numbers_stand_right_and_rows_beyond_the_most_are_counted():
-    written = table("caption", ("a", "volume_angstrom3_per_site"), [("x", 1.5), ("y", None), ("z", 2)], [1], 2)
+    written = table(
+        "caption", ("a", "volume_angstrom3_per_site"), [("x", 1.5), ("y", None), ("z", 2)], [1], 2, rest="ask q"
+    )
     assert written.count('class="number"') == 3 and "volume (Å3/site)" in written
-    assert '<tr class="chosen">' in written and "1 more row is left out" in written
+    assert '<tr class="chosen">' in written and "1 more row is left out here. All: lattice-census ask q<" in written
     written = table("shares", ("source", "share_percent", "t"), [("x", 12.345, 0.0), ("y", 0.0, 1.5)], digits={"t": 2})
     assert re.findall(r"<td[^>]*>([^<]*)</td>", written) == ["x", "12.3", "0.00", "y", "0.0", "1.50"]
     assert written.count('class="number zero"') == 2

@@ -19,7 +19,7 @@ FACTORS = (1, 2, 5, 10, 20, 50, 100, 200, 500, 1000)
 BARS = (0.5, 1.0, 2.0, 5.0, 10.0, 20.0)
 """Lengths that a scale bar may have, angstrom."""
 
-WIDTH_INCHES, MOST_HEIGHT = 3.6, 3.2
+WIDTH_INCHES, MOST_HEIGHT = 3.6, 2.6
 WORDS_INCHES = (2.9, 0.45)
 """Width and height that the words below the scale bar need."""
 

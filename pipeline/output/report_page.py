@@ -57,12 +57,14 @@ def table(
     name: str | None = None,
     right: Sequence[bool] | None = None,
     digits: Mapping[str, int] | None = None,
+    rest: str | None = None,
 ) -> str:
     """A table that scrolls sideways by itself, its caption above it in the width of the page.
 
-    Rows `chosen` stand out; beyond `most` rows only their number is said. Columns are headed as in printed tables;
-    columns whose values are all numbers stand to the right, if `right` does not say otherwise, with `digits` after the
-    point; shares have one. Zeros are pale, where a column of numbers is looked over for what is not zero.
+    Rows `chosen` stand out; beyond `most` rows only their number is said, and the command `rest` that lists all.
+    Columns are headed as in printed tables. Those whose values are all numbers stand to the right, if `right` does not
+    say otherwise, with `digits` after the point; shares have one. Zeros are pale, where a column of numbers is looked
+    over for what is not zero.
     """
     if not rows:
         return paragraph(f"{caption}: none.")
@@ -85,7 +87,7 @@ def table(
     left_out = len(rows) - len(shown)
     if left_out:
         told = "1 more row is left out here." if left_out == 1 else f"{left_out:,} more rows are left out here."
-        lines.append(paragraph(told, note=True))
+        lines.append(paragraph(told, f"All: lattice-census {rest}" if rest else "", note=True))
     return "\n".join(lines)
 
 

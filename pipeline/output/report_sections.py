@@ -48,7 +48,7 @@ def types_html(facts: Facts) -> str:
             "The type of the lattice alone, by the symbols of the International Union of Crystallography:",
             ", ".join(names) + ".",
         )
-        + table(found.title, found.columns, found.rows, most=MOST_ROWS)
+        + table(found.title, found.columns, found.rows, most=MOST_ROWS, rest="ask lattice-types-by-source")
         + paragraph(
             "Where the two types below differ, the lattice has more symmetry than the crystal, or one of the two "
             "depends on its tolerance."
@@ -106,6 +106,7 @@ def sizes_html(facts: Facts) -> str:
         ("source", *map(str, cells)),
         crossed,
         most=MOST_ROWS,
+        rest="ask oversized-cells",
     )
 
 
@@ -162,12 +163,19 @@ def findings_html(facts: Facts) -> str:
     keep = [columns.index(c) for c in ("code", "record", "other_record", "grade", "message")]
     listed = [tuple(row[i] for i in keep) for row in rows]
     by_code = [(code, number, meanings.get(code)) for code, number in sorted(numbers.items())]
-    return (
-        table("Findings by code", ("code", "findings", "meaning"), by_code)
-        + (table("Findings", [columns[i] for i in keep], listed, most=MOST_ROWS) if rows else "")
-        + table(f"Held at grade {facts.grade}: `keep` leaves these alone until a curator has looked",
-                ("reason", "record", "message"), facts.holds, most=MOST_ROWS)
-    )  # fmt: skip
+    found = table("Findings by code", ("code", "findings", "meaning"), by_code) + table(
+        "Findings", [columns[i] for i in keep], listed, most=MOST_ROWS, rest="ask findings"
+    )
+    held = table(
+        f"Held at grade {facts.grade}: `keep` leaves these alone until a curator has looked",
+        ("reason", "record", "message"),
+        facts.holds,
+        most=MOST_ROWS,
+        rest="ask --sql 'FROM holds'",
+    )
+    return (found if rows else paragraph("There is no finding.")) + (
+        held if facts.holds else paragraph("`keep` leaves no group or record alone.")
+    )
 
 
 def leakage_html(facts: Facts) -> str:
@@ -204,7 +212,7 @@ def refusals_html(facts: Facts) -> str:
     columns, rows = facts.answer("refusals-by-file")
     explained = [(*row, REASONS.get(row[0])) for row in reasons.rows]
     return table(reasons.title, (*reasons.columns, "meaning"), explained) + table(
-        "Files with refused records", columns, rows, most=MOST_ROWS
+        "Files with refused records", columns, rows, most=MOST_ROWS, rest="ask refusals-by-file"
     )
 
 

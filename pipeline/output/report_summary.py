@@ -24,7 +24,7 @@ def summary_html(facts: Facts) -> str:
         paragraph(
             f"The collection holds {counted(records, 'record')} of {counted(totals['formulas'], 'formula')} from "
             f"{counted(totals['sources'], 'source')}."
-            + (f" Not counted here: {left}." if left else " None was refused, is missing or withdrawn.")
+            + (f" Not counted here: {left}." if left else " None is refused, missing or withdrawn.")
         ),
         paragraph(f"By their canonical form they are {counted(crystals, 'distinct crystal')}."),
         paragraph(
@@ -72,8 +72,8 @@ def _steadiness(curve: ToleranceCurve) -> str:
     """What the curve says of the chosen tolerance, in a sentence or two."""
     if not len(curve.steps):
         return (
-            f"The number of families does not depend on the tolerance at all: up to {curve.window:g} times the limits of "
-            "near no two crystals match."
+            f"The number of families does not depend on the tolerance at all: up to {curve.window:g} times the limits "
+            "of near no two crystals match."
         )
     longest = curve.plateaus()[0]
     told = (
