@@ -9,10 +9,7 @@ import os
 from collections.abc import Callable
 from contextvars import ContextVar
 from pathlib import Path
-from typing import TYPE_CHECKING, Any, TypeVar
-
-if TYPE_CHECKING:
-    from lattice_census.ingest.progress import Progress, Step
+from typing import Any, TypeVar
 
 R = TypeVar("R")
 
@@ -59,20 +56,6 @@ def run_body() -> Any:
     """What a flow does, in this process. Tasks elsewhere are told of their flow by this name: the body stays here, with
     all that is open in it."""
     return _BODY.get()()
-
-
-def orchestrated(
-    name: str, orchestrator: str, quiet: bool, store: Path, body: Callable[[Step, Progress], dict[str, Any]]
-) -> dict[str, Any]:
-    """body(step, progress) as a Prefect flow that shows its counts there, or directly; returns the counts."""
-    from .progress import progress_for
-
-    with progress_for(quiet) as progress:
-        if orchestrator == "direct":
-            from lattice_census.ingest.progress import call_directly
-
-            return body(call_directly, progress)
-        return run_as_flow(name, lambda: shown(name, store, body(task_step, progress)))
 
 
 def shown(name: str, store: Path, counts: dict[str, Any]) -> dict[str, Any]:

@@ -2,11 +2,24 @@
 
 from __future__ import annotations
 
+import math
+from collections.abc import Callable
 from pathlib import Path
+from typing import Any
 
 import numpy as np
+import pytest
 
-from lattice_census.output.report_figures import LatticeMap, curve_figure, lattice_map, map_figures, size_figure
+from lattice_census.output.report import report_html
+from lattice_census.output.report_figures import (
+    LatticeMap,
+    curve_figure,
+    lattice_map,
+    layer_figure,
+    layer_map,
+    map_figures,
+    size_figure,
+)
 from lattice_census.output.tolerance_curve import ToleranceCurve, counted_at, tolerance_curve
 from lattice_census.store.connect import open_for_reading
 
@@ -39,6 +52,32 @@ def test_crystals_of_one_shape_are_not_drawn_apart_by_rounding():
     for figure in map_figures(LatticeMap(np.array(["cP"] * 3), ones, ones, ones)):
         for low, high in (figure.axes[0].get_xlim(), figure.axes[0].get_ylim()):
             assert 0.85 < low < 0.9 and 1.0 < high < 1.01
+
+
+def test_layers_have_a_map_of_their_own(ingest: Callable[..., dict[str, Any]], tmp_path: Path):
+    """A square lattice of edge 4 and an oblique one of edges 3 and 4 at 80 degrees, each with one site, and a bulk
+    crystal that the map of layers leaves out."""
+    x, y = 4 * math.cos(math.radians(80)), 4 * math.sin(math.radians(80))
+    frames = [("4 0 0 0 4 0 0 0 20", "T T F", "square"), (f"3 0 0 {x} {y} 0 0 0 20", "T T F", "oblique"),
+              ("3 0 0 0 3 0 0 0 3", "T T T", "bulk")]  # fmt: skip
+    (tmp_path / "layers.extxyz").write_text(
+        "".join(
+            f'1\nLattice="{cell}" Properties=species:S:1:pos:R:3 pbc="{periodic}" label={label}\nC 0 0 1\n'
+            for cell, periodic, label in frames
+        )
+    )
+    ingest(tmp_path / "layers.extxyz")
+    connection = open_for_reading(tmp_path / "census.duckdb")
+    layers, bulk, written = layer_map(connection), lattice_map(connection), report_html(connection)
+    connection.close()
+    assert bulk.lattice_type.tolist() == ["cP"]
+    rows = sorted(zip(layers.lattice_type.tolist(), layers.a_to_b.tolist(), layers.openness.tolist(), strict=True))
+    assert [row[0] for row in rows] == ["mp", "tp"]
+    assert rows[0][1:] == pytest.approx((0.75, math.sin(math.radians(80))))
+    assert rows[1][1:] == pytest.approx((1.0, 1.0))
+    assert [len(line.get_xdata()) for line in layer_figure(layers).axes[0].lines] == [1, 1]
+    section = written.split('<section id="map"')[1].split("</section>")[0]
+    assert section.count("<svg") == 3 and "Layers: a ≤ b" in section and "m in a plane oblique" in written
 
 
 def test_a_curve_without_a_step_starts_at_zero():

@@ -30,6 +30,15 @@ WHERE r.periodicity = 3 AND x.lattice_type IS NOT NULL AND x.a_angstrom > 0
 GROUP BY x.crystal_key
 ORDER BY x.crystal_key"""
 
+LAYERS = """
+SELECT any_value(x.lattice_type) AS lattice_type,
+       any_value(least(x.a_angstrom, x.b_angstrom) / greatest(x.a_angstrom, x.b_angstrom)) AS a_to_b,
+       any_value(sin(radians(x.gamma_deg))) AS fill
+FROM current_records r JOIN crystals x USING (record_id)
+WHERE r.periodicity = 2 AND x.lattice_type IS NOT NULL AND x.a_angstrom > 0
+GROUP BY x.crystal_key
+ORDER BY x.crystal_key"""
+
 
 @dataclass(frozen=True, slots=True)
 class LatticeMap:
@@ -55,21 +64,47 @@ def lattice_map(connection: duckdb.DuckDBPyConnection) -> LatticeMap:
     return LatticeMap(np.array(columns[0], dtype=str), *(np.array(c, np.float64) for c in columns[1:]))
 
 
+@dataclass(frozen=True, slots=True)
+class LayerMap:
+    """One row a distinct layer."""
+
+    lattice_type: NDArray[np.str_]
+    """(n,)"""
+
+    a_to_b: Floats
+    """(n,): shorter over longer edge of the reduced cell in the plane."""
+
+    openness: Floats
+    """(n,): area / (a b), 1 for a right angle."""
+
+
+def layer_map(connection: duckdb.DuckDBPyConnection) -> LayerMap:
+    """The shapes of the reduced plane cells of all layers. Read-only."""
+    rows = connection.execute(LAYERS).fetchall()
+    columns = list(zip(*rows, strict=True)) if rows else [(), (), ()]
+    return LayerMap(np.array(columns[0], dtype=str), *(np.array(c, np.float64) for c in columns[1:]))
+
+
+def layer_figure(shapes: LayerMap) -> Figure:
+    """The one plane that the shape of a plane cell has: its edges against its angle."""
+    return _map(shapes.lattice_type, shapes.a_to_b, shapes.openness, "a / b", "area / (a b)")
+
+
 def map_figures(shapes: LatticeMap) -> tuple[Figure, Figure]:
     """Two planes of the same points: the edges against the angles, and the edges against one another."""
     return (
-        _map(shapes, shapes.a_to_b * shapes.b_to_c, shapes.openness, "a / c", "V / (a b c)"),
-        _map(shapes, shapes.a_to_b, shapes.b_to_c, "a / b", "b / c"),
+        _map(shapes.lattice_type, shapes.a_to_b * shapes.b_to_c, shapes.openness, "a / c", "V / (a b c)"),
+        _map(shapes.lattice_type, shapes.a_to_b, shapes.b_to_c, "a / b", "b / c"),
     )
 
 
-def _map(shapes: LatticeMap, x: Floats, y: Floats, x_name: str, y_name: str) -> Figure:
+def _map(lattice_type: NDArray[np.str_], x: Floats, y: Floats, x_name: str, y_name: str) -> Figure:
     figure = Figure(figsize=(4.6, 4.4), layout="constrained")
     axes = figure.add_subplot()
-    present = set(shapes.lattice_type.tolist())
+    present = set(lattice_type.tolist())
     types = [t for t in ALL_TYPES if t in present] + sorted(present - set(ALL_TYPES))
     for name in types:
-        rows = shapes.lattice_type == name
+        rows = lattice_type == name
         i = ALL_TYPES.index(name) if name in ALL_TYPES else len(ALL_TYPES)
         axes.plot(
             x[rows], y[rows], linestyle="none", marker=MARKERS[i % len(MARKERS)], markersize=6,

@@ -31,10 +31,9 @@ def pairs_html(connection: duckdb.DuckDBPyConnection, groups: Groups) -> str:
         "are: the bar is one length between sites and another one of an arrow."
     )
     parts = [intro, "<h3>The largest groups</h3>", _cards(connection, groups, largest)]
-    parts.append("<h3>The least certain of the other groups</h3>")
     if unsure:
-        parts.append(_cards(connection, groups, unsure))
-    else:
+        parts += ["<h3>The least certain of the other groups</h3>", _cards(connection, groups, unsure)]
+    elif len(groups.ids) > len(largest):
         parts.append(paragraph("All other groups are of equal keys."))
     return "\n".join(parts)
 
@@ -78,7 +77,7 @@ def pair_html(found: Overlay, name: str) -> str:
             ("largest shift", f"{found.largest_shift:.4f} Å"),
             ("rms shift", f"{found.rms_shift:.4f} Å"),
             ("strain", f"{found.strain:.5f}"),
-            ("volume ratio", f"{found.volume_ratio:.5f}"),
+            ("volume ratio" if found.kept.periodicity == 3 else "area ratio", f"{found.volume_ratio:.5f}"),
             ("sites", len(found.sites)),
         ]
     )

@@ -16,7 +16,7 @@ from ..model.refusals import REASONS
 from ..settings import Settings
 from .findings import finding_queries
 from .report_facts import Facts, counted, ungrouped
-from .report_figures import curve_figure, lattice_map, map_figures, size_figure
+from .report_figures import curve_figure, lattice_map, layer_figure, layer_map, map_figures, size_figure
 from .report_page import figure, paragraph, side_by_side, table
 from .svg import inline_svg
 from .tolerance_curve import COLUMNS, ToleranceCurve
@@ -29,18 +29,37 @@ MOST_BARS = 24
 
 CENTRING_NAME = {
     "P": "primitive", "S": "with one centred face", "I": "body-centred", "F": "face-centred", "R": "rhombohedral",
-    "p": "primitive", "c": "centred",
+    "p": "primitive in a plane", "c": "centred in a plane",
 }  # fmt: skip
+
+MAPS = (
+    (
+        "edges against angles",
+        "a ≤ b ≤ c are the edges of the reduced cell, V is its volume. V / (a b c) is 1 where all angles are right "
+        "ones; primitive cubic lies at (1, 1), body-centred at (1, 0.77), face-centred at (1, 0.71).",
+    ),
+    (
+        "edges against one another",
+        "Lattices of three equal edges lie in the upper right corner, those with a = b at the right edge.",
+    ),
+)
+"""Name and caption of each figure of `map_figures`."""
+
+MAP_OF_LAYERS = (
+    "layers",
+    "Layers: a ≤ b are the edges of the reduced cell in the plane. Square lies at (1, 1), hexagonal at (1, 0.87).",
+)
 
 
 def types_html(facts: Facts) -> str:
     """Lattice types by source, and against the crystal's."""
     found = facts.survey.tables["lattice_types_by_source"]
     crossed = facts.survey.tables["lattice_against_crystal"]
-    used = [c for c in found.columns if c in ALL_TYPES]
-    families = dict.fromkeys(t[0] for t in used)
-    centrings = dict.fromkeys(t[1] for t in used)
-    names = [f"{f} {FAMILY_NAME[f]}" for f in families] + [f"{c} {CENTRING_NAME[c]}" for c in centrings]
+    seen = {*found.columns, *crossed.columns, *(row[0] for row in crossed.rows)}
+    used = [t for t in ALL_TYPES if t in seen]
+    names = [f"{f} {FAMILY_NAME[f]}" for f in dict.fromkeys(t[0] for t in used if t != "mp")]
+    names += ["m in a plane oblique"] if "mp" in used else []
+    names += [f"{c} {CENTRING_NAME[c]}" for c in dict.fromkeys(t[1] for t in used)]
     if not names:
         return paragraph("There is no lattice.")
     return (
@@ -58,31 +77,23 @@ def types_html(facts: Facts) -> str:
 
 
 def map_html(facts: Facts) -> str:
-    """All lattices in two planes."""
-    shapes = lattice_map(facts.connection)
-    if not len(shapes.lattice_type):
+    """All lattices in two planes, and the lattices of layers in theirs."""
+    shapes, layers = lattice_map(facts.connection), layer_map(facts.connection)
+    drawn, of_layers = len(shapes.lattice_type), len(layers.lattice_type)
+    if not drawn + of_layers:
         return paragraph("There is no lattice to draw.")
-    layers = facts.survey.totals["crystals"] - len(shapes.lattice_type)
-    names = ("edges against angles", "edges against one another")
-    captions = (
-        "a ≤ b ≤ c are the edges of the reduced cell, V is its volume. V / (a b c) is 1 where all angles are right "
-        "ones; primitive cubic lies at (1, 1), body-centred at (1, 0.77), face-centred at (1, 0.71).",
-        "Lattices of three equal edges lie in the upper right corner, those with a = b at the right edge.",
-    )
-    figures = [
-        figure(
-            inline_svg(f, f"map{i}", f"Map of the lattices: {name}", counted(len(shapes.lattice_type), "crystal")),
-            caption,
-        )
-        for i, (f, name, caption) in enumerate(zip(map_figures(shapes), names, captions, strict=True))
+    figures = [(f, drawn, *words) for f, words in zip(map_figures(shapes), MAPS, strict=True)] if drawn else []
+    if of_layers:
+        figures.append((layer_figure(layers), of_layers, *MAP_OF_LAYERS))
+    parts = [
+        figure(inline_svg(f, f"map{i}", f"Map of the lattices: {name}", counted(crystals, "crystal")), caption)
+        for i, (f, crystals, name, caption) in enumerate(figures)
     ]
     told = "One mark for each distinct crystal; marker and colour tell its lattice type."
-    if layers > 0:
-        told += (
-            f" {counted(layers, 'crystal')} {'is' if layers == 1 else 'are'} not drawn: layers, whose third edge is "
-            "vacuum, and crystals without a type."
-        )
-    return paragraph(told) + side_by_side(*figures)
+    left = facts.survey.totals["crystals"] - drawn - of_layers
+    if left:
+        told += f" {counted(left, 'crystal')} without a lattice type {'is' if left == 1 else 'are'} not drawn."
+    return paragraph(told) + side_by_side(*parts)
 
 
 def sizes_html(facts: Facts) -> str:
