@@ -27,6 +27,9 @@ from .timing import Seconds, exponent
 QUADRATIC = 1.7
 """An exponent of growth that is called quadratic: n log n over these sizes has 1.1."""
 
+MOST_COPIES = 5000
+"""Copies of one crystal."""
+
 BRUTE = 150
 """Copies that are compared pair by pair."""
 
@@ -44,17 +47,19 @@ class Grouped:
 
 
 def run(options: Options) -> Report:
-    """Exponents over n/4, n/2 and n copies of one crystal (`--records` is n; 5,000), and over as many records of one
-    composition up to ten times that."""
-    most = options.count(5000)
+    """Exponents over 1,250, 2,500 and 5,000 copies of one crystal, and over N/16, N/4 and N records of one composition
+    (`--records` is N; with fewer than 5,000 there are no more copies than that)."""
+    count = options.count(20_000)
+    most = min(MOST_COPIES, count)
     figures: list[Figure] = []
-    brute_force(min(BRUTE, most))
+    brute_force(min(BRUTE, count))
     for name, kind, sizes in (
         ("copies of one crystal", ONE_CRYSTAL, (most // 4, most // 2, most)),
-        ("records of one composition", ONE_COMPOSITION, (most // 4, most, 4 * most)),
+        ("records of one composition", ONE_COMPOSITION, (count // 16, count // 4, count)),
     ):
         figures += growth(name, kind, sizes, options.times(1))
-    return Report("copies", {"copies": most, "pair by pair": min(BRUTE, most)}, tuple(figures))
+    sizes_told = {"copies": most, "records of one composition": count, "compared pair by pair": min(BRUTE, count)}
+    return Report("copies", sizes_told, tuple(figures))
 
 
 def growth(name: str, kind: Kind, sizes: tuple[int, ...], repeat: int) -> list[Figure]:
