@@ -39,6 +39,8 @@ def test_the_figures_of_the_store_draw_its_numbers(report_store: Path):
     for figure in map_figures(shapes):
         marks = [(line.get_marker(), line.get_color()) for line in figure.axes[0].lines]
         assert len({m for m, _ in marks}) == len(marks) and len({c for _, c in marks}) > 1
+        counted = sorted((line.get_zorder(), len(line.get_xdata())) for line in figure.axes[0].lines)
+        assert [n for _, n in counted] == sorted((n for _, n in counted), reverse=True)  # few lie above many
         assert sum(len(line.get_xdata()) for line in figure.axes[0].lines) == crystals == len(shapes.a_to_b)
     assert (shapes.a_to_b <= 1 + 1e-9).all() and (shapes.b_to_c <= 1 + 1e-9).all()
     assert (shapes.openness > 0.5).all() and (shapes.openness <= 1 + 1e-9).all()  # of Niggli cells

@@ -20,6 +20,9 @@ from .tolerance_curve import ToleranceCurve
 MOST_VECTORS = 1500
 """Beyond so many points the map's points are one image in the figure, so that the page stays small."""
 
+CROWDED = 3000
+"""From so many points on, the map's marks are smaller."""
+
 LATTICES = """
 SELECT any_value(x.lattice_type) AS lattice_type,
        any_value(x.a_angstrom / x.b_angstrom) AS a_to_b,
@@ -103,20 +106,24 @@ def _map(lattice_type: NDArray[np.str_], x: Floats, y: Floats, x_name: str, y_na
     axes = figure.add_subplot()
     present = set(lattice_type.tolist())
     types = [t for t in ALL_TYPES if t in present] + sorted(present - set(ALL_TYPES))
+    counts = {name: int((lattice_type == name).sum()) for name in types}
+    rare_last = sorted(types, key=lambda name: -counts[name])  # many points do not hide few
     for name in types:
         rows = lattice_type == name
         i = ALL_TYPES.index(name) if name in ALL_TYPES else len(ALL_TYPES)
         axes.plot(
-            x[rows], y[rows], linestyle="none", marker=MARKERS[i % len(MARKERS)], markersize=6,
+            x[rows], y[rows], linestyle="none", marker=MARKERS[i % len(MARKERS)],
+            markersize=6 if len(x) < CROWDED else 4, zorder=2 + rare_last.index(name) / 100,
             color=COLOURS[i % len(COLOURS)], markeredgecolor="white", markeredgewidth=0.4, alpha=0.85,
-            rasterized=len(x) > MOST_VECTORS, label=f"{name} ({int(rows.sum()):,})", clip_on=False,
+            rasterized=len(x) > MOST_VECTORS, label=f"{name} ({counts[name]:,})", clip_on=False,
         )  # fmt: skip
     axes.set_xlim(*_range_below_one(x))
     axes.set_ylim(*_range_below_one(y))
     axes.set_xlabel(f"{x_name} of the reduced cell")
     axes.set_ylabel(f"{y_name} of the reduced cell")
     if types:
-        figure.legend(loc="outside lower center", ncols=4, fontsize=9, handletextpad=0.2, columnspacing=0.9)
+        figure.legend(loc="outside lower center", ncols=4, fontsize=9, handletextpad=0.2, columnspacing=0.9,
+                      markerscale=1.0 if len(x) < CROWDED else 1.5)  # fmt: skip
     figure.set_dpi(200)  # of points that are one image
     return figure
 

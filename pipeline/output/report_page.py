@@ -6,6 +6,7 @@ import base64
 import hashlib
 import json
 from collections.abc import Iterable, Mapping, Sequence
+from datetime import datetime
 from html import escape
 from importlib.resources import files
 from typing import Any
@@ -94,6 +95,8 @@ def table(
 def _class(right: bool, value: Any) -> str:
     if right:
         return ' class="number zero"' if is_number(value) and value == 0 else ' class="number"'
+    if isinstance(value, datetime):
+        return ' class="whole"'
     return ' class="long"' if isinstance(value, str) and len(value) > 40 else ""
 
 
