@@ -13,8 +13,8 @@ import duckdb
 from lattice_census.decisions.ledger import lapse, restore_ended, undo_decisions
 from lattice_census.decisions.pins import add_pins, remove_pin, set_pin, undo_pins
 from lattice_census.errors import UsageError
-from lattice_census.grouping.exact import group_exact
-from lattice_census.grouping.stage import group_records, set_outdated_aside
+from lattice_census.grouping.stage import group_records
+from lattice_census.grouping.update import update_groups
 from lattice_census.ingest.pool import WorkerPool
 from lattice_census.ingest.progress import Silent, call_directly
 from lattice_census.ingest.withdraw import undo_withdrawals
@@ -117,8 +117,7 @@ def _act(
         connection.execute("BEGIN")
         try:
             done = act(connection, run.run_id)
-            group_exact(connection, run.run_id, settings)
-            waiting = set_outdated_aside(connection, settings)
+            waiting = update_groups(connection, run.run_id, settings)
             connection.execute("COMMIT")
         except BaseException:
             connection.execute("ROLLBACK")
@@ -137,5 +136,5 @@ def _act(
         except BaseException:
             connection.execute("ROLLBACK")
             raise
-        finish(workspace, call_directly)
+        finish(workspace, settings, call_directly)
     return {"run": run.run_id, **done}

@@ -7,8 +7,8 @@ from pathlib import Path
 from typing import Any
 
 from lattice_census.decisions.ledger import lapse
-from lattice_census.grouping.exact import group_exact
 from lattice_census.grouping.stage import GroupCounts, find_work, group_records
+from lattice_census.grouping.update import update_groups
 from lattice_census.ingest.engine import Engine
 from lattice_census.ingest.progress import Progress, Step
 from lattice_census.output.findings import find_all
@@ -40,7 +40,7 @@ def group(job: GroupJob, step: Step, progress: Progress) -> dict[str, Any]:
         engine_for(job.settings, workspace) as pool,
     ):
         counts = group_into(workspace, job, pool, step, progress)
-        finish(workspace, step)
+        finish(workspace, job.settings, step)
         return counts
 
 
@@ -54,7 +54,7 @@ def night(job: IngestJob, step: Step, progress: Progress) -> dict[str, Any]:
         again = GroupJob(job.store, job.settings, recompute=job.request.recompute)
         grouped = group_into(workspace, again, pool, step, progress)
         kept = keep_into(workspace, KeepJob(job.store, job.settings), step)
-        finish(workspace, step)
+        finish(workspace, job.settings, step)
         return {"ingest": read, "group": grouped, "keep": kept}
 
 
@@ -77,7 +77,7 @@ def _close(workspace: Workspace, run: Run, settings: Settings, done: GroupCounts
     connection = workspace.connection
     connection.execute("BEGIN")
     try:
-        group_exact(connection, run.run_id, settings)
+        update_groups(connection, run.run_id, settings)
         lapse(connection, run.run_id)
         findings = find_all(connection, settings)
         record_settings(connection, settings, ("verify", "keep"))

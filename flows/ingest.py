@@ -7,8 +7,7 @@ from pathlib import Path
 from typing import Any
 
 from lattice_census.decisions.ledger import lapse
-from lattice_census.grouping.exact import group_exact
-from lattice_census.grouping.stage import set_outdated_aside
+from lattice_census.grouping.update import update_groups
 from lattice_census.ingest.classify import classify_keys
 from lattice_census.ingest.engine import Engine
 from lattice_census.ingest.ingest import (
@@ -22,7 +21,7 @@ from lattice_census.ingest.progress import Progress, Step
 from lattice_census.ingest.recompute import recompute_canonical
 from lattice_census.ingest.scan import IngestRequest
 from lattice_census.kernels import all_kept, warm_up
-from lattice_census.output.findings import find_all
+from lattice_census.output.findings import find_due, findings_due, note_findings_due
 from lattice_census.readers.walk import walk
 from lattice_census.settings import Settings
 from lattice_census.store.runs import end_run
@@ -51,7 +50,7 @@ def ingest(job: IngestJob, step: Step, progress: Progress, command: str = "inges
     ):
         counts = ingest_into(workspace, job, pool, step, progress, command)
         if not job.dry_run:
-            finish(workspace, step)
+            finish(workspace, job.settings, step)
         return counts
 
 
@@ -74,8 +73,11 @@ def ingest_into(
     return counts
 
 
-def finish(workspace: Workspace, step: Step) -> None:
-    """Publish where the work store is ahead, and clear what is in the store by now."""
+def finish(workspace: Workspace, settings: Settings, step: Step) -> None:
+    """Publish where the work store is ahead, with the findings of what it holds, and clear what is in the store by
+    now."""
+    if findings_due(workspace.connection):
+        step("findings", find_due, workspace.connection, settings)
     if workspace.ahead_of_published:
         step("publish", workspace.publish)
     workspace.clear_parts()
@@ -96,14 +98,13 @@ def compile_kernels(settings: Settings, progress: Progress) -> None:
 
 
 def _close(workspace: Workspace, work: IngestWork) -> dict[str, Any]:
-    """Exact groups, settings, findings and the end of the run in one transaction."""
+    """Exact groups, settings and the end of the run in one transaction; the findings are due when it is published."""
     connection = workspace.connection
     connection.execute("BEGIN")
     try:
-        group_exact(connection, work.run.run_id, work.settings)
-        waiting = set_outdated_aside(connection, work.settings)
+        waiting = update_groups(connection, work.run.run_id, work.settings)
         lapse(connection, work.run.run_id)
-        find_all(connection, work.settings)
+        note_findings_due(connection)
         record_settings(connection, work.settings, ("parse", "canonical", "fingerprint", "keep"))
         counts = ingest_counts(connection, work) | {"compositions_waiting": waiting}
         end_run(connection, work.run, counts)

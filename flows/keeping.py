@@ -6,6 +6,7 @@ from dataclasses import dataclass
 from pathlib import Path
 from typing import Any
 
+from lattice_census.decisions.holds import make_holds
 from lattice_census.decisions.ledger import (
     KeepPlan,
     current_holds,
@@ -18,7 +19,6 @@ from lattice_census.decisions.ledger import (
 )
 from lattice_census.ingest.pool import WorkerPool
 from lattice_census.ingest.progress import Silent, Step
-from lattice_census.output.findings import find_all
 from lattice_census.settings import Settings
 from lattice_census.store.runs import begin_run, end_run
 from lattice_census.store.stages import changed_stages, refuse_mixed
@@ -61,7 +61,7 @@ def keep(job: KeepJob, step: Step) -> dict[str, Any]:
                 group_into(workspace, GroupJob(job.store, job.settings, recompute=True), pool, step, Silent())
         counts = keep_into(workspace, job, step)
         if not job.dry_run:
-            finish(workspace, step)
+            finish(workspace, job.settings, step)
         return counts
 
 
@@ -83,7 +83,7 @@ def keep_into(workspace: Workspace, job: KeepJob, step: Step) -> dict[str, Any]:
     try:
         decide(connection, run.run_id, plan, job.note)
         release(connection, run.run_id, again, grade)
-        find_all(connection, job.settings)
+        make_holds(connection, job.settings)
         end_run(connection, run, _counts(plan))
         connection.execute("COMMIT")
     except BaseException:

@@ -18,6 +18,7 @@ _ENERGY_CONFLICT = (
     "AS message "
     "FROM members m JOIN records r USING (record_id) WHERE r.energy_ev_per_site IS NOT NULL "
     "AND m.group_id NOT IN (SELECT record_id FROM pins_in_force WHERE kind = 'keep') "
+    "AND m.group_id IN (SELECT group_id FROM members WHERE NOT kept) "  # most groups are of one record
     "GROUP BY m.grade, m.group_id, r.theory "
     "HAVING max(r.energy_ev_per_site) - min(r.energy_ev_per_site) > $limit) GROUP BY grade, group_id"
 )

@@ -14,7 +14,7 @@ from typing import Any
 import duckdb
 
 from ..errors import UsageError
-from ..grouping.rank import deciding_rules, rank_records
+from ..grouping.rank import deciding_rules
 from ..ingest.withdraw import user_name
 from ..settings import Settings
 from ..store.find import find_record
@@ -81,7 +81,6 @@ def plan_keep(
     again: ids of held records that may be decided again. Raises UsageError where the store has no groups of the grade.
     """
     require_grade(connection, grade)
-    rank_records(connection, settings)
     free = (
         "m.group_id NOT IN (SELECT group_id FROM holds WHERE grade = $grade AND group_id IS NOT NULL) AND (m.record_id "
         "NOT IN (SELECT record_id FROM holds WHERE grade = $grade AND record_id IS NOT NULL) "
@@ -95,9 +94,14 @@ def plan_keep(
     )
     standing = "(SELECT * FROM decisions_in_force WHERE grade = $grade)"
     connection.execute(
-        "CREATE OR REPLACE TEMP TABLE keep_new AS SELECT w.* FROM repeats w JOIN keep_free f USING (record_id) "
-        f"LEFT JOIN {standing} d ON d.record_id = w.record_id AND d.kept_record_id = w.kept_record_id "
-        "WHERE w.grade = $grade AND d.record_id IS NULL",
+        "CREATE OR REPLACE TEMP TABLE keep_undecided AS SELECT f.record_id FROM keep_free f "
+        f"LEFT JOIN {standing} d ON d.record_id = f.record_id AND d.kept_record_id = f.group_id "
+        "WHERE NOT f.kept AND d.record_id IS NULL",
+        {"grade": grade},
+    )
+    connection.execute(
+        "CREATE OR REPLACE TEMP TABLE keep_new AS SELECT w.* FROM repeats w "
+        "WHERE w.grade = $grade AND w.record_id IN (SELECT record_id FROM keep_undecided)",
         {"grade": grade},
     )
     connection.execute(

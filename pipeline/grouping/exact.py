@@ -4,29 +4,31 @@ from __future__ import annotations
 
 import duckdb
 
-from ..settings import Settings
 from .pinned import part_pinned
-from .rank import rank_records
 
 GRADES = {"copy": "r.content_hash", "key": "x.crystal_key"}
 
 
-def group_exact(connection: duckdb.DuckDBPyConnection, run_id: int, settings: Settings) -> None:
-    """Compute `members` of grades copy and key anew from the current records, and note every id that changed.
+def group_exact(connection: duckdb.DuckDBPyConnection, run_id: int) -> None:
+    """Compute `members` of grades copy and key of the compositions in temp.touched anew from the current records and
+    temp.ranks, and note every id that changed.
 
     The kept record of a group is its best by the keep rules (rank.py): a pure function of the current records, the
     rules and the pins. To be called inside a transaction.
     """
-    connection.execute("DROP TABLE IF EXISTS temp.members_before")
-    connection.execute("CREATE TEMP TABLE members_before AS SELECT * FROM members WHERE grade IN ('copy', 'key')")
-    connection.execute("DELETE FROM members WHERE grade IN ('copy', 'key')")
-    rank_records(connection, settings)
+    where = (
+        "WHERE grade IN ('copy', 'key') AND record_id IN "
+        "(SELECT record_id FROM records WHERE composition IN (SELECT composition FROM touched))"
+    )
+    connection.execute(f"CREATE OR REPLACE TEMP TABLE members_before AS SELECT * FROM members {where}")
+    connection.execute(f"DELETE FROM members {where}")
     for grade, column in GRADES.items():
         connection.execute(
             "INSERT INTO members "
             "SELECT $1, first_value(r.record_id) OVER kept, min(r.record_id) OVER family, r.record_id, r.label, "
             "r.source, row_number() OVER kept = 1, 0.0, 0.0 "
             "FROM current_records r JOIN canonical_forms x USING (record_id) JOIN ranks k USING (record_id) "
+            "WHERE r.composition IN (SELECT composition FROM touched) "
             f"WINDOW kept AS (PARTITION BY {column} ORDER BY k.rank), "
             f"family AS (PARTITION BY {column}) ORDER BY r.record_id",
             [grade],

@@ -25,7 +25,7 @@ PAIR_PINS = (
 
 
 def part_pinned(connection: duckdb.DuckDBPyConnection, grade: str) -> None:
-    """Part the groups of grade copy or key, as `members` has them, whose records are pinned apart.
+    """Part the groups of grade copy or key of the compositions in temp.touched whose records are pinned apart.
 
     As stars in keep order (groups.py), where every pair of the group matches but those pinned apart; families are the
     components of that graph. To be called inside a transaction, with `ranks` made.
@@ -34,7 +34,7 @@ def part_pinned(connection: duckdb.DuckDBPyConnection, grade: str) -> None:
         f"SELECT DISTINCT a.family_id, p.record_a, p.record_b FROM {PAIR_PINS} p "
         "JOIN members a ON a.grade = $1 AND a.record_id = p.record_a "
         "JOIN members b ON b.grade = $1 AND b.record_id = p.record_b AND b.family_id = a.family_id "
-        "WHERE p.kind = 'apart' ORDER BY ALL",
+        "WHERE p.kind = 'apart' AND p.composition IN (SELECT composition FROM touched) ORDER BY ALL",
         [grade],
     ).fetchall()
     for family in sorted({row[0] for row in rows}):

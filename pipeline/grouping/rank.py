@@ -35,8 +35,10 @@ _RECORDS = (
 )
 
 
-def rank_records(connection: duckdb.DuckDBPyConnection, settings: Settings) -> None:
+def rank_records(connection: duckdb.DuckDBPyConnection, settings: Settings, within: str | None = None) -> None:
     """Make the temporary table `ranks` (record_id, rank from 1) of all current records.
+
+    within: a table of compositions; only their records are ranked, in the same order.
 
     Records pinned to be kept come first; then the rules are applied in their order; the record id comes last, so that
     no two records have one rank. When a record arrived has no part in it: the same records have the same ranks however
@@ -45,7 +47,8 @@ def rank_records(connection: duckdb.DuckDBPyConnection, settings: Settings) -> N
     terms = ["p.record_id IS NULL", *(term for rule in settings.keep_rules for term in _TERMS[rule])]
     connection.execute(
         "CREATE OR REPLACE TEMP TABLE ranks AS "
-        f"SELECT r.record_id, row_number() OVER (ORDER BY {', '.join([*terms, 'r.record_id'])}) AS rank {_RECORDS}",
+        f"SELECT r.record_id, row_number() OVER (ORDER BY {', '.join([*terms, 'r.record_id'])}) AS rank {_RECORDS}"
+        + (f" WHERE r.composition IN (SELECT composition FROM {within})" if within else ""),
         _bound(settings, terms),
     )
 

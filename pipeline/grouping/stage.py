@@ -7,6 +7,7 @@ goes on with those that are left. Compositions with one key need no comparison a
 
 from __future__ import annotations
 
+import hashlib
 import json
 from collections.abc import Callable, Iterator
 from dataclasses import dataclass
@@ -16,9 +17,10 @@ import duckdb
 
 from ..ingest.engine import Engine, done_in_order
 from ..ingest.progress import Progress
+from ..ingest.touched import STAGES, grouped_until, settings_changed
 from ..settings import Settings
 from ..store.parts import Part, raw_and_part
-from ..store.rows import one_number, one_row
+from ..store.rows import one_number
 from ..store.workspace import Workspace
 from .exact import note_id_changes
 from .pinned import PAIR_PINS
@@ -73,9 +75,8 @@ def group_records(
     everything: work on every composition again. Each job's rows are committed in one transaction with its digests.
     """
     connection, manifest = workspace.connection, workspace.manifest
-    rank_records(connection, settings)
     _find_changed(connection, settings, everything)
-    _in_transaction(connection, partial(_drop_left, connection, run_id))
+    _in_transaction(connection, partial(_begin, connection, run_id))
     _in_transaction(connection, partial(_write_single, connection, run_id))
     records = one_number(connection, "SELECT coalesce(sum(records), 0) FROM changed_compositions WHERE NOT plain")
     if records:
@@ -93,21 +94,18 @@ def group_records(
 def find_work(connection: duckdb.DuckDBPyConnection, settings: Settings, everything: bool = False) -> str | None:
     """The hash of what `group_records` would bring about, or None where nothing is to be done.
 
-    It is that of all records, keys, ranks and settings, and does not depend on how much is done already, so that an
-    interrupted run is known by it.
+    It is that of the records as they were last noted and of the settings, and does not depend on how much is done
+    already, so that an interrupted run is known by it.
     """
-    rank_records(connection, settings)
-    _find_changed(connection, settings, True)
-    row = one_row(connection, "SELECT sha256(string_agg(digest, '' ORDER BY composition)) FROM changed_compositions")
-    target = f"group {everything} {row[0] if row else None}"
+    stages = json.dumps([settings.of_stage(stage) for stage in STAGES], sort_keys=True)
+    target = f"group {everything} {grouped_until(connection)} {hashlib.sha256(stages.encode()).hexdigest()}"
     unfinished = one_number(
         connection, "SELECT count(*) FROM runs WHERE status = 'running' AND plan_hash = ?", [target]
     )
     if not everything and not unfinished:
         _find_changed(connection, settings, False)
-        left = "SELECT 1 FROM (SELECT record_id FROM members UNION SELECT record_id FROM outdated_members) "
-        left += "WHERE record_id NOT IN (SELECT record_id FROM current_records) LIMIT 1"
-        if not one_number(connection, "SELECT count(*) FROM changed_compositions") and not one_row(connection, left):
+        left = f"SELECT count(*) FROM outdated_members WHERE {_GONE}"
+        if not one_number(connection, "SELECT count(*) FROM changed_compositions") and not one_number(connection, left):
             return None
     return target
 
@@ -138,8 +136,24 @@ def _in_transaction(connection: duckdb.DuckDBPyConnection, work: Callable[[], No
 
 
 def _find_changed(connection: duckdb.DuckDBPyConnection, settings: Settings, everything: bool) -> None:
-    """The temporary table `changed_compositions` (composition, digest, records, keys, plain): plain ones have one key
-    and no pins, and need no comparison."""
+    """The temporary table `changed_compositions` of those that are not grouped as they are: those without a row in
+    `grouped_compositions`; where settings changed, also those with another digest; or all of them."""
+    if everything or settings_changed(connection, settings):
+        looked_at = "SELECT DISTINCT composition FROM current_records"
+    else:
+        looked_at = (
+            "SELECT DISTINCT composition FROM current_records "
+            "WHERE composition NOT IN (SELECT composition FROM grouped_compositions)"
+        )
+    connection.execute(f"CREATE OR REPLACE TEMP TABLE looked_at AS {looked_at}")
+    rank_records(connection, settings, "looked_at")
+    _digest(connection, settings, "looked_at", everything)
+
+
+def _digest(connection: duckdb.DuckDBPyConnection, settings: Settings, within: str, everything: bool = False) -> None:
+    """The temporary table `changed_compositions` (composition, digest, records, keys, plain) of the compositions in
+    the table `within`, whose records are ranked, that have another digest than they were grouped with. Plain ones have
+    one key and no pins, and need no comparison."""
     verify = json.dumps(settings.of_stage("verify") | settings.of_stage("canonical"), sort_keys=True)
     connection.execute(
         "CREATE OR REPLACE TEMP TABLE changed_compositions AS SELECT n.* FROM ("
@@ -151,7 +165,8 @@ def _find_changed(connection: duckdb.DuckDBPyConnection, settings: Settings, eve
         "JOIN (SELECT k.record_id, row_number() OVER (PARTITION BY i.composition ORDER BY k.rank) AS place "
         "FROM ranks k JOIN records i USING (record_id)) x USING (record_id) "
         "LEFT JOIN (SELECT composition, string_agg(kind || pin_id || record_a || record_b, '' ORDER BY pin_id) AS pins "
-        f"FROM {PAIR_PINS} GROUP BY composition) p ON p.composition = r.composition GROUP BY r.composition) n "
+        f"FROM {PAIR_PINS} GROUP BY composition) p ON p.composition = r.composition "
+        f"WHERE r.composition IN (SELECT composition FROM {within}) GROUP BY r.composition) n "
         "LEFT JOIN grouped_compositions g USING (composition) "
         "WHERE $everything OR g.digest IS DISTINCT FROM n.digest",
         {"settings": verify, "everything": everything},
@@ -159,72 +174,66 @@ def _find_changed(connection: duckdb.DuckDBPyConnection, settings: Settings, eve
 
 
 def set_outdated_aside(connection: duckdb.DuckDBPyConnection, settings: Settings) -> int:
-    """Take the rows of compositions that changed since they were grouped out of `members` and `matches`.
+    """Take the rows of those compositions in temp.touched that are not as they were grouped out of `members` and
+    `matches`; temp.ranks holds the ranks of their records.
 
     So that no result speaks of records as they were; `group` makes them anew and compares the ids. To be called inside
     a transaction. Returns the number of compositions that wait for `group`, once any was grouped.
     """
     if not one_number(connection, "SELECT count(*) FROM grouped_compositions"):
         return 0
-    rank_records(connection, settings)
-    _find_changed(connection, settings, False)
+    _digest(connection, settings, "touched")
     connection.execute(
-        "CREATE OR REPLACE TEMP TABLE stale AS SELECT composition FROM changed_compositions UNION "
-        "SELECT composition FROM grouped_compositions "
-        "WHERE composition NOT IN (SELECT composition FROM current_records)"
+        "CREATE OR REPLACE TEMP TABLE stale AS SELECT composition FROM touched WHERE composition IN "
+        "(SELECT composition FROM changed_compositions) OR composition NOT IN (SELECT composition FROM current_records)"
     )
-    # The composition of a replaced record may be another now; its old rows go with the record.
-    where = (
-        f"WHERE grade IN {GRADES} AND (record_id IN (SELECT record_id FROM records JOIN stale USING (composition)) "
-        "OR record_id NOT IN (SELECT record_id FROM current_records) OR group_id NOT IN "
-        "(SELECT record_id FROM current_records))"
+    # The composition of a replaced record may be another now: it is touched, and so is the one it had.
+    _set_aside(connection, "stale")
+    return one_number(
+        connection,
+        "SELECT count(DISTINCT composition) FROM current_records "
+        "WHERE composition NOT IN (SELECT composition FROM grouped_compositions)",
     )
+
+
+def _set_aside(connection: duckdb.DuckDBPyConnection, table: str) -> None:
+    """Take what was grouped of the compositions in a table away; who was a member of what stays in
+    `outdated_members`."""
+    records = f"(SELECT record_id FROM records WHERE composition IN (SELECT composition FROM {table}))"
+    where = f"WHERE grade IN {GRADES} AND record_id IN {records}"
     connection.execute(
         f"INSERT INTO outdated_members SELECT grade, group_id, family_id, record_id FROM members {where}"
     )
     connection.execute(f"DELETE FROM members {where}")
-    for table in ("matches", "grouped_compositions", "refused_pins"):
-        connection.execute(f"DELETE FROM {table} WHERE composition IN (SELECT composition FROM stale)")
-    connection.execute(
-        "DELETE FROM more_matches WHERE record_id NOT IN (SELECT record_id FROM members WHERE grade = 'near')"
-    )
-    return one_number(connection, "SELECT count(*) FROM changed_compositions")
+    for name in ("matches", "grouped_compositions", "refused_pins"):
+        connection.execute(f"DELETE FROM {name} WHERE composition IN (SELECT composition FROM {table})")
+    connection.execute(f"DELETE FROM more_matches WHERE record_id IN {records}")
 
 
-def _before(connection: duckdb.DuckDBPyConnection, records: str) -> None:
-    """Keep the members of grades same and near of `records` (a query of record ids) aside, and delete them."""
-    where = f"WHERE grade IN {GRADES} AND record_id IN ({records})"
-    columns = "grade, group_id, family_id, record_id"
-    connection.execute(
-        f"CREATE OR REPLACE TEMP TABLE members_before AS SELECT {columns} FROM members {where} "
-        f"UNION SELECT {columns} FROM outdated_members {where}"
-    )
-    for table in ("members", "outdated_members"):
-        connection.execute(f"DELETE FROM {table} {where}")
+def _note_changes(connection: duckdb.DuckDBPyConnection, run_id: int, records: str) -> None:
+    """Note how the ids of records (a query) that were grouped before have changed, and forget what they were."""
+    where = f"WHERE record_id IN ({records})"
+    connection.execute(f"CREATE OR REPLACE TEMP TABLE members_before AS SELECT * FROM outdated_members {where}")
+    if one_number(connection, "SELECT count(*) FROM members_before"):
+        connection.execute(f"DELETE FROM outdated_members {where}")
+        note_id_changes(connection, run_id)
 
 
-def _drop_left(connection: duckdb.DuckDBPyConnection, run_id: int) -> None:
-    """Rows of records and compositions that take no part in results any more."""
-    gone = (
-        "SELECT record_id FROM (SELECT record_id FROM members UNION SELECT record_id FROM outdated_members) "
-        "WHERE record_id NOT IN (SELECT record_id FROM current_records)"
-    )
-    _before(connection, gone)
-    note_id_changes(connection, run_id)
-    current = "SELECT composition FROM current_records"
-    for table in ("matches", "grouped_compositions", "refused_pins"):
-        connection.execute(f"DELETE FROM {table} WHERE composition NOT IN ({current})")
-    connection.execute("DELETE FROM more_matches WHERE record_id NOT IN (SELECT record_id FROM current_records)")
+_GONE = "record_id NOT IN (SELECT record_id FROM current_records)"
+
+
+def _begin(connection: duckdb.DuckDBPyConnection, run_id: int) -> None:
+    """Forget records that take no part in results any more, and set aside what was grouped of those that changed."""
+    _note_changes(connection, run_id, f"SELECT record_id FROM outdated_members WHERE {_GONE}")
+    if one_number(
+        connection, "SELECT count(*) FROM grouped_compositions JOIN changed_compositions USING (composition)"
+    ):
+        _set_aside(connection, "changed_compositions")
 
 
 def _write_single(connection: duckdb.DuckDBPyConnection, run_id: int) -> None:
     """Members of compositions with one key: one family and one group, kept by rank."""
     single = "(SELECT composition FROM changed_compositions WHERE plain)"
-    records = f"SELECT record_id FROM current_records WHERE composition IN {single}"
-    _before(connection, records)
-    for table in ("matches", "refused_pins"):
-        connection.execute(f"DELETE FROM {table} WHERE composition IN {single}")
-    connection.execute(f"DELETE FROM more_matches WHERE record_id IN ({records})")
     for grade in GRADES:
         connection.execute(
             "INSERT INTO members SELECT $1, first_value(r.record_id) OVER kept, min(r.record_id) OVER family, "
@@ -234,8 +243,7 @@ def _write_single(connection: duckdb.DuckDBPyConnection, run_id: int) -> None:
             "ORDER BY r.record_id",
             [grade],
         )
-    note_id_changes(connection, run_id)
-    connection.execute(f"DELETE FROM grouped_compositions WHERE composition IN {single}")
+    _note_changes(connection, run_id, f"SELECT record_id FROM current_records WHERE composition IN {single}")
     connection.execute(
         "INSERT INTO grouped_compositions SELECT composition, digest, ?, records, keys, 0, 0 FROM changed_compositions "
         "WHERE plain ORDER BY composition",
@@ -288,22 +296,21 @@ def _job(workspace: Workspace, settings: Settings, number: int, pack: list[tuple
 def _commit(connection: duckdb.DuckDBPyConnection, part: Part, run_id: int) -> None:
     matches, members, summary = (str(name(part)) for name in (matches_part, members_part, summary_part))
     connection.execute("CREATE OR REPLACE TEMP TABLE done AS SELECT * FROM read_parquet(?)", [summary])
-    connection.execute("CREATE OR REPLACE TEMP TABLE grouped AS SELECT * FROM read_parquet(?)", [members])
-    _before(connection, "SELECT record_id FROM grouped")
-    for table in ("matches", "grouped_compositions", "refused_pins"):
-        connection.execute(f"DELETE FROM {table} WHERE composition IN (SELECT composition FROM done)")
+    connection.execute(
+        "CREATE OR REPLACE TEMP TABLE grouped AS SELECT g.*, r.label, r.source FROM read_parquet(?) g "
+        "JOIN records r USING (record_id)",
+        [members],
+    )
     connection.execute("INSERT INTO refused_pins SELECT unnest(refused), composition FROM done ORDER BY ALL")
-    connection.execute("DELETE FROM more_matches WHERE record_id IN (SELECT record_id FROM grouped)")
     connection.execute("INSERT INTO matches BY NAME SELECT * FROM read_parquet(?)", [matches])
     for grade in GRADES:
         connection.execute(
-            f"INSERT INTO members SELECT ?, g.{grade}_group, g.{grade}_family, g.record_id, r.label, r.source, "
-            f"g.{grade}_group = g.record_id, g.{grade}_shift, g.{grade}_strain "
-            "FROM grouped g JOIN records r USING (record_id) ORDER BY g.record_id",
+            f"INSERT INTO members SELECT ?, g.{grade}_group, g.{grade}_family, g.record_id, g.label, g.source, "
+            f"g.{grade}_group = g.record_id, g.{grade}_shift, g.{grade}_strain FROM grouped g ORDER BY g.record_id",
             [grade],
         )
     connection.execute("INSERT INTO more_matches SELECT record_id FROM grouped WHERE more ORDER BY record_id")
-    note_id_changes(connection, run_id)
+    _note_changes(connection, run_id, "SELECT record_id FROM grouped")
     connection.execute(
         "INSERT INTO grouped_compositions SELECT composition, digest, ?, records, keys, candidates, verified FROM done "
         "ORDER BY composition",

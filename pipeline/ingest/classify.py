@@ -23,13 +23,19 @@ from .engine import Engine, done_in_order
 from .progress import Progress
 from .recompute import stored_batch
 from .reduce import ReduceJob, accepted_part, fixed, ragged, stored_job, token_lists
+from .touched import find_touched
 
 # The record with the smallest id of each key, where the types of that key are missing or came from another record: so
 # the types are a function of the records that are there, whatever order they came in.
 TO_CLASSIFY = (
-    "SELECT f.crystal_key, f.record_id FROM "
-    "(SELECT crystal_key, min(record_id) AS record_id FROM canonical_forms GROUP BY crystal_key) f "
-    "LEFT JOIN crystal_types t USING (crystal_key) WHERE t.typed_record_id IS DISTINCT FROM f.record_id"
+    "SELECT f.crystal_key, f.record_id FROM (SELECT crystal_key, min(record_id) AS record_id FROM canonical_forms "
+    "WHERE record_id IN (SELECT record_id FROM records WHERE composition IN (SELECT composition FROM touched)) "
+    "GROUP BY crystal_key) f LEFT JOIN crystal_types t USING (crystal_key) "
+    "WHERE t.typed_record_id IS DISTINCT FROM f.record_id"
+)
+_LEFT = (
+    "SELECT crystal_key FROM record_versions WHERE composition IN (SELECT composition FROM touched) "
+    "AND crystal_key NOT IN (SELECT crystal_key FROM canonical_forms)"
 )
 
 
@@ -39,7 +45,8 @@ def classify_keys(workspace: Workspace, settings: Settings, pool: Engine, progre
     Each chunk is committed by itself; after a kill what is missing is found again.
     """
     connection = workspace.connection
-    connection.execute("DELETE FROM crystal_types WHERE crystal_key NOT IN (SELECT crystal_key FROM canonical_forms)")
+    find_touched(connection, settings)
+    connection.execute(f"DELETE FROM crystal_types WHERE crystal_key IN ({_LEFT})")
     connection.execute(f"CREATE OR REPLACE TEMP TABLE to_classify AS {TO_CLASSIFY} ORDER BY f.crystal_key")
     total = one_number(connection, "SELECT count(*) FROM to_classify")
     if not total:

@@ -79,9 +79,11 @@ def _commit(connection: duckdb.DuckDBPyConnection, work: ChunkToCommit, part: Pa
     if len(work.unchanged):
         connection.register("unchanged_frame", work.unchanged.to_arrow())
         connection.execute(
-            "UPDATE records SET position = u.position, missing_since_run = NULL FROM unchanged_frame u "
+            "UPDATE records SET position = u.position, missing_since_run = NULL, "
+            "changed_run = CASE WHEN missing_since_run IS NULL THEN changed_run ELSE ? END FROM unchanged_frame u "
             "WHERE records.record_id = u.record_id "
-            "AND (records.position <> u.position OR records.missing_since_run IS NOT NULL)"
+            "AND (records.position <> u.position OR records.missing_since_run IS NOT NULL)",
+            [run],
         )
         connection.execute("INSERT INTO seen SELECT ?, file, record_id FROM unchanged_frame", [source])
         connection.unregister("unchanged_frame")
@@ -104,9 +106,11 @@ def _commit_incoming(connection: duckdb.DuckDBPyConnection, work: ChunkToCommit,
         "CASE WHEN r.record_id IS NULL THEN 'new' WHEN r.content_hash <> i.content_hash THEN 'replaced' "
         f"WHEN NOT ({same_facts}) THEN 'amended' ELSE 'unchanged' END AS change, "
         "coalesce(r.first_run, $1) AS first_run, "
-        "CASE WHEN r.content_hash = i.content_hash THEN r.content_run ELSE $1 END AS content_run "
+        "CASE WHEN r.content_hash = i.content_hash THEN r.content_run ELSE $1 END AS content_run, "
+        f"CASE WHEN r.content_hash = i.content_hash AND {same_facts} AND r.missing_since_run IS NULL AND NOT $3 "
+        "THEN r.changed_run ELSE $1 END AS changed_run "
         "FROM read_parquet($2) i LEFT JOIN records r USING (record_id)",
-        [run, part],
+        [run, part, work.recompute],
     )
     rows = connection.execute("SELECT change, count(*) FROM change GROUP BY change").fetchall()
     counts = {"new": 0, "amended": 0, "replaced": 0, "unchanged": 0, **dict(rows)}
@@ -115,8 +119,8 @@ def _commit_incoming(connection: duckdb.DuckDBPyConnection, work: ChunkToCommit,
     if counts["new"] < sum(counts.values()):
         _set_known_aside(connection, run, written)
     connection.execute(
-        f"INSERT INTO records (record_id, source, {RECORD_COLUMNS}, first_run, content_run, missing_since_run) "
-        f"SELECT i.record_id, $1, {RECORD_COLUMNS}, c.first_run, c.content_run, NULL "
+        f"INSERT INTO records (record_id, source, {RECORD_COLUMNS}, first_run, content_run, changed_run, "
+        f"missing_since_run) SELECT i.record_id, $1, {RECORD_COLUMNS}, c.first_run, c.content_run, c.changed_run, NULL "
         "FROM read_parquet($2) i JOIN change c USING (record_id) ORDER BY i.row",
         [source, part],
     )
@@ -136,8 +140,8 @@ def _set_known_aside(connection: duckdb.DuckDBPyConnection, run: int, written: s
     connection.execute(
         "INSERT INTO record_versions SELECT r.record_id, "
         "1 + (SELECT count(*) FROM record_versions v WHERE v.record_id = r.record_id), c.change, $1, r.content_hash, "
-        "x.crystal_key, r.energy_ev_per_site, r.theory, r.split, r.record_date, r.properties, s.cell_angstrom, "
-        "s.species, s.positions_fractional FROM records r JOIN change c USING (record_id) "
+        "r.composition, x.crystal_key, r.energy_ev_per_site, r.theory, r.split, r.record_date, r.properties, "
+        "s.cell_angstrom, s.species, s.positions_fractional FROM records r JOIN change c USING (record_id) "
         "JOIN structures s USING (record_id) JOIN canonical_forms x USING (record_id) "
         "WHERE c.change IN ('amended', 'replaced') ORDER BY r.file, r.position",
         [run],

@@ -42,13 +42,13 @@ def finish_source(
                 [name, file.file, file.sha256, file.size, found[file.file], accepted, rejected, run_id],
             )
             connection.execute(
-                f"UPDATE records SET missing_since_run = $3 WHERE source = $1 AND {inside} "
+                f"UPDATE records SET missing_since_run = $3, changed_run = $3 WHERE source = $1 AND {inside} "
                 "AND missing_since_run IS NULL AND record_id NOT IN (SELECT record_id FROM seen WHERE source = $1)",
                 [name, file.file, run_id],
             )
         for gone in source.gone:
             connection.execute(
-                "UPDATE records SET missing_since_run = $3 WHERE source = $1 "
+                "UPDATE records SET missing_since_run = $3, changed_run = $3 WHERE source = $1 "
                 "AND (file = $2 OR starts_with(file, $2 || '/')) AND missing_since_run IS NULL",
                 [name, gone, run_id],
             )

@@ -129,6 +129,7 @@ TABLES: dict[str, Table] = {
         ("properties", "JSON", "Every other column of the input."),
         ("first_run", "BIGINT", "Run that brought the record."),
         ("content_run", "BIGINT", "Run that brought its present content."),
+        ("changed_run", "BIGINT", "Run that last changed it: new, other content or properties, missing, or back."),
         ("missing_since_run", "BIGINT", "Run that no longer found it in its file; NULL while it is there."),
     ),
     "record_versions": _table(
@@ -138,6 +139,7 @@ TABLES: dict[str, Table] = {
         ("change", "VARCHAR", "What ended this state: amended or replaced."),
         ("ended_by_run", "BIGINT", "Run that ended this state."),
         ("content_hash", "VARCHAR", "Content hash of this state."),
+        ("composition", "VARCHAR", "Reduced composition of this state."),
         ("crystal_key", "VARCHAR", "Key of this state."),
         ("energy_ev_per_site", "DOUBLE", "Energy in eV per site of this state."),
         ("theory", "VARCHAR", "Level of theory of this state."),

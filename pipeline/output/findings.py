@@ -10,6 +10,7 @@ import duckdb
 from ..decisions.holds import make_holds
 from ..grouping.rank import rank_records
 from ..settings import Settings
+from ..store.rows import one_row
 
 
 @cache
@@ -23,10 +24,33 @@ def finding_queries() -> dict[str, tuple[str, str]]:
     return dict(sorted(found.items()))
 
 
+def note_findings_due(connection: duckdb.DuckDBPyConnection) -> None:
+    """Note that the findings are not those of the store any more; inside the caller's transaction."""
+    connection.execute("DELETE FROM store_facts WHERE name = 'findings_due'")
+    connection.execute("INSERT INTO store_facts VALUES ('findings_due', 'yes')")
+
+
+def findings_due(connection: duckdb.DuckDBPyConnection) -> bool:
+    """True where the store must not be published before `find_due`. Read-only."""
+    return one_row(connection, "SELECT 1 FROM store_facts WHERE name = 'findings_due'") is not None
+
+
+def find_due(connection: duckdb.DuckDBPyConnection, settings: Settings) -> None:
+    """`find_all` in a transaction of its own."""
+    connection.execute("BEGIN")
+    try:
+        find_all(connection, settings)
+        connection.execute("COMMIT")
+    except BaseException:
+        connection.execute("ROLLBACK")
+        raise
+
+
 def find_all(connection: duckdb.DuckDBPyConnection, settings: Settings) -> dict[str, int]:
     """Make `holds` and `findings` anew, inside the caller's transaction; the number of each code that was met."""
     rank_records(connection, settings)
     make_holds(connection, settings)
+    connection.execute("DELETE FROM store_facts WHERE name = 'findings_due'")
     connection.execute("DELETE FROM findings")
     values = {"energy_conflict": settings.energy_conflict_ev_per_site}
     for _, query in finding_queries().values():

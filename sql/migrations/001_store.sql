@@ -140,6 +140,7 @@ CREATE TABLE records (
     properties JSON,
     first_run BIGINT,
     content_run BIGINT,
+    changed_run BIGINT,
     missing_since_run BIGINT
 );
 COMMENT ON TABLE records IS 'One row an accepted record.';
@@ -165,6 +166,7 @@ COMMENT ON COLUMN records.record_date IS 'The record''s own date.';
 COMMENT ON COLUMN records.properties IS 'Every other column of the input.';
 COMMENT ON COLUMN records.first_run IS 'Run that brought the record.';
 COMMENT ON COLUMN records.content_run IS 'Run that brought its present content.';
+COMMENT ON COLUMN records.changed_run IS 'Run that last changed it: new, other content or properties, missing, or back.';
 COMMENT ON COLUMN records.missing_since_run IS 'Run that no longer found it in its file; NULL while it is there.';
 
 CREATE TABLE record_versions (
@@ -173,6 +175,7 @@ CREATE TABLE record_versions (
     change VARCHAR,
     ended_by_run BIGINT,
     content_hash VARCHAR,
+    composition VARCHAR,
     crystal_key VARCHAR,
     energy_ev_per_site DOUBLE,
     theory VARCHAR,
@@ -189,6 +192,7 @@ COMMENT ON COLUMN record_versions.version IS '1 for the first state, counting up
 COMMENT ON COLUMN record_versions.change IS 'What ended this state: amended or replaced.';
 COMMENT ON COLUMN record_versions.ended_by_run IS 'Run that ended this state.';
 COMMENT ON COLUMN record_versions.content_hash IS 'Content hash of this state.';
+COMMENT ON COLUMN record_versions.composition IS 'Reduced composition of this state.';
 COMMENT ON COLUMN record_versions.crystal_key IS 'Key of this state.';
 COMMENT ON COLUMN record_versions.energy_ev_per_site IS 'Energy in eV per site of this state.';
 COMMENT ON COLUMN record_versions.theory IS 'Level of theory of this state.';

@@ -1,0 +1,24 @@
+"""Groups brought up to date with the records, as far as that needs no comparison."""
+
+from __future__ import annotations
+
+import duckdb
+
+from ..ingest.touched import find_touched, note_grouped
+from ..settings import Settings
+from .exact import group_exact
+from .rank import rank_records
+from .stage import set_outdated_aside
+
+
+def update_groups(connection: duckdb.DuckDBPyConnection, run_id: int, settings: Settings) -> int:
+    """Make the groups of equal content and key anew where records changed, and set what `group` must compare again
+    aside. Inside the caller's transaction. Returns the number of compositions that wait for `group`, once any was
+    grouped.
+    """
+    find_touched(connection, settings)
+    rank_records(connection, settings, "touched")
+    group_exact(connection, run_id)
+    waiting = set_outdated_aside(connection, settings)
+    note_grouped(connection, run_id)
+    return waiting
