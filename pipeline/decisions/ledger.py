@@ -76,7 +76,8 @@ def require_grade(connection: duckdb.DuckDBPyConnection, grade: str) -> None:
 def plan_keep(
     connection: duckdb.DuckDBPyConnection, settings: Settings, grade: str, again: Sequence[str] = ()
 ) -> KeepPlan:
-    """Make the temporary tables `keep_new` and `keep_ended` of what is to be decided at a grade.
+    """Make the temporary tables `keep_new` and `keep_ended` of what is to be decided at a grade, from `keep_state`: the
+    records that are not kept or that a decision in force is about, with that decision, and whether nothing holds them.
 
     again: ids of held records that may be decided again. Raises UsageError where the store has no groups of the grade.
     """
@@ -86,29 +87,22 @@ def plan_keep(
         "NOT IN (SELECT record_id FROM holds WHERE grade = $grade AND record_id IS NOT NULL) "
         "OR list_contains($again, m.record_id))"
     )
-    values = {"grade": grade, "again": list(again)}
     connection.execute(
-        "CREATE OR REPLACE TEMP TABLE keep_free AS SELECT m.record_id, m.group_id, m.kept FROM members m "
-        f"WHERE m.grade = $grade AND {free}",
-        values,
+        "CREATE OR REPLACE TEMP TABLE keep_state AS SELECT m.record_id, m.group_id, m.kept, d.decision_id, "
+        f"d.kept_record_id, {free} AS free FROM members m "
+        "LEFT JOIN (SELECT * FROM decisions_in_force WHERE grade = $grade) d USING (record_id) "
+        "WHERE m.grade = $grade AND (NOT m.kept OR d.record_id IS NOT NULL)",
+        {"grade": grade, "again": list(again)},
     )
-    standing = "(SELECT * FROM decisions_in_force WHERE grade = $grade)"
     connection.execute(
-        "CREATE OR REPLACE TEMP TABLE keep_undecided AS SELECT f.record_id FROM keep_free f "
-        f"LEFT JOIN {standing} d ON d.record_id = f.record_id AND d.kept_record_id = f.group_id "
-        "WHERE NOT f.kept AND d.record_id IS NULL",
+        "CREATE OR REPLACE TEMP TABLE keep_new AS SELECT w.* FROM repeats w WHERE w.grade = $grade AND w.record_id IN "
+        "(SELECT record_id FROM keep_state WHERE free AND NOT kept AND kept_record_id IS DISTINCT FROM group_id)",
         {"grade": grade},
     )
     connection.execute(
-        "CREATE OR REPLACE TEMP TABLE keep_new AS SELECT w.* FROM repeats w "
-        "WHERE w.grade = $grade AND w.record_id IN (SELECT record_id FROM keep_undecided)",
-        {"grade": grade},
-    )
-    connection.execute(
-        "CREATE OR REPLACE TEMP TABLE keep_ended AS SELECT d.decision_id, d.record_id, d.kept_record_id, "
-        "CASE WHEN f.kept THEN 'lapsed' ELSE 'superseded' END AS ending "
-        f"FROM {standing} d JOIN keep_free f USING (record_id) WHERE f.group_id <> d.kept_record_id",
-        {"grade": grade},
+        "CREATE OR REPLACE TEMP TABLE keep_ended AS SELECT decision_id, record_id, kept_record_id, "
+        "CASE WHEN kept THEN 'lapsed' ELSE 'superseded' END AS ending "
+        "FROM keep_state WHERE free AND group_id <> kept_record_id"
     )
     deciding_rules(connection, settings, "SELECT record_id, kept_record_id FROM keep_new")
     ended = dict(connection.execute("SELECT ending, count(*) FROM keep_ended GROUP BY ending").fetchall())
@@ -126,10 +120,7 @@ def plan_keep(
         ended.get("lapsed", 0),
         one_number(
             connection,
-            "SELECT count(*) FROM members m WHERE m.grade = ? AND NOT m.kept "
-            "AND m.record_id NOT IN (SELECT record_id FROM keep_free) "
-            "AND m.record_id NOT IN (SELECT record_id FROM decisions_in_force WHERE grade = m.grade)",
-            [grade],
+            "SELECT count(*) FROM keep_state WHERE NOT free AND NOT kept AND decision_id IS NULL",
         ),
         one_number(connection, "SELECT count(*) FROM decisions_in_force WHERE grade = ?", [grade]),
         f"keep {grade} {' '.join(sorted(again))} {told[0] if told else ''}",
@@ -151,8 +142,8 @@ def planned_rows(connection: duckdb.DuckDBPyConnection, grade: str) -> list[dict
         "h.reason, h.message, m.witness_shift_angstrom, m.witness_strain "
         "FROM members m JOIN records k ON k.record_id = m.group_id JOIN holds h ON h.grade = m.grade "
         "AND (h.group_id = m.group_id OR h.record_id = m.record_id) "
-        "WHERE m.grade = ? AND NOT m.kept AND m.record_id NOT IN (SELECT record_id FROM keep_free) "
-        "AND m.record_id NOT IN (SELECT record_id FROM decisions_in_force d WHERE d.grade = m.grade)) "
+        "WHERE m.grade = ? AND m.record_id IN "
+        "(SELECT record_id FROM keep_state WHERE NOT free AND NOT kept AND decision_id IS NULL)) "
         "ORDER BY list_position(['set aside', 'set aside for another', 'kept again', 'held'], change), record, "
         "record_id, kept, rule, reason",
         [grade],

@@ -35,6 +35,13 @@ MOST_PAIRS = 3_000_000
 MOST_RECORDS = 10_000
 """A job ends at so many records: each job reads the store once from end to end, and holds its rows in memory."""
 
+GROUPED = "SELECT count(*) FROM grouped_compositions"
+WAITING = (
+    "SELECT count(DISTINCT composition) FROM current_records "
+    "WHERE composition NOT IN (SELECT composition FROM grouped_compositions)"
+)
+"""Query of the number of compositions that `group` has to work on."""
+
 LITTLE_WORK = 100_000
 """Possible pairs of keys that are compared before workers would have started."""
 
@@ -180,7 +187,7 @@ def set_outdated_aside(connection: duckdb.DuckDBPyConnection, settings: Settings
     So that no result speaks of records as they were; `group` makes them anew and compares the ids. To be called inside
     a transaction. Returns the number of compositions that wait for `group`, once any was grouped.
     """
-    if not one_number(connection, "SELECT count(*) FROM grouped_compositions"):
+    if not one_number(connection, GROUPED):
         return 0
     _digest(connection, settings, "touched")
     connection.execute(
@@ -189,11 +196,7 @@ def set_outdated_aside(connection: duckdb.DuckDBPyConnection, settings: Settings
     )
     # The composition of a replaced record may be another now: it is touched, and so is the one it had.
     _set_aside(connection, "stale")
-    return one_number(
-        connection,
-        "SELECT count(DISTINCT composition) FROM current_records "
-        "WHERE composition NOT IN (SELECT composition FROM grouped_compositions)",
-    )
+    return one_number(connection, WAITING)
 
 
 def _set_aside(connection: duckdb.DuckDBPyConnection, table: str) -> None:

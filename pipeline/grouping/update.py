@@ -6,9 +6,10 @@ import duckdb
 
 from ..ingest.touched import find_touched, note_grouped
 from ..settings import Settings
+from ..store.rows import one_number
 from .exact import group_exact
 from .rank import rank_records
-from .stage import set_outdated_aside
+from .stage import GROUPED, WAITING, set_outdated_aside
 
 
 def update_groups(connection: duckdb.DuckDBPyConnection, run_id: int, settings: Settings) -> int:
@@ -17,6 +18,8 @@ def update_groups(connection: duckdb.DuckDBPyConnection, run_id: int, settings: 
     grouped.
     """
     find_touched(connection, settings)
+    if not one_number(connection, "SELECT count(*) FROM touched"):
+        return one_number(connection, WAITING) if one_number(connection, GROUPED) else 0
     rank_records(connection, settings, "touched")
     group_exact(connection, run_id)
     waiting = set_outdated_aside(connection, settings)

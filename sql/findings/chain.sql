@@ -1,4 +1,12 @@
 -- A family of several groups: nearness is not transitive, and its ends do not match each other directly.
+WITH chains AS (
+    SELECT grade, family_id
+    FROM members
+    WHERE grade IN ('same', 'near')
+      AND family_id IN (SELECT family_id FROM members WHERE record_id <> family_id)
+    GROUP BY grade, family_id
+    HAVING count(*) FILTER (kept) > 1
+)
 SELECT
     'chain' AS code,
     min_by(m.group_id, x.rank) AS record_id,
@@ -9,7 +17,6 @@ SELECT
     format('a family of {} records falls into {} groups at grade {}: its ends do not match each other directly',
         count(*), count(DISTINCT m.group_id), m.grade) AS message
 FROM members m
+JOIN chains c ON c.grade = m.grade AND c.family_id = m.family_id
 JOIN ranks x USING (record_id)
-WHERE m.grade IN ('same', 'near')
 GROUP BY m.grade, m.family_id
-HAVING count(DISTINCT m.group_id) > 1

@@ -15,5 +15,6 @@ FROM members m
 JOIN chosen USING (grade)
 JOIN records r USING (record_id)
 WHERE r.energy_ev_per_site IS NOT NULL
+  AND m.group_id IN (SELECT group_id FROM members WHERE NOT kept)
 GROUP BY m.grade, m.group_id, r.theory
 HAVING max(r.energy_ev_per_site) - min(r.energy_ev_per_site) > $energy_conflict

@@ -8,6 +8,7 @@ energies AS (
     JOIN chosen USING (grade)
     JOIN records r USING (record_id)
     WHERE r.energy_ev_per_site IS NOT NULL
+      AND m.group_id IN (SELECT group_id FROM members WHERE NOT kept)
 ),
 others AS (
     SELECT e.record_id, median(o.energy) AS middle, count(*) AS number

@@ -10,6 +10,7 @@ of_split AS (
     JOIN records r USING (record_id)
     JOIN ranks x USING (record_id)
     WHERE r.split IS NOT NULL
+      AND m.family_id IN (SELECT family_id FROM members WHERE record_id <> family_id)
     GROUP BY m.grade, m.family_id, r.split
 )
 SELECT
