@@ -29,7 +29,7 @@ def test_a_second_run_does_nothing(tmp_path: Path, ingest):
     ingest(tmp_path / "t.csv")
     before = whole_store(tmp_path / "census.duckdb")
     mark = (tmp_path / "census.duckdb").stat().st_mtime_ns
-    assert ingest(tmp_path / "t.csv") == {"nothing_new": True}
+    assert ingest(tmp_path / "t.csv") == {"nothing_new": True, "files": 1}
     assert whole_store(tmp_path / "census.duckdb") == before
     assert (tmp_path / "census.duckdb").stat().st_mtime_ns == mark
 
