@@ -24,8 +24,9 @@ from .process_tree import MemoryOfTree
 from .structures import canonical_of, invented
 from .timing import Seconds, exponent
 
-QUADRATIC = 1.7
-"""An exponent of growth that is called quadratic: n log n over these sizes has 1.1."""
+QUADRATIC = 1.5
+"""Largest exponent of growth that is not called quadratic: n log n has 1.1 over these sizes, and what is linear with a
+small quadratic part comes to more than this before the quadratic part fills half of the time."""
 
 MOST_COPIES = 5000
 """Copies of one crystal."""
