@@ -25,8 +25,8 @@ from .structures import canonical_of, invented
 from .timing import Seconds, exponent
 
 QUADRATIC = 1.5
-"""Largest exponent of growth that is not called quadratic: n log n has 1.1 over these sizes, and what is linear with a
-small quadratic part comes to more than this before the quadratic part fills half of the time."""
+"""Largest exponent of growth that is not called quadratic: n log n has 1.1 over these sizes, and time of which half is
+linear and half quadratic has 1.5."""
 
 MOST_COPIES = 5000
 """Copies of one crystal."""
