@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import gc
 import os
 import shutil
 import subprocess
@@ -133,6 +134,14 @@ def _gone(pid: int) -> bool:
     """Whether the process has ended and nobody has asked for its outcome yet (no init process that does)."""
     state = subprocess.run(["ps", "-o", "stat=", "-p", str(pid)], capture_output=True, text=True).stdout
     return state.strip().startswith("Z") or not state.strip()
+
+
+def test_rubbish_is_collected_again_after_compiling():
+    assert gc.isenabled()
+    with pytest.raises(KeyError), sharing.without_collecting():
+        assert not gc.isenabled()
+        raise KeyError
+    assert gc.isenabled()
 
 
 def test_without_another_process_everything_goes_on_here(monkeypatch):

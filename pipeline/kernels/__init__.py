@@ -9,7 +9,7 @@ import time
 from collections.abc import Callable
 from importlib import import_module
 
-from .sharing import kept, second_process
+from .sharing import kept, second_process, without_collecting
 
 SHARES: tuple[tuple[str, ...], tuple[str, ...]] = (
     ("canonical", "translations", "lattice_type", "operations"),
@@ -34,7 +34,7 @@ def warm_up(report: Callable[[str], None] | None = None) -> float:
     are two cores, a second process compiles the second share meanwhile.
     """
     start = time.perf_counter()
-    with second_process(SHARES[1]) as shared:
+    with second_process(SHARES[1]) as shared, without_collecting():
         for name in MODULES:
             if name == SHARES[1][0]:
                 shared()
