@@ -150,3 +150,44 @@ def test_without_another_process_everything_goes_on_here(monkeypatch):
     monkeypatch.setattr(sys, "executable", "/nowhere/python")
     with sharing.second_process(("rows_filter",)) as shared:
         shared()
+
+
+WORK = """
+from importlib import import_module
+import numpy as np
+from lattice_census.cell.canonical import canonicalise
+from lattice_census.cell.crystal_type import classify_crystals
+from lattice_census.cell.lattice_type import classify_lattices
+from lattice_census.fingerprint.distributions import fingerprint
+from lattice_census.grouping.composition import group_composition
+from lattice_census.kernels import MODULES, warm_up
+from lattice_census.model.batch import select
+from lattice_census.tolerances import Tolerances
+from tests import strategies
+
+def kernels():
+    modules = [import_module("lattice_census.kernels." + name) for name in MODULES]
+    found = {k: v for m in modules for k, v in vars(m).items() if hasattr(v, "signatures")}
+    return {k: len(v.signatures) for k, v in found.items() if not v.targetoptions.get("no_cpython_wrapper")}
+
+warm_up()
+before = kernels()
+rng, tolerances = np.random.default_rng(5), Tolerances()
+kinds = strategies.random_crystal(rng, "oI", 4, ("Al", "O")), strategies.random_crystal(rng, "cP", 4, ("Al", "O"))
+given = [strategies.disguise(rng, c, max_index=2, noise=0.005) for c in kinds for _ in range(3)]
+found = canonicalise(strategies.batch(given), tolerances)
+crystals = found.crystals
+for batch in (crystals, select(crystals, np.arange(2))):
+    classify_crystals(batch, classify_lattices(batch.cells, tolerances, batch.periodicity), tolerances)
+    fingerprint(batch)
+ids = [f"{i:020x}" for i in range(len(crystals))]
+grouping = group_composition(crystals, found.crystal_key, ids, range(len(crystals)), tolerances)
+assert len(set(grouping.members["near"].family_id)) == 2
+assert max(before.values()) == 1 and kernels() == before, (before, kernels())
+"""
+
+
+def test_warming_up_compiles_what_the_work_then_calls():
+    """Read-only arrays and others are different kernels to numba: those that batches have are compiled beforehand."""
+    done = subprocess.run([sys.executable, "-c", WORK], cwd=PIPELINE.parent, capture_output=True, text=True)
+    assert done.returncode == 0, done.stderr
