@@ -20,6 +20,7 @@ from .options import (
     WaitOption,
     settings_from,
 )
+from .words import counted
 
 ReasonOption = Annotated[str, typer.Option("--reason", help="Why, for those who come after.")]
 
@@ -95,10 +96,11 @@ def keep(
 def keep_text(counts: dict[str, Any], dry_run: bool = False) -> str:
     """The counts of a run of keep in a sentence or two."""
     if counts.get("nothing_new"):
-        text = f"Nothing new to decide at grade {counts['grade']}; {counts['in_force']:,} records are set aside."
+        aside = counted(counts["in_force"], "record is", "records are")
+        text = f"Nothing new to decide at grade {counts['grade']}; {aside} set aside."
     else:
         head = "A dry run; nothing was changed. It would be: " if dry_run else f"Run {counts['run']}: "
-        records = "1 record" if counts["set_aside"] == 1 else f"{counts['set_aside']:,} records"
+        records = counted(counts["set_aside"], "record")
         text = (
             f"{head}{records} set aside at grade {counts['grade']}, "
             f"{counts['superseded']:,} for another kept record than before, {counts['kept_again']:,} kept again; "
@@ -228,7 +230,7 @@ def pin_export(
     except OSError as error:
         raise UsageError(f"{file} cannot be written: {error.strerror}.") from error
     facts = {"file": str(file), "pins": len(pins)}
-    typer.echo(json.dumps(facts) if as_json else f"{len(pins)} pins written to {file}.")
+    typer.echo(json.dumps(facts) if as_json else f"{counted(len(pins), 'pin')} written to {file}.")
 
 
 def pin_import(

@@ -10,6 +10,7 @@ import typer
 
 from .completion import grades, one_of
 from .options import DEFAULT_STORE, JsonOption, QuietOption, StoreOption
+from .words import counted
 
 
 def register(app: typer.Typer) -> None:
@@ -33,17 +34,18 @@ def status(store: StoreOption = DEFAULT_STORE, as_json: JsonOption = False) -> N
 
 def _status_text(facts: dict[str, Any]) -> str:
     lines = [
-        f"{facts['records']:,} records accepted, {facts['rejected']:,} refused; {facts['formulas']:,} formulas",
+        f"{counted(facts['records'], 'record')} accepted, {facts['rejected']:,} refused; "
+        f"{counted(facts['formulas'], 'formula')}",
         f"{facts['current']:,} take part in results ({facts['missing']:,} missing from their files, "
         f"{facts['withdrawn']:,} withdrawn)",
     ]
     for group in facts["groups"]:
         lines.append(
-            f"grade {group['grade']}: {group['groups']:,} groups, {group['set_aside']:,} records set aside, "
-            f"the largest group holds {group['largest']:,}"
+            f"grade {group['grade']}: {counted(group['groups'], 'group')}, "
+            f"{counted(group['set_aside'], 'record')} set aside, the largest group holds {group['largest']:,}"
         )
     for grade, count in facts["decisions"].items():
-        lines.append(f"decided at grade {grade}: {count:,} records set aside")
+        lines.append(f"decided at grade {grade}: {counted(count, 'record')} set aside")
     if facts["held"]:
         lines.append("held: " + ", ".join(f"{reason} {n:,}" for reason, n in facts["held"].items()))
     if facts["pins"]:
@@ -54,8 +56,8 @@ def _status_text(facts: dict[str, Any]) -> str:
         lines.append("refused: " + ", ".join(f"{reason} {n:,}" for reason, n in facts["refusals"].items()))
     for source in facts["sources"]:
         lines.append(
-            f"source {source['source']} ({source['kind']} {source['root']}): {source['files']:,} files, "
-            f"{source['records']:,} records, {source['rejected']:,} refused"
+            f"source {source['source']} ({source['kind']} {source['root']}): {counted(source['files'], 'file')}, "
+            f"{counted(source['records'], 'record')}, {source['rejected']:,} refused"
         )
     for run in facts["runs"]:
         lines.append(f"run {run['run']}: {run['command']}, {run['status']}, began {run['started_at'][:19]} UTC")

@@ -29,6 +29,7 @@ from .options import (
     fail_on,
     seconds,
 )
+from .words import counted
 
 if TYPE_CHECKING:
     from .night import Night
@@ -118,8 +119,8 @@ def schedule(
     def tell(deployment: str) -> None:
         if not quiet:
             typer.echo(
-                f"Serving {deployment} to {url}: at {when.text!r} by the clock of {clock}, {_counted(paths)} into "
-                f"{night.store}.\nRun it now: prefect deployment run {deployment}\n"
+                f"Serving {deployment} to {url}: at {when.text!r} by the clock of {clock}, "
+                f"{counted(len(paths), 'PATH')} into {night.store}.\nRun it now: prefect deployment run {deployment}\n"
                 "Ctrl-C ends it and pauses the schedule; the same command goes on.",
                 err=True,
             )
@@ -127,10 +128,6 @@ def schedule(
     serving.serve(night, serving.cron_schedule(when.text, clock), called, tell)
     if not quiet:
         typer.echo(f"Ended; the schedule of {called} is paused.", err=True)
-
-
-def _counted(paths: list[Path]) -> str:
-    return f"{len(paths)} PATH{'' if len(paths) == 1 else 's'}"
 
 
 def _check(night: Night) -> None:

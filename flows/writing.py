@@ -28,6 +28,7 @@ from .options import (
     fail_on,
     settings_from,
 )
+from .words import counted
 
 if TYPE_CHECKING:
     from lattice_census.ingest.scan import IngestRequest
@@ -181,7 +182,8 @@ def night_text(counts: dict[str, Any]) -> str:
     """The counts of a night in sentences."""
     from .curating import keep_text
 
-    lines = [ingest_text(counts["ingest"], False), group_text(counts["group"]), keep_text(counts["keep"])]
+    read = {**counts["ingest"], "compositions_waiting": 0}  # grouped right after
+    lines = [ingest_text(read, False), group_text(counts["group"]), keep_text(counts["keep"])]
     if counts["export"]:
         told = counts["export"]
         lines.append(f"Exported to {told['folder']}: {told['kept']:,} kept, {told['set_aside']:,} set aside.")
@@ -217,13 +219,14 @@ def group_text(counts: dict[str, Any]) -> str:
     if counts.get("nothing_new"):
         return "Nothing new to group."
     lines = [
-        f"Run {counts['run']}: grouped {counts['compositions']:,} compositions, compared {counts['compared']:,} pairs "
-        f"site by site; the store holds {counts['matches']:,} matches."
+        f"Run {counts['run']}: grouped {counted(counts['compositions'], 'composition')}, compared "
+        f"{counted(counts['compared'], 'pair')} site by site; the store holds "
+        f"{counted(counts['matches'], 'match', 'matches')}."
     ]
     for grade, groups in counts["groups"].items():
         lines.append(
-            f"Grade {grade}: {counts['families'][grade]:,} families, {groups:,} groups, "
-            f"{counts['set_aside'][grade]:,} records set aside."
+            f"Grade {grade}: {counted(counts['families'][grade], 'family', 'families')}, "
+            f"{counted(groups, 'group')}, {counted(counts['set_aside'][grade], 'record')} set aside."
         )
     if counts["findings"]:
         lines.append(
@@ -240,9 +243,9 @@ def ingest_text(counts: dict[str, Any], dry_run: bool) -> str:
         return "Nothing new: every file is as it was read before."
     lines = [
         ("A dry run; nothing was changed. It would be:\n" if dry_run else f"Run {counts['run']}: ")
-        + f"{counts['found']:,} records found in {counts['files_read']:,} files = "
+        + f"{counted(counts['found'], 'record')} found in {counted(counts['files_read'], 'file')} = "
         f"{counts['accepted']:,} accepted + {counts['rejected']:,} refused; "
-        f"{counts['files_unchanged']:,} files unchanged.",
+        f"{counted(counts['files_unchanged'], 'file')} unchanged.",
         f"Of the accepted {counts['new']:,} new, {counts['amended']:,} amended, {counts['replaced']:,} replaced, "
         f"{counts['unchanged']:,} unchanged; {counts['missing']:,} missing from their files.",
     ]
@@ -251,7 +254,7 @@ def ingest_text(counts: dict[str, Any], dry_run: bool) -> str:
         lines.append(f"Refused: {told}.")
     if counts["compositions_waiting"]:
         lines.append(
-            f"{counts['compositions_waiting']:,} compositions changed; `group` brings their groups up to date."
+            f"{counted(counts['compositions_waiting'], 'composition')} changed; `group` brings their groups up to date."
         )
     for source in counts["no_unit"]:
         lines.append(
@@ -276,8 +279,7 @@ def withdraw(
     from .deciding import withdraw as act
 
     done = act(store, what, reason, wait)
-    word = "record" if done["withdrawn"] == 1 else "records"
-    typer.echo(json.dumps(done) if as_json else f"Run {done['run']}: withdrew {done['withdrawn']:,} {word}.")
+    typer.echo(json.dumps(done) if as_json else f"Run {done['run']}: withdrew {counted(done['withdrawn'], 'record')}.")
 
 
 def undo(
@@ -293,22 +295,18 @@ def undo(
     typer.echo(json.dumps(done) if as_json else f"Run {done['run']}: {_undone_text(done)}.")
 
 
-def _counted(count: int, word: str) -> str:
-    return f"{count:,} {word}{'' if count == 1 else 's'}"
-
-
 def _undone_text(done: dict[str, Any]) -> str:
     parts = []
     if done["restored"]:
         parts.append(f"restored {', '.join(done['restored'])}")
     if done["decisions"]:
         parts.append(
-            f"{_counted(done['decisions'], 'decision')} taken back; `keep --again RECORD` lets one be made again"
+            f"{counted(done['decisions'], 'decision')} taken back; `keep --again RECORD` lets one be made again"
         )
     if done["decided_again"]:
-        parts.append(f"{_counted(done['decided_again'], 'earlier decision')} in force again")
+        parts.append(f"{counted(done['decided_again'], 'earlier decision')} in force again")
     if done["pins"]:
-        parts.append(f"{_counted(done['pins'], 'pin')} as before")
+        parts.append(f"{counted(done['pins'], 'pin')} as before")
     return "; ".join(parts)
 
 
