@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import fcntl
 import hashlib
 import pickle
 import platform
@@ -9,6 +10,7 @@ import socket
 import threading
 import time
 import uuid
+from contextlib import suppress
 from functools import cache
 from importlib.metadata import PackageNotFoundError, version
 from pathlib import Path
@@ -101,12 +103,22 @@ def do_job(expected: dict[str, str], packed: bytes) -> Any:
 
 
 def _warm_up() -> None:
-    from lattice_census.kernels import warm_up
+    """Compile the kernels, or take them from the cache.
+
+    The workers of one machine take turns: what the first has compiled, the others load.
+    """
+    from lattice_census.kernels import all_kept, warm_up
+    from lattice_census.kernels.cache import root
 
     with _warming:
-        if not _warmed:
+        if _warmed:
+            return
+        with (root() / "compiling.lock").open("a") as file:
+            if not all_kept():
+                with suppress(OSError):  # a file system without locks: each compiles for itself
+                    fcntl.flock(file, fcntl.LOCK_EX)
             warm_up()
-            _warmed.append(True)
+        _warmed.append(True)
 
 
 _warmed: list[bool] = []

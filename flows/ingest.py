@@ -88,7 +88,7 @@ def compile_kernels(settings: Settings, progress: Progress) -> None:
 
     Workers elsewhere do it themselves.
     """
-    if settings.engine != "processes":
+    if settings.scheduler:
         return
     if all_kept():
         warm_up()
