@@ -139,7 +139,7 @@ def test_the_manifest_is_read_again_and_hands_parts_out_on_this_machine(places, 
     for place in places:
         _, part, done = listed(place, tmp_path)
         manifest = Manifest(tmp_path / "manifest.jsonl", tmp_path / "fetched")
-        assert manifest.find(part) == done
+        assert manifest.find(part) == done and manifest.find(Part(f"{place}-2", part.name)) is None
         local = manifest.checked(part)
         assert pl.read_parquet(local.with_name("job-1.b.parquet").path).equals(FRAME)
         manifest.drop(part)

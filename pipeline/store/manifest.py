@@ -33,16 +33,16 @@ class Manifest:
         """path: the file with the entries. fetched: folder for copies of parts that lie elsewhere, made when needed."""
         self._path = path
         self._fetched = fetched
-        self._entries = _read(path)
+        self._entries = _read(path)  # by place and name: a run may be taken up with another place
 
     def find(self, part: Part) -> Done | None:
         """The entry of a part, None where it is not listed."""
-        return self._entries.get(part.name)
+        return self._entries.get(str(part))
 
     def add(self, part: Part, done: Done) -> None:
         """List a part as done."""
-        self._entries[part.name] = done
-        self._append({"part": part.name, "records": done.records, "files": [asdict(f) for f in done.files]})
+        self._entries[str(part)] = done
+        self._append({"part": str(part), "records": done.records, "files": [asdict(f) for f in done.files]})
 
     def checked(self, part: Part) -> Part:
         """The listed part on this machine, every file compared with its entry.
@@ -50,7 +50,7 @@ class Manifest:
         Raises WorkError naming the file that is missing, or is not what was written; its part is struck off and
         removed then, so that the next run makes it anew.
         """
-        done = self._entries.get(part.name)
+        done = self._entries.get(str(part))
         if done is None:
             raise WorkError(f"The part {part} is not in the manifest {self._path}: it is not known to be whole.")
         local = Part(str(self._fetched), part.name) if part.is_remote else part
@@ -67,10 +67,10 @@ class Manifest:
 
     def drop(self, part: Part) -> None:
         """Strike a part off and remove its files: it is in the store by now, or not to be used."""
-        done = self._entries.pop(part.name, None)
+        done = self._entries.pop(str(part), None)
         if done is None:
             return
-        self._append({"part": part.name, "dropped": True})
+        self._append({"part": str(part), "dropped": True})
         for file in done.files:
             part.with_name(file.name).unlink()
             if part.is_remote:
