@@ -60,15 +60,24 @@ def classify_keys(workspace: Workspace, settings: Settings, pool: Engine, progre
     return total
 
 
+READ_AT_ONCE = 16_000
+"""Rows that are read by one query: each runs through the whole table, so that chunk by chunk costs the square."""
+
+
 def _jobs(workspace: Workspace, settings: Settings, total: int) -> Iterator[ReduceJob]:
-    for number, start in enumerate(range(0, total, settings.chunk_records)):
+    size = settings.chunk_records
+    together = max(1, READ_AT_ONCE // size) * size
+    number = 0
+    for start in range(0, total, together):
         frame = workspace.connection.sql(
             "SELECT f.crystal_key, f.record_id, f.cell_angstrom, f.species, f.positions_fractional, r.periodicity "
             "FROM (SELECT record_id, crystal_key FROM to_classify ORDER BY crystal_key "
-            f"LIMIT {settings.chunk_records} OFFSET {start}) w "
+            f"LIMIT {together} OFFSET {start}) w "
             "JOIN canonical_forms f USING (record_id) JOIN records r USING (record_id) ORDER BY f.crystal_key"
         ).pl()
-        yield stored_job(workspace.place, "types", number, frame, settings)
+        for chunk in frame.iter_slices(size):
+            yield stored_job(workspace.place, "types", number, chunk, settings)
+            number += 1
 
 
 def _classify(job: ReduceJob) -> Done:
