@@ -27,13 +27,22 @@ DAMAGE: dict[str, tuple[str, ...]] = {
         "INSERT INTO decisions SELECT i, record_id, group_id, grade, 'sites', 'other_cell', 0, 0, 1, now()::TIMESTAMP, "
         "'x', NULL, NULL, NULL, NULL FROM members, range(2) t(i) WHERE grade = 'near' AND NOT kept",
     ),
+    "compositions-are-grouped-as-they-are": ("UPDATE grouped_compositions SET digest = 'of other records'",),
+    "kept-records-rank-first": (
+        "UPDATE members SET group_id = o.record_id, kept = members.record_id = o.record_id FROM (SELECT group_id, "
+        "min(record_id) AS record_id FROM members WHERE grade = 'key' AND NOT kept GROUP BY group_id) o "
+        "WHERE members.grade = 'key' AND members.group_id = o.group_id",
+    ),
     "record-ids-are-unique": ("INSERT INTO structures SELECT * FROM structures LIMIT 1",),
     "record-ids-are-hashes": ("UPDATE records SET label = 'elsewhere' WHERE label = 'gone'",),
     "records-are-complete": (
         "DELETE FROM crystal_types WHERE crystal_key IN (SELECT crystal_key FROM canonical_forms "
         "JOIN records USING (record_id) WHERE label = 'k1')",
     ),
-    "keys-are-typed-once": ("INSERT INTO crystal_types SELECT * FROM crystal_types LIMIT 1",),
+    "keys-are-typed-once": (
+        "INSERT INTO crystal_types SELECT * FROM crystal_types WHERE crystal_key IN "
+        "(SELECT crystal_key FROM canonical_forms JOIN records USING (record_id) WHERE label = 'gone')",
+    ),
     "keys-are-one-crystal": ("UPDATE records SET periodicity = 1 WHERE label = 'k2'",),
     "sites-are-counted": ("UPDATE records SET sites_given = sites_given + 1 WHERE label = 'k1'",),
     "counts-add-up": ("UPDATE files SET found = found + 1 WHERE file = 't.csv'",),
@@ -125,7 +134,15 @@ def test_a_healthy_store_passes(healthy: Path):
 
 
 @pytest.mark.parametrize(
-    "name", [*check_queries(), "families-hang-together", "witnesses-of-matches", "witnesses-of-keys"]
+    "name",
+    [
+        *check_queries(),
+        "families-hang-together",
+        "compositions-are-grouped-as-they-are",
+        "kept-records-rank-first",
+        "witnesses-of-matches",
+        "witnesses-of-keys",
+    ],
 )
 def test_each_check_notices_its_own_damage(tmp_path: Path, healthy: Path, name: str):
     store = shutil.copy(healthy, tmp_path / "census.duckdb")

@@ -10,18 +10,8 @@ from __future__ import annotations
 import duckdb
 import numpy as np
 
+from .digest import PAIR_PINS
 from .graph import components
-
-PAIR_PINS = (
-    "(SELECT p.kind, p.pin_id, least(p.record_id, p.other_record_id) AS record_a, "
-    "greatest(p.record_id, p.other_record_id) AS record_b, a.composition FROM pins_in_force p "
-    "JOIN current_records a ON a.record_id = p.record_id JOIN current_records b ON b.record_id = p.other_record_id "
-    "WHERE p.kind IN ('apart', 'together') AND a.composition = b.composition "
-    "AND NOT EXISTS (SELECT 1 FROM pins_in_force q WHERE q.kind IN ('apart', 'together') AND q.kind <> p.kind "
-    "AND least(q.record_id, q.other_record_id) = least(p.record_id, p.other_record_id) "
-    "AND greatest(q.record_id, q.other_record_id) = greatest(p.record_id, p.other_record_id)))"
-)
-"""Query of the pins `apart` and `together` that take part: kind, pin_id, record_a < record_b, composition."""
 
 
 def part_pinned(connection: duckdb.DuckDBPyConnection, grade: str) -> None:

@@ -22,8 +22,8 @@ from ..settings import Settings
 from ..store.parts import Part, raw_and_part
 from ..store.rows import one_number
 from ..store.workspace import Workspace
+from .digest import PAIR_PINS, digest_compositions
 from .exact import note_id_changes
-from .pinned import PAIR_PINS
 from .rank import rank_records
 from .work import GroupJob, PairPin, group_chunk, matches_part, members_part, summary_part
 
@@ -154,30 +154,7 @@ def _find_changed(connection: duckdb.DuckDBPyConnection, settings: Settings, eve
         )
     connection.execute(f"CREATE OR REPLACE TEMP TABLE looked_at AS {looked_at}")
     rank_records(connection, settings, "looked_at")
-    _digest(connection, settings, "looked_at", everything)
-
-
-def _digest(connection: duckdb.DuckDBPyConnection, settings: Settings, within: str, everything: bool = False) -> None:
-    """The temporary table `changed_compositions` (composition, digest, records, keys, plain) of the compositions in
-    the table `within`, whose records are ranked, that have another digest than they were grouped with. Plain ones have
-    one key and no pins, and need no comparison."""
-    verify = json.dumps(settings.of_stage("verify") | settings.of_stage("canonical"), sort_keys=True)
-    connection.execute(
-        "CREATE OR REPLACE TEMP TABLE changed_compositions AS SELECT n.* FROM ("
-        "SELECT r.composition, count(*) AS records, count(DISTINCT f.crystal_key) AS keys, "
-        "count(DISTINCT f.crystal_key) = 1 AND any_value(p.pins) IS NULL AS plain, "
-        "sha256($settings || string_agg(r.record_id || f.crystal_key || x.place, '' ORDER BY r.record_id) "
-        "|| coalesce(any_value(p.pins), '')) AS digest "
-        "FROM current_records r JOIN canonical_forms f USING (record_id) "
-        "JOIN (SELECT k.record_id, row_number() OVER (PARTITION BY i.composition ORDER BY k.rank) AS place "
-        "FROM ranks k JOIN records i USING (record_id)) x USING (record_id) "
-        "LEFT JOIN (SELECT composition, string_agg(kind || pin_id || record_a || record_b, '' ORDER BY pin_id) AS pins "
-        f"FROM {PAIR_PINS} GROUP BY composition) p ON p.composition = r.composition "
-        f"WHERE r.composition IN (SELECT composition FROM {within}) GROUP BY r.composition) n "
-        "LEFT JOIN grouped_compositions g USING (composition) "
-        "WHERE $everything OR g.digest IS DISTINCT FROM n.digest",
-        {"settings": verify, "everything": everything},
-    )
+    digest_compositions(connection, settings, "looked_at", everything)
 
 
 def set_outdated_aside(connection: duckdb.DuckDBPyConnection, settings: Settings) -> int:
@@ -189,7 +166,7 @@ def set_outdated_aside(connection: duckdb.DuckDBPyConnection, settings: Settings
     """
     if not one_number(connection, GROUPED):
         return 0
-    _digest(connection, settings, "touched")
+    digest_compositions(connection, settings, "touched")
     connection.execute(
         "CREATE OR REPLACE TEMP TABLE stale AS SELECT composition FROM touched WHERE composition IN "
         "(SELECT composition FROM changed_compositions) OR composition NOT IN (SELECT composition FROM current_records)"

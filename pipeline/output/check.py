@@ -16,6 +16,7 @@ import duckdb
 
 from ..model.refusals import REASONS
 from ..store.rows import one_number
+from .check_groups import changed_since_grouped, kept_out_of_order
 from .check_witnesses import audit_keys, audit_matches
 from .tables import json_row
 
@@ -95,16 +96,28 @@ def check_store(
         columns = tuple(d[0] for d in answer.description or ())
         rows = sorted(answer.fetchall(), key=repr)
         add(Outcome(name, sentence, len(rows), columns, tuple(rows[:SHOWN])))
-    rows = unconnected_families(connection)
-    add(
-        Outcome(
+    for name, sentence, columns, found in (
+        (
             "families-hang-together",
             "The keys of a family at grade same or near hang together by stored matches of that grade.",
-            len(rows),
             ("grade", "family_id", "parts"),
-            tuple(rows[:SHOWN]),
-        )
-    )
+            unconnected_families,
+        ),
+        (
+            "compositions-are-grouped-as-they-are",
+            "A grouped composition has the records, keys, ranks and pins that it was grouped from.",
+            ("composition", "records"),
+            changed_since_grouped,
+        ),
+        (
+            "kept-records-rank-first",
+            "The kept record of a group of equal content or key is the best of it by the keep rules.",
+            ("grade", "group_id", "record_id"),
+            kept_out_of_order,
+        ),
+    ):
+        rows = found(connection)
+        add(Outcome(name, sentence, len(rows), columns, tuple(rows[:SHOWN])))
     for name, sentence, audit in (
         (
             "witnesses-of-matches",

@@ -27,8 +27,8 @@ import numpy as np
 from scipy.sparse import coo_matrix
 from scipy.sparse.csgraph import minimum_spanning_tree
 
+from ..grouping.digest import PAIR_PINS
 from ..grouping.groups import stars
-from ..grouping.pinned import PAIR_PINS
 from ..grouping.rank import rank_records
 from ..model.batch import Floats, Ints
 from ..settings import Settings

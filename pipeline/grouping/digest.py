@@ -1,0 +1,45 @@
+"""What a composition was grouped from, as one digest: its records, their keys and order, its pins, and the settings."""
+
+from __future__ import annotations
+
+import json
+
+import duckdb
+
+from ..settings import Settings
+
+PAIR_PINS = (
+    "(SELECT p.kind, p.pin_id, least(p.record_id, p.other_record_id) AS record_a, "
+    "greatest(p.record_id, p.other_record_id) AS record_b, a.composition FROM pins_in_force p "
+    "JOIN current_records a ON a.record_id = p.record_id JOIN current_records b ON b.record_id = p.other_record_id "
+    "WHERE p.kind IN ('apart', 'together') AND a.composition = b.composition "
+    "AND NOT EXISTS (SELECT 1 FROM pins_in_force q WHERE q.kind IN ('apart', 'together') AND q.kind <> p.kind "
+    "AND least(q.record_id, q.other_record_id) = least(p.record_id, p.other_record_id) "
+    "AND greatest(q.record_id, q.other_record_id) = greatest(p.record_id, p.other_record_id)))"
+)
+"""Query of the pins `apart` and `together` that take part: kind, pin_id, record_a < record_b, composition."""
+
+
+def digest_compositions(
+    connection: duckdb.DuckDBPyConnection, settings: Settings, within: str, everything: bool = False
+) -> None:
+    """The temporary table `changed_compositions` (composition, digest, records, keys, plain) of the compositions in
+    the table `within`, whose records are ranked, that have another digest than they were grouped with. Plain ones have
+    one key and no pins, and need no comparison."""
+    verify = json.dumps(settings.of_stage("verify") | settings.of_stage("canonical"), sort_keys=True)
+    connection.execute(
+        "CREATE OR REPLACE TEMP TABLE changed_compositions AS SELECT n.* FROM ("
+        "SELECT r.composition, count(*) AS records, count(DISTINCT f.crystal_key) AS keys, "
+        "count(DISTINCT f.crystal_key) = 1 AND any_value(p.pins) IS NULL AS plain, "
+        "sha256($settings || string_agg(r.record_id || f.crystal_key || x.place, '' ORDER BY r.record_id) "
+        "|| coalesce(any_value(p.pins), '')) AS digest "
+        "FROM current_records r JOIN canonical_forms f USING (record_id) "
+        "JOIN (SELECT k.record_id, row_number() OVER (PARTITION BY i.composition ORDER BY k.rank) AS place "
+        "FROM ranks k JOIN records i USING (record_id)) x USING (record_id) "
+        "LEFT JOIN (SELECT composition, string_agg(kind || pin_id || record_a || record_b, '' ORDER BY pin_id) AS pins "
+        f"FROM {PAIR_PINS} GROUP BY composition) p ON p.composition = r.composition "
+        f"WHERE r.composition IN (SELECT composition FROM {within}) GROUP BY r.composition) n "
+        "LEFT JOIN grouped_compositions g USING (composition) "
+        "WHERE $everything OR g.digest IS DISTINCT FROM n.digest",
+        {"settings": verify, "everything": everything},
+    )
