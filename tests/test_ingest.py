@@ -7,6 +7,8 @@ from pathlib import Path
 
 import numpy as np
 
+from lattice_census.ingest import classify
+
 from . import strategies
 from .broken_files import GOOD_CIF, broken_files
 from .tables_of_structures import crystals, query, rows_of, text_of, write_csv
@@ -122,3 +124,14 @@ def test_energies_are_brought_to_one_unit(tmp_path: Path, ingest):
     assert query(tmp_path / "census.duckdb", "SELECT energy_ev_per_site FROM records WHERE file = 'none.csv'") == [
         (None,)
     ]
+
+
+def test_types_do_not_depend_on_how_many_keys_are_read_at_once(tmp_path: Path, ingest, monkeypatch):
+    path = write_csv(tmp_path / "t.csv", rows_of(crystals(13, sites=3)))
+    whole, pieces = tmp_path / "whole.duckdb", tmp_path / "pieces.duckdb"
+    ingest(path, store=whole)
+    monkeypatch.setattr(classify, "READ_AT_ONCE", 5)
+    ingest(path, store=pieces, chunk_records=2)
+    types = "SELECT * FROM crystal_types ORDER BY crystal_key"
+    assert len(query(whole, types)) == 13
+    assert query(pieces, types) == query(whole, types)
