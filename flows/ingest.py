@@ -21,6 +21,7 @@ from lattice_census.ingest.progress import Progress, Step
 from lattice_census.ingest.recompute import recompute_canonical
 from lattice_census.ingest.scan import IngestRequest
 from lattice_census.kernels import all_kept, warm_up
+from lattice_census.kernels.cache import PACKAGE, root
 from lattice_census.output.findings import find_due, findings_due, note_findings_due
 from lattice_census.readers.walk import walk
 from lattice_census.settings import Settings
@@ -94,7 +95,9 @@ def compile_kernels(settings: Settings, progress: Progress) -> None:
         warm_up()
         return
     progress.note("Compiling the kernels, once; this takes about half a minute.")
-    progress.note(f"Compiled the kernels in {warm_up():.0f} s; later runs take them from the cache.")
+    seconds = warm_up()
+    place = "the cache" if root().is_relative_to(PACKAGE) else str(root())
+    progress.note(f"Compiled the kernels in {seconds:.0f} s; later runs take them from {place}.")
 
 
 def _close(workspace: Workspace, work: IngestWork) -> dict[str, Any]:
