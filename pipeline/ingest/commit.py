@@ -101,6 +101,9 @@ def _commit(connection: duckdb.DuckDBPyConnection, work: ChunkToCommit, part: Pa
 def _commit_incoming(connection: duckdb.DuckDBPyConnection, work: ChunkToCommit, part: str) -> dict[str, int]:
     run, source = work.run_id, work.source
     same_facts = " AND ".join(f"r.{c} IS NOT DISTINCT FROM i.{c}" for c in FACT_COLUMNS)
+    # The comparison reads all that the store knows of its records: it is asked first whether it knows any of these.
+    ours = "SELECT 1 FROM records WHERE record_id IN (SELECT record_id FROM read_parquet(?)) LIMIT 1"
+    known = "records" if one_row(connection, ours, [part]) else "(SELECT * FROM records WHERE false)"
     connection.execute(
         "CREATE OR REPLACE TEMP TABLE change AS SELECT i.record_id, "
         "CASE WHEN r.record_id IS NULL THEN 'new' WHEN r.content_hash <> i.content_hash THEN 'replaced' "
@@ -109,7 +112,7 @@ def _commit_incoming(connection: duckdb.DuckDBPyConnection, work: ChunkToCommit,
         "CASE WHEN r.content_hash = i.content_hash THEN r.content_run ELSE $1 END AS content_run, "
         f"CASE WHEN r.content_hash = i.content_hash AND {same_facts} AND r.missing_since_run IS NULL AND NOT $3 "
         "THEN r.changed_run ELSE $1 END AS changed_run "
-        "FROM read_parquet($2) i LEFT JOIN records r USING (record_id)",
+        f"FROM read_parquet($2) i LEFT JOIN {known} r USING (record_id)",
         [run, part, work.recompute],
     )
     rows = connection.execute("SELECT change, count(*) FROM change GROUP BY change").fetchall()

@@ -71,6 +71,8 @@ def read_source(workspace: Workspace, work: IngestWork, source: SourceToRead, po
     progress.start(f"reading {source.source}", None)
 
     waiting: dict[int, ChunkToCommit] = {}
+    # Asked before the first chunk is in: later every source has records, and each chunk would run through all of them.
+    compare = not source.force and one_row(connection, _KNOWN, [source.source]) is not None
 
     def jobs() -> Iterator[ReduceJob]:
         for chunk in raw_chunks(source, work.settings):
@@ -78,7 +80,7 @@ def read_source(workspace: Workspace, work: IngestWork, source: SourceToRead, po
             if is_committed(connection, work.run.run_id, source.source, chunk):
                 progress.advance(len(chunk.records))
                 continue
-            yield _job(workspace, work, source, chunk, waiting)
+            yield _job(workspace, work, source, chunk, compare, waiting)
 
     for job, _ in done_in_order(pool, reduce_chunk, jobs(), workspace.manifest):
         todo = waiting.pop(job.number)
@@ -90,11 +92,16 @@ def read_source(workspace: Workspace, work: IngestWork, source: SourceToRead, po
 
 
 def _job(
-    workspace: Workspace, work: IngestWork, source: SourceToRead, chunk: RawChunk, waiting: dict[int, ChunkToCommit]
+    workspace: Workspace,
+    work: IngestWork,
+    source: SourceToRead,
+    chunk: RawChunk,
+    compare: bool,
+    waiting: dict[int, ChunkToCommit],
 ) -> ReduceJob:
     """Leave out what the store holds just so, write the rest for a worker, and remember what to commit."""
     unchanged = chunk.records.clear().select("record_id", "file", "position")
-    if not source.force and one_row(workspace.connection, _KNOWN, [source.source]):
+    if compare:
         unchanged = _unchanged(workspace.connection, chunk)
     todo = chunk.records.join(unchanged, on="record_id", how="anti", maintain_order="left")
     name = part_name(chunk.digest, unchanged["record_id"].to_list(), work.settings, source.settings)
