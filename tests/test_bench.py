@@ -18,7 +18,8 @@ from tests.bench import __main__ as command
 from tests.bench import collection, copies, end_to_end, group, start, structures, workers
 from tests.bench.collection import ONE_COMPOSITION, ONE_CRYSTAL, Kind
 from tests.bench.figures import Figure, Options, Report, table
-from tests.bench.invented import APART, MOST_GIVEN, MOST_SITES
+from tests.bench.invented import APART, MOST_SITES
+from tests.bench.invented_disguises import MOST_GIVEN
 from tests.bench.known_answer import check_answer
 from tests.bench.night import nights
 from tests.bench.process_tree import MemoryOfTree

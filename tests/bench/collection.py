@@ -25,21 +25,12 @@ from dataclasses import dataclass
 from pathlib import Path
 
 import numpy as np
-from numba import njit
 
 from lattice_census.model.batch import CrystalBatch
 
-from .invented import (
-    ELEMENTS,
-    MOST_GIVEN,
-    STARTS,
-    SUBLATTICES,
-    UNIMODULAR,
-    crystal_number,
-    disguise,
-    formula_number,
-    make_crystal,
-)
+from .compiled import compiled
+from .invented import ELEMENTS, crystal_number, formula_number, make_crystal
+from .invented_disguises import MOST_GIVEN, STARTS, SUBLATTICES, UNIMODULAR, disguise
 
 BLOCK = 2000
 """Records that are made at a time."""
@@ -92,7 +83,7 @@ class Records:
     """(n,) bool."""
 
 
-@njit(cache=True)
+@compiled
 def _truth(seed, copies, start, stop):
     out = np.empty(stop - start, np.int64)
     for i in range(start, stop):
@@ -100,7 +91,7 @@ def _truth(seed, copies, start, stop):
     return out
 
 
-@njit(cache=True)
+@compiled
 def _make(seed, copies, common, formulas, largest_noise, start, stop, most, unimodular, sublattices, starts):
     n = stop - start
     cells, counts = np.empty((n, 3, 3)), np.empty(n, np.int64)
