@@ -99,7 +99,7 @@ def test_what_is_refused_before_anything_is_served(folder: Path):
         (["t.csv", "t.csv", "--source", "x"], 2, "give one PATH"),
         (["t.csv", "--fail-on", "known"], 2, "choose from rejects, findings"),
         (["t.csv", "--store", "text.duckdb"], 3, "cannot be opened"),
-        (["t.csv", "--store", "none/x.duckdb"], 3, "cannot be written"),
+        (["t.csv", "--store", "none/x.duckdb"], 2, "there is no folder"),
     ):
         said = here("schedule", *arguments, cwd=folder)
         assert said.returncode == code and told in said.stderr, (arguments, said.stderr)
@@ -145,7 +145,7 @@ def server(tmp_path: Path) -> Iterator[dict[str, str]]:
         env=environment, stdout=subprocess.DEVNULL, stderr=subprocess.DEVNULL, start_new_session=True,
     )  # fmt: skip
     try:
-        assert _within(90, lambda: _answers(port)), "the server did not start"
+        assert _within(180, lambda: _answers(port)), "the server did not start"
         yield home
     finally:
         os.killpg(process.pid, signal.SIGTERM)
@@ -205,11 +205,11 @@ def test_a_real_server_keeps_the_time_and_runs_nights(folder: Path, server: dict
     serving = subprocess.Popen([sys.executable, "-c", MAIN, *words], cwd=folder, env=environment, stderr=log,
                                stdout=log, start_new_session=True)  # fmt: skip
     try:
-        assert _within(60, lambda: "Serving run/night" in (folder / "log").read_text()), (folder / "log").read_text()
+        assert _within(120, lambda: "Serving run/night" in (folder / "log").read_text()), (folder / "log").read_text()
         facts = asked(new_runs=2)
         assert facts["cron"] == ["15 3 * * *"] and facts["zone"] == ["Europe/Berlin"] and facts["limit"] == 1
         assert facts["store"] == str(folder / "s.duckdb") and not facts["paused"]
-        assert _within(150, lambda: [r[2] for r in asked()["runs"]] == ["COMPLETED"] * 2), asked()
+        assert _within(300, lambda: [r[2] for r in asked()["runs"]] == ["COMPLETED"] * 2), asked()
         first, second = asked()["runs"]
         assert first[1] <= second[0], "two nights of one store at a time"
         assert "1 record set aside" in first[3] and "Nothing new" in second[3]
