@@ -33,13 +33,16 @@ from .timing import Seconds, each, ratio, reference, timed
 J = TypeVar("J")
 R = TypeVar("R")
 
+FEW, MANY = 2000, 10_000
+"""Records of a table, unless asked for; many where two workers are to have chunks of ordinary size."""
+
 
 def run(options: Options) -> Report:
     """Times of the parts, and of the whole with one worker and with two."""
     repeat = options.times(3)
-    batch, _, read, reduced = read_and_reduce(options, repeat)
+    batch, _, read, reduced = read_and_reduce(options, repeat, MANY)
     theirs, count = reference(batch, repeat), len(batch)
-    path = table(options)
+    path = table(options, MANY)
     one, two = (_repeated(options.scratch, path, workers, count, repeat) for workers in (1, 2))
     return Report(
         "ingest",
@@ -57,7 +60,7 @@ def run(options: Options) -> Report:
     )
 
 
-def table(options: Options, default: int = 2000) -> Path:
+def table(options: Options, default: int = FEW) -> Path:
     """The file asked for, or an invented table of CIF texts, made once."""
     if options.file is not None:
         return options.file
@@ -66,10 +69,10 @@ def table(options: Options, default: int = 2000) -> Path:
     return path if path.exists() else write_table(path, Kind(), 0, count)
 
 
-def read_and_reduce(options: Options, repeat: int) -> tuple[Any, Any, Seconds, Seconds]:
+def read_and_reduce(options: Options, repeat: int, default: int = FEW) -> tuple[Any, Any, Seconds, Seconds]:
     """(parsed batch, canonical crystals, seconds to read the table, seconds to reduce), one core."""
     warm_up()
-    path = table(options)
+    path = table(options, default)
     settings = resolve_settings({"orchestrator": "direct"}, {})
     with Workspace(fresh(options.scratch / "scan.duckdb"), "bench") as workspace:
         source = scan(workspace.connection, IngestRequest((path,)), settings).sources[0]
@@ -80,7 +83,7 @@ def read_and_reduce(options: Options, repeat: int) -> tuple[Any, Any, Seconds, S
 
     parsed, read_time = timed(read, repeat)
     if options.file is None:
-        assert len(parsed.batch) == options.count(2000), f"only {len(parsed.batch)} records could be read"
+        assert len(parsed.batch) == options.count(default), f"only {len(parsed.batch)} records could be read"
     canonical, reduce_time = timed(lambda: canonicalise(parsed.batch, settings.tolerances), repeat)
     return parsed.batch, canonical, read_time, reduce_time
 
