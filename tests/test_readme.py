@@ -16,7 +16,7 @@ from .test_curating_commands import census
 README = (ROOT / "README.md").read_text(encoding="utf-8")
 QUICK = {"demo": ["--direct", "--quiet"], "run": ["--direct", "--quiet", "--workers", "1"],
          "known": ["--quiet", "--workers", "1"]}  # fmt: skip
-CUT = re.compile(r"\\.\\.\\.")
+CUT = re.compile(re.escape(re.escape("...")))
 
 
 def section(title: str) -> str:
