@@ -54,7 +54,7 @@ def put(title: str, folder: Path) -> int:
         for line in shown:
             if line.strip() == "...":
                 continue
-            pattern = re.compile(CUT.sub(".*", re.escape(line.rstrip())))
+            pattern = re.compile(CUT.sub(".*", re.escape(line.rstrip())) + "(?:  .*)?")  # further columns may be cut
             assert any(pattern.fullmatch(there.rstrip()) for there in printed), (words, line, done.stdout)
         count += 1
     return count
