@@ -40,10 +40,9 @@ from dataclasses import dataclass
 
 import numpy as np
 from numpy.typing import NDArray
-from scipy.spatial import cKDTree
 
 from ..fingerprint.distributions import Distributions, column_means, distributions
-from ..kernels.rows_filter import coordinates_close, pairs_allowed
+from ..kernels.rows_filter import close_counts, close_pairs, coordinates_close, pairs_allowed
 from ..model.batch import CrystalBatch, Floats, Ints
 from .preparation import Prepared, prepare, transform, transform_slack
 from .window import Window
@@ -53,6 +52,12 @@ TREE_COLUMNS = (0, 5, 14, 33, 63)
 
 QUANTILE_COLUMNS = (0, 3, 11, 29)
 """Columns of the rows of which quantiles are taken."""
+
+SPREAD_COLUMNS = 24
+"""Coordinates that are compared first, those that spread most."""
+
+ROUNDING = 1e-5
+"""What coordinates in float32 may add to the slack."""
 
 BLOCK = 2_000_000
 """Pairs handled at a time."""
@@ -66,7 +71,7 @@ class Candidates:
     """(p, 2) int64, first < second, ascending."""
 
     steps: dict[str, int]
-    """Pairs after each step: volumes and tree, means, sorted columns, rows."""
+    """Pairs after each step: the coordinates that spread most, all of them, sorted columns, rows."""
 
 
 def mean_coordinates(
@@ -139,9 +144,6 @@ class Search:
     coordinates: Floats
     """(n, w): transformed means, then quantiles; crystals of a match agree to `slack` in every one."""
 
-    columns: Ints
-    """Those that the tree holds."""
-
     slack: float
 
 
@@ -158,8 +160,16 @@ def start_search(
     scaled = means.reshape(len(batch), -1, k) * scales[:, None, None].astype(np.float32)
     averages = mean_coordinates(scaled, prepared.volumes, window, batch.periodicity)
     coordinates = np.concatenate([averages, quantile_coordinates(prepared)], axis=1)
-    columns = np.concatenate([tree_columns(averages.shape[1], k), np.arange(averages.shape[1], coordinates.shape[1])])
-    return Search(window, found, scales, prepared, coordinates, columns, transform_slack(window.strain))
+    return Search(window, found, scales, prepared, coordinates, transform_slack(window.strain))
+
+
+def spread_first(coordinates: Floats) -> tuple[Ints, NDArray[np.float32]]:
+    """(order, points): rows in the order of the coordinate that spreads most, and of each the SPREAD_COLUMNS that
+    spread most, in float32: pairs that are close in all coordinates lie in an interval, and most others differ in one
+    of the first few."""
+    widest = np.argsort(-np.ptp(coordinates, axis=0), kind="stable") if len(coordinates) else np.arange(1)
+    order = np.argsort(coordinates[:, widest[0]], kind="stable")
+    return order, np.ascontiguousarray(coordinates[order][:, widest[:SPREAD_COLUMNS]], dtype=np.float32)
 
 
 def filtered(prepared: Prepared, coordinates: Floats, pairs: Ints, slack: float) -> Ints:
@@ -175,10 +185,12 @@ def filtered(prepared: Prepared, coordinates: Floats, pairs: Ints, slack: float)
 
 def candidate_pairs(search: Search) -> Candidates:
     """Every pair of a batch of one composition that could match within the window."""
-    tree = cKDTree(search.coordinates[:, search.columns])
-    pairs = tree.query_pairs(search.slack, p=np.inf, output_type="ndarray").astype(np.int64).reshape(-1, 2)
+    order, points = spread_first(search.coordinates)
+    slack = search.slack + ROUNDING
+    listed = int(close_counts(points, slack).sum()) // 2
+    pairs = np.sort(order[close_pairs(points, slack, np.zeros(len(order), np.bool_), listed)], axis=1)
     agree = pairs[coordinates_agree(search.coordinates, pairs, search.slack)]
     allowed, columns = allowed_pairs(search.prepared, agree)
     left = agree[allowed]
     left = left[np.lexsort((left[:, 1], left[:, 0]))]
-    return Candidates(left, {"tree": len(pairs), "means": len(agree), "columns": columns, "rows": len(left)})
+    return Candidates(left, {"spread": len(pairs), "means": len(agree), "columns": columns, "rows": len(left)})

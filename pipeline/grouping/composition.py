@@ -13,13 +13,13 @@ from dataclasses import dataclass, replace
 
 import numpy as np
 from numpy.typing import NDArray
-from scipy.spatial import cKDTree
 
 from ..errors import UsageError
 from ..fingerprint.distributions import NEIGHBOURS
+from ..kernels.rows_filter import close_counts, close_pairs
 from ..model.batch import CrystalBatch, Floats, Ints, select
 from ..tolerances import Tolerances
-from .candidates import Search, filtered
+from .candidates import ROUNDING, Search, filtered, spread_first
 from .crowds import Crowd
 from .graph import components, spanning_forest
 from .groups import stars
@@ -31,8 +31,8 @@ from .witness import Witnesses
 CROWDED = 200
 """A node with more candidates than this is crowded (crowds.py)."""
 
-DENSE = 1000
-"""Pairs a node that the tree may leave before listing them costs too much."""
+DENSE = 200
+"""Pairs a node that the coordinates may leave before listing them costs too much."""
 
 CROWD_NEIGHBOURS = 8
 """Nearest crowded nodes in the fingerprint that a crowded node is verified against in any case."""
@@ -217,26 +217,21 @@ def _verify_parts(by: Searcher, store: PairStore, part: Ints) -> Ints:
 def _verify_plain(by: Searcher, store: PairStore, crowded_at: int) -> tuple[Ints, Ints]:
     """Verify every candidate pair but those of two crowded nodes; returns the crowded nodes and the candidates.
 
-    Where the tree alone leaves over DENSE pairs a node, its pairs are not even listed between nodes that have more than
-    that; elsewhere a node is crowded that has more than `crowded_at` candidates after all filters.
+    Where the coordinates alone leave over DENSE pairs a node, its pairs are not even listed between nodes that have
+    more than that; elsewhere a node is crowded that has more than `crowded_at` candidates after all filters.
     """
     search, owner = by.search, by.owner
     n = len(owner)
-    points = search.coordinates[:, search.columns]
-    slack = search.slack
-    tree = cKDTree(points)
+    order, points = spread_first(search.coordinates)
+    slack = search.slack + ROUNDING
+    counts = close_counts(points, slack)
     dense = np.zeros(n, bool)
-    if n == store.nodes and int(tree.count_neighbors(tree, slack, p=np.inf)) > DENSE * n:
-        dense = np.asarray(tree.query_ball_point(points, slack, p=np.inf, return_length=True)) > DENSE
-        plain = np.flatnonzero(~dense)
-        balls = tree.query_ball_point(points[plain], slack, p=np.inf)
-        first = np.repeat(plain, [len(b) for b in balls])
-        second = np.concatenate([np.asarray(b, np.int64) for b in balls]) if len(balls) else np.zeros(0, np.int64)
-        pairs = np.stack([np.minimum(first, second), np.maximum(first, second)], axis=1)
-        pairs = np.unique(pairs[first != second], axis=0)
-    else:
-        pairs = tree.query_pairs(slack, p=np.inf, output_type="ndarray").astype(np.int64).reshape(-1, 2)
-    pairs = owner[filtered(search.prepared, search.coordinates, pairs, slack)]
+    listed = int(counts.sum()) // 2
+    if n == store.nodes and 2 * listed > DENSE * n:
+        dense[order] = counts > DENSE
+        listed = int(counts[counts <= DENSE].sum())
+    pairs = np.sort(order[close_pairs(points, slack, dense[order], listed)], axis=1)
+    pairs = owner[filtered(search.prepared, search.coordinates, pairs, search.slack)]
     pairs = np.unique(np.sort(pairs[pairs[:, 0] != pairs[:, 1]], axis=1), axis=0)
     crowded = np.zeros(store.nodes, bool)
     if n == store.nodes:  # with several versions of a node every pair is verified

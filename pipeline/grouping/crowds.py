@@ -22,7 +22,7 @@ from scipy.spatial import cKDTree
 from ..fingerprint.distributions import Distributions
 from ..kernels.rows_filter import rows_close
 from ..model.batch import Ints, select
-from .candidates import Search, allowed_pairs, start_search
+from .candidates import ROUNDING, SPREAD_COLUMNS, Search, allowed_pairs, start_search
 from .graph import components
 from .pair_store import Limit, PairStore
 from .window import Window
@@ -33,9 +33,6 @@ CHUNK = 512
 
 NEAR_COLUMNS = 4
 """Coordinates in which near ones are looked up: few, because a tree of many prunes nothing."""
-
-SPREAD_COLUMNS = 24
-"""Coordinates that are compared, those first that spread most; the rows are compared after them."""
 
 
 class Crowd:
@@ -76,7 +73,7 @@ class Crowd:
         slack = self._inner.slack
         start = int(np.searchsorted(self._line, self._line[place] - slack, side="left"))
         stop = int(np.searchsorted(self._line, self._line[place] + slack, side="right"))
-        return rows_close(self._points, start, stop, place, slack + 1e-5)  # rounded to float32
+        return rows_close(self._points, start, stop, place, slack + ROUNDING)
 
     def partners(self, store: PairStore, node: int, free: Ints) -> Ints:
         """Crowded nodes among `free` (ascending) that match a crowded node; verified as far as needed."""

@@ -155,9 +155,58 @@ def rows_close(coordinates: Singles, start: int, stop: int, row: int, slack: flo
     return out[:used]
 
 
+@kernel
+def close_counts(points: Singles, slack: float) -> Ints:
+    """(n,): for each row of `points` (n, w), ascending in column 0, how many others agree to the slack in every column.
+
+    Rows that agree lie in an interval of column 0; of those in it, most differ in one of the next few columns.
+    """
+    n = points.shape[0]
+    out = np.zeros(n, np.int64)
+    for i in range(n):
+        for j in range(i + 1, n):
+            if points[j, 0] - points[i, 0] > slack:
+                break
+            close = True
+            for t in range(1, points.shape[1]):
+                if abs(points[i, t] - points[j, t]) > slack:
+                    close = False
+                    break
+            if close:
+                out[i] += 1
+                out[j] += 1
+    return out
+
+
+@kernel
+def close_pairs(points: Singles, slack: float, passed_over: NDArray[np.bool_], most: int) -> Ints:
+    """(p, 2): the pairs i < j of `close_counts` but those of two rows passed over; there are at most `most`."""
+    n = points.shape[0]
+    out = np.empty((most, 2), np.int64)
+    used = 0
+    for i in range(n):
+        for j in range(i + 1, n):
+            if points[j, 0] - points[i, 0] > slack:
+                break
+            if passed_over[i] and passed_over[j]:
+                continue
+            close = True
+            for t in range(1, points.shape[1]):
+                if abs(points[i, t] - points[j, t]) > slack:
+                    close = False
+                    break
+            if close:
+                out[used, 0] = i
+                out[used, 1] = j
+                used += 1
+    return out[:used]
+
+
 def warm_up() -> None:
     """Compile the kernels that are called from Python."""
     rows, blocks, pairs = np.zeros((1, 4), np.float32), np.array([[0, 1]]), np.zeros((1, 2), np.int64)
     pairs_allowed(pairs, blocks, rows, sort_columns(rows, blocks), rows.copy(), np.array([[4]]), 0.1)
     coordinates_close(np.zeros((1, 2)), pairs, 0.1)
     rows_close(np.zeros((1, 2), np.float32), 0, 1, 0, 0.1)
+    close_counts(np.zeros((1, 2), np.float32), 0.1)
+    close_pairs(np.zeros((1, 2), np.float32), 0.1, np.zeros(1, np.bool_), 0)
