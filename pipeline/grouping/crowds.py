@@ -27,7 +27,7 @@ from .graph import components
 from .pair_store import Limit, PairStore
 from .window import Window
 
-CHUNK = 512
+CHUNK = 32
 """Pairs between components that are verified before the components are looked at again."""
 
 
@@ -109,6 +109,7 @@ class Crowd:
             pairs = pairs[~store.has(pairs[:, 0] * store.nodes + pairs[:, 1])]
             while len(pairs):
                 store.ensure(pairs[:CHUNK])
-                label = components(store.nodes, store.edges(self.limit)[0])
+                for partner in store.neighbours(pairs[:CHUNK], self.limit, node).tolist():
+                    label[label == label[partner]] = label[node]
                 pairs = pairs[CHUNK:]
                 pairs = pairs[label[pairs[:, 0]] != label[pairs[:, 1]]]

@@ -11,6 +11,10 @@ from ..errors import StoreError
 from .schema import known_version, stored_version
 
 
+WRITER_MEMORY = "2GiB"
+"""Memory that the database may take in a run; beyond it, it uses a folder beside the work store."""
+
+
 def open_for_reading(path: Path) -> duckdb.DuckDBPyConnection:
     """The published store, read-only. Raises StoreError (missing, held by a writer, damaged, newer, or no store)."""
     if not path.exists():
@@ -28,6 +32,7 @@ def no_store(path: Path) -> StoreError:
 def open_for_writing(path: Path) -> duckdb.DuckDBPyConnection:
     """A work store that this process alone holds; made when missing. Raises StoreError."""
     connection = _connect(path, read_only=False)
+    connection.execute("SET memory_limit = ?", [WRITER_MEMORY])
     if stored_version(connection) is not None:
         _check_version(connection, path)
     return connection
