@@ -81,11 +81,11 @@ def run_night(
     )  # fmt: skip
 
 
-def collection(scratch: Path, kind: Kind, count: int, workers: int, start: int = 0) -> Path:
+def collection(scratch: Path, kind: Kind, count: int, workers: int) -> Path:
     """The folder of an invented collection; made once in a scratch folder."""
-    folder = scratch / f"collection-{abs(hash(kind)):x}-{start}-{count}"
+    folder = scratch / f"collection-{abs(hash(kind)):x}-0-{count}"
     if not (folder / "whole").exists():
-        write_collection(folder / "records", kind, start, count, workers)
+        write_collection(folder / "records", kind, 0, count, workers)
         (folder / "whole").touch()
     return folder / "records"
 

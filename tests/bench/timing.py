@@ -78,12 +78,18 @@ def exponent(sizes: Sequence[float], values: Sequence[float]) -> float:
     return float(np.polyfit(np.log(sizes), np.log(values), 1)[0])
 
 
-def reference_numbers(batch: CrystalBatch, most: int = 300) -> list[int]:
-    """Space groups of the first `most` crystals by the reference."""
+def sure_numbers(batch: CrystalBatch, most: int = 300) -> list[int | None]:
+    """Space groups of the first `most` crystals by the reference, where it finds the same ones at half and at twice the
+    tolerance; else None: near the tolerance two programs may differ."""
+    at = [_numbers(batch, most, symprec) for symprec in (0.005, 0.01, 0.02)]
+    return [found[1] if len(set(found)) == 1 else None for found in zip(*at, strict=True)]
+
+
+def _numbers(batch: CrystalBatch, most: int, symprec: float) -> list[int]:
     out = []
     for i in range(min(most, len(batch))):
         sites = batch.sites(i)
         cell = (batch.cells[i], batch.positions[sites], batch.species[sites] + 1)
-        found = spglib.get_symmetry_dataset(cell, symprec=0.01)
+        found = spglib.get_symmetry_dataset(cell, symprec=symprec)
         out.append(found.number if found is not None else 0)
     return out
