@@ -34,9 +34,7 @@ def cell_from_parameters(a, b, c, alpha, beta, gamma) -> np.ndarray:
     al, be, ga = np.radians([alpha, beta, gamma])
     cx = np.cos(be)
     cy = (np.cos(al) - np.cos(be) * np.cos(ga)) / np.sin(ga)
-    return np.array(
-        [[a, 0, 0], [b * np.cos(ga), b * np.sin(ga), 0], [c * cx, c * cy, c * np.sqrt(1 - cx**2 - cy**2)]]
-    )
+    return np.array([[a, 0, 0], [b * np.cos(ga), b * np.sin(ga), 0], [c * cx, c * cy, c * np.sqrt(1 - cx**2 - cy**2)]])
 
 
 def conventional_cell(rng: np.random.Generator, lattice_type: str) -> np.ndarray:
@@ -75,7 +73,10 @@ def least_distance(cell: np.ndarray, positions: np.ndarray) -> float:
 
 
 def random_crystal(
-    rng: np.random.Generator, lattice_type: str = "aP", sites: int = 4, elements: tuple[str, ...] = ("Si", "O"),
+    rng: np.random.Generator,
+    lattice_type: str = "aP",
+    sites: int = 4,
+    elements: tuple[str, ...] = ("Si", "O"),
     apart: float = 1.2,
 ) -> Crystal:
     """A crystal of random sites on a random primitive lattice of the type: the basis has no symmetry.
@@ -115,7 +116,11 @@ def reduced(cell: np.ndarray) -> np.ndarray:
 
 
 def disguise(
-    rng: np.random.Generator, crystal: Crystal, max_index: int = 8, noise: float = 0.0, strain: float = 0.0,
+    rng: np.random.Generator,
+    crystal: Crystal,
+    max_index: int = 8,
+    noise: float = 0.0,
+    strain: float = 0.0,
     handed: int | None = None,
 ) -> Crystal:
     """The same crystal under another cell, origin, order and orientation; with noise if asked for.

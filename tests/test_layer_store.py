@@ -205,8 +205,10 @@ def test_exported_layers_are_read_as_the_same_layers(store: Path, tmp_path: Path
         listed = {row["label"]: row for row in csv.DictReader(f)}
     for label, row in listed.items():
         assert row["periodicity"] == ("3" if label == "graphene-bulk" else "2")
-        assert (row["volume_angstrom3_per_site"] == "") == (row["area_angstrom2_per_site"] != "") == (
-            row["periodicity"] == "2"
+        assert (
+            (row["volume_angstrom3_per_site"] == "")
+            == (row["area_angstrom2_per_site"] != "")
+            == (row["periodicity"] == "2")
         )
     cifs = [p.read_text(encoding="utf-8") for p in sorted((tmp_path / "cif").rglob("*.cif"))]
     assert sum("_census_periodic_directions 2" in t for t in cifs) == len(cifs) - 1

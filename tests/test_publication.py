@@ -80,7 +80,7 @@ def test_a_lost_work_folder_goes_on_from_the_published_file(tmp_path: Path, inge
     path = write_csv(tmp_path / "a.csv", rows_of(crystals(4)))
     ingest(path)
     (tmp_path / "census.duckdb.work").rename(tmp_path / "gone")
-    assert ingest(path) ["nothing_new"]
+    assert ingest(path)["nothing_new"]
     write_csv(path, rows_of(crystals(6)))
     counts = ingest(path)
     assert (counts["new"], counts["unchanged"]) == (2, 4)
