@@ -41,7 +41,8 @@ def note_id_changes(connection: duckdb.DuckDBPyConnection, run_id: int) -> None:
     """Rows of `id_changes` for records of temp.members_before whose group or family id is another now, or none."""
     connection.execute(
         "INSERT INTO id_changes SELECT $1, b.grade, b.record_id, b.group_id, m.group_id, b.family_id, m.family_id "
-        "FROM members_before b LEFT JOIN members m USING (grade, record_id) "
+        "FROM members_before b LEFT JOIN (SELECT * FROM members WHERE record_id IN "
+        "(SELECT record_id FROM members_before)) m USING (grade, record_id) "
         "WHERE m.group_id IS DISTINCT FROM b.group_id OR m.family_id IS DISTINCT FROM b.family_id "
         "ORDER BY b.grade, b.record_id",
         [run_id],

@@ -29,11 +29,14 @@ from .work import GroupJob, PairPin, group_chunk, matches_part, members_part, su
 
 GRADES = ("same", "near")
 
-MOST_PAIRS = 3_000_000
+MOST_PAIRS = 30_000_000
 """A job ends at so many possible pairs of keys (the square of the keys of its compositions)."""
 
 MOST_RECORDS = 10_000
-"""A job ends at so many records: each job reads the store once from end to end, and holds its rows in memory."""
+"""A job ends at so many records."""
+
+READ_RECORDS = 100_000
+"""So many records are read for jobs to come; they are held in memory until those are given out."""
 
 GROUPED = "SELECT count(*) FROM grouped_compositions"
 WAITING = (
@@ -237,40 +240,55 @@ def _jobs(workspace: Workspace, settings: Settings) -> Iterator[GroupJob]:
         "SELECT composition, digest, keys, records FROM changed_compositions WHERE NOT plain "
         "ORDER BY keys DESC, composition"
     ).fetchall()
+    packs: list[list[tuple[str, str]]] = []
     pack: list[tuple[str, str]] = []
-    pairs = 0
-    held = 0
+    pairs = held = waiting = 0
     number = 0
     for composition, digest, keys, records in rows:
         pack.append((composition, digest))
         pairs += keys * keys
         held += records
         if pairs >= MOST_PAIRS or held >= MOST_RECORDS:
-            yield _job(workspace, settings, number, pack)
-            pack, pairs, held, number = [], 0, 0, number + 1
+            packs.append(pack)
+            waiting += held
+            pack, pairs, held = [], 0, 0
+        if waiting >= READ_RECORDS:
+            yield from _read_jobs(workspace, settings, number, packs)
+            number += len(packs)
+            packs, waiting = [], 0
     if pack:
-        yield _job(workspace, settings, number, pack)
+        packs.append(pack)
+    if packs:
+        yield from _read_jobs(workspace, settings, number, packs)
 
 
-def _job(workspace: Workspace, settings: Settings, number: int, pack: list[tuple[str, str]]) -> GroupJob:
+def _read_jobs(
+    workspace: Workspace, settings: Settings, number: int, packs: list[list[tuple[str, str]]]
+) -> Iterator[GroupJob]:
+    """The jobs of some packs, numbered from `number`: their rows are read at once, since each query goes through all
+    records."""
     connection = workspace.connection
-    names, digests = zip(*pack, strict=True)
+    names, digests = zip(*(both for pack in packs for both in pack), strict=True)
+    numbers = [number + i for i, pack in enumerate(packs) for _ in pack]
     connection.execute(
-        "CREATE OR REPLACE TEMP TABLE packed AS SELECT unnest(?::VARCHAR[]) AS composition, "
-        "unnest(?::VARCHAR[]) AS digest", [list(names), list(digests)],
+        "CREATE OR REPLACE TEMP TABLE packed AS SELECT unnest(?::INTEGER[]) AS job, unnest(?::VARCHAR[]) AS "
+        "composition, unnest(?::VARCHAR[]) AS digest", [numbers, list(names), list(digests)],
     )  # fmt: skip
     frame = connection.sql(
-        "SELECT r.composition, p.digest, r.record_id, f.crystal_key, k.rank, f.cell_angstrom, f.species, "
+        "SELECT p.job, r.composition, p.digest, r.record_id, f.crystal_key, k.rank, f.cell_angstrom, f.species, "
         "f.positions_fractional, r.periodicity, f.matrix FROM packed p JOIN current_records r USING (composition) "
-        "JOIN canonical_forms f USING (record_id) JOIN ranks k USING (record_id) ORDER BY r.composition, r.record_id"
+        "JOIN canonical_forms f USING (record_id) JOIN ranks k USING (record_id) "
+        "ORDER BY p.job, r.composition, r.record_id"
     ).pl()
     pins = connection.execute(
-        f"SELECT composition, pin_id, kind, record_a, record_b FROM {PAIR_PINS} JOIN packed USING (composition) "
+        f"SELECT job, composition, pin_id, kind, record_a, record_b FROM {PAIR_PINS} JOIN packed USING (composition) "
         "ORDER BY pin_id"
     ).fetchall()
     decisive = [settings.of_stage(stage) for stage in ("canonical", "fingerprint", "verify")]
-    raw, part = raw_and_part(workspace.place, "group", frame, decisive, pins)
-    return GroupJob(number, raw, part, settings, tuple(PairPin(*pin) for pin in pins))
+    for (job,), rows in frame.partition_by("job", as_dict=True, include_key=False, maintain_order=True).items():
+        own = [pin[1:] for pin in pins if pin[0] == job]
+        raw, part = raw_and_part(workspace.place, "group", rows, decisive, own)
+        yield GroupJob(job, raw, part, settings, tuple(PairPin(*pin) for pin in own))
 
 
 def _commit(connection: duckdb.DuckDBPyConnection, part: Part, run_id: int) -> None:

@@ -10,9 +10,12 @@ import duckdb
 from ..errors import StoreError
 from .schema import known_version, stored_version
 
-
 WRITER_MEMORY = "2GiB"
 """Memory that the database may take in a run; beyond it, it uses a folder beside the work store."""
+
+
+LOG_SIZE = "256MiB"
+"""Size at which the write-ahead log is worked into a work store: each time costs more, the larger the store is."""
 
 
 def open_for_reading(path: Path) -> duckdb.DuckDBPyConnection:
@@ -33,6 +36,7 @@ def open_for_writing(path: Path) -> duckdb.DuckDBPyConnection:
     """A work store that this process alone holds; made when missing. Raises StoreError."""
     connection = _connect(path, read_only=False)
     connection.execute("SET memory_limit = ?", [WRITER_MEMORY])
+    connection.execute("SET wal_autocheckpoint = ?", [LOG_SIZE])
     if stored_version(connection) is not None:
         _check_version(connection, path)
     return connection
