@@ -80,7 +80,7 @@ def keep(
     resolved = settings_from(settings, assignments, store, {"orchestrator": "direct" if direct else None})
     job = KeepJob(store, resolved, grade, note, tuple(again or ()), recompute, dry_run, wait)
     way = "direct" if dry_run else resolved.orchestrator  # what changes nothing is no flow to look back on
-    counts = drive("keep", way, quiet, store, lambda step, _: steps(job, step))
+    counts = drive("keep", way, quiet, store, lambda step, _: steps(job, step), must_exist=True)
     if as_json:
         typer.echo(json.dumps(counts))
         return

@@ -6,6 +6,8 @@ import os
 import sys
 from typing import TYPE_CHECKING, Any, NoReturn
 
+from lattice_census.store.connect import has_store, no_store
+
 from .failures import STOPPED
 
 if TYPE_CHECKING:
@@ -18,11 +20,21 @@ if TYPE_CHECKING:
 
 
 def drive(
-    name: str, orchestrator: str, quiet: bool, store: Path, body: Callable[[Step, Progress], dict[str, Any]]
+    name: str,
+    orchestrator: str,
+    quiet: bool,
+    store: Path,
+    body: Callable[[Step, Progress], dict[str, Any]],
+    must_exist: bool = False,
 ) -> dict[str, Any]:
-    """body(step, progress), as a Prefect flow of this name that shows its counts there, or directly; the counts."""
+    """body(step, progress), as a Prefect flow of this name that shows its counts there, or directly; the counts.
+
+    must_exist: StoreError where there is no store, before anything is started.
+    """
     from .progress import progress_for
 
+    if must_exist and not has_store(store):
+        raise no_store(store)
     with progress_for(quiet) as progress:
         if orchestrator == "direct":
             from lattice_census.ingest.progress import call_directly

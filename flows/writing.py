@@ -132,7 +132,9 @@ def group(
     told = [*(assignments or []), *elsewhere(engine, scheduler, parts)]
     resolved = _resolved(store, settings, told, direct, workers)
     job = GroupJob(store, resolved, everything, recompute, wait)
-    counts = drive("group", resolved.orchestrator, quiet, store, lambda step, progress: steps(job, step, progress))
+    counts = drive(
+        "group", resolved.orchestrator, quiet, store, lambda step, progress: steps(job, step, progress), must_exist=True
+    )
     typer.echo(json.dumps(counts) if as_json else group_text(counts))
     return 1 if "findings" in failing and findings_of(store) else 0
 

@@ -189,5 +189,5 @@ assert max(before.values()) == 1 and kernels() == before, (before, kernels())
 
 def test_warming_up_compiles_what_the_work_then_calls():
     """Read-only arrays and others are different kernels to numba: those that batches have are compiled beforehand."""
-    done = subprocess.run([sys.executable, "-c", WORK], cwd=PIPELINE.parent, capture_output=True, text=True)
+    done = subprocess.run([sys.executable, "-c", WORK], cwd=Path(__file__).parents[1], capture_output=True, text=True)
     assert done.returncode == 0, done.stderr

@@ -27,6 +27,11 @@ def open_for_reading(path: Path) -> duckdb.DuckDBPyConnection:
     return connection
 
 
+def has_store(published: Path) -> bool:
+    """Whether the published file or its work store is there."""
+    return published.exists() or (published.with_name(published.name + ".work") / "work.duckdb").exists()
+
+
 def no_store(path: Path) -> StoreError:
     """The error for a store that is not there."""
     return StoreError(f"There is no store at {path}. Make one with: lattice-census ingest PATH --store {path}")

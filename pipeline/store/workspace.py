@@ -14,7 +14,7 @@ from typing import Any
 import duckdb
 
 from ..errors import StoreError
-from .connect import no_store, open_for_reading, open_for_writing
+from .connect import has_store, no_store, open_for_reading, open_for_writing
 from .lock import WriterLock
 from .manifest import Manifest
 from .parts import empty_place, make_place, place_named
@@ -59,7 +59,7 @@ class Workspace:
     def __enter__(self) -> Workspace:
         if self.published.is_dir():
             raise StoreError(f"{self.published} is a folder; --store names a file.")
-        if self._must_exist and not self.published.exists() and not self.work_file.exists():
+        if self._must_exist and not has_store(self.published):
             raise no_store(self.published)
         try:
             self._lock.__enter__()
