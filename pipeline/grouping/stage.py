@@ -33,7 +33,9 @@ MOST_PAIRS = 30_000_000
 """A job ends at so many possible pairs of keys (the square of the keys of its compositions)."""
 
 MOST_RECORDS = 10_000
-"""A job ends at so many records."""
+"""A job ends at so many records, or at a sixteenth of all where that is fewer and still FEW_RECORDS."""
+
+FEW_RECORDS = 2_000
 
 READ_RECORDS = 100_000
 """So many records are read for jobs to come; they are held in memory until those are given out."""
@@ -240,6 +242,7 @@ def _jobs(workspace: Workspace, settings: Settings) -> Iterator[GroupJob]:
         "SELECT composition, digest, keys, records FROM changed_compositions WHERE NOT plain "
         "ORDER BY keys DESC, composition"
     ).fetchall()
+    most = min(MOST_RECORDS, max(FEW_RECORDS, sum(row[3] for row in rows) // 16))
     packs: list[list[tuple[str, str]]] = []
     pack: list[tuple[str, str]] = []
     pairs = held = waiting = 0
@@ -248,7 +251,7 @@ def _jobs(workspace: Workspace, settings: Settings) -> Iterator[GroupJob]:
         pack.append((composition, digest))
         pairs += keys * keys
         held += records
-        if pairs >= MOST_PAIRS or held >= MOST_RECORDS:
+        if pairs >= MOST_PAIRS or held >= most:
             packs.append(pack)
             waiting += held
             pack, pairs, held = [], 0, 0

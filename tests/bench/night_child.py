@@ -27,7 +27,7 @@ def main() -> None:
     """
     begun = time.perf_counter()
     asked = json.loads(sys.argv[1])
-    from lattice_census.flows import group as flow
+    from lattice_census.flows import engine
     from lattice_census.flows.group import night
     from lattice_census.flows.ingest import IngestJob
     from lattice_census.ingest.pool import WorkerPool
@@ -49,7 +49,8 @@ def main() -> None:
             return self
 
     if asked["ready_workers"]:
-        flow.WorkerPool = ReadyPool  # type: ignore[misc]
+        assert engine.WorkerPool is WorkerPool
+        engine.WorkerPool = ReadyPool  # type: ignore[misc]
 
     def step(name: str, work: Callable[..., Any], *arguments: Any) -> Any:
         started, busy = time.perf_counter(), time.process_time()
