@@ -98,7 +98,7 @@ def test_options_that_readme_names_are_there():
             yield from parameter.opts
 
     known = {*options(get_command(app)), "--help"}
-    others = {"--dist", "--host", "--no-dashboard", "--nthreads"}  # of pytest and of Dask
+    others = {"--dist", "--host", "--no-dashboard", "--nthreads", "--records"}  # of pytest, Dask and the benchmarks
     parameters = {"--parameter", *(p.option for q in questions().values() for p in q.parameters)}
     named = set(re.findall(r"(?<![\w-])--[a-z][a-z-]+", README))
     assert named - known - others - parameters == set()
