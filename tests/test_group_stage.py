@@ -79,6 +79,20 @@ def test_order_chunks_and_number_of_runs_change_nothing(tmp_path: Path, ingest, 
     assert query(grown, "SELECT count(*) FROM id_changes WHERE grade = 'near'")[0][0] > 0
 
 
+def test_a_record_of_another_composition_leaves_its_old_one_as_if_it_had_never_been_there(tmp_path: Path, ingest, rows):
+    """Both compositions are grouped anew: the one it has, and the one it had."""
+    table, store, fresh = tmp_path / "t.csv", tmp_path / "census.duckdb", tmp_path / "fresh.duckdb"
+    ingest(write_csv(table, rows), store=store)
+    run_group(store)
+    changed = [{**row, "cif": rows[5]["cif"]} if i in (0, 3) else row for i, row in enumerate(rows)]
+    ingest(write_csv(table, changed), store=store)
+    assert run_group(store)["compositions"] == 2
+    ingest(write_csv(table, changed), store=fresh)
+    run_group(fresh)
+    for asked in (MEMBERS, MATCHES, "SELECT crystal_key, typed_record_id FROM crystal_types ORDER BY ALL"):
+        assert query(store, asked) == query(fresh, asked)
+
+
 @pytest.mark.slow
 def test_two_workers_change_nothing(tmp_path: Path, ingest, rows, monkeypatch):
     monkeypatch.setattr(stage, "MOST_RECORDS", 1)
