@@ -6,8 +6,6 @@ import os
 import sys
 from typing import TYPE_CHECKING, Any, NoReturn
 
-from lattice_census.store.connect import has_store, no_store
-
 from .failures import STOPPED
 
 if TYPE_CHECKING:
@@ -31,6 +29,8 @@ def drive(
 
     must_exist: StoreError where there is no store, before anything is started.
     """
+    from lattice_census.store.connect import has_store, no_store
+
     from .progress import progress_for
 
     if must_exist and not has_store(store):
