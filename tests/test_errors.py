@@ -135,7 +135,7 @@ TABLE: tuple[tuple[str, int, str], ...] = (
     ("withdraw nobody --reason x", 2, "names no source or record"),
     ("withdraw t.csv --reason=", 2, "give --reason TEXT"),
     ("keep --grade best --direct", 2, "it has: copy, key, near, same"),
-    ("keep --store bare.duckdb", 2, NO_GROUPS),
+    ("keep --store bare.duckdb --direct", 2, NO_GROUPS),
     ("export new --store bare.duckdb", 2, NO_GROUPS),
     ("keep --again t.csv:0-0 --direct", 2, "was taken back"),
     ("pin keep t.csv:0-0 --reason=", 2, "give --reason TEXT"),
