@@ -27,10 +27,19 @@ class Limit:
 
 
 class PairStore:
-    """Verified pairs (first < second) of n nodes. `pins` force or forbid pairs whatever was measured."""
+    """Verified pairs (first < second) of n nodes; `together` and `apart` force and forbid pairs whatever was measured.
+
+    known: the matches among the nodes `old` (n,), whose other pairs are known to be none.
+    """
 
     def __init__(
-        self, nodes: int, verify: Callable[[Ints], Verified], together: Ints, apart: Ints, known: Verified | None = None
+        self,
+        nodes: int,
+        verify: Callable[[Ints], Verified],
+        together: Ints,
+        apart: Ints,
+        known: Verified | None = None,
+        old: NDArray[np.bool_] | None = None,
     ) -> None:
         self.nodes = nodes
         self._verify = verify
@@ -39,6 +48,7 @@ class PairStore:
         self.together = self._code(together)
         self.apart = self._code(apart)
         self.computed = 0
+        self._old = np.zeros(nodes, bool) if old is None else old
         if known is not None and len(known):
             self._append(known)
 
@@ -63,8 +73,9 @@ class PairStore:
             self._append(self._verify(np.stack([codes // self.nodes, codes % self.nodes], axis=1)))
 
     def has(self, codes: Ints) -> NDArray[np.bool_]:
-        """Which pairs, as first * nodes + second, have been verified."""
-        return np.fromiter((c in self._grades for c in codes.tolist()), bool, len(codes))
+        """Which pairs, as first * nodes + second, have been verified or are known."""
+        done = np.fromiter((c in self._grades for c in codes.tolist()), bool, len(codes))
+        return np.asarray(done | (self._old[codes // self.nodes] & self._old[codes % self.nodes]))
 
     def neighbours(self, pairs: Ints, limit: Limit, node: int) -> Ints:
         """The other end of those of the verified pairs (p, 2) of `node` that are neighbours at a grade."""

@@ -41,6 +41,18 @@ class Searcher:
     """The grades this search gives, with their limits, in angstrom (isotypic: units of (V/site)^(1/3))."""
 
 
+def shown_as(by: Searcher, shown: Ints, nodes: int) -> Searcher:
+    """A search over n nodes of which only `shown` (ascending) have a crystal, from the search over these alone."""
+    row = np.full(nodes, -1, np.int64)
+    row[shown] = np.arange(len(shown))
+    return replace(
+        by,
+        owner=shown[by.owner],
+        verify=lambda pairs: replace(by.verify(row[pairs]), pairs=pairs),
+        witness=lambda found: by.witness(replace(found, pairs=row[found.pairs])),
+    )
+
+
 def searcher(
     batch: CrystalBatch, tolerances: Tolerances, kind: str, mirror_images: str, neighbours: int = NEIGHBOURS
 ) -> Searcher:

@@ -1,0 +1,75 @@
+"""What an earlier grouping of the same compositions found, so that only pairs with a new record are compared again.
+
+A grouping whose `matches` are complete (no record has more of them) tells of every pair of its keys whether it matches,
+and how: where records were only added since, a pair of keys that still stand by the same records is as it was.
+"""
+
+from __future__ import annotations
+
+from dataclasses import dataclass
+
+import numpy as np
+from numpy.typing import NDArray
+
+from ..model.batch import Floats, Ints
+from .nodes import Nodes
+from .verification import NO_MATCH, Verified
+
+
+@dataclass(frozen=True, slots=True)
+class Earlier:
+    """An earlier grouping of n records and those added since, in the order they are given in."""
+
+    old: NDArray[np.bool_]
+    """(n,): the record was grouped, in that grouping, and has not changed."""
+
+    there: NDArray[np.bool_]
+    """(n,): the record's crystal is in the batch. Of the others nothing but earlier matches is asked."""
+
+    pairs: Ints
+    """(q, 2): records of its matches."""
+
+    grade: Ints
+    """(q,): 0 same, 1 near, 2 window, 3 none, under the rule for mirror images that is in force."""
+
+    shift: Floats
+    """(q,): largest shift of the match, angstrom."""
+
+    strain: Floats
+    proper_shift: Floats
+    """(q,): of the best proper match; NaN where there is none."""
+
+    proper_strain: Floats
+
+    def matches(self, nodes: Nodes) -> Verified:
+        """Its matches between nodes that stand by the same records as then; of the columns only those that groups are
+        made from are filled."""
+        given = np.empty(len(nodes.names), np.int64)
+        given[nodes.order] = np.arange(len(nodes.names))
+        ends = given[self.pairs]
+        rows = (nodes.stands[nodes.node_of[ends]] == ends).all(axis=1)
+        pairs = np.sort(nodes.node_of[ends[rows]], axis=1)
+        n = len(pairs)
+        grade, nothing, no = self.grade[rows], np.full(n, np.nan), np.zeros(n, bool)
+        return Verified(
+            pairs=pairs,
+            grade=np.minimum(grade, NO_MATCH - 1),  # it matches at least in the window, if only mirrored
+            strain=self.strain[rows],
+            shape_strain=nothing,
+            volume_ratio=nothing,
+            larger=np.full(n, -1, np.int64),
+            largest_shift=self.shift[rows],
+            rms_shift=nothing,
+            improper=no,
+            mirrored=no,
+            proper_grade=grade,
+            proper_strain=self.proper_strain[rows],
+            proper_shift=self.proper_shift[rows],
+            p_matrix=np.zeros((n, 3, 3), np.int64),
+            q_matrix=np.zeros((n, 3, 3), np.int64),
+            shift=np.zeros((n, 3)),
+        )
+
+    def old_nodes(self, nodes: Nodes) -> NDArray[np.bool_]:
+        """(nodes,): the node stood by the same record then."""
+        return np.asarray(self.old[nodes.order[nodes.stands]])
