@@ -10,7 +10,7 @@ import pytest
 
 from lattice_census.flows.deciding import undo, withdraw
 from lattice_census.flows.group import GroupJob, group
-from lattice_census.grouping import stage
+from lattice_census.grouping import jobs, stage
 from lattice_census.ingest.progress import Silent, call_directly
 from lattice_census.settings import resolve_settings
 
@@ -95,7 +95,7 @@ def test_a_record_of_another_composition_leaves_its_old_one_as_if_it_had_never_b
 
 @pytest.mark.slow
 def test_two_workers_change_nothing(tmp_path: Path, ingest, rows, monkeypatch):
-    monkeypatch.setattr(stage, "MOST_RECORDS", 1)
+    monkeypatch.setattr(jobs, "MOST_RECORDS", 1)
     monkeypatch.setattr(stage, "LITTLE_WORK", 0)
     stores = [tmp_path / "one.duckdb", tmp_path / "two.duckdb"]
     for workers, store in enumerate(stores, start=1):
@@ -150,7 +150,7 @@ def test_changed_and_withdrawn_records_leave_no_trace(tmp_path: Path, ingest, ro
 
 
 def test_a_grouping_that_dies_halfway_goes_on(tmp_path: Path, ingest, rows, monkeypatch):
-    monkeypatch.setattr(stage, "MOST_RECORDS", 1)
+    monkeypatch.setattr(jobs, "MOST_RECORDS", 1)
     store, other = tmp_path / "census.duckdb", tmp_path / "other.duckdb"
     table = write_csv(tmp_path / "t.csv", rows)
     ingest(table)

@@ -142,11 +142,12 @@ def group_composition(
             earlier = None  # which pairs of crowds are verified depends on all of them
     else:
         crowded, candidates = np.zeros(0, np.int64), _candidates_of_parts(by, part)
+    old, gone = np.zeros(len(nodes), bool), np.zeros((0, 2), np.int64)
     if earlier is None:
         store = PairStore(len(nodes), by.verify, nodes.together, nodes.apart)
     else:
         old = earlier.old_nodes(nodes)
-        known = earlier.matches(nodes)
+        known, gone = earlier.matches(nodes)
         store = PairStore(len(nodes), by.verify, nodes.together, nodes.apart, known, old)
         candidates = candidates[~old[candidates].all(axis=1)]
     is_crowded = np.zeros(len(nodes), bool)
@@ -168,7 +169,7 @@ def group_composition(
         found = by.verify(np.zeros((0, 2), np.int64))
     wanted, more = selection(len(nodes), found, keep_pairs, chosen.matches_per_record)
     more[crowded] = True
-    is_new = np.ones(len(found), bool) if earlier is None else ~old[found.pairs].all(axis=1)
+    is_new = ~old[found.pairs].all(axis=1)
     matches = found.take(wanted & is_new)
     counts = {
         "records": len(ids),
@@ -188,7 +189,7 @@ def group_composition(
         nodes.stands[nodes.node_of],
         replace(matches, pairs=nodes.stands[matches.pairs]),
         by.witness(matches),
-        nodes.stands[found.pairs[~wanted & ~is_new]],
+        np.concatenate([gone, nodes.stands[found.pairs[~wanted & ~is_new]]]),
         earlier is not None,
         more[nodes.node_of],
         members,

@@ -41,17 +41,17 @@ class Earlier:
 
     proper_strain: Floats
 
-    def matches(self, nodes: Nodes) -> Verified:
-        """Its matches between nodes that stand by the same records as then; of the columns only those that groups are
-        made from are filled."""
+    def matches(self, nodes: Nodes) -> tuple[Verified, Ints]:
+        """Its matches between nodes that stand by the same records as then, with only those columns filled that groups
+        are made from; and the others, as pairs of indices into the ids."""
         given = np.empty(len(nodes.names), np.int64)
         given[nodes.order] = np.arange(len(nodes.names))
-        ends = given[self.pairs]
+        ends = np.sort(given[self.pairs], axis=1)
         rows = (nodes.stands[nodes.node_of[ends]] == ends).all(axis=1)
-        pairs = np.sort(nodes.node_of[ends[rows]], axis=1)
+        pairs = nodes.node_of[ends[rows]]
         n = len(pairs)
         grade, nothing, no = self.grade[rows], np.full(n, np.nan), np.zeros(n, bool)
-        return Verified(
+        matches = Verified(
             pairs=pairs,
             grade=np.minimum(grade, NO_MATCH - 1),  # it matches at least in the window, if only mirrored
             strain=self.strain[rows],
@@ -69,6 +69,7 @@ class Earlier:
             q_matrix=np.zeros((n, 3, 3), np.int64),
             shift=np.zeros((n, 3)),
         )
+        return matches, ends[~rows]
 
     def old_nodes(self, nodes: Nodes) -> NDArray[np.bool_]:
         """(nodes,): the node stood by the same record then."""

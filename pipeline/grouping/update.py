@@ -8,8 +8,8 @@ from ..ingest.touched import find_touched, note_grouped
 from ..settings import Settings
 from ..store.rows import one_number
 from .exact import group_exact
+from .outdated import GROUPED, WAITING, set_outdated_aside
 from .rank import rank_records
-from .stage import GROUPED, WAITING, set_outdated_aside
 
 
 def update_groups(connection: duckdb.DuckDBPyConnection, run_id: int, settings: Settings) -> int:

@@ -3,12 +3,13 @@
 from __future__ import annotations
 
 from collections.abc import Iterator
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 from typing import Any
 
 import numpy as np
 import polars as pl
 import pyarrow as pa
+from numpy.typing import NDArray
 
 from ..ingest.recompute import stored_batch
 from ..model.batch import CrystalBatch, Ints
@@ -16,9 +17,10 @@ from ..settings import Settings
 from ..store.manifest import Done
 from ..store.parts import Part, files_there
 from .composition import CROWDED, Grouping, Options, group_composition
+from .earlier import Earlier
 from .pinned_matches import by_key, measured, verified_together
 from .reasons import reasons
-from .verification import Verified
+from .verification import NO_MATCH, Verified
 from .witness import Witnesses
 
 _GRADE_NAMES = np.array(["same", "near", "window"])
@@ -43,7 +45,11 @@ class GroupJob:
 
     number: int
     raw: Part
-    """Parquet of records: composition, digest, record_id, crystal_key, rank, canonical form, matrix."""
+    """Parquet of records: composition, digest, record_id, crystal_key, rank, whether it was grouped before (old), and
+    canonical form and matrix where they are asked for."""
+
+    known: Part | None
+    """Parquet of the matches that old records had, if any."""
 
     part: Part
     """Stem of the parts to write."""
@@ -52,34 +58,26 @@ class GroupJob:
     pins: tuple[PairPin, ...] = ()
 
 
-def matches_part(part: Part) -> Part:
-    """The part with the rows of `matches`."""
-    return part.with_name(part.name + ".matches.parquet")
+PARTS = ("matches", "members", "summary", "dropped")
 
 
-def members_part(part: Part) -> Part:
-    """The part with one row a record: group, family, shift and strain at each grade; whether it has more matches."""
-    return part.with_name(part.name + ".members.parquet")
-
-
-def summary_part(part: Part) -> Part:
-    """The part with one row a composition."""
-    return part.with_name(part.name + ".summary.parquet")
+def parts_of(part: Part) -> tuple[Part, ...]:
+    """The four parts of a job: rows of `matches`, without those known; one row a record with group, family, shift and
+    strain at each grade, and whether it has more matches; one row a composition; and the known matches that are
+    stored no longer."""
+    return tuple(part.with_name(f"{part.name}.{name}.parquet") for name in PARTS)
 
 
 def group_chunk(job: GroupJob) -> Done:
     """Group every composition of the job, unless its parts are there already."""
     frame = job.raw.frame()
-    there = files_there((matches_part(job.part), members_part(job.part), summary_part(job.part)))
+    there = files_there(parts_of(job.part))
     if there is not None:
         return Done(len(frame), there)
-    done = [_grouped(rows, job) for rows in _bundles(frame, {pin.composition for pin in job.pins})]
-    matches, members, summary = zip(*done, strict=True)
-    files = (
-        matches_part(job.part).write(pl.concat(matches).to_arrow()),
-        members_part(job.part).write(pl.concat(members).to_arrow()),
-        summary_part(job.part).write(pl.concat(summary).to_arrow()),
-    )
+    known = _NO_MATCHES if job.known is None else job.known.frame()
+    done = [_grouped(rows, known, job) for rows in _bundles(frame, {pin.composition for pin in job.pins})]
+    tables = (pl.concat(frames).to_arrow() for frames in zip(*done, strict=True))
+    files = tuple(part.write(table) for part, table in zip(parts_of(job.part), tables, strict=True))
     return Done(len(frame), files)
 
 
@@ -88,20 +86,22 @@ def _bundles(frame: pl.DataFrame, pinned: set[str]) -> Iterator[pl.DataFrame]:
     of equally many species. Ascending by record id."""
     told = frame.with_columns(
         pl.len().over("composition").gt(CROWDED).or_(pl.col("composition").is_in(list(pinned))).alias("alone"),
-        pl.col("species").list.n_unique().alias("kinds"),
+        pl.col("species").list.n_unique().max().over("composition").alias("kinds"),
     )
     alone = told.filter("alone").partition_by("composition", maintain_order=True)
     for rows in alone + told.filter(~pl.col("alone")).partition_by("kinds", maintain_order=True):
         yield rows.sort("record_id")
 
 
-def _grouped(rows: pl.DataFrame, job: GroupJob) -> tuple[pl.DataFrame, pl.DataFrame, pl.DataFrame]:
-    """The rows of matches, members and summary of one bundle."""
-    batch = stored_batch(rows)
+def _grouped(rows: pl.DataFrame, known: pl.DataFrame, job: GroupJob) -> tuple[pl.DataFrame, ...]:
+    """The rows of PARTS of one bundle."""
+    there = rows["species"].is_not_null().to_numpy()
+    crystals = rows.filter(there)
+    batch = stored_batch(crystals)
     ids = rows["record_id"].to_list()
     part = rows["composition"].rank("dense").to_numpy().astype(np.int64) - 1
     told = pl.col("digest").first(), pl.len().alias("records"), pl.col("crystal_key").n_unique().alias("keys")
-    of_part = rows.group_by("composition").agg(*told).sort("composition")
+    of_part = rows.group_by("composition").agg(*told, pl.col("old").any().alias("added")).sort("composition")
     pins = [pin for pin in job.pins if pin.composition in set(of_part["composition"])] if job.pins else []
     together, refused = verified_together(batch, ids, pins, job.settings)
     found = group_composition(
@@ -119,19 +119,46 @@ def _grouped(rows: pl.DataFrame, job: GroupJob) -> tuple[pl.DataFrame, pl.DataFr
             apart=tuple((pin.record_a, pin.record_b) for pin in pins if pin.kind == "apart"),
         ),
         part if len(of_part) > 1 else None,
+        _earlier(rows, known, there) if rows["old"].any() else None,
     )
-    matches = _matches_frame(rows, batch, found.matches, found.witnesses, job.settings)
+    place = np.cumsum(there) - 1
+    new = replace(found.matches, pairs=place[found.matches.pairs])
+    matches = _matches_frame(crystals, batch, new, found.witnesses, job.settings)
     members = _members_frame(found)
     if pins:
         more = [_matches_frame(rows[p.places], p.batch, p.match, p.witness, job.settings) for p in together]
         matches = by_key(pl.concat([matches, *more]), rows)
         members = measured(members, matches, rows, job.settings.mirror_images == "separate")
     summary = of_part.with_columns(
+        added=pl.col("added") & found.added,
         candidates=found.candidates,
         verified=found.verified,
         refused=pl.Series([refused] * len(of_part), dtype=pl.List(pl.Int64)),
     )
-    return matches, members, summary
+    dropped = pl.DataFrame(
+        {f"record_{end}": found.ids[found.dropped[:, i]].tolist() for i, end in enumerate("ab")},
+        schema={"record_a": pl.String, "record_b": pl.String},
+    )
+    return matches, members, summary, dropped
+
+
+def _earlier(rows: pl.DataFrame, known: pl.DataFrame, there: NDArray[np.bool_]) -> Earlier:
+    """What is known of the old records of a bundle."""
+    place = rows.select("record_id", pl.int_range(pl.len(), dtype=pl.Int64).alias("place"))
+    for end in ("a", "b"):
+        known = known.join(
+            place.rename({"record_id": f"record_{end}", "place": f"place_{end}"}), on=f"record_{end}",
+            maintain_order="left",
+        )  # fmt: skip
+    grades = known["grade"].replace_strict(_GRADE_NAMES.tolist(), [0, 1, 2], default=NO_MATCH, return_dtype=pl.Int64)
+    measures = ("largest_shift_angstrom", "strain", "proper_shift_angstrom", "proper_strain")
+    return Earlier(
+        rows["old"].to_numpy(),
+        there,
+        known.select("place_a", "place_b").to_numpy(),
+        grades.to_numpy(),
+        *(known[name].fill_null(np.nan).to_numpy() for name in measures),
+    )
 
 
 def _members_frame(found: Grouping) -> pl.DataFrame:

@@ -378,6 +378,12 @@ TABLES: dict[str, Table] = {
         ("family_id", "VARCHAR", "Family id before the change."),
         ("record_id", "VARCHAR", "The record."),
     ),
+    "outdated_compositions": _table(
+        "Compositions that changed since they were grouped and whose list of matches was complete.",
+        ("composition", "VARCHAR", "Reduced composition over species tokens."),
+        ("run_id", "BIGINT", "Run that grouped it."),
+        ("records", "BIGINT", "Records that it had then."),
+    ),
     "id_changes": _table(
         "One row a record whose group or family id changed in a run.",
         ("run_id", "BIGINT", "The run."),
@@ -389,6 +395,11 @@ TABLES: dict[str, Table] = {
         ("family_after", "VARCHAR", "Family id after; NULL where it has none."),
     ),
 }
+
+TABLES["outdated_matches"] = Table(
+    "Rows of `matches` of the compositions in outdated_compositions, kept until `group` has compared what was added.",
+    TABLES["matches"].columns,
+)
 
 VIEWS: dict[str, str] = {
     "decisions_in_force": "Decisions that nothing has ended.",

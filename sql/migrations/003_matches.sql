@@ -102,6 +102,64 @@ COMMENT ON COLUMN outdated_members.group_id IS 'Group id before the change.';
 COMMENT ON COLUMN outdated_members.family_id IS 'Family id before the change.';
 COMMENT ON COLUMN outdated_members.record_id IS 'The record.';
 
+CREATE TABLE outdated_compositions (
+    composition VARCHAR,
+    run_id BIGINT,
+    records BIGINT
+);
+COMMENT ON TABLE outdated_compositions IS 'Compositions that changed since they were grouped and whose list of matches was complete.';
+COMMENT ON COLUMN outdated_compositions.composition IS 'Reduced composition over species tokens.';
+COMMENT ON COLUMN outdated_compositions.run_id IS 'Run that grouped it.';
+COMMENT ON COLUMN outdated_compositions.records IS 'Records that it had then.';
+
+CREATE TABLE outdated_matches (
+    record_a VARCHAR,
+    record_b VARCHAR,
+    crystal_key_a VARCHAR,
+    crystal_key_b VARCHAR,
+    composition VARCHAR,
+    grade VARCHAR,
+    largest_shift_angstrom DOUBLE,
+    rms_shift_angstrom DOUBLE,
+    strain DOUBLE,
+    shape_strain DOUBLE,
+    volume_ratio DOUBLE,
+    larger_record_id VARCHAR,
+    mirrored BOOLEAN,
+    improper BOOLEAN,
+    proper_shift_angstrom DOUBLE,
+    proper_strain DOUBLE,
+    reason VARCHAR,
+    p_matrix INTEGER[9],
+    q_matrix INTEGER[9],
+    orthogonal DOUBLE[9],
+    shift_fractional DOUBLE[3],
+    pairing INTEGER[]
+);
+COMMENT ON TABLE outdated_matches IS 'Rows of `matches` of the compositions in outdated_compositions, kept until `group` has compared what was added.';
+COMMENT ON COLUMN outdated_matches.record_a IS 'The record that stands for the first key.';
+COMMENT ON COLUMN outdated_matches.record_b IS 'The record that stands for the second key.';
+COMMENT ON COLUMN outdated_matches.crystal_key_a IS 'The first key.';
+COMMENT ON COLUMN outdated_matches.crystal_key_b IS 'The second key.';
+COMMENT ON COLUMN outdated_matches.composition IS 'Reduced composition of both.';
+COMMENT ON COLUMN outdated_matches.grade IS 'Strictest grade that the match reaches: same, near, or window (just outside near).';
+COMMENT ON COLUMN outdated_matches.largest_shift_angstrom IS 'Largest distance of paired sites, mean shift removed, angstrom.';
+COMMENT ON COLUMN outdated_matches.rms_shift_angstrom IS 'Root mean square of the distances of paired sites, angstrom.';
+COMMENT ON COLUMN outdated_matches.strain IS 'Largest |ln| of the three principal stretches between the matched cells.';
+COMMENT ON COLUMN outdated_matches.shape_strain IS 'The same after the mean of the three logarithms is taken off.';
+COMMENT ON COLUMN outdated_matches.volume_ratio IS 'Volume per site, the larger over the smaller.';
+COMMENT ON COLUMN outdated_matches.larger_record_id IS 'Which of the two has the larger volume per site; NULL where they are equal.';
+COMMENT ON COLUMN outdated_matches.mirrored IS 'Only the mirror image of the one matches the other.';
+COMMENT ON COLUMN outdated_matches.improper IS 'The recorded match turns the one into the mirror image of the other.';
+COMMENT ON COLUMN outdated_matches.proper_shift_angstrom IS 'Largest shift of the best match without mirror image; NULL if none.';
+COMMENT ON COLUMN outdated_matches.proper_strain IS 'Strain of the best match without mirror image; NULL if none.';
+COMMENT ON COLUMN outdated_matches.reason IS 'Why the two match: rerun, other_cell, supercell, mirror.';
+COMMENT ON COLUMN outdated_matches.p_matrix IS 'P: P . reduced cell of a is a''s basis of the common cell.';
+COMMENT ON COLUMN outdated_matches.q_matrix IS 'Q: Q . reduced cell of b is b''s basis of the common cell.';
+COMMENT ON COLUMN outdated_matches.orthogonal IS 'Orthogonal part O: row vectors of a times O stand in the frame of b.';
+COMMENT ON COLUMN outdated_matches.shift_fractional IS 'Origin shift in fractions of the common cell.';
+COMMENT ON COLUMN outdated_matches.pairing IS 'For each site of P . a the site of Q . b, from 0.';
+
 -- Why two records of one key are the same, from how they were given: equal content, another number of primitive cells,
 -- an equal given cell (vectors to 1e-3 angstrom), or else another description.
 CREATE MACRO equal_key_reason(content_a, content_b, cells_a, cells_b, vectors_a, vectors_b) AS

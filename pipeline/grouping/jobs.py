@@ -1,0 +1,97 @@
+"""The jobs of the stage `group`: whole compositions, with what is known of them, written down for workers."""
+
+from __future__ import annotations
+
+from collections.abc import Iterator
+
+from ..settings import Settings
+from ..store.parts import raw_and_part
+from ..store.workspace import Workspace
+from .digest import PAIR_PINS
+from .work import GroupJob, PairPin
+
+MOST_PAIRS = 30_000_000
+"""A job ends at so many possible pairs of keys (the square of the keys of its compositions)."""
+
+MOST_RECORDS = 10_000
+"""A job ends at so many records, or at a sixteenth of all where that is fewer and still FEW_RECORDS."""
+
+FEW_RECORDS = 2_000
+
+READ_RECORDS = 100_000
+"""So many records are read for jobs to come; they are held in memory until those are given out."""
+
+CRYSTAL = ("cell_angstrom", "species", "positions_fractional", "matrix")
+"""Columns of a canonical form, for records whose crystal is asked for."""
+
+KNOWN = ("record_a", "record_b", "grade", "largest_shift_angstrom", "strain", "proper_shift_angstrom", "proper_strain")
+"""Columns of `matches` that groups are made from."""
+
+
+def jobs(workspace: Workspace, settings: Settings) -> Iterator[GroupJob]:
+    """Jobs of whole compositions, the largest first, so that the last ones to end are short."""
+    rows = workspace.connection.execute(
+        "SELECT composition, digest, keys, records FROM changed_compositions WHERE NOT plain "
+        "ORDER BY keys DESC, composition"
+    ).fetchall()
+    most = min(MOST_RECORDS, max(FEW_RECORDS, sum(row[3] for row in rows) // 16))
+    packs: list[list[tuple[str, str]]] = []
+    pack: list[tuple[str, str]] = []
+    pairs = held = waiting = 0
+    number = 0
+    for composition, digest, keys, records in rows:
+        pack.append((composition, digest))
+        pairs += keys * keys
+        held += records
+        if pairs >= MOST_PAIRS or held >= most:
+            packs.append(pack)
+            waiting += held
+            pack, pairs, held = [], 0, 0
+        if waiting >= READ_RECORDS:
+            yield from _read_jobs(workspace, settings, number, packs)
+            number += len(packs)
+            packs, waiting = [], 0
+    if pack:
+        packs.append(pack)
+    if packs:
+        yield from _read_jobs(workspace, settings, number, packs)
+
+
+def _read_jobs(
+    workspace: Workspace, settings: Settings, number: int, packs: list[list[tuple[str, str]]]
+) -> Iterator[GroupJob]:
+    """The jobs of some packs, numbered from `number`: their rows are read at once, since each query goes through all
+    records."""
+    connection = workspace.connection
+    names, digests = zip(*(both for pack in packs for both in pack), strict=True)
+    numbers = [number + i for i, pack in enumerate(packs) for _ in pack]
+    connection.execute(
+        "CREATE OR REPLACE TEMP TABLE packed AS SELECT unnest(?::INTEGER[]) AS job, unnest(?::VARCHAR[]) AS "
+        "composition, unnest(?::VARCHAR[]) AS digest", [numbers, list(names), list(digests)],
+    )  # fmt: skip
+    crystal = ", ".join(f"CASE WHEN there THEN {c} END AS {c}" for c in CRYSTAL)
+    frame = connection.sql(
+        f"SELECT job, composition, digest, record_id, crystal_key, rank, periodicity, old, {crystal} FROM ("
+        "SELECT p.job, r.composition, p.digest, r.record_id, r.periodicity, k.rank, f.* EXCLUDE (record_id), "
+        "o.record_id IS NOT NULL AS old, a.composition IS NULL OR n.record_id IS NOT NULL AS there "
+        "FROM packed p JOIN current_records r USING (composition) JOIN canonical_forms f USING (record_id) "
+        "JOIN ranks k USING (record_id) LEFT JOIN added_compositions a ON a.composition = p.composition "
+        "LEFT JOIN needed_records n ON n.record_id = r.record_id LEFT JOIN old_records o ON o.record_id = r.record_id) "
+        "ORDER BY job, composition, record_id"
+    ).pl()
+    known = connection.sql(
+        f"SELECT p.job, {', '.join(f'm.{c}' for c in KNOWN)} FROM outdated_matches m JOIN packed p USING (composition) "
+        "WHERE m.composition IN (SELECT composition FROM added_compositions) ORDER BY p.job, m.record_a, m.record_b"
+    ).pl()
+    pins = connection.execute(
+        f"SELECT job, composition, pin_id, kind, record_a, record_b FROM {PAIR_PINS} JOIN packed USING (composition) "
+        "ORDER BY pin_id"
+    ).fetchall()
+    decisive = [settings.of_stage(stage) for stage in ("canonical", "fingerprint", "verify")]
+    known_of = known.partition_by("job", as_dict=True, include_key=False, maintain_order=True)
+    for (job,), rows in frame.partition_by("job", as_dict=True, include_key=False, maintain_order=True).items():
+        own = [pin[1:] for pin in pins if pin[0] == job]
+        told = known_of.get((job,))
+        matches = None if told is None else raw_and_part(workspace.place, "known", told)[0]
+        raw, part = raw_and_part(workspace.place, "group", rows, decisive, own, matches and matches.name)
+        yield GroupJob(job, raw, matches, part, settings, tuple(PairPin(*pin) for pin in own))

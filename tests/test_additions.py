@@ -1,0 +1,180 @@
+"""Records added to what was grouped: only pairs with a new one are compared, and the result is that of comparing all."""
+
+from __future__ import annotations
+
+from pathlib import Path
+from typing import Any
+
+import numpy as np
+import pytest
+
+from lattice_census.cell.canonical import canonicalise
+from lattice_census.flows.deciding import pin, withdraw
+from lattice_census.grouping import additions, composition, work
+from lattice_census.grouping.composition import Grouping, Options, group_composition
+from lattice_census.grouping.earlier import Earlier
+from lattice_census.model.batch import select
+from lattice_census.tolerances import Tolerances
+
+from . import strategies as draw
+from .tables_of_structures import query, rows_of, write_csv
+from .test_group_stage import MATCHES, MEMBERS, collection, run_group
+from .test_group_together import collection as crystals_of_compositions
+from .test_group_together import noisy, rows
+from .test_layer_store import collection as layers
+from .test_layer_store import frames
+
+T = Tolerances()
+MORE = "SELECT record_id FROM more_matches ORDER BY 1"
+STATE = (MEMBERS, MATCHES, MORE, "SELECT composition, digest, records, keys FROM grouped_compositions ORDER BY 1")
+
+
+def known_of(found: Grouping, ids: list[str], there: np.ndarray, separate: bool) -> Earlier:
+    """What a grouping of some of the records told of their pairs."""
+    place = {name: i for i, name in enumerate(ids)}
+    old = np.isin(ids, found.ids)
+    pairs = [[place[found.ids[a]], place[found.ids[b]]] for a, b in found.matches.pairs.tolist()]
+    match = found.matches
+    return Earlier(
+        old, there, np.array(pairs, np.int64).reshape(-1, 2), match.proper_grade if separate else match.grade,
+        match.largest_shift, match.strain, match.proper_shift, match.proper_strain,
+    )  # fmt: skip
+
+
+@pytest.mark.parametrize("mirror_images", ["merge", "separate"])
+@pytest.mark.parametrize("most", [2, 32])
+def test_with_what_is_known_the_result_is_that_of_all_pairs(most: int, mirror_images: str):
+    rng = np.random.default_rng(17)
+    crystals, part = crystals_of_compositions(rng)
+    chosen = rng.integers(0, len(crystals), 20)
+    crystals += [noisy(rng, crystals[i], 0.01 * (n % 2)) for n, i in enumerate(chosen.tolist())]
+    part = np.concatenate([part, part[chosen]])
+    result = canonicalise(draw.batch(crystals), T)
+    n = len(crystals)
+    ids = [f"r{i:03d}" for i in rng.permutation(n)]
+    keys, rank = np.array(result.crystal_key), rng.permutation(n)
+    options = Options(mirror_images, matches_per_record=most)
+    whole = group_composition(result.crystals, keys.tolist(), ids, rank, T, options, part)
+    everything = np.ones(n, bool)
+    dropped = used = 0
+    for _ in range(12):
+        old = np.flatnonzero(rng.random(n) < rng.uniform(0.2, 0.95))
+        before = group_composition(
+            select(result.crystals, old), keys[old].tolist(), [ids[i] for i in old], rank[old], T, options,
+            np.unique(part[old], return_inverse=True)[1],
+        )  # fmt: skip
+        if before.more.any():  # such matches are never taken over
+            continue
+        earlier = known_of(before, ids, everything, mirror_images == "separate")
+        found = group_composition(result.crystals, keys.tolist(), ids, rank, T, options, part, earlier)
+        assert found.added and found.counts["verified"] < whole.counts["verified"]
+        gone = {tuple(sorted(pair)) for pair in found.ids[found.dropped].tolist()}
+        expected, mine = rows(whole, everything), rows(found, everything)
+        mine |= {k: v for k, v in rows(before, np.ones(len(old), bool)).items()
+                 if k.startswith("r") and tuple(k.split()) not in gone}  # fmt: skip
+        assert mine == expected
+        dropped, used = dropped + len(gone), used + 1
+    assert used >= (2 if most == 2 else 12) and dropped > 0  # for records that stand for a key no longer, at least
+
+
+def test_of_crowds_nothing_is_taken_over():
+    rng = np.random.default_rng(18)
+    base = draw.random_crystal(rng, "oP", 4, ("Si", "O"))
+    result = canonicalise(draw.batch([noisy(rng, base, 0.02) for _ in range(20)]), T)
+    ids, rank = [f"r{i:02d}" for i in rng.permutation(20)], rng.permutation(20)
+    old = np.arange(6)
+    options = Options(crowded=8)
+    whole = group_composition(result.crystals, result.crystal_key, ids, rank, T, options)
+    before = group_composition(
+        select(result.crystals, old), result.crystal_key[:6], ids[:6], np.argsort(np.argsort(rank[:6])), T, options
+    )
+    assert not before.more.any() and whole.counts["crowded"]
+    earlier = known_of(before, ids, np.ones(20, bool), False)
+    found = group_composition(result.crystals, result.crystal_key, ids, rank, T, options, None, earlier)
+    assert not found.added and not len(found.dropped)
+    assert rows(found, np.ones(20, bool)) == rows(whole, np.ones(20, bool))
+
+
+@pytest.fixture(scope="module")
+def listed() -> list[dict[str, Any]]:
+    return collection(9)
+
+
+@pytest.mark.parametrize("settings", [{}, {"matches_per_record": 2}, {"mirror_images": "separate"}])
+@pytest.mark.parametrize("large", [False, True])
+def test_a_store_that_grew_equals_one_made_at_once(
+    tmp_path: Path, ingest, listed, monkeypatch, settings: dict[str, Any], large: bool
+):
+    """Grown in random steps; of large compositions all crystals are read, and each is a bundle of its own."""
+    if large:
+        monkeypatch.setattr(additions, "CROWDED", 4)
+        monkeypatch.setattr(work, "CROWDED", 4)
+    compared: list[int] = []
+    whole = composition.group_composition
+
+    def counted(*arguments: Any) -> Grouping:
+        found = whole(*arguments)
+        compared.append(found.counts["verified"] if found.added else -1)
+        return found
+
+    monkeypatch.setattr(work, "group_composition", counted)
+    rng = np.random.default_rng(2)
+    shuffled = [listed[i] for i in rng.permutation(len(listed))]
+    table, one, grown = tmp_path / "t.csv", tmp_path / "one.duckdb", tmp_path / "grown.duckdb"
+    for end in (20, 31, 32, 45, 60):
+        ingest(write_csv(table, shuffled[:end]), store=grown, **settings)
+        counts = run_group(grown, **settings)
+        assert query(grown, "SELECT count(*) FROM outdated_matches") == [(0,)]
+        assert query(grown, "SELECT count(*) FROM outdated_compositions") == [(0,)]
+    assert counts["compared"] < 120 and sum(c >= 0 for c in compared) >= 3, compared
+    ingest(write_csv(table, shuffled), store=one, **settings)
+    run_group(one, **settings)
+    for asked in STATE:
+        assert query(grown, asked) == query(one, asked)
+
+
+def test_what_changed_otherwise_is_compared_anew(tmp_path: Path, ingest, listed):
+    """Replaced, amended, withdrawn and pinned records between two groupings, and several ingests before one."""
+    table, store, fresh = tmp_path / "t.csv", tmp_path / "census.duckdb", tmp_path / "fresh.duckdb"
+    ingest(write_csv(table, listed[:40]), store=store)
+    run_group(store)
+    changed = [dict(row) for row in listed]
+    changed[3]["cif"], changed[8]["cif"] = listed[59]["cif"], listed[12]["cif"]
+    ingest(write_csv(table, listed[:50]), store=store)
+    assert query(store, "SELECT count(*) > 0 FROM outdated_matches") == [(True,)]
+    ingest(write_csv(table, changed), store=store)
+    gone = query(store, "SELECT record_id FROM records WHERE label = ?", listed[20]["material_id"])[0][0]
+    pair = query(
+        store,
+        "SELECT any_value(a.record_id), any_value(b.record_id) FROM records a JOIN records b USING (composition) "
+        "WHERE a.label = ? AND b.label = ?",
+        changed[30]["material_id"],
+        changed[34]["material_id"],
+    )[0]
+    withdraw(store, gone, "a test")
+    if all(pair):
+        pin(store, "apart", list(pair), "a test")
+    run_group(store)
+    ingest(write_csv(table, changed), store=fresh)
+    withdraw(fresh, gone, "a test")
+    if all(pair):
+        pin(fresh, "apart", list(pair), "a test")
+    run_group(fresh)
+    for asked in STATE:
+        assert query(store, asked) == query(fresh, asked)
+
+
+def test_layers_that_were_added_equal_layers_read_at_once(tmp_path: Path, ingest):
+    """A layer has no volume: what could match a new one is told by its area per site."""
+    listed = layers()
+    del listed["unclear"]
+    grown, one, file = tmp_path / "grown.duckdb", tmp_path / "one.duckdb", tmp_path / "layers.xyz"
+    for end in (4, 6, 9, len(listed)):
+        file.write_text(frames(dict(list(listed.items())[:end])), encoding="utf-8")
+        ingest(file, store=grown)
+        run_group(grown)
+    ingest(file, store=one)
+    run_group(one)
+    assert query(grown, "SELECT count(*) > 3 FROM matches WHERE ends_with(composition, ' layer')") == [(True,)]
+    for asked in STATE:
+        assert query(grown, asked) == query(one, asked)
