@@ -19,14 +19,14 @@ from ..fingerprint.distributions import NEIGHBOURS
 from ..kernels.rows_filter import close_counts, close_pairs
 from ..model.batch import CrystalBatch, Ints, select
 from ..tolerances import Tolerances
-from .candidates import ROUNDING, Search, filtered, spread_first
-from .crowds import Crowd
+from .candidates import ROUNDING, filtered, spread_first
+from .crowds import kept_nodes, nearest_pairs
 from .earlier import Earlier
+from .frames import find_frames
 from .graph import components, spanning_forest
-from .groups import stars
 from .members import Members, members_of, selection
 from .nodes import nodes_of
-from .pair_store import Limit, PairStore
+from .pair_store import PairStore
 from .searches import Searcher, searcher, shown_as
 from .verification import Verified
 from .witness import Witnesses
@@ -154,10 +154,12 @@ def group_composition(
     is_crowded[crowded] = True
     store.ensure(candidates[~is_crowded[candidates].all(axis=1)])
 
+    store.ensure(nearest_pairs(by.search, crowded, CROWD_NEIGHBOURS))
+    frames = find_frames(by.search, store, crowded, nodes.rank) if chosen.search == "near" else []
     members: dict[str, Members] = {}
     keep_pairs: list[Ints] = []
     for grade, limit in by.limits:
-        kept = _families_and_groups(by.search, store, limit, crowded, nodes.rank)
+        kept = kept_nodes(by.search, store, limit, crowded, frames, nodes.rank)
         edges = store.edges(limit)
         family = components(len(nodes), edges[0])
         keep_pairs.append(edges[0][spanning_forest(len(nodes), edges[0], edges[3])])
@@ -235,22 +237,3 @@ def _candidates_plain(by: Searcher, nodes: int, crowded_at: int) -> tuple[Ints, 
     if n == nodes:  # with several versions of a node every pair is verified
         crowded = dense | (np.bincount(pairs.ravel(), minlength=n) > crowded_at)
     return np.flatnonzero(crowded), pairs
-
-
-def _families_and_groups(search: Search, store: PairStore, limit: Limit, crowded: Ints, node_rank: Ints) -> Ints:
-    """Verify what the crowds need at a grade; returns the kept node of each node."""
-    if not len(crowded):
-        return stars(store.nodes, node_rank, store.edges(limit)[0])
-    crowd = Crowd(search, limit, crowded)
-    store.ensure(crowd.nearest(CROWD_NEIGHBOURS))
-    is_crowded = np.zeros(store.nodes, bool)
-    is_crowded[crowded] = True
-
-    def on_demand(node: int, free: Ints) -> Ints:
-        if not is_crowded[node]:
-            return np.zeros(0, np.int64)
-        return crowd.partners(store, node, free)
-
-    kept = stars(store.nodes, node_rank, store.edges(limit)[0], on_demand)
-    crowd.connect(store)
-    return kept

@@ -3,9 +3,12 @@
 Five thousand noisy copies of one crystal are twelve million pairs. Families and groups need few of them:
 
 - a group needs its kept record against the records not yet taken (groups.py);
-- a family needs one match wherever two groups touch: candidates between two components are verified in the order of
-  their distance in the fingerprint and only while the two are not yet known to be one. When none is left between
-  different components, the components are those of the graph of all pairs.
+- a family needs one match wherever two groups touch: candidates between two components are verified only while the two
+  are not yet known to be one. When none is left between different components, the components are those of the graph
+  of all pairs. Of two kept records the later was free when the earlier took its matches: their pair is decided, and
+  only pairs with a record that was taken are left.
+
+Candidates are what the distances leave, and, of records that match one and the same hub, what frames.py leaves.
 
 Both are exactly what all pairs would give. What is not complete inside a crowd is the list of matches: a record of a
 crowd has its kept record, a spanning tree of its family over the pairs that were verified, and the nearest of the
@@ -23,7 +26,9 @@ from ..fingerprint.distributions import Distributions
 from ..kernels.rows_filter import rows_close
 from ..model.batch import Ints, select
 from .candidates import ROUNDING, SPREAD_COLUMNS, Search, allowed_pairs, start_search
+from .frames import Frame, FrameFilter
 from .graph import components
+from .groups import stars
 from .pair_store import Limit, PairStore
 from .window import Window
 
@@ -42,8 +47,8 @@ class Crowd:
     the window, as everywhere.
     """
 
-    def __init__(self, search: Search, limit: Limit, crowded: Ints) -> None:
-        """crowded (c,): the nodes, ascending."""
+    def __init__(self, search: Search, limit: Limit, crowded: Ints, frames: list[Frame]) -> None:
+        """crowded (c,): the nodes, ascending; frames: of some of them."""
         scaled = bool((search.scales != 1.0).any())
         window = search.window if scaled else Window((limit.shift,) * 3, (limit.strain,) * 3)
         batch = select(search.prepared.batch, crowded)
@@ -57,16 +62,27 @@ class Crowd:
         self._order = np.argsort(self._inner.coordinates[:, widest[0]], kind="stable")
         ordered = self._inner.coordinates[self._order]
         self._line = ordered[:, widest[0]]
-        self._near = ordered[:, widest[:NEAR_COLUMNS]]
         self._points = np.ascontiguousarray(ordered[:, widest[:SPREAD_COLUMNS]], dtype=np.float32)
         self.crowded = crowded[self._order]
         self._place = {int(node): i for i, node in enumerate(self.crowded)}
+        self._filters = [FrameFilter(search, frame, limit) for frame in frames]
+        self._frame = np.full(len(crowded), -1, np.int64)  # by place: number of the frame, and row in it
+        self._row = np.zeros(len(crowded), np.int64)
+        for number, told in enumerate(self._filters):
+            places = np.array([self._place[node] for node in told.members.tolist()], dtype=np.int64)
+            self._frame[places], self._row[places] = number, np.arange(len(places))
 
     def _candidates(self, first: int, others: Ints) -> Ints:
-        """Pairs of nodes, of place `first` with places `others`, that the rows cannot rule out."""
+        """Pairs of nodes, of place `first` with places `others`, that neither frame nor rows can rule out."""
+        number = int(self._frame[first])
+        framed = (self._frame[others] == number) & (number >= 0)
+        mates, others = others[framed], others[~framed]
+        if len(mates):
+            mates = mates[self._filters[number](int(self._row[first]), self._row[mates])]
         pairs = np.stack([np.full(len(others), first), others], axis=1)
-        pairs = pairs[allowed_pairs(self._inner.prepared, self._order[pairs])[0]]
-        return np.sort(self.crowded[pairs], axis=1)
+        left = others[allowed_pairs(self._inner.prepared, self._order[pairs])[0]]
+        both = np.concatenate([mates, left])
+        return np.sort(np.stack([self.crowded[both], np.full(len(both), self.crowded[first])], axis=1), axis=1)
 
     def _ball(self, place: int) -> Ints:
         """Places whose coordinates all agree with those of a place."""
@@ -78,34 +94,32 @@ class Crowd:
     def partners(self, store: PairStore, node: int, free: Ints) -> Ints:
         """Crowded nodes among `free` (ascending) that match a crowded node; verified as far as needed."""
         place = self._place[node]
+        is_free = np.zeros(store.nodes, bool)
+        is_free[free] = True
+        is_free[node] = False
         ball = self._ball(place)
-        ball = ball[np.isin(self.crowded[ball], free) & (ball != place)]
+        ball = ball[is_free[self.crowded[ball]]]
         pairs = self._candidates(place, ball)
         if not len(pairs):
             return np.zeros(0, np.int64)
         store.ensure(pairs)
         return store.neighbours(pairs, self.limit, node)
 
-    def nearest(self, count: int) -> Ints:
-        """Pairs of each crowded node with its `count` nearest crowded nodes in the coordinates that spread most."""
-        if len(self.crowded) < 2:
-            return np.zeros((0, 2), np.int64)
-        tree = cKDTree(self._near)
-        _, found = tree.query(self._near, k=min(count + 1, len(self.crowded)), p=np.inf)
-        pairs = np.stack([np.repeat(np.arange(len(found)), found.shape[1]), found.ravel()], axis=1)
-        pairs = np.sort(self.crowded[pairs], axis=1)
-        return np.unique(pairs[pairs[:, 0] < pairs[:, 1]], axis=0)
+    def connect(self, store: PairStore, kept: Ints) -> None:
+        """Verify pairs until no candidate is left between different components of the graph at the limit.
 
-    def connect(self, store: PairStore) -> None:
-        """Verify pairs until no candidate is left between different components of the graph at the limit."""
+        kept (nodes,): the kept node of each node, as `stars` made them with `partners`.
+        """
         label = components(store.nodes, store.edges(self.limit)[0])
         values, counts = np.unique(label[self.crowded], return_counts=True)
         largest = values[np.argmax(counts)]
-        # Every pair between two components has an end outside the largest one.
+        taken = kept != np.arange(len(kept))
+        # Every pair between two components has an end outside the largest one, every undecided one a taken end.
         for node in np.sort(self.crowded[label[self.crowded] != largest]).tolist():
             place = self._place[node]
             ball = self._ball(place)
-            pairs = self._candidates(place, ball[label[self.crowded[ball]] != label[node]])
+            others = self.crowded[ball]
+            pairs = self._candidates(place, ball[(label[others] != label[node]) & (taken[others] | taken[node])])
             pairs = pairs[~store.has(pairs[:, 0] * store.nodes + pairs[:, 1])]
             while len(pairs):
                 store.ensure(pairs[:CHUNK])
@@ -113,3 +127,35 @@ class Crowd:
                     label[label == label[partner]] = label[node]
                 pairs = pairs[CHUNK:]
                 pairs = pairs[label[pairs[:, 0]] != label[pairs[:, 1]]]
+
+
+def nearest_pairs(search: Search, crowded: Ints, count: int) -> Ints:
+    """Pairs of each crowded node (ascending) with its `count` nearest ones in the coordinates that spread most."""
+    if len(crowded) < 2:
+        return np.zeros((0, 2), np.int64)
+    coordinates = search.coordinates[crowded]
+    near = coordinates[:, np.argsort(-np.ptp(coordinates, axis=0), kind="stable")[:NEAR_COLUMNS]]
+    _, found = cKDTree(near).query(near, k=min(count + 1, len(crowded)), p=np.inf)
+    pairs = np.stack([np.repeat(np.arange(len(near)), found.size // len(near)), found.ravel()], axis=1)
+    pairs = np.sort(crowded[pairs], axis=1)
+    return np.unique(pairs[pairs[:, 0] < pairs[:, 1]], axis=0)
+
+
+def kept_nodes(
+    search: Search, store: PairStore, limit: Limit, crowded: Ints, frames: list[Frame], node_rank: Ints
+) -> Ints:
+    """Verify what the crowds need at a grade; returns the kept node of each node."""
+    if not len(crowded):
+        return stars(store.nodes, node_rank, store.edges(limit)[0])
+    crowd = Crowd(search, limit, crowded, frames)
+    is_crowded = np.zeros(store.nodes, bool)
+    is_crowded[crowded] = True
+
+    def on_demand(node: int, free: Ints) -> Ints:
+        if not is_crowded[node]:
+            return np.zeros(0, np.int64)
+        return crowd.partners(store, node, free)
+
+    kept = stars(store.nodes, node_rank, store.edges(limit)[0], on_demand)
+    crowd.connect(store, kept)
+    return kept

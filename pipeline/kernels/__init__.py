@@ -13,7 +13,7 @@ from .sharing import kept, second_process, without_collecting
 
 SHARES: tuple[tuple[str, ...], tuple[str, ...]] = (
     ("canonical", "translations", "lattice_type", "operations"),
-    ("match", "lattice_maps", "witness_pairing", "rows_filter", "near_translations", "distances"),
+    ("match", "lattice_maps", "witness_pairing", "frames", "rows_filter", "near_translations", "distances"),
 )
 """What two processes compile at once: kernels that call the same functions stand together, and the halves take equally
 long."""

@@ -1,0 +1,251 @@
+"""Frames lose nothing: against all pairs compared, for crystals with and without symmetry, supercells, mirror images,
+layers, and limits around the noise; and what they rule out is most of what does not match."""
+
+from __future__ import annotations
+
+import itertools
+from dataclasses import replace
+
+import numpy as np
+import pytest
+import spglib
+
+from lattice_census.cell.canonical import canonicalise
+from lattice_census.grouping import composition, frames
+from lattice_census.grouping.candidates import start_search
+from lattice_census.grouping.composition import Options, group_composition
+from lattice_census.grouping.frames import FrameFilter, find_frames
+from lattice_census.grouping.pair_store import Limit, PairStore
+from lattice_census.grouping.preparation import prepare
+from lattice_census.grouping.verification import Verified, verify
+from lattice_census.grouping.window import near_window
+from lattice_census.kernels.self_maps import nearly_translated, self_maps
+from lattice_census.model.batch import CrystalBatch
+from lattice_census.tolerances import Tolerances
+
+from . import strategies as draw
+from .invariants import check_grouping, check_matches
+
+T = Tolerances()
+NONE = np.zeros((0, 2), np.int64)
+
+ROCK_SALT = (draw.PRIMITIVE["F"] * 5.64, np.array([[0.0] * 3, [0.5] * 3]), ["Na", "Cl"])
+CLOSE_PACKED = (
+    draw.cell_from_parameters(2.5, 2.5, 2.5 * np.sqrt(8 / 3), 90, 90, 120),
+    np.array([[1 / 3, 2 / 3, 0.25], [2 / 3, 1 / 3, 0.75]]),
+    ["Cu", "Cu"],
+)
+PEROVSKITE = (
+    np.eye(3) * 4.0,
+    np.array([[0, 0, 0], [0.5, 0.5, 0.5], [0.5, 0.5, 0], [0.5, 0, 0.5], [0, 0.5, 0.5]]),
+    ["Ba", "Ti", "O", "O", "O"],
+)
+GRAPHENE = (
+    draw.cell_from_parameters(2.46, 2.46, 15, 90, 90, 120),
+    np.array([[1 / 3, 2 / 3, 0.0], [2 / 3, 1 / 3, 0.0]]),
+    ["C", "C"],
+)
+BASES = {
+    "rock salt": ROCK_SALT,
+    "close packed": CLOSE_PACKED,
+    "perovskite": PEROVSKITE,
+    "no symmetry": draw.random_crystal(np.random.default_rng(1), "aP", 6),
+    "symmetric lattice": draw.random_crystal(np.random.default_rng(2), "cP", 5),
+    "layer": draw.random_layer(np.random.default_rng(3), "tp", 4),
+    "symmetric layer": GRAPHENE,
+}
+LAYERS = ("layer", "symmetric layer")
+
+
+def copies(name: str, seed: int, count: int, noise: float, strain: float) -> CrystalBatch:
+    """Canonical crystals of noisy copies, some of them doubled and tripled cells or mirror images, and of the crystal
+    itself."""
+    rng = np.random.default_rng(seed)
+    disguise = draw.disguise_layer if name in LAYERS else draw.disguise
+    made = [disguise(rng, BASES[name], 1)]
+    for i in range(count - 1):
+        made.append(disguise(rng, BASES[name], 3 if i % 3 == 0 else 1, noise=noise, strain=strain))
+    found = canonicalise((draw.layers if name in LAYERS else draw.batch)(made), T)
+    assert not found.refusals
+    return found.crystals
+
+
+def all_pairs(crystals: CrystalBatch, tolerances: Tolerances, mirror_images: str = "merge") -> Verified:
+    """Every pair, compared."""
+    window = near_window(tolerances)
+    first, second = np.triu_indices(len(crystals), 1)
+    return verify(prepare(crystals, window), np.stack([first, second], axis=1), window, mirror_images)
+
+
+def check_frames(name: str, seed: int, count: int, tolerances: Tolerances, noise: float) -> tuple[int, int, int]:
+    """No match between members of a frame is ruled out, either way round. Returns how many matches and other pairs
+    there were, and how many of the others were ruled out."""
+    crystals = copies(name, seed, count, noise, 0.1 * noise)
+    window = near_window(tolerances)
+    search = start_search(crystals, window)
+    store = PairStore(count, lambda p: verify(search.prepared, p, window), NONE, NONE)
+    rank = np.random.default_rng(seed).permutation(count)
+    found = find_frames(search, store, np.arange(count), rank)
+    grade = {tuple(p): g for p, g in zip(*_lists(all_pairs(crystals, tolerances)), strict=True)}
+    matches = others = ruled_out = 0
+    for limit in (
+        Limit(0, tolerances.same_shift, tolerances.same_strain, False),
+        Limit(1, tolerances.near_shift, tolerances.near_strain, False),
+    ):
+        for frame in found:
+            told = FrameFilter(search, frame, limit)
+            members = told.members.tolist()
+            for row, a in enumerate(members):
+                left = told(row, np.arange(len(members)))
+                for other, b in enumerate(members):
+                    if a == b:
+                        continue
+                    match = grade[min(a, b), max(a, b)] <= limit.grade
+                    assert left[other] or not match, (name, seed, a, b, limit)
+                    matches, others = matches + match, others + (not match)
+                    ruled_out += not left[other]
+    return matches, others, ruled_out
+
+
+def _lists(found: Verified) -> tuple[list[list[int]], list[int]]:
+    return [tuple(p) for p in found.pairs.tolist()], found.grade.tolist()  # type: ignore[return-value]
+
+
+@pytest.fixture
+def small_frames(monkeypatch):
+    """Frames are made of a few members already."""
+    monkeypatch.setattr(frames, "FEWEST", 3)
+    monkeypatch.setattr(frames, "EXTRA", 20)
+
+
+def scaled(factor: float) -> Tolerances:
+    names = ("same_shift", "same_strain", "near_shift", "near_strain")
+    return replace(T, **{n: getattr(T, n) * factor for n in names})
+
+
+def check_on(name: str, seeds: range, count: int) -> None:
+    """Noise at which copies match about as often as they do not, at both grades and three tolerances."""
+    matches = others = ruled_out = 0
+    for seed in seeds:
+        for factor, noise in ((1.0, 0.008), (1.0, 0.035), (0.5, 0.004), (1.5, 0.012)):
+            told = check_frames(name, 100 * seed + int(1000 * noise), count, scaled(factor), noise)
+            matches, others, ruled_out = matches + told[0], others + told[1], ruled_out + told[2]
+    assert matches > 100 and others > 100
+    assert ruled_out > 0.6 * others
+
+
+@pytest.mark.parametrize("name", BASES)
+def test_no_match_is_ruled_out_and_most_others_are(name, small_frames):
+    check_on(name, range(1), 14)
+
+
+@pytest.mark.slow
+@pytest.mark.parametrize("name", BASES)
+def test_no_match_is_ruled_out_on_many(name, small_frames):
+    check_on(name, range(1, 5), 24)
+
+
+@pytest.mark.parametrize("mirror_images", ["merge", "separate"])
+@pytest.mark.parametrize("name", BASES)
+def test_grouping_by_frames_equals_all_pairs(name, mirror_images, small_frames):
+    """Families and groups of a crowd at both grades, with all pairs compared as the truth."""
+    made = 0
+    for seed, noise in ((7, 0.008), (8, 0.035)):
+        crystals = copies(name, seed, 24, noise, 0.1 * noise)
+        keys = [f"k{i}" for i in range(24)]  # every record a node of its own
+        ids = [f"r{i:02}" for i in range(24)]
+        rank = np.random.default_rng(seed).permutation(24)
+        options = Options(mirror_images=mirror_images, crowded=4)
+        found = group_composition(crystals, keys, ids, rank, T, options)
+        assert found.counts["crowded"] > 12
+        check_matches(found)
+        truth = all_pairs(crystals, T, mirror_images)
+        grades = (truth.proper_grade if mirror_images == "separate" else truth.grade).tolist()
+        ranks = dict(zip(ids, rank.tolist(), strict=True))
+        for grade, name_of in enumerate(("same", "near")):
+            near = {}
+            for (a, b), g in zip(truth.pairs.tolist(), grades, strict=True):
+                near[ids[a], ids[b]] = near[ids[b], ids[a]] = g <= grade
+            check_grouping(found, ranks, near, name_of)
+            made += sum(near.values())
+    assert made > 50
+
+
+@pytest.mark.parametrize("fewest", [3, 1000])
+def test_a_chain_is_one_family(monkeypatch, fewest):
+    """One site moved by 0.035 further in each of three crowds, the last of one record: the best-ranked record takes the
+    first two, and what joins the third is a pair of a kept record with a taken one. No pair is verified but where it is
+    needed; with frames and without."""
+    monkeypatch.setattr(frames, "FEWEST", fewest)
+    monkeypatch.setattr(composition, "CROWD_NEIGHBOURS", 0)
+    rng = np.random.default_rng(6)
+    cell, positions, tokens = BASES["no symmetry"]
+    made = []
+    for i in range(41):
+        moved = positions.copy()
+        moved[0] += np.array([0.035 * 6 / 5 * (i // 20), 0, 0]) @ np.linalg.inv(cell)
+        made.append(draw.disguise(rng, (cell, moved, tokens), 1, noise=0.001))
+    crystals = canonicalise(draw.batch(made), T).crystals
+    ids = [f"r{i:02}" for i in range(41)]
+    found = group_composition(crystals, ids, ids, np.arange(41), T, Options(crowded=4))
+    near = found.members["near"]
+    assert near.family_id.tolist() == ["r00"] * 41
+    assert near.group_id.tolist() == ["r00"] * 40 + ["r40"]
+    check_matches(found)
+
+
+def test_a_crystal_is_laid_onto_itself_by_its_symmetry_operations():
+    """As many ways as spglib counts operations of the primitive cell (at symprec 1e-5)."""
+    for name, (cell, positions, tokens) in BASES.items():
+        if name in LAYERS:
+            continue
+        crystals = canonicalise(draw.batch([(cell, positions, tokens)]), T).crystals
+        c = prepare(crystals, near_window(T)).crystals
+        numbers = [sorted(set(tokens)).index(t) + 1 for t in crystals.tokens_of(0)]
+        known = spglib.get_symmetry((crystals.cells[0], crystals.positions, numbers), symprec=1e-5)
+        maps, partners, offsets = self_maps(c, 0, 0.01, 0.1)
+        assert len(maps) == len(known["rotations"]), name
+        assert sorted(m.tolist() for m in maps) == sorted(np.transpose(r).tolist() for r in known["rotations"])
+        assert np.abs(offsets).max() < 1e-6
+        for w, to in zip(maps, partners, strict=True):  # x W + t = x of the partner, up to lattice vectors
+            off = c.positions[to] - c.positions @ w
+            off -= off[0]
+            assert np.abs(off - np.rint(off)).max() < 1e-6
+
+
+def test_what_is_nearly_a_smaller_cell_is_no_hub(small_frames):
+    """A doubled cell with noise is nearly translated by the vector it was doubled with, the cell itself by none."""
+    rng = np.random.default_rng(4)
+    base = BASES["no symmetry"]
+    doubled = draw.disguise(rng, draw.supercell(base, np.diag([2, 1, 1])), 1, noise=0.03)
+    crystals = canonicalise(draw.batch([base, doubled]), T).crystals
+    c = prepare(crystals, near_window(T)).crystals
+    assert [nearly_translated(c, k, 0.3) for k in range(2)] == [False, True]
+    assert not nearly_translated(c, 1, 0.001)
+
+
+def test_a_hub_tells_nothing_at_a_limit_that_makes_it_a_smaller_cell(small_frames):
+    """A cell doubled by a site that alternates by 0.12: the vector it was doubled with takes sites 0.24 away. With
+    noise of 0.01, 4 R is about 0.12 at `same` and 0.28 at `near`."""
+    cell, positions, tokens = draw.supercell(BASES["no symmetry"], np.diag([2, 1, 1]))
+    first = [i for i, t in enumerate(tokens) if np.abs(positions[i] - positions[0])[1:].max() < 1e-9]
+    assert len(first) == 2
+    moved = positions.copy()
+    moved[first] += np.array([[0.12, 0, 0], [-0.12, 0, 0]]) @ np.linalg.inv(cell)
+    rng = np.random.default_rng(5)
+    made = [draw.disguise(rng, (cell, moved, tokens), 1, noise=0.01) for _ in range(12)]
+    search = start_search(canonicalise(draw.batch(made), T).crystals, near_window(T))
+    store = PairStore(12, lambda p: verify(search.prepared, p, search.window), NONE, NONE)
+    (frame,) = find_frames(search, store, np.arange(12), np.arange(12))
+    assert len(FrameFilter(search, frame, Limit(0, 0.01, 0.001, False)).members) == 11
+    assert len(FrameFilter(search, frame, Limit(1, 0.05, 0.01, False)).members) == 0
+
+
+def test_pairs_with_more_noise_are_ruled_out_without_comparing(small_frames):
+    """Of copies whose noise is twice the limit of `same`, none is compared at that grade but with the hub and with the
+    nearest ones."""
+    crystals = copies("no symmetry", 9, 40, 0.02, 0.0)
+    ids = [f"r{i:02}" for i in range(40)]
+    found = group_composition(crystals, ids, ids, np.arange(40), T, Options(crowded=4))
+    assert found.counts["verified"] < 40 * 10
+    assert len(list(itertools.combinations(range(40), 2))) > 40 * 15
