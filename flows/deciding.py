@@ -13,7 +13,7 @@ import duckdb
 from lattice_census.decisions.ledger import lapse, restore_ended, undo_decisions
 from lattice_census.decisions.pins import add_pins, remove_pin, set_pin, undo_pins
 from lattice_census.errors import UsageError
-from lattice_census.grouping.stage import group_records
+from lattice_census.grouping.stage import find_changed, group_records
 from lattice_census.grouping.update import update_groups
 from lattice_census.ingest.pool import WorkerPool
 from lattice_census.ingest.progress import Silent, call_directly
@@ -124,6 +124,7 @@ def _act(
             connection.execute("DELETE FROM runs WHERE run_id = ?", [run.run_id])
             raise
         if waiting:
+            find_changed(connection, settings)
             with WorkerPool(1) as pool:
                 group_records(workspace, run.run_id, settings, pool, Silent())
         connection.execute("BEGIN")

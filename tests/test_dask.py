@@ -87,7 +87,7 @@ def same_stores(one: Path, other: Path, *but: str) -> None:
 
 def test_a_store_made_by_workers_that_die_is_that_of_one_process(tmp_path: Path, monkeypatch):
     """Two workers; one is killed half-way of reading and the other half-way of grouping, and others take over."""
-    monkeypatch.setattr(stage, "MOST_RECORDS", 40)
+    monkeypatch.setattr(jobs, "MOST_RECORDS", 40)
     table, one, other = collection(tmp_path), tmp_path / "one.duckdb", tmp_path / "other.duckdb"
     parts = tmp_path / "shared"
     with Cluster(tmp_path) as cluster:

@@ -67,10 +67,10 @@ def group_records(
 ) -> GroupCounts:
     """Bring `matches` and the members of grades same and near up to date with the current records.
 
-    everything: work on every composition again. Each job's rows are committed in one transaction with its digests.
+    The compositions to work on are those of temp.changed_compositions (find_changed); everything: they are all there
+    are. Each job's rows are committed in one transaction with its digests.
     """
     connection, manifest = workspace.connection, workspace.manifest
-    _find_changed(connection, settings, everything)
     find_additions(connection, settings, everything)
     _in_transaction(connection, partial(_begin, connection, run_id))
     _in_transaction(connection, partial(_write_single, connection, run_id))
@@ -79,6 +79,7 @@ def group_records(
         progress.start("comparing and grouping", records)
         pairs = one_number(connection, "SELECT sum(keys * keys) FROM changed_compositions WHERE keys > 1")
         few = 4 if pairs < LITTLE_WORK else 1
+        settle = pairs >= LITTLE_WORK and workspace.mostly_in_log
         for job, done in done_in_order(pool, group_chunk, jobs(workspace, settings), manifest, few):
             _in_transaction(connection, partial(_commit, connection, manifest.checked(job.part), run_id))
             job.raw.unlink()
@@ -86,12 +87,16 @@ def group_records(
                 job.known.unlink()
             manifest.drop(job.part)
             progress.advance(done)
+            if settle:
+                # What was read is worked into the file while workers compare: publishing waits for the rest alone.
+                connection.execute("CHECKPOINT")
+                settle = False
     _in_transaction(connection, partial(forget_outdated, connection))
     return _counts(connection, run_id)
 
 
 def find_work(connection: duckdb.DuckDBPyConnection, settings: Settings, everything: bool = False) -> str | None:
-    """The hash of what `group_records` would bring about, or None where nothing is to be done.
+    """`find_changed`, and the hash of what `group_records` would bring about, or None where nothing is to be done.
 
     It is that of the records as they were last noted and of the settings, and does not depend on how much is done
     already, so that an interrupted run is known by it.
@@ -101,8 +106,8 @@ def find_work(connection: duckdb.DuckDBPyConnection, settings: Settings, everyth
     unfinished = one_number(
         connection, "SELECT count(*) FROM runs WHERE status = 'running' AND plan_hash = ?", [target]
     )
+    find_changed(connection, settings, everything)
     if not everything and not unfinished:
-        _find_changed(connection, settings, False)
         left = f"SELECT count(*) FROM outdated_members WHERE {_GONE}"
         if not one_number(connection, "SELECT count(*) FROM changed_compositions") and not one_number(connection, left):
             return None
@@ -134,7 +139,7 @@ def _in_transaction(connection: duckdb.DuckDBPyConnection, work: Callable[[], No
         raise
 
 
-def _find_changed(connection: duckdb.DuckDBPyConnection, settings: Settings, everything: bool) -> None:
+def find_changed(connection: duckdb.DuckDBPyConnection, settings: Settings, everything: bool = False) -> None:
     """The temporary table `changed_compositions` of those that are not grouped as they are: those without a row in
     `grouped_compositions`; where settings changed, also those with another digest; or all of them."""
     if everything or settings_changed(connection, settings):

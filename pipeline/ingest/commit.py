@@ -100,10 +100,10 @@ def _commit(connection: duckdb.DuckDBPyConnection, work: ChunkToCommit, part: Pa
 
 def _commit_incoming(connection: duckdb.DuckDBPyConnection, work: ChunkToCommit, part: str) -> dict[str, int]:
     run, source = work.run_id, work.source
-    same_facts = " AND ".join(f"r.{c} IS NOT DISTINCT FROM i.{c}" for c in FACT_COLUMNS)
-    # The comparison reads all that the store knows of its records: it is asked first whether it knows any of these.
     ours = "SELECT 1 FROM records WHERE record_id IN (SELECT record_id FROM read_parquet(?)) LIMIT 1"
-    known = "records" if one_row(connection, ours, [part]) else "(SELECT * FROM records WHERE false)"
+    if one_row(connection, ours, [part]) is None:
+        return _commit_new(connection, work, part)
+    same_facts = " AND ".join(f"r.{c} IS NOT DISTINCT FROM i.{c}" for c in FACT_COLUMNS)
     connection.execute(
         "CREATE OR REPLACE TEMP TABLE change AS SELECT i.record_id, "
         "CASE WHEN r.record_id IS NULL THEN 'new' WHEN r.content_hash <> i.content_hash THEN 'replaced' "
@@ -112,7 +112,7 @@ def _commit_incoming(connection: duckdb.DuckDBPyConnection, work: ChunkToCommit,
         "CASE WHEN r.content_hash = i.content_hash THEN r.content_run ELSE $1 END AS content_run, "
         f"CASE WHEN r.content_hash = i.content_hash AND {same_facts} AND r.missing_since_run IS NULL AND NOT $3 "
         "THEN r.changed_run ELSE $1 END AS changed_run "
-        f"FROM read_parquet($2) i LEFT JOIN {known} r USING (record_id)",
+        "FROM read_parquet($2) i LEFT JOIN records r USING (record_id)",
         [run, part, work.recompute],
     )
     rows = connection.execute("SELECT change, count(*) FROM change GROUP BY change").fetchall()
@@ -136,6 +136,24 @@ def _commit_incoming(connection: duckdb.DuckDBPyConnection, work: ChunkToCommit,
     insert_canonical_forms(connection, changed, [part])
     connection.execute("INSERT INTO seen SELECT ?, file, record_id FROM read_parquet(?)", [source, part])
     return counts
+
+
+def _commit_new(connection: duckdb.DuckDBPyConnection, work: ChunkToCommit, part: str) -> dict[str, int]:
+    """Write a chunk of which the store knows no record: nothing is compared. The rows of a part are in their order."""
+    connection.execute(
+        f"INSERT INTO records (record_id, source, {RECORD_COLUMNS}, first_run, content_run, changed_run, "
+        f"missing_since_run) SELECT i.record_id, $1, {RECORD_COLUMNS}, $3, $3, $3, NULL FROM read_parquet($2) i",
+        [work.source, part, work.run_id],
+    )
+    connection.execute(
+        "INSERT INTO structures SELECT i.record_id, i.given_cell, i.given_species, i.given_positions "
+        "FROM read_parquet(?) i",
+        [part],
+    )
+    insert_canonical_forms(connection, "read_parquet(?) i", [part])
+    connection.execute("INSERT INTO seen SELECT ?, file, record_id FROM read_parquet(?)", [work.source, part])
+    return {"new": one_number(connection, "SELECT count(*) FROM read_parquet(?)", [part]), "amended": 0, "replaced": 0,
+            "unchanged": 0}  # fmt: skip
 
 
 def _set_known_aside(connection: duckdb.DuckDBPyConnection, run: int, written: str) -> None:

@@ -58,7 +58,7 @@ def record_id(source: str, file: str, label: str) -> str:
 def raw_chunks(source: SourceToRead, settings: Settings) -> Iterator[RawChunk]:
     """The chunks of all changed files of a source. Raises WorkError where a file changes while it is read."""
     options = SplitOptions(source.settings.id_column, source.settings.structure_column, settings.max_text_bytes)
-    number, rows, size, begins = 0, _empty(), 0, list[str]()
+    number, rows, size, begins = 0, list[tuple[object, ...]](), 0, list[str]()
     found: dict[str, int] = {}
     for file in source.files:
         if not file.changed:
@@ -66,15 +66,14 @@ def raw_chunks(source: SourceToRead, settings: Settings) -> Iterator[RawChunk]:
         begins.append(file.file)
         found.setdefault(file.file, 0)
         for row in _file_rows(source, file, options):
-            for column, value in zip(rows.values(), row, strict=True):
-                column.append(value)
+            rows.append(row)
             found[file.file] += 1
             size += len(str(row[5] or "")) + len(str(row[6]))
-            if len(rows["label"]) >= settings.chunk_records or size >= CHUNK_BYTES:
+            if len(rows) >= settings.chunk_records or size >= CHUNK_BYTES:
                 yield _chunk(number, rows, begins, found)
-                number, rows, size, begins, found = number + 1, _empty(), 0, [], {file.file: 0}
+                number, rows, size, begins, found = number + 1, [], 0, [], {file.file: 0}
         _still_the_same(file)
-    if begins or rows["label"]:
+    if begins or rows:
         yield _chunk(number, rows, begins, found)
 
 
@@ -86,7 +85,7 @@ def _file_rows(source: SourceToRead, file: FileToRead, options: SplitOptions) ->
             used, inner, position = {}, member.file, 0
         record = member.record
         label = _numbered(used, record.label)
-        properties = json.dumps(record.properties, sort_keys=True, ensure_ascii=False, default=str)
+        properties = _as_json(record.properties)
         raw = hashlib.sha256(f"{record.text or ''}\0{properties}\0{member.reader}".encode("utf-8", "surrogatepass"))
         yield (
             record_id(source.source, member.file, label),
@@ -125,13 +124,13 @@ def _still_the_same(file: FileToRead) -> None:
         raise WorkError(f"{file.path} changed while it was read. Give the command again once the file is complete.")
 
 
-def _empty() -> dict[str, list[object]]:
-    return {name: [] for name in RAW_SCHEMA}
+_as_json = json.JSONEncoder(sort_keys=True, ensure_ascii=False, default=str).encode
 
 
-def _chunk(number: int, rows: dict[str, list[object]], begins: list[str], found: dict[str, int]) -> RawChunk:
-    frame = pl.DataFrame(rows, schema=RAW_SCHEMA)
+def _chunk(number: int, rows: list[tuple[object, ...]], begins: list[str], found: dict[str, int]) -> RawChunk:
+    columns = zip(*rows, strict=True) if rows else ((),) * len(RAW_SCHEMA)
+    frame = pl.DataFrame(dict(zip(RAW_SCHEMA, columns, strict=True)), schema=RAW_SCHEMA)
     digest = hashlib.sha256(json.dumps(begins).encode())
-    for row in frame.select("record_id", "position", "raw_hash", "reason").iter_rows():
-        digest.update(repr(row).encode())
+    for name in ("record_id", "position", "raw_hash", "reason"):
+        digest.update(repr(frame[name].to_list()).encode())
     return RawChunk(number, frame, tuple(begins), {f: n for f, n in found.items() if n}, digest.hexdigest())

@@ -115,6 +115,12 @@ class Workspace:
         newest = one_number(self.connection, "SELECT max(run_id) FROM runs")
         return marked.get("mark") != mark_of(self.published) or marked.get("run") != newest
 
+    @property
+    def mostly_in_log(self) -> bool:
+        """True where more of the work store stands in its write-ahead log than in the file."""
+        log = self.work_file.with_name(self.work_file.name + ".wal")
+        return log.exists() and log.stat().st_size > self.work_file.stat().st_size
+
     def publish(self) -> None:
         """Count the publication, checkpoint, and put a copy in the place of the published file."""
         connection = self.connection
