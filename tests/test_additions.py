@@ -1,4 +1,4 @@
-"""Records added to what was grouped: only pairs with a new one are compared, and the result is that of comparing all."""
+"""Records added to what was grouped: only pairs with a new one are compared, and the result is that of all pairs."""
 
 from __future__ import annotations
 
@@ -17,7 +17,7 @@ from lattice_census.model.batch import select
 from lattice_census.tolerances import Tolerances
 
 from . import strategies as draw
-from .tables_of_structures import query, rows_of, write_csv
+from .tables_of_structures import query, write_csv
 from .test_group_stage import MATCHES, MEMBERS, collection, run_group
 from .test_group_together import collection as crystals_of_compositions
 from .test_group_together import noisy, rows

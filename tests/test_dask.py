@@ -18,7 +18,7 @@ import pytest
 from lattice_census.errors import UsageError, WorkError
 from lattice_census.flows.group import night
 from lattice_census.flows.ingest import IngestJob
-from lattice_census.grouping import stage
+from lattice_census.grouping import jobs
 from lattice_census.ingest.progress import Silent, call_directly
 from lattice_census.ingest.scan import IngestRequest
 from lattice_census.settings import resolve_settings
@@ -108,7 +108,7 @@ def test_a_store_made_by_workers_that_die_is_that_of_one_process(tmp_path: Path,
     same_stores(one, other)
     assert not [p for p in parts.rglob("*") if p.is_file()]
 
-    monkeypatch.setattr(stage, "MOST_RECORDS", 10_000)
+    monkeypatch.setattr(jobs, "MOST_RECORDS", 10_000)
     third = tmp_path / "third.duckdb"
     run_night(table, third, chunk_records=77)
     same_stores(other, third, "chunks")

@@ -1,7 +1,8 @@
 """Compositions to which records were only added since they were grouped: what was found of the old ones still holds.
 
-Of those, pairs with a new record alone are compared, and only crystals that such a pair could match are read: a small
-composition's by their size (candidates.py, step 2), all of a composition that could become crowded (crowds.py).
+Of those, pairs with a new record alone are compared, and only crystals are read that could match a new one by size and
+by some of the stored mean distances (candidates.py, steps 1 and 2); but all of a composition that could have become
+crowded (composition.py), which is told by bounds on the numbers of candidates.
 """
 
 from __future__ import annotations
@@ -12,18 +13,23 @@ import duckdb
 
 from ..ingest.touched import settings_changed
 from ..settings import Settings
-from .composition import CROWDED
+from .candidates import TREE_COLUMNS
+from .composition import CROWDED, DENSE
 from .outdated import PINNED
+from .preparation import transform_offset, transform_slack
 from .window import near_window
 
 SIZE = "coalesce({0}.volume_angstrom3_per_site, {0}.area_angstrom2_per_site)"
 """Volume per site, of layers area per site, of a row of `canonical_forms`."""
 
+EQUAL_KEYS = 1e-4
+"""What transformed mean distances of two crystals of one key may differ by: those of a key are stored once."""
+
 
 def find_additions(connection: duckdb.DuckDBPyConnection, settings: Settings, everything: bool) -> None:
     """Make the temporary tables `added_compositions` (composition) of those in temp.changed_compositions, `old_records`
-    (record_id) of their records that were grouped, and `needed_records` (record_id) of those whose crystals are to be
-    read.
+    (record_id) of their records that were grouped, `needed_records` (record_id) of those whose crystals are to be read,
+    and `added_bounds` (composition, most_candidates, close_pairs).
 
     Where everything is to be made anew, or with other settings, nothing counts as added.
     """
@@ -42,22 +48,53 @@ def find_additions(connection: duckdb.DuckDBPyConnection, settings: Settings, ev
         f"WHERE NOT c.plain AND k.records = o.records AND c.composition NOT IN ({PINNED})"
     )
     connection.execute("DELETE FROM old_records WHERE composition NOT IN (SELECT composition FROM added_compositions)")
+    _find_needed(connection, settings)
+
+
+def _find_needed(connection: duckdb.DuckDBPyConnection, settings: Settings) -> None:
+    """The temporary tables `needed_records` and `added_bounds`, from `added_compositions` and `old_records`."""
+    window, k = near_window(settings.tolerances), settings.fingerprint_k
+    # Of the first and the last species of each crystal; one without mean distances is ruled out by none.
+    places = [c + 1 for c in TREE_COLUMNS if c < k] + [c - k for c in TREE_COLUMNS if c < k]
+    means = [f"ln(t.mean_distances_angstrom[{place}] + $offset) AS y{i}" for i, place in enumerate(places)]
+    agree = " AND ".join(f"coalesce(abs(n.y{i} - o.y{i}) <= $slack, true)" for i in range(len(places)))
     connection.execute(
-        "CREATE OR REPLACE TEMP TABLE added_nodes AS SELECT r.composition, min(r.record_id) AS record_id, "
-        f"arg_min({SIZE.format('f')}, r.record_id) AS size, "
-        "arg_min(o.record_id IS NULL, r.record_id) AS new, any_value(c.records) AS records "
+        f"CREATE OR REPLACE TEMP TABLE added_nodes AS SELECT g.*, {', '.join(means)} FROM ("
+        "SELECT r.composition, f.crystal_key, min(r.record_id) AS record_id, "
+        f"arg_min({SIZE.format('f')}, r.record_id) AS size, arg_min(o.record_id IS NULL, r.record_id) AS new "
         "FROM current_records r JOIN added_compositions c USING (composition) "
         "JOIN canonical_forms f USING (record_id) LEFT JOIN old_records o ON o.record_id = r.record_id "
-        "GROUP BY r.composition, f.crystal_key"
+        "GROUP BY r.composition, f.crystal_key) g LEFT JOIN crystal_types t USING (crystal_key)",
+        {"offset": transform_offset(window.shift, window.strain)},
+    )
+    connection.execute(
+        "CREATE OR REPLACE TEMP TABLE added_pairs AS SELECT n.composition, n.record_id AS new, o.record_id AS other "
+        "FROM added_nodes n JOIN added_nodes o ON o.composition = n.composition AND n.new "
+        "AND (NOT o.new OR o.record_id < n.record_id) AND o.size BETWEEN n.size / $factor AND n.size * $factor "
+        f"WHERE {agree}",
+        {
+            "factor": math.exp(3.0 * window.strain) * (1.0 + 1e-9),
+            "slack": transform_slack(window.strain) + EQUAL_KEYS,
+        },
+    )
+    # A key is crowded with over CROWDED candidates, and keys may be with over DENSE close ones on average: where the
+    # pairs above cannot bring that about, no crystals but theirs are needed.
+    connection.execute(
+        "CREATE OR REPLACE TEMP TABLE added_bounds AS SELECT c.composition, c.records, k.keys, "
+        "o.most_candidates + coalesce(m.most, 0) AS most_candidates, "
+        "o.close_pairs + coalesce(n.pairs, 0) AS close_pairs "
+        "FROM added_compositions c JOIN outdated_compositions o USING (composition) "
+        "JOIN (SELECT composition, count(*) AS keys FROM added_nodes GROUP BY composition) k USING (composition) "
+        "LEFT JOIN (SELECT composition, count(*) AS pairs FROM added_pairs GROUP BY composition) n USING (composition) "
+        "LEFT JOIN (SELECT composition, max(number) AS most FROM (SELECT composition, count(*) AS number FROM "
+        "(SELECT composition, new AS id FROM added_pairs UNION ALL SELECT composition, other FROM added_pairs) "
+        "GROUP BY composition, id) GROUP BY composition) m USING (composition)"
     )
     connection.execute(
         "CREATE OR REPLACE TEMP TABLE needed_records AS "
-        "SELECT o.record_id FROM added_nodes o JOIN added_nodes n ON n.composition = o.composition AND n.new "
-        "AND o.size BETWEEN n.size / $factor AND n.size * $factor WHERE o.records <= $crowded "
-        "UNION SELECT record_id FROM added_nodes WHERE new OR records > $crowded "
-        "UNION SELECT min(record_id) FROM added_nodes GROUP BY composition",  # so that there is a crystal at all
-        {
-            "factor": math.exp(3.0 * near_window(settings.tolerances).strain) * (1.0 + 1e-9),
-            "crowded": CROWDED,
-        },
+        "SELECT new AS record_id FROM added_pairs UNION SELECT other FROM added_pairs "
+        "UNION SELECT record_id FROM added_nodes WHERE new OR composition IN (SELECT composition FROM added_bounds "
+        "WHERE records > $crowded AND NOT coalesce(most_candidates <= $crowded AND 2 * close_pairs <= $dense * keys, "
+        "false)) UNION SELECT min(record_id) FROM added_nodes GROUP BY composition",  # that there is a crystal at all
+        {"crowded": CROWDED, "dense": DENSE},
     )

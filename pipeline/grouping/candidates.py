@@ -163,13 +163,13 @@ def start_search(
     return Search(window, found, scales, prepared, coordinates, transform_slack(window.strain))
 
 
-def spread_first(coordinates: Floats) -> tuple[Ints, NDArray[np.float32]]:
-    """(order, points): rows in the order of the coordinate that spreads most, and of each the SPREAD_COLUMNS that
-    spread most, in float32: pairs that are close in all coordinates lie in an interval, and most others differ in one
-    of the first few."""
+def spread_first(coordinates: Floats, columns: int | None = SPREAD_COLUMNS) -> tuple[Ints, NDArray[np.float32]]:
+    """(order, points): rows in the order of the coordinate that spreads most, and of each the coordinates that spread
+    most (None: all), in float32: pairs that are close in all coordinates lie in an interval, and most others differ in
+    one of the first few."""
     widest = np.argsort(-np.ptp(coordinates, axis=0), kind="stable") if len(coordinates) else np.arange(1)
     order = np.argsort(coordinates[:, widest[0]], kind="stable")
-    return order, np.ascontiguousarray(coordinates[order][:, widest[:SPREAD_COLUMNS]], dtype=np.float32)
+    return order, np.ascontiguousarray(coordinates[order][:, widest[:columns]], dtype=np.float32)
 
 
 def filtered(prepared: Prepared, coordinates: Floats, pairs: Ints, slack: float) -> Ints:

@@ -101,6 +101,10 @@ class Grouping:
     verified: Ints
     """(parts,): pairs of each part that were compared site by site."""
 
+    crowding: tuple[int, int] | None
+    """Most candidates of a node, and pairs that the coordinates alone leave: what tells whether there are crowds. None
+    where that was not asked, because there are few records or pairs of new ones alone were looked at."""
+
 
 def group_composition(
     batch: CrystalBatch,
@@ -136,20 +140,22 @@ def group_composition(
     by = searcher(select(batch, place), tolerances, chosen.search, chosen.mirror_images, chosen.neighbours)
     by = by if len(shown) == len(nodes) else shown_as(by, shown, len(nodes))
     part = None if parts is None else parts[rows]
-    if part is None:
-        crowded, candidates = _candidates_plain(by, len(nodes), chosen.crowded)
-        if len(crowded):
-            earlier = None  # which pairs of crowds are verified depends on all of them
-    else:
-        crowded, candidates = np.zeros(0, np.int64), _candidates_of_parts(by, part)
     old, gone = np.zeros(len(nodes), bool), np.zeros((0, 2), np.int64)
+    if earlier is not None:
+        old = earlier.old_nodes(nodes)
+    if part is None and len(shown) == len(nodes):
+        crowded, candidates, crowding = _candidates_plain(by, len(nodes), chosen.crowded)
+        if len(crowded):  # which pairs of crowds are verified depends on all of them
+            earlier, old = None, np.zeros(len(nodes), bool)
+        candidates = candidates[~old[candidates].all(axis=1)]
+    else:
+        of = np.zeros(len(nodes), np.int64) if part is None else part
+        crowded, candidates, crowding = np.zeros(0, np.int64), _candidates_of_parts(by, of, old), None
     if earlier is None:
         store = PairStore(len(nodes), by.verify, nodes.together, nodes.apart)
     else:
-        old = earlier.old_nodes(nodes)
         known, gone = earlier.matches(nodes)
         store = PairStore(len(nodes), by.verify, nodes.together, nodes.apart, known, old)
-        candidates = candidates[~old[candidates].all(axis=1)]
     is_crowded = np.zeros(len(nodes), bool)
     is_crowded[crowded] = True
     store.ensure(candidates[~is_crowded[candidates].all(axis=1)])
@@ -198,35 +204,36 @@ def group_composition(
         counts,
         of_part,
         verified,
+        crowding,
     )
 
 
-def _candidates_of_parts(by: Searcher, part: Ints) -> Ints:
-    """Every candidate pair of nodes of one part. Small parts need no tree."""
-    part = part[by.owner]
-    by_part = np.argsort(part, kind="stable")
+def _candidates_of_parts(by: Searcher, part: Ints, old: NDArray[np.bool_]) -> Ints:
+    """Every candidate pair of nodes of one part but those of two old ones. Small parts need no search."""
+    part, old = part[by.owner], old[by.owner]
+    by_part = np.lexsort((old, part))  # of each part the new ones first
     sizes = np.bincount(part)
     place = np.arange(len(part)) - np.repeat(np.cumsum(sizes) - sizes, sizes)
-    earlier = np.arange(int(place.sum())) - np.repeat(np.cumsum(place) - place, place)  # 0 ... place - 1 of each
-    second = np.repeat(np.arange(len(part)), place)
-    first = second - np.repeat(place, place) + earlier
+    others = np.where(old[by_part], 0, sizes[part[by_part]] - place - 1)  # those that follow in the part
+    first = np.repeat(np.arange(len(part)), others)
+    second = first + 1 + np.arange(len(first)) - np.repeat(np.cumsum(others) - others, others)
     pairs = np.sort(np.stack([by_part[first], by_part[second]], axis=1), axis=1)
     return by.owner[filtered(by.search.prepared, by.search.coordinates, pairs, by.search.slack)]
 
 
-def _candidates_plain(by: Searcher, nodes: int, crowded_at: int) -> tuple[Ints, Ints]:
-    """The crowded nodes, and every candidate pair but those that are not listed for crowds.
+def _candidates_plain(by: Searcher, nodes: int, crowded_at: int) -> tuple[Ints, Ints, tuple[int, int]]:
+    """The crowded nodes, every candidate pair but those that are not listed for crowds, and Grouping.crowding.
 
     Where the coordinates alone leave over DENSE pairs a node, its pairs are not even listed between nodes that have
     more than that; elsewhere a node is crowded that has more than `crowded_at` candidates after all filters.
     """
     search, owner = by.search, by.owner
     n = len(owner)
-    order, points = spread_first(search.coordinates)
+    order, points = spread_first(search.coordinates, None)
     slack = search.slack + ROUNDING
     counts = close_counts(points, slack)
     dense = np.zeros(n, bool)
-    listed = int(counts.sum()) // 2
+    close = listed = int(counts.sum()) // 2
     if n == nodes and 2 * listed > DENSE * n:
         dense[order] = counts > DENSE
         listed = int(counts[counts <= DENSE].sum())
@@ -236,4 +243,5 @@ def _candidates_plain(by: Searcher, nodes: int, crowded_at: int) -> tuple[Ints, 
     crowded = np.zeros(nodes, bool)
     if n == nodes:  # with several versions of a node every pair is verified
         crowded = dense | (np.bincount(pairs.ravel(), minlength=n) > crowded_at)
-    return np.flatnonzero(crowded), pairs
+    most = int(np.bincount(pairs.ravel()).max(initial=0))
+    return np.flatnonzero(crowded), pairs, (most, close)

@@ -61,8 +61,9 @@ def set_aside(connection: duckdb.DuckDBPyConnection, table: str, keep_matches: b
         connection.execute(f"DELETE FROM {name} WHERE composition IN {grouped}")
     if keep_matches:
         connection.execute(
-            "INSERT INTO outdated_compositions SELECT composition, run_id, records FROM grouped_compositions "
-            f"WHERE composition IN {compositions} AND composition NOT IN ({PINNED}) AND composition NOT IN "
+            "INSERT INTO outdated_compositions SELECT composition, run_id, records, most_candidates, close_pairs "
+            f"FROM grouped_compositions WHERE composition IN {compositions} AND composition NOT IN ({PINNED}) "
+            "AND composition NOT IN "
             "(SELECT composition FROM records WHERE record_id IN (SELECT record_id FROM more_matches)) "
             "ORDER BY composition"
         )

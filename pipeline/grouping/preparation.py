@@ -64,9 +64,13 @@ class Prepared:
 
 def transform(distances: Floats, shift: float, strain: float) -> Singles:
     """y = ln(d + c / (exp(s) - 1)), c = 2 exp(s/2) D, float32: paired distances differ by at most s in it."""
+    return np.log(distances + transform_offset(shift, strain)).astype(np.float32)
+
+
+def transform_offset(shift: float, strain: float) -> float:
+    """c / (exp(s) - 1) of `transform`, angstrom."""
     s = max(strain, SMALLEST_STRAIN)
-    c = 2.0 * math.exp(0.5 * s) * shift
-    return np.log(distances + c / math.expm1(s)).astype(np.float32)
+    return 2.0 * math.exp(0.5 * s) * shift / math.expm1(s)
 
 
 def transform_slack(strain: float) -> float:

@@ -180,7 +180,8 @@ def _write_single(connection: duckdb.DuckDBPyConnection, run_id: int) -> None:
         )
     note_changes(connection, run_id, f"SELECT record_id FROM current_records WHERE composition IN {single}")
     connection.execute(
-        "INSERT INTO grouped_compositions SELECT composition, digest, ?, records, keys, 0, 0 FROM changed_compositions "
+        "INSERT INTO grouped_compositions SELECT composition, digest, ?, records, keys, 0, 0, NULL, NULL "
+        "FROM changed_compositions "
         "WHERE plain ORDER BY composition",
         [run_id],
     )
@@ -210,7 +211,8 @@ def _commit(connection: duckdb.DuckDBPyConnection, part: Part, run_id: int) -> N
     connection.execute("INSERT INTO more_matches SELECT record_id FROM grouped WHERE more ORDER BY record_id")
     note_changes(connection, run_id, "SELECT record_id FROM grouped")
     connection.execute(
-        "INSERT INTO grouped_compositions SELECT composition, digest, ?, records, keys, candidates, verified FROM done "
-        "ORDER BY composition",
+        "INSERT INTO grouped_compositions SELECT d.composition, d.digest, ?, d.records, d.keys, d.candidates, "
+        "d.verified, coalesce(d.most_candidates, b.most_candidates), coalesce(d.close_pairs, b.close_pairs) "
+        "FROM done d LEFT JOIN added_bounds b USING (composition) ORDER BY d.composition",
         [run_id],
     )

@@ -133,6 +133,8 @@ def _grouped(rows: pl.DataFrame, known: pl.DataFrame, job: GroupJob) -> tuple[pl
         added=pl.col("added") & found.added,
         candidates=found.candidates,
         verified=found.verified,
+        most_candidates=pl.lit(found.crowding and found.crowding[0], pl.Int64),
+        close_pairs=pl.lit(found.crowding and found.crowding[1], pl.Int64),
         refused=pl.Series([refused] * len(of_part), dtype=pl.List(pl.Int64)),
     )
     dropped = pl.DataFrame(

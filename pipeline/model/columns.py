@@ -270,8 +270,10 @@ TABLES: dict[str, Table] = {
         ("run_id", "BIGINT", "Run that grouped it."),
         ("records", "BIGINT", "Records."),
         ("keys", "BIGINT", "Distinct keys."),
-        ("candidates", "BIGINT", "Pairs of keys that the filters could not rule out."),
-        ("verified", "BIGINT", "Pairs of keys that were compared site by site."),
+        ("candidates", "BIGINT", "Of the pairs looked at then, those that the filters could not rule out."),
+        ("verified", "BIGINT", "Pairs of keys that were compared site by site when it was last worked on."),
+        ("most_candidates", "BIGINT", "Most candidates that one key has, or a bound on it; NULL where it is small."),
+        ("close_pairs", "BIGINT", "Pairs of keys that mean distances alone leave, or a bound; NULL where it is small."),
     ),
     "findings": _table(
         "One row something that a curator must see; made anew by every run.",
@@ -383,6 +385,8 @@ TABLES: dict[str, Table] = {
         ("composition", "VARCHAR", "Reduced composition over species tokens."),
         ("run_id", "BIGINT", "Run that grouped it."),
         ("records", "BIGINT", "Records that it had then."),
+        ("most_candidates", "BIGINT", "Most candidates that one key has, or a bound on it; NULL where it is small."),
+        ("close_pairs", "BIGINT", "Pairs of keys that mean distances alone leave, or a bound; NULL where it is small."),
     ),
     "id_changes": _table(
         "One row a record whose group or family id changed in a run.",

@@ -61,7 +61,9 @@ CREATE TABLE grouped_compositions (
     records BIGINT,
     keys BIGINT,
     candidates BIGINT,
-    verified BIGINT
+    verified BIGINT,
+    most_candidates BIGINT,
+    close_pairs BIGINT
 );
 COMMENT ON TABLE grouped_compositions IS 'One row a composition that was grouped, with the digest of what it was grouped from.';
 COMMENT ON COLUMN grouped_compositions.composition IS 'Reduced composition over species tokens.';
@@ -69,8 +71,10 @@ COMMENT ON COLUMN grouped_compositions.digest IS 'SHA-256 of its records, keys a
 COMMENT ON COLUMN grouped_compositions.run_id IS 'Run that grouped it.';
 COMMENT ON COLUMN grouped_compositions.records IS 'Records.';
 COMMENT ON COLUMN grouped_compositions.keys IS 'Distinct keys.';
-COMMENT ON COLUMN grouped_compositions.candidates IS 'Pairs of keys that the filters could not rule out.';
-COMMENT ON COLUMN grouped_compositions.verified IS 'Pairs of keys that were compared site by site.';
+COMMENT ON COLUMN grouped_compositions.candidates IS 'Of the pairs looked at then, those that the filters could not rule out.';
+COMMENT ON COLUMN grouped_compositions.verified IS 'Pairs of keys that were compared site by site when it was last worked on.';
+COMMENT ON COLUMN grouped_compositions.most_candidates IS 'Most candidates that one key has, or a bound on it; NULL where it is small.';
+COMMENT ON COLUMN grouped_compositions.close_pairs IS 'Pairs of keys that mean distances alone leave, or a bound; NULL where it is small.';
 
 CREATE TABLE findings (
     code VARCHAR,
@@ -105,12 +109,16 @@ COMMENT ON COLUMN outdated_members.record_id IS 'The record.';
 CREATE TABLE outdated_compositions (
     composition VARCHAR,
     run_id BIGINT,
-    records BIGINT
+    records BIGINT,
+    most_candidates BIGINT,
+    close_pairs BIGINT
 );
 COMMENT ON TABLE outdated_compositions IS 'Compositions that changed since they were grouped and whose list of matches was complete.';
 COMMENT ON COLUMN outdated_compositions.composition IS 'Reduced composition over species tokens.';
 COMMENT ON COLUMN outdated_compositions.run_id IS 'Run that grouped it.';
 COMMENT ON COLUMN outdated_compositions.records IS 'Records that it had then.';
+COMMENT ON COLUMN outdated_compositions.most_candidates IS 'Most candidates that one key has, or a bound on it; NULL where it is small.';
+COMMENT ON COLUMN outdated_compositions.close_pairs IS 'Pairs of keys that mean distances alone leave, or a bound; NULL where it is small.';
 
 CREATE TABLE outdated_matches (
     record_a VARCHAR,
