@@ -11,10 +11,11 @@ import pytest
 import spglib
 
 from lattice_census.cell.canonical import canonicalise
-from lattice_census.grouping import composition, frames
+from lattice_census.grouping import composition, hubs
 from lattice_census.grouping.candidates import start_search
 from lattice_census.grouping.composition import Options, group_composition
-from lattice_census.grouping.frames import FrameFilter, find_frames
+from lattice_census.grouping.frames import FrameFilter
+from lattice_census.grouping.hubs import averaged, find_frames
 from lattice_census.grouping.pair_store import Limit, PairStore
 from lattice_census.grouping.preparation import prepare
 from lattice_census.grouping.verification import Verified, verify
@@ -55,17 +56,24 @@ BASES = {
     "symmetric layer": GRAPHENE,
 }
 LAYERS = ("layer", "symmetric layer")
+NAMES = (*BASES, "doubled rock salt", "doubled no symmetry", "doubled layer")
 
 
 def copies(name: str, seed: int, count: int, noise: float, strain: float) -> CrystalBatch:
     """Canonical crystals of noisy copies, some of them doubled and tripled cells or mirror images, and of the crystal
-    itself."""
+    itself. `doubled NAME`: doubled and fourfold cells alone."""
     rng = np.random.default_rng(seed)
-    disguise = draw.disguise_layer if name in LAYERS else draw.disguise
-    made = [disguise(rng, BASES[name], 1)]
-    for i in range(count - 1):
-        made.append(disguise(rng, BASES[name], 3 if i % 3 == 0 else 1, noise=noise, strain=strain))
-    found = canonicalise((draw.layers if name in LAYERS else draw.batch)(made), T)
+    of = name.removeprefix("doubled ")
+    disguise = draw.disguise_layer if of in LAYERS else draw.disguise
+    base, made = BASES[of], []
+    if of == name:
+        made = [disguise(rng, base, 1)]
+    else:
+        base = draw.supercell(base, np.diag([1, 2, 1]))
+    while len(made) < count:
+        larger = 1 if len(made) % 3 else 2 if base is not BASES[of] else 3
+        made.append(disguise(rng, base, larger, noise=noise, strain=strain))
+    found = canonicalise((draw.layers if of in LAYERS else draw.batch)(made), T)
     assert not found.refusals
     return found.crystals
 
@@ -93,7 +101,7 @@ def check_frames(name: str, seed: int, count: int, tolerances: Tolerances, noise
         Limit(1, tolerances.near_shift, tolerances.near_strain, False),
     ):
         for frame in found:
-            told = FrameFilter(search, frame, limit)
+            told = FrameFilter(frame, limit)
             members = told.members.tolist()
             for row, a in enumerate(members):
                 left = told(row, np.arange(len(members)))
@@ -114,8 +122,8 @@ def _lists(found: Verified) -> tuple[list[list[int]], list[int]]:
 @pytest.fixture
 def small_frames(monkeypatch):
     """Frames are made of a few members already."""
-    monkeypatch.setattr(frames, "FEWEST", 3)
-    monkeypatch.setattr(frames, "EXTRA", 20)
+    monkeypatch.setattr(hubs, "FEWEST", 3)
+    monkeypatch.setattr(hubs, "EXTRA", 20)
 
 
 def scaled(factor: float) -> Tolerances:
@@ -130,23 +138,23 @@ def check_on(name: str, seeds: range, count: int) -> None:
         for factor, noise in ((1.0, 0.008), (1.0, 0.035), (0.5, 0.004), (1.5, 0.012)):
             told = check_frames(name, 100 * seed + int(1000 * noise), count, scaled(factor), noise)
             matches, others, ruled_out = matches + told[0], others + told[1], ruled_out + told[2]
-    assert matches > 100 and others > 100
+    assert matches > 50 and others > 50
     assert ruled_out > 0.6 * others
 
 
-@pytest.mark.parametrize("name", BASES)
+@pytest.mark.parametrize("name", NAMES)
 def test_no_match_is_ruled_out_and_most_others_are(name, small_frames):
     check_on(name, range(1), 14)
 
 
 @pytest.mark.slow
-@pytest.mark.parametrize("name", BASES)
+@pytest.mark.parametrize("name", NAMES)
 def test_no_match_is_ruled_out_on_many(name, small_frames):
     check_on(name, range(1, 5), 24)
 
 
 @pytest.mark.parametrize("mirror_images", ["merge", "separate"])
-@pytest.mark.parametrize("name", BASES)
+@pytest.mark.parametrize("name", NAMES)
 def test_grouping_by_frames_equals_all_pairs(name, mirror_images, small_frames):
     """Families and groups of a crowd at both grades, with all pairs compared as the truth."""
     made = 0
@@ -168,7 +176,7 @@ def test_grouping_by_frames_equals_all_pairs(name, mirror_images, small_frames):
                 near[ids[a], ids[b]] = near[ids[b], ids[a]] = g <= grade
             check_grouping(found, ranks, near, name_of)
             made += sum(near.values())
-    assert made > 50
+    assert made > 30
 
 
 @pytest.mark.parametrize("fewest", [3, 1000])
@@ -176,7 +184,7 @@ def test_a_chain_is_one_family(monkeypatch, fewest):
     """One site moved by 0.035 further in each of three crowds, the last of one record: the best-ranked record takes the
     first two, and what joins the third is a pair of a kept record with a taken one. No pair is verified but where it is
     needed; with frames and without."""
-    monkeypatch.setattr(frames, "FEWEST", fewest)
+    monkeypatch.setattr(hubs, "FEWEST", fewest)
     monkeypatch.setattr(composition, "CROWD_NEIGHBOURS", 0)
     rng = np.random.default_rng(6)
     cell, positions, tokens = BASES["no symmetry"]
@@ -237,8 +245,32 @@ def test_a_hub_tells_nothing_at_a_limit_that_makes_it_a_smaller_cell(small_frame
     search = start_search(canonicalise(draw.batch(made), T).crystals, near_window(T))
     store = PairStore(12, lambda p: verify(search.prepared, p, search.window), NONE, NONE)
     (frame,) = find_frames(search, store, np.arange(12), np.arange(12))
-    assert len(FrameFilter(search, frame, Limit(0, 0.01, 0.001, False)).members) == 11
-    assert len(FrameFilter(search, frame, Limit(1, 0.05, 0.01, False)).members) == 0
+    assert len(FrameFilter(frame, Limit(0, 0.01, 0.001, False)).members) == 12
+    assert len(FrameFilter(frame, Limit(1, 0.05, 0.01, False)).members) == 0
+
+
+def test_a_noisy_larger_cell_is_averaged_over_its_translations():
+    """Four cells of rock salt with noise of 0.02: what is left are its two sites, within the noise."""
+    rng = np.random.default_rng(10)
+    larger = draw.disguise(rng, draw.supercell(ROCK_SALT, np.diag([1, 2, 2])), 1, noise=0.02)
+    crystals = canonicalise(draw.batch([larger, ROCK_SALT]), T).crystals
+    window = near_window(T)
+    one = averaged(prepare(crystals, window), 0)
+    assert one is not None and one.tokens_of(0).count("Na") == one.tokens_of(0).count("Cl") == 1
+    assert np.abs(np.linalg.det(one.cells[0])) == pytest.approx(5.64**3 / 4, rel=1e-9)
+    twice = 2 * (one.positions[1] - one.positions[0])  # half a lattice vector apart
+    assert 1e-6 < np.linalg.norm((twice - np.rint(twice)) @ one.cells[0]) / 2 < 0.04
+    assert (np.rint(twice) % 2).any()
+    assert averaged(prepare(crystals, window), 1) is None
+
+
+def test_larger_cells_alone_are_seen_from_one_that_is_no_record(small_frames):
+    crystals = copies("doubled rock salt", 11, 20, 0.008, 0.0008)
+    search = start_search(crystals, near_window(T))
+    store = PairStore(20, lambda p: verify(search.prepared, p, search.window), NONE, NONE)
+    (frame,) = find_frames(search, store, np.arange(20), np.arange(20))
+    assert frame.members.tolist() == list(range(20)) and store.computed == 0
+    assert np.diff(frame.crystals.offsets)[frame.hub] == 2
 
 
 def test_pairs_with_more_noise_are_ruled_out_without_comparing(small_frames):

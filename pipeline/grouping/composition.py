@@ -22,8 +22,8 @@ from ..tolerances import Tolerances
 from .candidates import ROUNDING, filtered, spread_first
 from .crowds import kept_nodes, nearest_pairs
 from .earlier import Earlier
-from .frames import find_frames
 from .graph import components, spanning_forest
+from .hubs import find_frames
 from .members import Members, members_of, selection
 from .nodes import nodes_of
 from .pair_store import PairStore

@@ -18,8 +18,10 @@ pairs verified (its nearest few in the fingerprint among them), and carries the 
 from __future__ import annotations
 
 from dataclasses import fields
+from functools import cache
 
 import numpy as np
+from numpy.typing import NDArray
 from scipy.spatial import cKDTree
 
 from ..fingerprint.distributions import Distributions
@@ -40,8 +42,39 @@ NEAR_COLUMNS = 4
 """Coordinates in which near ones are looked up: few, because a tree of many prunes nothing."""
 
 
+class _Distances:
+    """What the distances of crowded nodes leave of pairs, at limits of its own."""
+
+    def __init__(self, search: Search, limit: Limit, crowded: Ints) -> None:
+        scaled = bool((search.scales != 1.0).any())
+        window = search.window if scaled else Window((limit.shift,) * 3, (limit.strain,) * 3)
+        batch = select(search.prepared.batch, crowded)
+        sites = np.concatenate([np.arange(*search.prepared.batch.offsets[[i, i + 1]]) for i in crowded.tolist()])
+        rows = Distributions(*(getattr(search.rows, f.name)[sites] for f in fields(Distributions)))
+        self._inner = start_search(batch, window, search.scales[crowded], rows)
+        spread = np.ptp(self._inner.coordinates, axis=0)
+        widest = np.argsort(-spread, kind="stable")
+        # In the order of the coordinate that spreads most a ball lies in an interval of it.
+        self._order = np.argsort(self._inner.coordinates[:, widest[0]], kind="stable")
+        ordered = self._inner.coordinates[self._order]
+        self._line = ordered[:, widest[0]]
+        self._points = np.ascontiguousarray(ordered[:, widest[:SPREAD_COLUMNS]], dtype=np.float32)
+        self._at = np.argsort(self._order)
+
+    def left(self, place: int, others: Ints) -> Ints:
+        """Those of the places `others` whose crystals could match the one at `place`."""
+        slack, at = self._inner.slack, int(self._at[place])
+        start = int(np.searchsorted(self._line, self._line[at] - slack, side="left"))
+        stop = int(np.searchsorted(self._line, self._line[at] + slack, side="right"))
+        in_ball = np.zeros(len(self._order), bool)
+        in_ball[self._order[rows_close(self._points, start, stop, at, slack + ROUNDING)]] = True
+        others = others[in_ball[others]]
+        pairs = np.stack([np.full(len(others), place), others], axis=1)
+        return others[allowed_pairs(self._inner.prepared, pairs)[0]]
+
+
 class Crowd:
-    """The crowded nodes of a composition at one grade.
+    """The crowded nodes of a composition at one grade. Places are rows of `crowded`.
 
     Candidates are looked for with the limits of the grade itself, not of the window; what is verified is verified in
     the window, as everywhere.
@@ -49,57 +82,35 @@ class Crowd:
 
     def __init__(self, search: Search, limit: Limit, crowded: Ints, frames: list[Frame]) -> None:
         """crowded (c,): the nodes, ascending; frames: of some of them."""
-        scaled = bool((search.scales != 1.0).any())
-        window = search.window if scaled else Window((limit.shift,) * 3, (limit.strain,) * 3)
-        batch = select(search.prepared.batch, crowded)
-        sites = np.concatenate([np.arange(*search.prepared.batch.offsets[[i, i + 1]]) for i in crowded.tolist()])
-        rows = Distributions(*(getattr(search.rows, f.name)[sites] for f in fields(Distributions)))
-        self.limit = limit
-        self._inner = start_search(batch, window, search.scales[crowded], rows)
-        spread = np.ptp(self._inner.coordinates, axis=0)
-        widest = np.argsort(-spread, kind="stable")
-        # Places in the crowd are in the order of the coordinate that spreads most: a ball lies in an interval of it.
-        self._order = np.argsort(self._inner.coordinates[:, widest[0]], kind="stable")
-        ordered = self._inner.coordinates[self._order]
-        self._line = ordered[:, widest[0]]
-        self._points = np.ascontiguousarray(ordered[:, widest[:SPREAD_COLUMNS]], dtype=np.float32)
-        self.crowded = crowded[self._order]
-        self._place = {int(node): i for i, node in enumerate(self.crowded)}
-        self._filters = [FrameFilter(search, frame, limit) for frame in frames]
+        self.limit, self.crowded = limit, crowded
+        self._distances = cache(lambda: _Distances(search, limit, crowded))  # needed by nodes without a frame
+        self._filters = [FrameFilter(frame, limit) for frame in frames]
         self._frame = np.full(len(crowded), -1, np.int64)  # by place: number of the frame, and row in it
         self._row = np.zeros(len(crowded), np.int64)
         for number, told in enumerate(self._filters):
-            places = np.array([self._place[node] for node in told.members.tolist()], dtype=np.int64)
+            places = np.searchsorted(crowded, told.members)
             self._frame[places], self._row[places] = number, np.arange(len(places))
 
-    def _candidates(self, first: int, others: Ints) -> Ints:
-        """Pairs of nodes, of place `first` with places `others`, that neither frame nor rows can rule out."""
-        number = int(self._frame[first])
-        framed = (self._frame[others] == number) & (number >= 0)
-        mates, others = others[framed], others[~framed]
+    def _candidates(self, node: int, others: NDArray[np.bool_]) -> Ints:
+        """Pairs (p, 2) of a crowded node with others (nodes,) that neither frame nor distances can rule out."""
+        place = int(np.searchsorted(self.crowded, node))
+        places = np.flatnonzero(others[self.crowded])
+        number = int(self._frame[place])
+        framed = (self._frame[places] == number) & (number >= 0)
+        mates, rest = places[framed], places[~framed]
         if len(mates):
-            mates = mates[self._filters[number](int(self._row[first]), self._row[mates])]
-        pairs = np.stack([np.full(len(others), first), others], axis=1)
-        left = others[allowed_pairs(self._inner.prepared, self._order[pairs])[0]]
-        both = np.concatenate([mates, left])
-        return np.sort(np.stack([self.crowded[both], np.full(len(both), self.crowded[first])], axis=1), axis=1)
-
-    def _ball(self, place: int) -> Ints:
-        """Places whose coordinates all agree with those of a place."""
-        slack = self._inner.slack
-        start = int(np.searchsorted(self._line, self._line[place] - slack, side="left"))
-        stop = int(np.searchsorted(self._line, self._line[place] + slack, side="right"))
-        return rows_close(self._points, start, stop, place, slack + ROUNDING)
+            mates = mates[self._filters[number](int(self._row[place]), self._row[mates])]
+        if len(rest):
+            rest = self._distances().left(place, rest)
+        partners = self.crowded[np.sort(np.concatenate([mates, rest]))]
+        return np.sort(np.stack([partners, np.full(len(partners), node)], axis=1), axis=1)
 
     def partners(self, store: PairStore, node: int, free: Ints) -> Ints:
         """Crowded nodes among `free` (ascending) that match a crowded node; verified as far as needed."""
-        place = self._place[node]
         is_free = np.zeros(store.nodes, bool)
         is_free[free] = True
         is_free[node] = False
-        ball = self._ball(place)
-        ball = ball[is_free[self.crowded[ball]]]
-        pairs = self._candidates(place, ball)
+        pairs = self._candidates(node, is_free)
         if not len(pairs):
             return np.zeros(0, np.int64)
         store.ensure(pairs)
@@ -116,10 +127,7 @@ class Crowd:
         taken = kept != np.arange(len(kept))
         # Every pair between two components has an end outside the largest one, every undecided one a taken end.
         for node in np.sort(self.crowded[label[self.crowded] != largest]).tolist():
-            place = self._place[node]
-            ball = self._ball(place)
-            others = self.crowded[ball]
-            pairs = self._candidates(place, ball[(label[others] != label[node]) & (taken[others] | taken[node])])
+            pairs = self._candidates(node, (label != label[node]) & (taken | taken[node]))
             pairs = pairs[~store.has(pairs[:, 0] * store.nodes + pairs[:, 1])]
             while len(pairs):
                 store.ensure(pairs[:CHUNK])

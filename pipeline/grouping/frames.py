@@ -5,11 +5,11 @@ sites themselves most pairs that do not match differ by too much at the first or
 compared with the others, as everywhere; afterwards a pair of them is ruled out from what was found there, without
 lattice maps, origins and pairings of its own.
 
-Setting. K is the hub, with the lattice L and the sites x(k). A member A has a match with K: strain s_A, and each site i
-of A in the common cell stands at x(k) + u_A(i), where k is the site of K it is paired with, in the coordinates of K.
-M_A is the largest |u_A| in the metric of K. (Lengths below are in that metric.) Let A and B be members, and let them
-match with largest shift D and strain s. The match takes vectors by a linear map, which in the coordinates of K is a
-matrix W, and pairs site i of A with site j of B, where
+Setting. K is the hub, whether it is a record or not, with the lattice L and the sites x(k). A member A has a match with
+K: strain s_A, and each site i of A in the common cell stands at x(k) + u_A(i), where k is the site of K it is paired
+with, in the coordinates of K. M_A is the largest |u_A| in the metric of K. (Lengths below are in that metric.) Let A
+and B be members, and let them match with largest shift D and strain s. The match takes vectors by a linear map, which
+in the coordinates of K is a matrix W, and pairs site i of A with site j of B, where
 
     x(k') + u_B(j) = (x(k) + u_A(i)) W + t + delta(i).
 
@@ -51,17 +51,11 @@ import numpy as np
 from numpy.typing import NDArray
 
 from ..kernels.frames import not_ruled_out, probe_lengths, seen_from
-from ..kernels.rows_filter import rows_close
+from ..kernels.match_columns import Crystals
 from ..kernels.self_maps import nearly_translated, self_maps
 from ..model.batch import Floats, Ints
-from .candidates import ROUNDING, Search, allowed_pairs, spread_first
-from .pair_store import Limit, PairStore
-
-FEWEST = 32
-"""A hub with fewer members is not worth its frame."""
-
-EXTRA = 2
-"""Comparisons with hubs, for each node of the crowd, after which no further hub is looked for."""
+from .pair_store import Limit
+from .verification import Verified
 
 MARGIN = 1e-7
 """What rounding may add to shifts (angstrom) and strains: measured ones are compared after rounding to 1e-9."""
@@ -69,9 +63,14 @@ MARGIN = 1e-7
 
 @dataclass(frozen=True, slots=True)
 class Frame:
-    """A hub and the nodes that match it in the window with a pairing that is unique."""
+    """A hub (hubs.py) and the nodes that match it in the window with a pairing that is unique."""
+
+    crystals: Crystals
+    """The hub's batch."""
 
     hub: int
+    """Row of the hub in it."""
+
     members: Ints
     """(f,): nodes, ascending."""
 
@@ -99,6 +98,7 @@ class Frame:
         starts = np.concatenate([[0], np.cumsum(sizes)]).astype(np.int64)
         images = np.arange(starts[-1]) + np.repeat(self.starts[rows] - starts[:-1], sizes)
         return Frame(
+            self.crystals,
             self.hub,
             self.members[rows],
             self.moved[rows],
@@ -109,79 +109,56 @@ class Frame:
             self.strains[rows],
         )
 
+    def with_hub(self, node: int) -> Frame:
+        """The frame of a hub that is a node itself, with it for a member."""
+        cell, sites = self.crystals.cells[self.hub], self.moved.shape[1]
+        more = Frame(
+            self.crystals,
+            self.hub,
+            np.append(self.members, node),
+            np.concatenate([self.moved, np.zeros((1, sites, 3))]),
+            np.append(self.starts, self.starts[-1] + sites),
+            np.concatenate([self.images, np.zeros((sites, 3))]),
+            np.append(self.farthest, 0.0),
+            np.concatenate([self.metrics, (cell @ cell.T)[None]]),
+            np.append(self.strains, 0.0),
+        )
+        return more.take(np.argsort(more.members))
 
-def find_frames(search: Search, store: PairStore, crowded: Ints, rank: Ints) -> list[Frame]:
-    """Hubs for as many of the crowded nodes (ascending) as are worth it; verifies them against the others.
 
-    search: not scaled, one row a node. Around the first node without a frame, the best-ranked is taken from the more
-    central half of those with no approximate translation.
+def frame_of(crystals: Crystals, hub: int, nodes: Ints, found: Verified, shift: float) -> Frame:
+    """The frame of row `hub` of a batch, from matches between it and other rows.
+
+    nodes (n,): ascending but for the hub: the node that each row stands for; shift: of the window searched in.
     """
-    c = search.prepared.crystals
-    order, points = spread_first(search.coordinates[crowded])
-    nodes, middle_of = crowded[order], search.coordinates[crowded[order]]
-    slack = search.slack + ROUNDING
-    plain = np.diff(c.variants)[nodes] == 1
-    free = np.ones(len(nodes), bool)
-    frames, spent = [], 0
-    for seed in np.argsort(nodes).tolist():
-        if not free[seed]:
-            continue
-        free[seed] = False
-        near = rows_close(points, 0, len(points), seed, slack)
-        near = near[free[near] | (near == seed)]
-        fit = near[plain[near]]
-        if len(near) <= FEWEST or not len(fit) or spent + len(near) > EXTRA * len(nodes):
-            continue
-        off = np.abs(middle_of[fit] - np.median(middle_of[near], axis=0)).sum(axis=1)
-        central = nodes[fit[np.argsort(off, kind="stable")[: (len(fit) + 1) // 2]]]
-        hub = int(central[np.argmin(rank[central])])
-        others = nodes[near[nodes[near] != hub]]
-        pairs = np.sort(np.stack([np.full(len(others), hub), others], axis=1), axis=1)
-        pairs = pairs[allowed_pairs(search.prepared, pairs)[0]]
-        spent += len(pairs)
-        store.ensure(pairs)
-        frame = _frame(search, store, hub, np.sort(pairs.sum(axis=1) - hub))
-        if len(frame.members) >= FEWEST:
-            frames.append(frame)
-            free[np.isin(nodes, frame.members) | (nodes == hub)] = False
-    return frames
-
-
-def _frame(search: Search, store: PairStore, hub: int, others: Ints) -> Frame:
-    """The frame of a hub whose pairs with `others` (ascending) have been verified."""
-    found = store.matches()
-    if found is None:
-        raise ValueError("nothing has been verified")
-    codes = np.minimum(others, hub) * store.nodes + np.maximum(others, hub)
-    found = found.take(np.isin(found.pairs[:, 0] * store.nodes + found.pairs[:, 1], codes))
     found = found.take(np.argsort(found.pairs.sum(axis=1), kind="stable"))
     first = found.pairs[:, 1] == hub  # the member comes first
-    members = found.pairs.sum(axis=1) - hub
+    rows = found.pairs.sum(axis=1) - hub
     q = np.where(first[:, None, None], found.q_matrix, found.p_matrix)
-    sites = int(search.prepared.batch.offsets[hub + 1] - search.prepared.batch.offsets[hub])
+    sites = int(crystals.offsets[hub + 1] - crystals.offsets[hub])
     sizes = sites * np.abs(np.rint(np.linalg.det(q))).astype(np.int64)
     starts = np.concatenate([[0], np.cumsum(sizes)]).astype(np.int64)
     moved, images, farthest, metrics, unique = seen_from(
-        search.prepared.crystals,
+        crystals,
         hub,
-        members,
+        rows,
         np.where(first[:, None, None], found.p_matrix, found.q_matrix),
         q,
         np.where(first[:, None], found.shift, -found.shift),
         found.largest_shift,
-        search.window.shift,
+        shift,
         starts,
     )
-    whole = Frame(hub, members, moved, starts, images, farthest, metrics, found.strain)
+    whole = Frame(crystals, hub, nodes[rows], moved, starts, images, farthest, metrics, found.strain)
     return whole.take(np.flatnonzero(unique))
 
 
 class FrameFilter:
     """A frame at one limit: which of its members could match."""
 
-    def __init__(self, search: Search, frame: Frame, limit: Limit) -> None:
-        c, hub = search.prepared.crystals, frame.hub
-        strain = float(frame.strains.max()) + MARGIN
+    def __init__(self, frame: Frame, limit: Limit) -> None:
+        c, hub = frame.crystals, frame.hub
+        strain = float(frame.strains.max(initial=0.0)) + MARGIN
         total = 2.0 * strain + limit.strain + MARGIN
         reach = (limit.shift + MARGIN) * math.exp(0.5 * limit.strain + strain)
         grown = 1.0 + math.exp(total)
