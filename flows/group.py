@@ -66,6 +66,7 @@ def group_into(workspace: Workspace, job: GroupJob, pool: Engine, step: Step, pr
     work = find_work(connection, job.settings, job.everything)
     if work is None:
         return {"nothing_new": True}
+    workspace.expect_publication()
     arguments = {"everything": job.everything}
     run = begin_run(connection, "group", arguments, work, job.settings.model_dump(mode="json"), job.recompute)
     step("compile kernels", compile_kernels, job.settings, progress)

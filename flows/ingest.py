@@ -62,6 +62,7 @@ def ingest_into(
     work = step("scan", prepare_ingest, workspace, job.request, job.settings, command)
     if work is None:
         return {"nothing_new": True, "files": sum(1 for path in job.request.paths for _ in walk(path))}
+    workspace.expect_publication()
     step("compile kernels", compile_kernels, job.settings, progress)
     if work.canonical_again:
         step("reduce stored structures anew", recompute_canonical, workspace, job.settings, pool, progress)

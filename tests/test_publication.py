@@ -8,10 +8,13 @@ import sys
 from pathlib import Path
 
 import duckdb
+import numpy as np
 import pytest
 
 from lattice_census.errors import StoreError
+from lattice_census.store import workspace as workspaces
 from lattice_census.store.connect import open_for_reading
+from lattice_census.store.copy_ahead import BLOCK, PIECE, CopyAhead
 from lattice_census.store.lock import WriterLock
 from lattice_census.store.workspace import Workspace
 
@@ -136,3 +139,47 @@ def test_a_scratch_workspace_leaves_nothing(tmp_path: Path, ingest):
     assert sorted(p.name for p in (tmp_path / "census.duckdb.work").iterdir()) == ["lock"]
     with Workspace(tmp_path / "census.duckdb", "test") as workspace:
         assert workspace.connection.execute("SELECT count(*) FROM runs").fetchone() == (0,)
+
+
+@pytest.mark.parametrize("change", [0, BLOCK + 7, -BLOCK - 5, -PIECE])
+def test_a_copy_made_ahead_becomes_the_file_it_is_brought_up_to(tmp_path: Path, change: int):
+    """Blocks that differ, a longer and a shorter file; and a copy whose source somebody wrote to meanwhile."""
+    rng = np.random.default_rng(5)
+    before = rng.bytes(2 * PIECE + 1000)
+    work, published, target = tmp_path / "work", tmp_path / "published", tmp_path / "next"
+    published.write_bytes(before)
+    after = bytearray(before + rng.bytes(max(change, 0)))
+    del after[len(before) + min(change, 0) : len(before)]
+    for place in (0, BLOCK - 1, BLOCK, PIECE + 17, len(after) - 1):
+        after[place] ^= 1
+    work.write_bytes(after)
+    with CopyAhead(published, target) as copy:
+        assert copy.brought_up_to(work)
+        assert target.read_bytes() == bytes(after)
+        assert published.read_bytes() == before
+    assert not target.exists()
+
+
+def test_a_copy_that_cannot_be_made_is_none(tmp_path: Path):
+    (tmp_path / "work").write_bytes(b"work")
+    with CopyAhead(tmp_path / "not there", tmp_path / "next") as copy:
+        assert not copy.brought_up_to(tmp_path / "work")
+
+
+def test_what_is_published_from_a_copy_made_ahead_is_the_work_store(tmp_path: Path, ingest, monkeypatch):
+    """Also where nothing is published in the end, and in a dry run: no copy is left behind."""
+    monkeypatch.setattr(workspaces, "LEAST", 0)
+    used = []
+    whole = CopyAhead.brought_up_to
+    monkeypatch.setattr(CopyAhead, "brought_up_to", lambda self, work: used.append(whole(self, work)) or used[-1])
+    store, path = tmp_path / "census.duckdb", tmp_path / "a.csv"
+    for count in (3, 6, 2):
+        ingest(write_csv(path, rows_of(crystals(count))))
+        assert store.read_bytes() == (tmp_path / "census.duckdb.work" / "work.duckdb").read_bytes()
+    ingest(write_csv(path, rows_of(crystals(7))), dry_run=True)
+    assert used == [True, True]
+    assert query(store, "SELECT count(*) FROM current_records") == [(2,)]
+    monkeypatch.setattr("lattice_census.flows.ingest._close", lambda *_: 1 / 0)
+    with pytest.raises(ZeroDivisionError):
+        ingest(write_csv(path, rows_of(crystals(8))))
+    assert not (tmp_path / "census.duckdb.work" / "next.duckdb").exists()

@@ -71,8 +71,10 @@ def _read_jobs(
     )  # fmt: skip
     crystal = ", ".join(f"CASE WHEN there THEN {c} END AS {c}" for c in CRYSTAL)
     frame = connection.sql(
-        f"SELECT job, composition, digest, record_id, crystal_key, rank, periodicity, old, {crystal} FROM ("
-        "SELECT p.job, r.composition, p.digest, r.record_id, r.periodicity, k.rank, f.* EXCLUDE (record_id), "
+        "SELECT job, composition, digest, record_id, label, source, crystal_key, rank, periodicity, old, "
+        f"{crystal} FROM ("
+        "SELECT p.job, r.composition, p.digest, r.record_id, r.label, r.source, r.periodicity, k.rank, "
+        "f.* EXCLUDE (record_id), "
         "o.record_id IS NOT NULL AS old, a.composition IS NULL OR n.record_id IS NOT NULL AS there "
         "FROM packed p JOIN current_records r USING (composition) JOIN canonical_forms f USING (record_id) "
         "JOIN ranks k USING (record_id) LEFT JOIN added_compositions a ON a.composition = p.composition "

@@ -95,3 +95,21 @@ def note_changes(connection: duckdb.DuckDBPyConnection, run_id: int, records: st
     if one_number(connection, "SELECT count(*) FROM members_before"):
         connection.execute(f"DELETE FROM outdated_members {where}")
         note_id_changes(connection, run_id)
+
+
+def note_changed_ids(connection: duckdb.DuckDBPyConnection, run_id: int, grouped: str) -> None:
+    """As `note_changes` for the records of a table with record_id, same_group, same_family, near_group, near_family:
+    nothing of `members` is read."""
+    if not one_number(connection, "SELECT count(*) FROM outdated_members"):
+        return
+    now = " UNION ALL ".join(
+        f"SELECT '{grade}' AS grade, record_id, {grade}_group AS group_id, {grade}_family AS family_id FROM {grouped}"
+        for grade in GRADES
+    )
+    connection.execute(
+        "INSERT INTO id_changes SELECT $1, b.grade, b.record_id, b.group_id, m.group_id, b.family_id, m.family_id "
+        f"FROM outdated_members b JOIN ({now}) m USING (grade, record_id) "
+        "WHERE m.group_id <> b.group_id OR m.family_id <> b.family_id ORDER BY b.grade, b.record_id",
+        [run_id],
+    )
+    connection.execute(f"DELETE FROM outdated_members WHERE record_id IN (SELECT record_id FROM {grouped})")

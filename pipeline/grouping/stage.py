@@ -26,7 +26,7 @@ from ..store.workspace import Workspace
 from .additions import find_additions
 from .digest import digest_compositions
 from .jobs import jobs
-from .outdated import GRADES, forget_outdated, note_changes, set_aside
+from .outdated import GRADES, forget_outdated, note_changed_ids, note_changes, set_aside
 from .rank import rank_records
 from .work import group_chunk, parts_of
 
@@ -190,11 +190,7 @@ def _write_single(connection: duckdb.DuckDBPyConnection, run_id: int) -> None:
 def _commit(connection: duckdb.DuckDBPyConnection, part: Part, run_id: int) -> None:
     matches, members, summary, dropped = map(str, parts_of(part))
     connection.execute("CREATE OR REPLACE TEMP TABLE done AS SELECT * FROM read_parquet(?)", [summary])
-    connection.execute(
-        "CREATE OR REPLACE TEMP TABLE grouped AS SELECT g.*, r.label, r.source FROM read_parquet(?) g "
-        "JOIN records r USING (record_id)",
-        [members],
-    )
+    connection.execute("CREATE OR REPLACE TEMP TABLE grouped AS SELECT * FROM read_parquet(?)", [members])
     connection.execute("INSERT INTO refused_pins SELECT unnest(refused), composition FROM done ORDER BY ALL")
     connection.execute("INSERT INTO matches BY NAME SELECT * FROM read_parquet(?)", [matches])
     connection.execute(
@@ -209,7 +205,7 @@ def _commit(connection: duckdb.DuckDBPyConnection, part: Part, run_id: int) -> N
             [grade],
         )
     connection.execute("INSERT INTO more_matches SELECT record_id FROM grouped WHERE more ORDER BY record_id")
-    note_changes(connection, run_id, "SELECT record_id FROM grouped")
+    note_changed_ids(connection, run_id, "grouped")
     connection.execute(
         "INSERT INTO grouped_compositions SELECT d.composition, d.digest, ?, d.records, d.keys, d.candidates, "
         "d.verified, coalesce(d.most_candidates, b.most_candidates), coalesce(d.close_pairs, b.close_pairs) "

@@ -45,8 +45,8 @@ class GroupJob:
 
     number: int
     raw: Part
-    """Parquet of records: composition, digest, record_id, crystal_key, rank, whether it was grouped before (old), and
-    canonical form and matrix where they are asked for."""
+    """Parquet of records: composition, digest, record_id, label, source, crystal_key, rank, whether it was grouped
+    before (old), and canonical form and matrix where they are asked for."""
 
     known: Part | None
     """Parquet of the matches that old records had, if any."""
@@ -124,7 +124,7 @@ def _grouped(rows: pl.DataFrame, known: pl.DataFrame, job: GroupJob) -> tuple[pl
     place = np.cumsum(there) - 1
     new = replace(found.matches, pairs=place[found.matches.pairs])
     matches = _matches_frame(crystals, batch, new, found.witnesses, job.settings)
-    members = _members_frame(found)
+    members = _members_frame(found).hstack(rows.sort("record_id").select("label", "source"))
     if pins:
         more = [_matches_frame(rows[p.places], p.batch, p.match, p.witness, job.settings) for p in together]
         matches = by_key(pl.concat([matches, *more]), rows)

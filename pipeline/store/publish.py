@@ -7,18 +7,20 @@ import shutil
 from pathlib import Path
 
 
-def publish(work: Path, published: Path) -> None:
+def publish(work: Path, published: Path, copy: Path | None = None) -> None:
     """Put a closed, checkpointed work store in the place of the published file.
 
-    Open readers keep the file they opened. A stray write-ahead log beside the published file belongs to the file that
-    is replaced and would make the new one unreadable; it goes first.
+    copy: an equal file beside it that is whole on disk, if there is one; it is used up. Open readers keep the file they
+    opened. A stray write-ahead log beside the published file belongs to the file that is replaced and would make the
+    new one unreadable; it goes first.
     """
-    temporary = published.with_name(f".{published.name}.{os.getpid()}.new")
+    temporary = copy or published.with_name(f".{published.name}.{os.getpid()}.new")
     try:
-        with work.open("rb") as source, temporary.open("wb") as target:
-            shutil.copyfileobj(source, target, 8 << 20)
-            target.flush()
-            os.fsync(target.fileno())
+        if copy is None:
+            with work.open("rb") as source, temporary.open("wb") as target:
+                shutil.copyfileobj(source, target, 8 << 20)
+                target.flush()
+                os.fsync(target.fileno())
         published.with_name(published.name + ".wal").unlink(missing_ok=True)
         temporary.replace(published)
     finally:

@@ -15,6 +15,7 @@ import duckdb
 
 from ..errors import StoreError
 from .connect import has_store, no_store, open_for_reading, open_for_writing
+from .copy_ahead import LEAST, CopyAhead
 from .lock import WriterLock
 from .manifest import Manifest
 from .parts import empty_place, make_place, place_named
@@ -28,8 +29,8 @@ class Workspace:
     """The right to write to a store. Use as a context; nothing is visible to readers before `publish`.
 
     The folder FILE.work/ holds `work.duckdb` (the store that is worked on), `parts/` (results of chunks on their way,
-    unless they are kept elsewhere), `manifest.jsonl` (which of them are whole), `lock`, and `published.json` (how the
-    published file looked when it was last put in place).
+    unless they are kept elsewhere), `manifest.jsonl` (which of them are whole), `lock`, `published.json` (how the
+    published file looked when it was last put in place), and in a long run `next.duckdb` (the file to be published).
     """
 
     def __init__(
@@ -55,6 +56,7 @@ class Workspace:
         self._lock = WriterLock(self.folder / "lock", command, wait_seconds)
         self._connection: duckdb.DuckDBPyConnection | None = None
         self._manifest: Manifest | None = None
+        self._ahead: CopyAhead | None = None
 
     def __enter__(self) -> Workspace:
         if self.published.is_dir():
@@ -88,6 +90,9 @@ class Workspace:
             with suppress(duckdb.Error):
                 self._connection.close()
             self._connection = None
+        if self._ahead is not None:
+            self._ahead.__exit__(kind, error, at)
+            self._ahead = None
         if self._scratch:
             if self._manifest is not None and self._parts:
                 empty_place(self.place)
@@ -121,6 +126,17 @@ class Workspace:
         log = self.work_file.with_name(self.work_file.name + ".wal")
         return log.exists() and log.stat().st_size > self.work_file.stat().st_size
 
+    def expect_publication(self) -> None:
+        """Begin to copy the published file for the publication that this run will end in, where that saves time."""
+        if (
+            self._ahead is None
+            and not self._scratch
+            and self.published.exists()
+            and (self.published.stat().st_size >= LEAST)
+        ):
+            self._ahead = CopyAhead(self.published, self.folder / "next.duckdb")
+            self._ahead.__enter__()
+
     def publish(self) -> None:
         """Count the publication, checkpoint, and put a copy in the place of the published file."""
         connection = self.connection
@@ -134,7 +150,11 @@ class Workspace:
         connection.execute("CHECKPOINT")
         connection.close()
         self._connection = None
-        publish(self.work_file, self.published)
+        ahead = self._ahead is not None and self._ahead.brought_up_to(self.work_file)
+        publish(self.work_file, self.published, self.folder / "next.duckdb" if ahead else None)
+        if self._ahead is not None:
+            self._ahead.__exit__(None, None, None)
+            self._ahead = None
         self._write("settings.json", settings)
         self._write("published.json", {"mark": mark_of(self.published), "run": newest})
         self._connection = open_for_writing(self.work_file)
