@@ -14,11 +14,11 @@ from lattice_census.cell.canonical import canonicalise
 from lattice_census.grouping import composition, hubs
 from lattice_census.grouping.candidates import start_search
 from lattice_census.grouping.composition import Options, group_composition
-from lattice_census.grouping.frames import FrameFilter
+from lattice_census.grouping.frames import Frame, FrameFilter
 from lattice_census.grouping.hubs import averaged, find_frames
 from lattice_census.grouping.pair_store import Limit, PairStore
 from lattice_census.grouping.preparation import prepare
-from lattice_census.grouping.verification import Verified, verify
+from lattice_census.grouping.verification import NO_MATCH, Verified, verify
 from lattice_census.grouping.window import near_window
 from lattice_census.kernels.self_maps import nearly_translated, self_maps
 from lattice_census.model.batch import CrystalBatch
@@ -89,16 +89,27 @@ def check_frames(name: str, seed: int, count: int, tolerances: Tolerances, noise
     """No match between members of a frame is ruled out, either way round. Returns how many matches and other pairs
     there were, and how many of the others were ruled out."""
     crystals = copies(name, seed, count, noise, 0.1 * noise)
-    window = near_window(tolerances)
+    return check_filters(crystals, frames_of(crystals, tolerances, seed), tolerances, (name, seed))
+
+
+def frames_of(crystals: CrystalBatch, tolerances: Tolerances, seed: int) -> list[Frame]:
+    """Frames of a crowd of all the crystals."""
+    window, count = near_window(tolerances), len(crystals)
     search = start_search(crystals, window)
     store = PairStore(count, lambda p: verify(search.prepared, p, window), NONE, NONE)
-    rank = np.random.default_rng(seed).permutation(count)
-    found = find_frames(search, store, np.arange(count), rank)
+    return find_frames(search, store, np.arange(count), np.random.default_rng(seed).permutation(count))
+
+
+def check_filters(
+    crystals: CrystalBatch, found: list[Frame], tolerances: Tolerances, told_of: object
+) -> tuple[int, int, int]:
+    """As check_frames, of given frames."""
     grade = {tuple(p): g for p, g in zip(*_lists(all_pairs(crystals, tolerances)), strict=True)}
     matches = others = ruled_out = 0
-    for limit in (
+    for limit in (  # of the grades and of the window
         Limit(0, tolerances.same_shift, tolerances.same_strain, False),
         Limit(1, tolerances.near_shift, tolerances.near_strain, False),
+        Limit(2, near_window(tolerances).shift, near_window(tolerances).strain, False),
     ):
         for frame in found:
             told = FrameFilter(frame, limit)
@@ -109,7 +120,7 @@ def check_frames(name: str, seed: int, count: int, tolerances: Tolerances, noise
                     if a == b:
                         continue
                     match = grade[min(a, b), max(a, b)] <= limit.grade
-                    assert left[other] or not match, (name, seed, a, b, limit)
+                    assert left[other] or not match, (told_of, a, b, limit)
                     matches, others = matches + match, others + (not match)
                     ruled_out += not left[other]
     return matches, others, ruled_out
@@ -132,7 +143,7 @@ def scaled(factor: float) -> Tolerances:
 
 
 def check_on(name: str, seeds: range, count: int) -> None:
-    """Noise at which copies match about as often as they do not, at both grades and three tolerances."""
+    """Noise at which copies match about as often as they do not, at both grades, in the window, at three tolerances."""
     matches = others = ruled_out = 0
     for seed in seeds:
         for factor, noise in ((1.0, 0.008), (1.0, 0.035), (0.5, 0.004), (1.5, 0.012)):
@@ -271,6 +282,21 @@ def test_larger_cells_alone_are_seen_from_one_that_is_no_record(small_frames):
     (frame,) = find_frames(search, store, np.arange(20), np.arange(20))
     assert frame.members.tolist() == list(range(20)) and store.computed == 0
     assert np.diff(frame.crystals.offsets)[frame.hub] == 2
+
+
+def test_where_no_record_matches_many_the_mean_of_all_is_the_hub(monkeypatch):
+    """Copies with noise of 0.055: most pairs differ by more than the window, and all are within it of their mean."""
+    monkeypatch.setattr(hubs, "FEWEST", 8)
+    rng = np.random.default_rng(13)
+    base = draw.random_crystal(rng, "mP", 8)
+    made = [draw.disguise(rng, base, 1, noise=0.055, strain=0.001) for _ in range(40)]
+    crystals = canonicalise(draw.batch(made), T).crystals
+    assert (all_pairs(crystals, T).grade < NO_MATCH).mean() < 0.3
+    (frame,) = frames_of(crystals, T, 12)
+    assert len(frame.crystals.offsets) == 42  # the mean is no record
+    assert len(frame.members) == 40 and frame.farthest.max() < 0.075
+    matches, others, ruled_out = check_filters(crystals, [frame], T, "mean")
+    assert matches > 300 and ruled_out > 0.9 * others
 
 
 def test_pairs_with_more_noise_are_ruled_out_without_comparing(small_frames):
