@@ -52,6 +52,9 @@ class CopyAhead:
                     self._whole = True
                     return
                 target.write(piece)
+                # Piece by piece, so that nobody else's wait for the disk is one for the whole file.
+                target.flush()
+                os.fdatasync(target.fileno())
 
     def brought_up_to(self, work: Path) -> bool:
         """Wait for the copy and make it equal to a closed file, durably; False where there is no whole copy."""
