@@ -11,6 +11,7 @@ from lattice_census.grouping.stage import GroupCounts, find_work, group_records
 from lattice_census.grouping.update import update_groups
 from lattice_census.ingest.engine import Engine
 from lattice_census.ingest.progress import Progress, Step
+from lattice_census.ingest.touched import note_grouped
 from lattice_census.output.findings import find_all
 from lattice_census.settings import Settings
 from lattice_census.store.runs import Run, begin_run, end_run
@@ -50,7 +51,7 @@ def night(job: IngestJob, step: Step, progress: Progress) -> dict[str, Any]:
         Workspace(job.store, "run", job.wait_seconds, parts=job.settings.parts) as workspace,
         engine_for(job.settings, workspace) as pool,
     ):
-        read = ingest_into(workspace, job, pool, step, progress, "ingest")
+        read = ingest_into(workspace, job, pool, step, progress, "ingest", group_next=True)
         again = GroupJob(job.store, job.settings, recompute=job.request.recompute)
         grouped = group_into(workspace, again, pool, step, progress)
         kept = keep_into(workspace, KeepJob(job.store, job.settings), step)
@@ -78,7 +79,8 @@ def _close(workspace: Workspace, run: Run, settings: Settings, done: GroupCounts
     connection = workspace.connection
     connection.execute("BEGIN")
     try:
-        update_groups(connection, run.run_id, settings)
+        update_groups(connection, run.run_id, settings, compared=True)
+        note_grouped(connection, run.run_id)
         lapse(connection, run.run_id)
         findings = find_all(connection, settings)
         record_settings(connection, settings, ("verify", "keep"))

@@ -56,9 +56,18 @@ def ingest(job: IngestJob, step: Step, progress: Progress, command: str = "inges
 
 
 def ingest_into(
-    workspace: Workspace, job: IngestJob, pool: Engine, step: Step, progress: Progress, command: str
+    workspace: Workspace,
+    job: IngestJob,
+    pool: Engine,
+    step: Step,
+    progress: Progress,
+    command: str,
+    group_next: bool = False,
 ) -> dict[str, Any]:
-    """The steps of an ingest in an open workspace, up to the end of its run; not published yet."""
+    """The steps of an ingest in an open workspace, up to the end of its run; not published yet.
+
+    group_next: `group_into` follows before anything else is done.
+    """
     work = step("scan", prepare_ingest, workspace, job.request, job.settings, command)
     if work is None:
         return {"nothing_new": True, "files": sum(1 for path in job.request.paths for _ in walk(path))}
@@ -70,7 +79,7 @@ def ingest_into(
         if source.stale:
             step(f"read {source.source}", read_source, workspace, work, source, pool, progress)
     step("classify", classify_keys, workspace, job.settings, pool, progress)
-    counts = step("close the run", _close, workspace, work)
+    counts = step("close the run", _close, workspace, work, group_next)
     counts["no_unit"] = energies_without_unit(workspace.connection, work.plan)
     return counts
 
@@ -101,12 +110,12 @@ def compile_kernels(settings: Settings, progress: Progress) -> None:
     progress.note(f"Compiled the kernels in {seconds:.0f} s; later runs take them from {place}.")
 
 
-def _close(workspace: Workspace, work: IngestWork) -> dict[str, Any]:
+def _close(workspace: Workspace, work: IngestWork, group_next: bool) -> dict[str, Any]:
     """Exact groups, settings and the end of the run in one transaction; the findings are due when it is published."""
     connection = workspace.connection
     connection.execute("BEGIN")
     try:
-        waiting = update_groups(connection, work.run.run_id, work.settings)
+        waiting = update_groups(connection, work.run.run_id, work.settings, group_next)
         lapse(connection, work.run.run_id)
         note_findings_due(connection)
         record_settings(connection, work.settings, ("parse", "canonical", "fingerprint", "keep"))

@@ -17,11 +17,12 @@ from lattice_census.decisions.ledger import (
     planned_rows,
     release,
 )
+from lattice_census.grouping.update import settle_groups
 from lattice_census.ingest.pool import WorkerPool
 from lattice_census.ingest.progress import Silent, Step
 from lattice_census.settings import Settings
 from lattice_census.store.runs import begin_run, end_run
-from lattice_census.store.stages import changed_stages, refuse_mixed
+from lattice_census.store.stages import changed_stages, refuse_mixed, stored_settings
 from lattice_census.store.workspace import Workspace
 
 from .ingest import finish
@@ -59,6 +60,7 @@ def keep(job: KeepJob, step: Step) -> dict[str, Any]:
 
             with WorkerPool(1) as pool:
                 group_into(workspace, GroupJob(job.store, job.settings, recompute=True), pool, step, Silent())
+        settle_groups(workspace.connection, Settings.model_validate(stored_settings(workspace.connection)))
         counts = keep_into(workspace, job, step)
         if not job.dry_run:
             finish(workspace, job.settings, step)

@@ -17,6 +17,7 @@ from lattice_census.model.batch import select
 from lattice_census.tolerances import Tolerances
 
 from . import strategies as draw
+from .curated import run_night
 from .tables_of_structures import query, write_csv
 from .test_group_stage import MATCHES, MEMBERS, collection, run_group
 from .test_group_together import collection as crystals_of_compositions
@@ -102,10 +103,12 @@ def listed() -> list[dict[str, Any]]:
 
 @pytest.mark.parametrize("settings", [{}, {"matches_per_record": 2}, {"mirror_images": "separate"}])
 @pytest.mark.parametrize("large", [False, True])
+@pytest.mark.parametrize("by_night", [False, True])
 def test_a_store_that_grew_equals_one_made_at_once(
-    tmp_path: Path, ingest, listed, monkeypatch, settings: dict[str, Any], large: bool
+    tmp_path: Path, ingest, listed, monkeypatch, settings: dict[str, Any], large: bool, by_night: bool
 ):
-    """Grown in random steps; of large compositions all crystals are read, and each is a bundle of its own."""
+    """Grown in random steps: what was grouped is set aside in between, or stands where it was; large compositions, of
+    which all crystals may be read, are bundles of their own."""
     if large:
         monkeypatch.setattr(additions, "CROWDED", 4)
         monkeypatch.setattr(work, "CROWDED", 4)
@@ -122,15 +125,49 @@ def test_a_store_that_grew_equals_one_made_at_once(
     shuffled = [listed[i] for i in rng.permutation(len(listed))]
     table, one, grown = tmp_path / "t.csv", tmp_path / "one.duckdb", tmp_path / "grown.duckdb"
     for end in (20, 31, 32, 45, 60):
-        ingest(write_csv(table, shuffled[:end]), store=grown, **settings)
-        counts = run_group(grown, **settings)
+        write_csv(table, shuffled[:end])
+        if by_night:
+            counts = run_night(grown, table, **settings)["group"]
+        else:
+            ingest(table, store=grown, **settings)
+            counts = run_group(grown, **settings)
         assert query(grown, "SELECT count(*) FROM outdated_matches") == [(0,)]
         assert query(grown, "SELECT count(*) FROM outdated_compositions") == [(0,)]
     assert counts["compared"] < 120 and sum(c >= 0 for c in compared) >= 3, compared
-    ingest(write_csv(table, shuffled), store=one, **settings)
+    ingest(table, store=one, **settings)
     run_group(one, **settings)
     for asked in STATE:
         assert query(grown, asked) == query(one, asked)
+
+
+@pytest.mark.parametrize("by_night", [False, True])
+def test_ids_that_change_are_noted_however_the_store_grew(tmp_path: Path, ingest, listed, by_night: bool):
+    """Each step's changes are those between the members before and after it."""
+    table, store = tmp_path / "t.csv", tmp_path / "census.duckdb"
+    before: dict[tuple[str, str], tuple[str, str]] = {}
+    rng = np.random.default_rng(6)
+    shuffled = [listed[i] for i in rng.permutation(len(listed))]
+    for rows_now in (shuffled[:30], shuffled[:45], shuffled[5:50], shuffled):
+        run = query(store, "SELECT max(run_id) FROM runs")[0][0] if before else 0
+        write_csv(table, rows_now)
+        if by_night:
+            run_night(store, table)
+        else:
+            ingest(table, store=store)
+            run_group(store)
+        found = query(
+            store, "SELECT grade, record_id, group_id, family_id FROM members WHERE grade IN ('same', 'near')"
+        )
+        now = {(grade, record): (group, family) for grade, record, group, family in found}
+        expected = {(*k, *v, *now.get(k, (None, None))) for k, v in before.items() if now.get(k) != v}
+        noted = query(
+            store,
+            "SELECT grade, record_id, group_before, family_before, group_after, family_after FROM id_changes "
+            "WHERE run_id > ? AND grade IN ('same', 'near')",
+            run,
+        )
+        assert set(noted) == expected and len(noted) == len(expected)
+        before = now
 
 
 def test_what_changed_otherwise_is_compared_anew(tmp_path: Path, ingest, listed):

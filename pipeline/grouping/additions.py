@@ -15,7 +15,7 @@ from ..ingest.touched import settings_changed
 from ..settings import Settings
 from .candidates import TREE_COLUMNS
 from .composition import CROWDED, DENSE
-from .outdated import PINNED
+from .outdated import COMPLETE, PINNED
 from .preparation import transform_offset, transform_slack
 from .window import near_window
 
@@ -33,17 +33,23 @@ def find_additions(connection: duckdb.DuckDBPyConnection, settings: Settings, ev
 
     Where everything is to be made anew, or with other settings, nothing counts as added.
     """
-    possible = "SELECT * FROM outdated_compositions"
-    if everything or settings_changed(connection, settings):
-        possible += " WHERE false"
+    nothing = everything or settings_changed(connection, settings)
+    connection.execute(
+        "CREATE OR REPLACE TEMP TABLE earlier_compositions AS "
+        "SELECT * FROM outdated_compositions WHERE $some UNION ALL "
+        f"SELECT * FROM ({COMPLETE}) WHERE $some AND composition IN (SELECT composition FROM changed_compositions)",
+        {"some": not nothing},
+    )
     connection.execute(
         "CREATE OR REPLACE TEMP TABLE old_records AS SELECT r.record_id, r.composition FROM current_records r "
-        f"JOIN ({possible}) o ON o.composition = r.composition AND r.changed_run < o.run_id "
-        "WHERE r.record_id IN (SELECT record_id FROM outdated_members WHERE grade = 'near')"
+        "JOIN earlier_compositions o ON o.composition = r.composition AND r.changed_run < o.run_id "
+        "WHERE r.record_id IN (SELECT record_id FROM outdated_members WHERE grade = 'near') "
+        "OR r.record_id IN (SELECT record_id FROM members WHERE grade = 'near' AND record_id IN (SELECT record_id "
+        "FROM records WHERE composition IN (SELECT composition FROM earlier_compositions)))"
     )
     connection.execute(
         "CREATE OR REPLACE TEMP TABLE added_compositions AS SELECT c.composition, c.records "
-        f"FROM changed_compositions c JOIN ({possible}) o USING (composition) "
+        "FROM changed_compositions c JOIN earlier_compositions o USING (composition) "
         "JOIN (SELECT composition, count(*) AS records FROM old_records GROUP BY composition) k USING (composition) "
         f"WHERE NOT c.plain AND k.records = o.records AND c.composition NOT IN ({PINNED})"
     )
@@ -83,7 +89,7 @@ def _find_needed(connection: duckdb.DuckDBPyConnection, settings: Settings) -> N
         "CREATE OR REPLACE TEMP TABLE added_bounds AS SELECT c.composition, c.records, k.keys, "
         "o.most_candidates + coalesce(m.most, 0) AS most_candidates, "
         "o.close_pairs + coalesce(n.pairs, 0) AS close_pairs "
-        "FROM added_compositions c JOIN outdated_compositions o USING (composition) "
+        "FROM added_compositions c JOIN earlier_compositions o USING (composition) "
         "JOIN (SELECT composition, count(*) AS keys FROM added_nodes GROUP BY composition) k USING (composition) "
         "LEFT JOIN (SELECT composition, count(*) AS pairs FROM added_pairs GROUP BY composition) n USING (composition) "
         "LEFT JOIN (SELECT composition, max(number) AS most FROM (SELECT composition, count(*) AS number FROM "

@@ -82,7 +82,8 @@ def _read_jobs(
         "ORDER BY job, composition, record_id"
     ).pl()
     known = connection.sql(
-        f"SELECT p.job, {', '.join(f'm.{c}' for c in KNOWN)} FROM outdated_matches m JOIN packed p USING (composition) "
+        f"SELECT p.job, {', '.join(f'm.{c}' for c in KNOWN)} FROM (FROM outdated_matches UNION ALL FROM matches) m "
+        "JOIN packed p USING (composition) "
         "WHERE m.composition IN (SELECT composition FROM added_compositions) ORDER BY p.job, m.record_a, m.record_b"
     ).pl()
     pins = connection.execute(

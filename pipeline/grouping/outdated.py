@@ -1,7 +1,7 @@
-"""What was grouped of compositions that have changed: taken out of the results, and kept until `group` makes it anew.
+"""What was grouped of compositions that have changed: taken out of what is published, and kept until `group` comes.
 
 Members are kept to tell how ids change; matches, where the list of a composition is complete, to be taken over where
-only records were added since (additions.py).
+only records were added since (additions.py). A run that groups before it publishes leaves both where they are.
 """
 
 from __future__ import annotations
@@ -12,7 +12,6 @@ from ..ingest.touched import settings_changed
 from ..settings import Settings
 from ..store.rows import one_number
 from .digest import digest_compositions
-from .exact import note_id_changes
 
 GRADES = ("same", "near")
 
@@ -28,6 +27,13 @@ PINNED = (
     "WHERE p.kind IN ('apart', 'together')"
 )
 """Query of compositions in which pairs were ever pinned: their matches may stand by other records than the smallest."""
+
+COMPLETE = (
+    "SELECT composition, run_id, records, most_candidates, close_pairs FROM grouped_compositions "
+    f"WHERE composition NOT IN ({PINNED}) AND composition NOT IN "
+    "(SELECT composition FROM records WHERE record_id IN (SELECT record_id FROM more_matches))"
+)
+"""Query of the grouped compositions whose lists of matches are complete, as `outdated_compositions` has them."""
 
 
 def set_outdated_aside(connection: duckdb.DuckDBPyConnection, settings: Settings) -> int:
@@ -61,10 +67,7 @@ def set_aside(connection: duckdb.DuckDBPyConnection, table: str, keep_matches: b
         connection.execute(f"DELETE FROM {name} WHERE composition IN {grouped}")
     if keep_matches:
         connection.execute(
-            "INSERT INTO outdated_compositions SELECT composition, run_id, records, most_candidates, close_pairs "
-            f"FROM grouped_compositions WHERE composition IN {compositions} AND composition NOT IN ({PINNED}) "
-            "AND composition NOT IN "
-            "(SELECT composition FROM records WHERE record_id IN (SELECT record_id FROM more_matches)) "
+            f"INSERT INTO outdated_compositions SELECT * FROM ({COMPLETE}) WHERE composition IN {compositions} "
             "ORDER BY composition"
         )
         connection.execute(
@@ -86,30 +89,3 @@ def forget_outdated(connection: duckdb.DuckDBPyConnection) -> None:
     for name in ("outdated_matches", "outdated_compositions"):
         if one_number(connection, f"SELECT count(*) FROM {name}"):
             connection.execute(f"DELETE FROM {name}")
-
-
-def note_changes(connection: duckdb.DuckDBPyConnection, run_id: int, records: str) -> None:
-    """Note how the ids of records (a query) that were grouped before have changed, and forget what they were."""
-    where = f"WHERE record_id IN ({records})"
-    connection.execute(f"CREATE OR REPLACE TEMP TABLE members_before AS SELECT * FROM outdated_members {where}")
-    if one_number(connection, "SELECT count(*) FROM members_before"):
-        connection.execute(f"DELETE FROM outdated_members {where}")
-        note_id_changes(connection, run_id)
-
-
-def note_changed_ids(connection: duckdb.DuckDBPyConnection, run_id: int, grouped: str) -> None:
-    """As `note_changes` for the records of a table with record_id, same_group, same_family, near_group, near_family:
-    nothing of `members` is read."""
-    if not one_number(connection, "SELECT count(*) FROM outdated_members"):
-        return
-    now = " UNION ALL ".join(
-        f"SELECT '{grade}' AS grade, record_id, {grade}_group AS group_id, {grade}_family AS family_id FROM {grouped}"
-        for grade in GRADES
-    )
-    connection.execute(
-        "INSERT INTO id_changes SELECT $1, b.grade, b.record_id, b.group_id, m.group_id, b.family_id, m.family_id "
-        f"FROM outdated_members b JOIN ({now}) m USING (grade, record_id) "
-        "WHERE m.group_id <> b.group_id OR m.family_id <> b.family_id ORDER BY b.grade, b.record_id",
-        [run_id],
-    )
-    connection.execute(f"DELETE FROM outdated_members WHERE record_id IN (SELECT record_id FROM {grouped})")

@@ -10,7 +10,7 @@ from __future__ import annotations
 
 import hashlib
 import json
-from collections.abc import Callable
+from collections.abc import Callable, Sequence
 from dataclasses import dataclass
 from functools import partial
 
@@ -18,17 +18,18 @@ import duckdb
 
 from ..ingest.engine import Engine, done_in_order
 from ..ingest.progress import Progress
-from ..ingest.touched import STAGES, grouped_until, settings_changed
+from ..ingest.touched import STAGES, find_touched, grouped_until
 from ..settings import Settings
 from ..store.parts import Part
 from ..store.rows import one_number
 from ..store.workspace import Workspace
 from .additions import find_additions
 from .digest import digest_compositions
+from .former import any_gone, clear_former, find_former, forget_gone, replace_members
 from .jobs import jobs
-from .outdated import GRADES, forget_outdated, note_changed_ids, note_changes, set_aside
+from .outdated import GRADES, forget_outdated
 from .rank import rank_records
-from .work import group_chunk, parts_of
+from .work import GroupJob, group_chunk, parts_of
 
 LITTLE_WORK = 100_000
 """Possible pairs of keys that are compared before workers would have started."""
@@ -57,6 +58,10 @@ class GroupCounts:
     """Records that are not kept, by grade."""
 
 
+TOGETHER = 8
+"""Jobs whose rows are written in one transaction where rows that are there are compared with them."""
+
+
 def group_records(
     workspace: Workspace,
     run_id: int,
@@ -68,11 +73,12 @@ def group_records(
     """Bring `matches` and the members of grades same and near up to date with the current records.
 
     The compositions to work on are those of temp.changed_compositions (find_changed); everything: they are all there
-    are. Each job's rows are committed in one transaction with its digests.
+    are. What was grouped of one is replaced in the transaction that writes its digest.
     """
     connection, manifest = workspace.connection, workspace.manifest
     find_additions(connection, settings, everything)
-    _in_transaction(connection, partial(_begin, connection, run_id))
+    find_former(connection)
+    _in_transaction(connection, partial(forget_gone, connection, run_id))
     _in_transaction(connection, partial(_write_single, connection, run_id))
     records = one_number(connection, "SELECT coalesce(sum(records), 0) FROM changed_compositions WHERE NOT plain")
     if records:
@@ -80,17 +86,30 @@ def group_records(
         pairs = one_number(connection, "SELECT sum(keys * keys) FROM changed_compositions WHERE keys > 1")
         few = 4 if pairs < LITTLE_WORK else 1
         settle = pairs >= LITTLE_WORK and workspace.mostly_in_log
+        together = TOGETHER if one_number(connection, "SELECT count(*) FROM former_members") else 1
+        held: list[GroupJob] = []
+
+        def write() -> None:
+            parts = [manifest.checked(job.part) for job in held]
+            _in_transaction(connection, partial(_commit, connection, parts, run_id))
+            for job in held:
+                job.raw.unlink()
+                if job.known is not None:
+                    job.known.unlink()
+                manifest.drop(job.part)
+            held.clear()
+
         for job, done in done_in_order(pool, group_chunk, jobs(workspace, settings), manifest, few):
-            _in_transaction(connection, partial(_commit, connection, manifest.checked(job.part), run_id))
-            job.raw.unlink()
-            if job.known is not None:
-                job.known.unlink()
-            manifest.drop(job.part)
+            held.append(job)
+            if len(held) >= together:
+                write()
             progress.advance(done)
             if settle:
                 # What was read is worked into the file while workers compare: publishing waits for the rest alone.
                 connection.execute("CHECKPOINT")
                 settle = False
+        if held:
+            write()
     _in_transaction(connection, partial(forget_outdated, connection))
     return _counts(connection, run_id)
 
@@ -107,11 +126,8 @@ def find_work(connection: duckdb.DuckDBPyConnection, settings: Settings, everyth
         connection, "SELECT count(*) FROM runs WHERE status = 'running' AND plan_hash = ?", [target]
     )
     find_changed(connection, settings, everything)
-    if not everything and not unfinished:
-        left = f"SELECT count(*) FROM outdated_members WHERE {_GONE}"
-        if not one_number(connection, "SELECT count(*) FROM changed_compositions") and not one_number(connection, left):
-            return None
-    return target
+    changed = one_number(connection, "SELECT count(*) FROM changed_compositions")
+    return target if everything or unfinished or changed or any_gone(connection) else None
 
 
 def _counts(connection: duckdb.DuckDBPyConnection, run_id: int) -> GroupCounts:
@@ -141,71 +157,63 @@ def _in_transaction(connection: duckdb.DuckDBPyConnection, work: Callable[[], No
 
 def find_changed(connection: duckdb.DuckDBPyConnection, settings: Settings, everything: bool = False) -> None:
     """The temporary table `changed_compositions` of those that are not grouped as they are: those without a row in
-    `grouped_compositions`; where settings changed, also those with another digest; or all of them."""
-    if everything or settings_changed(connection, settings):
-        looked_at = "SELECT DISTINCT composition FROM current_records"
-    else:
-        looked_at = (
-            "SELECT DISTINCT composition FROM current_records "
-            "WHERE composition NOT IN (SELECT composition FROM grouped_compositions)"
-        )
-    connection.execute(f"CREATE OR REPLACE TEMP TABLE looked_at AS {looked_at}")
+    `grouped_compositions`, and of those that something happened to (temp.touched) the ones with another digest; or all
+    of them."""
+    find_touched(connection, settings)
+    connection.execute(
+        "CREATE OR REPLACE TEMP TABLE looked_at AS SELECT DISTINCT composition FROM current_records "
+        "WHERE $everything OR composition NOT IN (SELECT composition FROM grouped_compositions) "
+        "OR composition IN (SELECT composition FROM touched)",
+        {"everything": everything},
+    )
     rank_records(connection, settings, "looked_at")
     digest_compositions(connection, settings, "looked_at", everything)
 
 
-_GONE = "record_id NOT IN (SELECT record_id FROM current_records)"
-
-
-def _begin(connection: duckdb.DuckDBPyConnection, run_id: int) -> None:
-    """Forget records that take no part in results any more, and set aside what was grouped of those that changed."""
-    note_changes(connection, run_id, f"SELECT record_id FROM outdated_members WHERE {_GONE}")
-    if one_number(
-        connection, "SELECT count(*) FROM grouped_compositions JOIN changed_compositions USING (composition)"
-    ):
-        set_aside(connection, "changed_compositions", keep_matches=False)
-
-
 def _write_single(connection: duckdb.DuckDBPyConnection, run_id: int) -> None:
     """Members of compositions with one key: one family and one group, kept by rank."""
-    single = "(SELECT composition FROM changed_compositions WHERE plain)"
-    for grade in GRADES:
-        connection.execute(
-            "INSERT INTO members SELECT $1, first_value(r.record_id) OVER kept, min(r.record_id) OVER family, "
-            "r.record_id, r.label, r.source, row_number() OVER kept = 1, 0.0, 0.0 "
-            f"FROM current_records r JOIN ranks k USING (record_id) WHERE r.composition IN {single} "
-            "WINDOW kept AS (PARTITION BY r.composition ORDER BY k.rank), family AS (PARTITION BY r.composition) "
-            "ORDER BY r.record_id",
-            [grade],
-        )
-    note_changes(connection, run_id, f"SELECT record_id FROM current_records WHERE composition IN {single}")
     connection.execute(
-        "INSERT INTO grouped_compositions SELECT composition, digest, ?, records, keys, 0, 0, NULL, NULL "
-        "FROM changed_compositions "
-        "WHERE plain ORDER BY composition",
+        "CREATE OR REPLACE TEMP TABLE done AS SELECT *, false AS added FROM changed_compositions WHERE plain"
+    )
+    clear_former(connection, "done")
+    connection.execute(
+        "CREATE OR REPLACE TEMP TABLE now_members AS SELECT g.grade, first_value(r.record_id) OVER kept AS group_id, "
+        "min(r.record_id) OVER family AS family_id, r.record_id, r.label, r.source, "
+        "row_number() OVER kept = 1 AS kept, 0.0::DOUBLE AS witness_shift_angstrom, 0.0::DOUBLE AS witness_strain "
+        f"FROM (SELECT unnest({list(GRADES)}) AS grade) g CROSS JOIN current_records r JOIN ranks k USING (record_id) "
+        "WHERE r.composition IN (SELECT composition FROM done) "
+        "WINDOW kept AS (PARTITION BY g.grade, r.composition ORDER BY k.rank), "
+        "family AS (PARTITION BY g.grade, r.composition)"
+    )
+    replace_members(connection, run_id)
+    connection.execute(
+        "INSERT INTO grouped_compositions SELECT composition, digest, ?, records, keys, 0, 0, NULL, NULL FROM done "
+        "ORDER BY composition",
         [run_id],
     )
 
 
-def _commit(connection: duckdb.DuckDBPyConnection, part: Part, run_id: int) -> None:
-    matches, members, summary, dropped = map(str, parts_of(part))
+def _commit(connection: duckdb.DuckDBPyConnection, parts: Sequence[Part], run_id: int) -> None:
+    matches, members, summary, dropped = (list(map(str, files)) for files in zip(*map(parts_of, parts), strict=True))
     connection.execute("CREATE OR REPLACE TEMP TABLE done AS SELECT * FROM read_parquet(?)", [summary])
     connection.execute("CREATE OR REPLACE TEMP TABLE grouped AS SELECT * FROM read_parquet(?)", [members])
+    connection.execute("CREATE OR REPLACE TEMP TABLE dropped AS SELECT * FROM read_parquet(?)", [dropped])
+    clear_former(connection, "done")
     connection.execute("INSERT INTO refused_pins SELECT unnest(refused), composition FROM done ORDER BY ALL")
     connection.execute("INSERT INTO matches BY NAME SELECT * FROM read_parquet(?)", [matches])
     connection.execute(
-        "INSERT INTO matches SELECT m.* FROM outdated_matches m ANTI JOIN read_parquet(?) d USING (record_a, record_b) "
-        "WHERE m.composition IN (SELECT composition FROM done WHERE added)",
-        [dropped],
+        "INSERT INTO matches SELECT m.* FROM outdated_matches m ANTI JOIN dropped d USING (record_a, record_b) "
+        "WHERE m.composition IN (SELECT composition FROM done WHERE added)"
     )
-    for grade in GRADES:
-        connection.execute(
-            f"INSERT INTO members SELECT ?, g.{grade}_group, g.{grade}_family, g.record_id, g.label, g.source, "
-            f"g.{grade}_group = g.record_id, g.{grade}_shift, g.{grade}_strain FROM grouped g ORDER BY g.record_id",
-            [grade],
-        )
     connection.execute("INSERT INTO more_matches SELECT record_id FROM grouped WHERE more ORDER BY record_id")
-    note_changed_ids(connection, run_id, "grouped")
+    rows = " UNION ALL ".join(
+        f"SELECT '{grade}' AS grade, {grade}_group AS group_id, {grade}_family AS family_id, record_id, label, source, "
+        f"{grade}_group = record_id AS kept, {grade}_shift AS witness_shift_angstrom, {grade}_strain AS witness_strain "
+        "FROM grouped"
+        for grade in GRADES
+    )
+    connection.execute(f"CREATE OR REPLACE TEMP TABLE now_members AS {rows}")
+    replace_members(connection, run_id)
     connection.execute(
         "INSERT INTO grouped_compositions SELECT d.composition, d.digest, ?, d.records, d.keys, d.candidates, "
         "d.verified, coalesce(d.most_candidates, b.most_candidates), coalesce(d.close_pairs, b.close_pairs) "

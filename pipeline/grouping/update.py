@@ -4,24 +4,48 @@ from __future__ import annotations
 
 import duckdb
 
-from ..ingest.touched import find_touched, note_grouped
+from ..ingest.touched import COMPARED, EXACT, find_touched, note_grouped, settings_changed
 from ..settings import Settings
 from ..store.rows import one_number
 from .exact import group_exact
 from .outdated import GROUPED, WAITING, set_outdated_aside
 from .rank import rank_records
 
+TOUCHED = "SELECT count(*) FROM touched"
 
-def update_groups(connection: duckdb.DuckDBPyConnection, run_id: int, settings: Settings) -> int:
+
+def update_groups(
+    connection: duckdb.DuckDBPyConnection, run_id: int, settings: Settings, compared: bool = False
+) -> int:
     """Make the groups of equal content and key anew where records changed, and set what `group` must compare again
     aside. Inside the caller's transaction. Returns the number of compositions that wait for `group`, once any was
     grouped.
+
+    compared: `group` has just compared what was to be compared, or will before anything else is done or published;
+    in the second case the run is noted when it has.
     """
-    find_touched(connection, settings)
-    if not one_number(connection, "SELECT count(*) FROM touched"):
+    find_touched(connection, settings, EXACT)
+    if one_number(connection, TOUCHED):
+        rank_records(connection, settings, "touched")
+        group_exact(connection, run_id)
+        note_grouped(connection, run_id, EXACT)
+    if compared and not settings_changed(connection, settings):
+        return 0
+    find_touched(connection, settings, COMPARED)
+    if not one_number(connection, TOUCHED):
         return one_number(connection, WAITING) if one_number(connection, GROUPED) else 0
     rank_records(connection, settings, "touched")
-    group_exact(connection, run_id)
     waiting = set_outdated_aside(connection, settings)
     note_grouped(connection, run_id)
     return waiting
+
+
+def settle_groups(connection: duckdb.DuckDBPyConnection, settings: Settings) -> None:
+    """`update_groups` in a transaction of its own, for what an interrupted run left."""
+    connection.execute("BEGIN")
+    try:
+        update_groups(connection, one_number(connection, "SELECT max(run_id) FROM runs"), settings)
+        connection.execute("COMMIT")
+    except BaseException:
+        connection.execute("ROLLBACK")
+        raise

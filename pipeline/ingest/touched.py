@@ -36,27 +36,31 @@ _ALL = """
 """
 
 
-def find_touched(connection: duckdb.DuckDBPyConnection, settings: Settings) -> None:
+EXACT, COMPARED = "exact_until", "grouped_until"
+"""Names of the facts that say up to which run the groups of equal content and key, and those of matches, are those of
+the records, or are known to wait for `group`."""
+
+
+def find_touched(connection: duckdb.DuckDBPyConnection, settings: Settings, fact: str = COMPARED) -> None:
     """Make the temporary table `touched` (composition): those of records, earlier versions, withdrawals and pins of
-    runs after the one that last brought the groups up to date; all where a setting of STAGES changed."""
-    since = grouped_until(connection)
+    runs after the one that a fact tells; all where a setting of STAGES changed."""
+    since = grouped_until(connection, fact)
     if since is None or settings_changed(connection, settings):
         connection.execute(f"CREATE OR REPLACE TEMP TABLE touched AS {_ALL}")
     else:
         connection.execute(f"CREATE OR REPLACE TEMP TABLE touched AS {_SINCE}", {"since": since})
 
 
-def grouped_until(connection: duckdb.DuckDBPyConnection) -> int | None:
-    """The run up to which the groups of equal content and key are those of the records, and what waits for `group` is
-    known; None before the first. Read-only."""
-    row = one_row(connection, "SELECT value FROM store_facts WHERE name = 'grouped_until'")
+def grouped_until(connection: duckdb.DuckDBPyConnection, fact: str = COMPARED) -> int | None:
+    """The run that a fact tells, None before the first. Read-only."""
+    row = one_row(connection, "SELECT value FROM store_facts WHERE name = ?", [fact])
     return None if row is None else int(row[0])
 
 
-def note_grouped(connection: duckdb.DuckDBPyConnection, run_id: int) -> None:
-    """Note that the groups are up to date with this run; inside the caller's transaction."""
-    connection.execute("DELETE FROM store_facts WHERE name = 'grouped_until'")
-    connection.execute("INSERT INTO store_facts VALUES ('grouped_until', ?)", [str(run_id)])
+def note_grouped(connection: duckdb.DuckDBPyConnection, run_id: int, fact: str = COMPARED) -> None:
+    """Note that groups are up to date with this run; inside the caller's transaction."""
+    connection.execute("DELETE FROM store_facts WHERE name = ?", [fact])
+    connection.execute("INSERT INTO store_facts VALUES (?, ?)", [fact, str(run_id)])
 
 
 def settings_changed(connection: duckdb.DuckDBPyConnection, settings: Settings) -> bool:
