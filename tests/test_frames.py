@@ -18,9 +18,10 @@ from lattice_census.grouping.frames import Frame, FrameFilter
 from lattice_census.grouping.hubs import averaged, find_frames
 from lattice_census.grouping.pair_store import Limit, PairStore
 from lattice_census.grouping.preparation import prepare
+from lattice_census.grouping.self_maps import lattice_self_maps, nearly_translated, self_maps
 from lattice_census.grouping.verification import NO_MATCH, Verified, verify
 from lattice_census.grouping.window import near_window
-from lattice_census.kernels.self_maps import nearly_translated, self_maps
+from lattice_census.kernels.lattice_maps import reduced_bases
 from lattice_census.model.batch import CrystalBatch
 from lattice_census.tolerances import Tolerances
 
@@ -230,6 +231,23 @@ def test_a_crystal_is_laid_onto_itself_by_its_symmetry_operations():
             off = c.positions[to] - c.positions @ w
             off -= off[0]
             assert np.abs(off - np.rint(off)).max() < 1e-6
+
+
+def test_lattices_are_laid_onto_themselves_by_all_small_integer_matrices_within_the_strain():
+    """Against all matrices of -1, 0 and 1; lattices of all types, moved a little off their symmetry."""
+    small = np.array(list(itertools.product((-1, 0, 1), repeat=9))).reshape(-1, 3, 3)
+    small = small[np.abs(np.rint(np.linalg.det(small))) == 1]
+    rng = np.random.default_rng(14)
+    several = 0
+    for lattice_type in draw.LATTICE_TYPES:
+        cell = draw.primitive_cell(rng, lattice_type) @ (np.eye(3) + rng.uniform(-0.004, 0.004, (3, 3)))
+        basis = reduced_bases(cell[None], np.zeros(1, bool))[0][0]
+        found = {m.tobytes() for m in lattice_self_maps(basis, 0.012, False) if np.abs(m).max() <= 1}
+        stretches = np.linalg.svd(np.linalg.inv(basis) @ small @ basis, compute_uv=False)
+        known = {m.tobytes() for m in small[np.abs(np.log(stretches)).max(axis=1) <= 0.012]}
+        assert found == known, lattice_type
+        several += len(known) > 2
+    assert several > 8
 
 
 def test_what_is_nearly_a_smaller_cell_is_no_hub(small_frames):

@@ -25,7 +25,7 @@ in the coordinates of K is a matrix W, and pairs site i of A with site j of B, w
    the distance of like sites. Some multiple m l is a translation of A, B and K together, for which F(k + m l) = F(k) +
    m l W; hence m l W = m l', and l W = l'. The same holds for the inverse.
 4. F(k + l) = F(k) + l W, since the two sides lie within 2 R of each other. So W and F are one of the ways to lay K onto
-   itself with strain s' and reach R, all of which are known (kernels/self_maps.py).
+   itself with strain s' and reach R, all of which are known (self_maps.py).
 5. Solved for the members, u_B(j) - u_A(i) W - (x(k) W + t - x(k')) = delta(i). Over the common cell of A and B each
    site k stands equally often, and so do the sites of A and of B that are paired with it. The mean over those is taken:
    u(k), the mean of u over all sites paired with k, keeps the bound, whatever supercells A and B are. The mean of delta
@@ -50,12 +50,15 @@ from dataclasses import dataclass
 import numpy as np
 from numpy.typing import NDArray
 
-from ..kernels.frames import not_ruled_out, probe_lengths, seen_from
+from ..kernels.frames import not_ruled_out, seen_from
 from ..kernels.match_columns import Crystals
-from ..kernels.self_maps import nearly_translated, self_maps
 from ..model.batch import Floats, Ints
 from .pair_store import Limit
+from .self_maps import nearly_translated, self_maps
 from .verification import Verified
+
+PROBES = np.array([[1, 0, 0], [0, 1, 0], [0, 0, 1], [1, 1, 0], [1, 0, 1], [0, 1, 1]], dtype=np.float64)
+"""Lattice vectors whose lengths are compared."""
 
 MARGIN = 1e-7
 """What rounding may add to shifts (angstrom) and strains: measured ones are compared after rounding to 1e-9."""
@@ -168,9 +171,15 @@ class FrameFilter:
         if radius > room or nearly_translated(c, hub, 4.0 * radius):
             inside[:] = False
         self._frame = frame.take(np.flatnonzero(inside))
-        self._cell, self._reach, self._slack = c.cells[hub], reach + MARGIN, limit.strain + MARGIN
-        self._lengths = probe_lengths(self._frame.metrics)
-        self._ways = self_maps(c, hub, total, radius) if inside.any() else None
+        self._reach, self._slack = reach + MARGIN, limit.strain + MARGIN
+        self._lengths = _log_lengths(PROBES, self._frame.metrics)
+        if inside.any():
+            cell = c.cells[hub]
+            maps, partners, offsets = self_maps(c, hub, total, radius)
+            self._turn = np.linalg.inv(cell) @ maps @ cell  # W in the Cartesian frame of the hub
+            self._offsets = offsets @ cell
+            self._sources = np.argsort(partners, axis=1)  # F^-1
+            self._probes = PROBES @ np.linalg.inv(maps)
 
     @property
     def members(self) -> Ints:
@@ -179,19 +188,26 @@ class FrameFilter:
 
     def __call__(self, row: int, others: Ints) -> NDArray[np.bool_]:
         """Which of the members at rows `others` could match the member at `row`, at the limit."""
-        if self._ways is None:
-            raise ValueError("a frame without members")
         f = self._frame
+        ways, sites = self._sources.shape
+        own = f.images[f.starts[row] : f.starts[row + 1]]
+        images = (own @ self._turn).reshape(ways, sites, -1, 3) + self._offsets[:, :, None]
+        expected = f.moved[row] @ self._turn + self._offsets
         return not_ruled_out(
-            self._cell,
-            *self._ways,
+            np.take_along_axis(expected, self._sources[:, :, None], axis=1),
+            np.take_along_axis(images, self._sources[:, :, None, None], axis=1).reshape(ways, -1, 3),
+            _log_lengths(self._probes, f.metrics[row]),
             f.moved,
             f.images,
             f.starts,
-            f.metrics,
             self._lengths,
-            row,
             others,
             self._reach,
             self._slack,
         )
+
+
+def _log_lengths(vectors: Floats, metrics: Floats) -> Floats:
+    """Logarithms of the lengths of vectors (..., w, 3) in metrics (..., 3, 3), which go with the vectors' leading
+    axes."""
+    return np.asarray(0.5 * np.log((vectors @ metrics * vectors).sum(axis=-1)))
