@@ -5,8 +5,9 @@ from __future__ import annotations
 import duckdb
 
 from .pinned import part_pinned
+from .replaced import COLUMNS, replace_members
 
-GRADES = {"copy": "r.content_hash", "key": "x.crystal_key"}
+GRADES = ("copy", "key")
 
 
 def group_exact(connection: duckdb.DuckDBPyConnection, run_id: int) -> None:
@@ -16,35 +17,21 @@ def group_exact(connection: duckdb.DuckDBPyConnection, run_id: int) -> None:
     The kept record of a group is its best by the keep rules (rank.py): a pure function of the current records, the
     rules and the pins. To be called inside a transaction.
     """
-    where = (
-        "WHERE grade IN ('copy', 'key') AND record_id IN "
-        "(SELECT record_id FROM records WHERE composition IN (SELECT composition FROM touched))"
-    )
-    connection.execute(f"CREATE OR REPLACE TEMP TABLE members_before AS SELECT * FROM members {where}")
-    connection.execute(f"DELETE FROM members {where}")
-    for grade, column in GRADES.items():
-        connection.execute(
-            "INSERT INTO members "
-            "SELECT $1, first_value(r.record_id) OVER kept, min(r.record_id) OVER family, r.record_id, r.label, "
-            "r.source, row_number() OVER kept = 1, 0.0, 0.0 "
-            "FROM current_records r JOIN canonical_forms x USING (record_id) JOIN ranks k USING (record_id) "
-            "WHERE r.composition IN (SELECT composition FROM touched) "
-            f"WINDOW kept AS (PARTITION BY {column} ORDER BY k.rank), "
-            f"family AS (PARTITION BY {column}) ORDER BY r.record_id",
-            [grade],
-        )
-        part_pinned(connection, grade)
-    note_id_changes(connection, run_id)
-
-
-def note_id_changes(connection: duckdb.DuckDBPyConnection, run_id: int) -> None:
-    """Rows of `id_changes` for records of temp.members_before whose group or family id is another now, or none."""
     connection.execute(
-        "INSERT INTO id_changes SELECT $1, b.grade, b.record_id, b.group_id, m.group_id, b.family_id, m.family_id "
-        "FROM members_before b LEFT JOIN (SELECT * FROM members WHERE record_id IN "
-        "(SELECT record_id FROM members_before)) m USING (grade, record_id) "
-        "WHERE m.group_id IS DISTINCT FROM b.group_id OR m.family_id IS DISTINCT FROM b.family_id "
-        "ORDER BY b.grade, b.record_id",
-        [run_id],
+        f"CREATE OR REPLACE TEMP TABLE former_members AS SELECT {COLUMNS} FROM members WHERE grade IN {GRADES} AND "
+        "record_id IN (SELECT record_id FROM records WHERE composition IN (SELECT composition FROM touched))"
     )
-    connection.execute("DROP TABLE temp.members_before")
+    connection.execute(
+        "CREATE OR REPLACE TEMP TABLE now_members AS SELECT grade, first_value(record_id) OVER kept AS group_id, "
+        "min(record_id) OVER family AS family_id, record_id, label, source, row_number() OVER kept = 1 AS kept, "
+        "0.0::DOUBLE AS witness_shift_angstrom, 0.0::DOUBLE AS witness_strain FROM ("
+        "SELECT g.grade, r.record_id, r.label, r.source, k.rank, "
+        "CASE g.grade WHEN 'copy' THEN r.content_hash ELSE x.crystal_key END AS mark "
+        "FROM current_records r JOIN canonical_forms x USING (record_id) JOIN ranks k USING (record_id) "
+        f"CROSS JOIN (SELECT unnest({list(GRADES)}) AS grade) g "
+        "WHERE r.composition IN (SELECT composition FROM touched)) "
+        "WINDOW kept AS (PARTITION BY grade, mark ORDER BY rank), family AS (PARTITION BY grade, mark)"
+    )
+    for grade in GRADES:
+        part_pinned(connection, grade)
+    replace_members(connection, run_id, GRADES, whole=True)

@@ -1,4 +1,4 @@
-"""What a composition was grouped to before, and its replacement by what it is now: rows that are equal stay.
+"""What a composition was grouped to before, found and taken away when it is grouped anew.
 
 What was grouped before stands where it was (`members`, `matches` ...) in a run that has just read what changed, or was
 set aside when the store was published in between (outdated.py).
@@ -10,10 +10,13 @@ import duckdb
 
 from ..store.rows import one_number
 from .outdated import GRADES
+from .replaced import COLUMNS
 
-_COLUMNS = "grade, group_id, family_id, record_id, label, source, kept, witness_shift_angstrom, witness_strain"
 _NOT_CURRENT = "record_id NOT IN (SELECT record_id FROM current_records)"
-_LEFT_EMPTY = "(SELECT composition FROM touched WHERE composition NOT IN (SELECT composition FROM current_records))"
+_LEFT_EMPTY = (
+    "(SELECT composition FROM touched EXCEPT SELECT composition FROM current_records "
+    "WHERE composition IN (SELECT composition FROM touched))"
+)
 
 
 def any_gone(connection: duckdb.DuckDBPyConnection) -> bool:
@@ -32,7 +35,7 @@ def find_former(connection: duckdb.DuckDBPyConnection) -> None:
         "WHERE composition IN (SELECT composition FROM changed_compositions)"
     )
     connection.execute(
-        f"CREATE OR REPLACE TEMP TABLE former_members AS SELECT {_COLUMNS} FROM members WHERE grade IN {GRADES} "
+        f"CREATE OR REPLACE TEMP TABLE former_members AS SELECT {COLUMNS} FROM members WHERE grade IN {GRADES} "
         "AND $some AND record_id IN (SELECT record_id FROM records WHERE composition IN "
         "(SELECT composition FROM changed_compositions))",
         {"some": one_number(connection, "SELECT count(*) FROM grouped_compositions") > 0},
@@ -42,7 +45,8 @@ def find_former(connection: duckdb.DuckDBPyConnection) -> None:
 def forget_gone(connection: duckdb.DuckDBPyConnection, run_id: int) -> None:
     """Note and forget what was grouped of records that take no part in results any more; inside a transaction."""
     gone = (
-        f"SELECT record_id FROM records WHERE composition IN (SELECT composition FROM touched) AND {_NOT_CURRENT} "
+        f"(SELECT record_id FROM records WHERE composition IN (SELECT composition FROM touched) EXCEPT "
+        "SELECT record_id FROM current_records WHERE composition IN (SELECT composition FROM touched)) "
         f"UNION SELECT record_id FROM outdated_members WHERE {_NOT_CURRENT}"
     )
     connection.execute(f"CREATE OR REPLACE TEMP TABLE gone AS {gone}")
@@ -84,30 +88,3 @@ def clear_former(connection: duckdb.DuckDBPyConnection, done: str) -> None:
         )
     for table in ("refused_pins", "grouped_compositions"):
         connection.execute(f"DELETE FROM {table} WHERE composition IN {here}")
-
-
-def replace_members(connection: duckdb.DuckDBPyConnection, run_id: int) -> None:
-    """Put the rows of temp.now_members in the place of those that their records had in `members` or `outdated_members`,
-    and note the ids that are others now; inside a transaction."""
-    rows = "now_members"
-    if one_number(connection, "SELECT count(*) FROM former_members"):
-        connection.execute(
-            f"CREATE OR REPLACE TEMP TABLE other_records AS SELECT DISTINCT record_id FROM (SELECT {_COLUMNS} FROM "
-            "now_members EXCEPT SELECT * FROM former_members)"
-        )
-        connection.execute(
-            f"DELETE FROM members WHERE grade IN {GRADES} AND record_id IN (SELECT record_id FROM other_records "
-            "WHERE record_id IN (SELECT record_id FROM former_members))"
-        )
-        rows = "now_members WHERE record_id IN (SELECT record_id FROM other_records)"
-    connection.execute(f"INSERT INTO members SELECT {_COLUMNS} FROM {rows} ORDER BY grade DESC, record_id")
-    connection.execute(
-        "INSERT INTO id_changes SELECT $1, b.grade, b.record_id, b.group_id, m.group_id, b.family_id, m.family_id "
-        "FROM (SELECT grade, record_id, group_id, family_id FROM former_members UNION ALL "
-        "SELECT grade, record_id, group_id, family_id FROM outdated_members) b "
-        "JOIN now_members m USING (grade, record_id) "
-        "WHERE m.group_id <> b.group_id OR m.family_id <> b.family_id ORDER BY b.grade, b.record_id",
-        [run_id],
-    )
-    if one_number(connection, "SELECT count(*) FROM outdated_members"):
-        connection.execute("DELETE FROM outdated_members WHERE record_id IN (SELECT record_id FROM now_members)")

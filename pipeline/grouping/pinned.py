@@ -15,21 +15,21 @@ from .graph import components
 
 
 def part_pinned(connection: duckdb.DuckDBPyConnection, grade: str) -> None:
-    """Part the groups of grade copy or key of the compositions in temp.touched whose records are pinned apart.
+    """Part the groups of grade copy or key in temp.now_members whose records are pinned apart.
 
     As stars in keep order (groups.py), where every pair of the group matches but those pinned apart; families are the
-    components of that graph. To be called inside a transaction, with `ranks` made.
+    components of that graph. With temp.ranks made.
     """
     rows = connection.execute(
         f"SELECT DISTINCT a.family_id, p.record_a, p.record_b FROM {PAIR_PINS} p "
-        "JOIN members a ON a.grade = $1 AND a.record_id = p.record_a "
-        "JOIN members b ON b.grade = $1 AND b.record_id = p.record_b AND b.family_id = a.family_id "
-        "WHERE p.kind = 'apart' AND p.composition IN (SELECT composition FROM touched) ORDER BY ALL",
+        "JOIN now_members a ON a.grade = $1 AND a.record_id = p.record_a "
+        "JOIN now_members b ON b.grade = $1 AND b.record_id = p.record_b AND b.family_id = a.family_id "
+        "WHERE p.kind = 'apart' ORDER BY ALL",
         [grade],
     ).fetchall()
     for family in sorted({row[0] for row in rows}):
         listed = connection.execute(
-            "SELECT m.record_id, k.rank FROM members m JOIN ranks k USING (record_id) "
+            "SELECT m.record_id, k.rank FROM now_members m JOIN ranks k USING (record_id) "
             "WHERE m.grade = ? AND m.family_id = ? ORDER BY m.record_id",
             [grade, family],
         ).fetchall()
@@ -39,7 +39,7 @@ def part_pinned(connection: duckdb.DuckDBPyConnection, grade: str) -> None:
         kept = _stars([record for record, _ in sorted(listed, key=lambda row: row[1])], apart)
         families = _families(ids, apart)
         connection.executemany(
-            "UPDATE members SET group_id = ?, family_id = ?, kept = ? WHERE grade = ? AND record_id = ?",
+            "UPDATE now_members SET group_id = ?, family_id = ?, kept = ? WHERE grade = ? AND record_id = ?",
             [
                 (kept[record], families[record], kept[record] == record, grade, record)
                 for record in ids

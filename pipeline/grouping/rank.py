@@ -73,7 +73,8 @@ def deciding_rules(connection: duckdb.DuckDBPyConnection, settings: Settings, pa
         cases.append(f"WHEN a.{rule} IS DISTINCT FROM b.{rule} THEN '{rule}'")
     connection.execute(
         "CREATE OR REPLACE TEMP TABLE deciding_rules AS "
-        f"WITH pairs AS ({pairs}), told AS (SELECT r.record_id, {', '.join(values)} {_RECORDS}) "
+        f"WITH pairs AS ({pairs}), told AS (SELECT r.record_id, {', '.join(values)} {_RECORDS} WHERE r.record_id IN "
+        "(SELECT record_id FROM pairs UNION SELECT kept_record_id FROM pairs)) "
         f"SELECT c.record_id, c.kept_record_id, CASE {' '.join(cases)} ELSE 'record_id' END AS rule FROM pairs c "
         "JOIN told a ON a.record_id = c.record_id JOIN told b ON b.record_id = c.kept_record_id",
         _bound(settings, values),

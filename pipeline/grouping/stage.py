@@ -25,10 +25,11 @@ from ..store.rows import one_number
 from ..store.workspace import Workspace
 from .additions import find_additions
 from .digest import digest_compositions
-from .former import any_gone, clear_former, find_former, forget_gone, replace_members
+from .former import any_gone, clear_former, find_former, forget_gone
 from .jobs import jobs
 from .outdated import GRADES, forget_outdated
 from .rank import rank_records
+from .replaced import replace_members
 from .work import GroupJob, group_chunk, parts_of
 
 LITTLE_WORK = 100_000
@@ -132,7 +133,8 @@ def find_work(connection: duckdb.DuckDBPyConnection, settings: Settings, everyth
 
 def _counts(connection: duckdb.DuckDBPyConnection, run_id: int) -> GroupCounts:
     rows = connection.execute(
-        "SELECT grade, count(DISTINCT family_id), count(DISTINCT group_id), count(*) FILTER (NOT kept) FROM members "
+        "SELECT grade, count(*) FILTER (record_id = family_id), count(*) FILTER (kept), count(*) FILTER (NOT kept) "
+        "FROM members "
         f"WHERE grade IN {GRADES} GROUP BY grade ORDER BY grade DESC"
     ).fetchall()
     return GroupCounts(
@@ -185,7 +187,7 @@ def _write_single(connection: duckdb.DuckDBPyConnection, run_id: int) -> None:
         "WINDOW kept AS (PARTITION BY g.grade, r.composition ORDER BY k.rank), "
         "family AS (PARTITION BY g.grade, r.composition)"
     )
-    replace_members(connection, run_id)
+    replace_members(connection, run_id, GRADES)
     connection.execute(
         "INSERT INTO grouped_compositions SELECT composition, digest, ?, records, keys, 0, 0, NULL, NULL FROM done "
         "ORDER BY composition",
@@ -213,7 +215,7 @@ def _commit(connection: duckdb.DuckDBPyConnection, parts: Sequence[Part], run_id
         for grade in GRADES
     )
     connection.execute(f"CREATE OR REPLACE TEMP TABLE now_members AS {rows}")
-    replace_members(connection, run_id)
+    replace_members(connection, run_id, GRADES)
     connection.execute(
         "INSERT INTO grouped_compositions SELECT d.composition, d.digest, ?, d.records, d.keys, d.candidates, "
         "d.verified, coalesce(d.most_candidates, b.most_candidates), coalesce(d.close_pairs, b.close_pairs) "

@@ -46,9 +46,17 @@ def find_due(connection: duckdb.DuckDBPyConnection, settings: Settings) -> None:
         raise
 
 
+_RANKED = (
+    "SELECT DISTINCT composition FROM records WHERE split IS NOT NULL OR record_id IN (SELECT family_id FROM members "
+    "WHERE grade IN ('same', 'near') AND kept GROUP BY grade, family_id HAVING count(*) > 1)"
+)
+"""Query of the compositions whose records findings ask for by rank: those with splits or with chains."""
+
+
 def find_all(connection: duckdb.DuckDBPyConnection, settings: Settings) -> dict[str, int]:
     """Make `holds` and `findings` anew, inside the caller's transaction; the number of each code that was met."""
-    rank_records(connection, settings)
+    connection.execute(f"CREATE OR REPLACE TEMP TABLE to_rank AS {_RANKED}")
+    rank_records(connection, settings, "to_rank")
     make_holds(connection, settings)
     connection.execute("DELETE FROM store_facts WHERE name = 'findings_due'")
     connection.execute("DELETE FROM findings")
