@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+from contextlib import closing
 from pathlib import Path
 from typing import Any
 
@@ -10,14 +11,16 @@ import pytest
 
 from lattice_census.cell.canonical import canonicalise
 from lattice_census.flows.deciding import pin, withdraw
-from lattice_census.grouping import additions, composition, work
+from lattice_census.grouping import additions, composition, jobs, stage, work
 from lattice_census.grouping.composition import Grouping, Options, group_composition
 from lattice_census.grouping.earlier import Earlier
 from lattice_census.model.batch import select
+from lattice_census.output.check import check_store
+from lattice_census.store.connect import open_for_reading
 from lattice_census.tolerances import Tolerances
 
 from . import strategies as draw
-from .curated import run_night
+from .curated import run_keep, run_night
 from .tables_of_structures import query, write_csv
 from .test_group_stage import MATCHES, MEMBERS, collection, run_group
 from .test_group_together import collection as crystals_of_compositions
@@ -215,3 +218,46 @@ def test_layers_that_were_added_equal_layers_read_at_once(tmp_path: Path, ingest
     assert query(grown, "SELECT count(*) > 3 FROM matches WHERE ends_with(composition, ' layer')") == [(True,)]
     for asked in STATE:
         assert query(grown, asked) == query(one, asked)
+
+
+@pytest.mark.parametrize("after", ["night", "keep", "ingest", "withdraw"])
+def test_whatever_follows_an_interrupted_night_sees_no_groups_as_they_were(
+    tmp_path: Path, ingest, listed, monkeypatch, after: str
+):
+    """The night ends when one composition of several is replaced; what is published next satisfies every check."""
+    table, store, fresh = tmp_path / "t.csv", tmp_path / "census.duckdb", tmp_path / "fresh.duckdb"
+    run_night(store, write_csv(table, listed[:45]))
+    published = store.read_bytes()
+    changed = [*listed[:3], {**listed[3], "cif": listed[58]["cif"]}, *listed[5:]]
+    write_csv(table, changed)
+    commit, done = stage._commit, []
+
+    def once(*arguments: Any) -> None:
+        if done:
+            raise KeyboardInterrupt
+        done.append(commit(*arguments))
+
+    with monkeypatch.context() as patched:
+        patched.setattr(stage, "_commit", once)
+        patched.setattr(stage, "TOGETHER", 1)
+        patched.setattr(jobs, "MOST_RECORDS", 1)
+        with pytest.raises(KeyboardInterrupt):
+            run_night(store, table)
+    assert done and store.read_bytes() == published
+    record = query(store, "SELECT record_id FROM records WHERE label = ?", listed[10]["material_id"])[0][0]
+    if after == "night":
+        run_night(store, table)
+    elif after == "keep":
+        run_keep(store)
+    elif after == "ingest":
+        ingest(write_csv(table, changed[:-1]), store=store)
+    else:
+        withdraw(store, record, "a test")
+    with closing(open_for_reading(store)) as connection:
+        assert [o.name for o in check_store(connection, 20) if o.failures] == []
+    run_night(store, write_csv(table, changed))
+    run_night(fresh, table)
+    if after == "withdraw":
+        withdraw(fresh, record, "a test")
+    for asked in STATE:
+        assert query(store, asked) == query(fresh, asked)
