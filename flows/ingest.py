@@ -25,6 +25,7 @@ from lattice_census.kernels.cache import PACKAGE, root
 from lattice_census.output.findings import find_due, findings_due, note_findings_due
 from lattice_census.readers.walk import walk
 from lattice_census.settings import Settings
+from lattice_census.store.rows import one_number
 from lattice_census.store.runs import end_run
 from lattice_census.store.stages import record_settings
 from lattice_census.store.workspace import Workspace
@@ -86,9 +87,12 @@ def ingest_into(
 
 def finish(workspace: Workspace, settings: Settings, step: Step) -> None:
     """Publish where the work store is ahead, with the findings of what it holds, and clear what is in the store by
-    now."""
-    if findings_due(workspace.connection):
-        step("findings", find_due, workspace.connection, settings)
+    now. Where a run that was interrupted waits to be taken up, what is published stays as it is."""
+    connection = workspace.connection
+    if one_number(connection, "SELECT count(*) FROM runs WHERE status = 'running'"):
+        return
+    if findings_due(connection):
+        step("findings", find_due, connection, settings)
     if workspace.ahead_of_published:
         step("publish", workspace.publish)
     workspace.clear_parts()

@@ -27,9 +27,8 @@ EQUAL_KEYS = 1e-4
 
 
 def find_additions(connection: duckdb.DuckDBPyConnection, settings: Settings, everything: bool) -> None:
-    """Make the temporary tables `added_compositions` (composition) of those in temp.changed_compositions, `old_records`
-    (record_id) of their records that were grouped, `needed_records` (record_id) of those whose crystals are to be read,
-    and `added_bounds` (composition, most_candidates, close_pairs).
+    """Make the temporary tables `added_compositions` (composition) of those in temp.changed_compositions, and
+    `old_records` (record_id) of their records that were grouped.
 
     Where everything is to be made anew, or with other settings, nothing counts as added.
     """
@@ -54,11 +53,15 @@ def find_additions(connection: duckdb.DuckDBPyConnection, settings: Settings, ev
         f"WHERE NOT c.plain AND k.records = o.records AND c.composition NOT IN ({PINNED})"
     )
     connection.execute("DELETE FROM old_records WHERE composition NOT IN (SELECT composition FROM added_compositions)")
-    _find_needed(connection, settings)
+    connection.execute("CREATE OR REPLACE TEMP TABLE needed_records (record_id VARCHAR)")
+    connection.execute(
+        "CREATE OR REPLACE TEMP TABLE added_bounds (composition VARCHAR, most_candidates BIGINT, close_pairs BIGINT)"
+    )
 
 
-def _find_needed(connection: duckdb.DuckDBPyConnection, settings: Settings) -> None:
-    """The temporary tables `needed_records` and `added_bounds`, from `added_compositions` and `old_records`."""
+def find_needed(connection: duckdb.DuckDBPyConnection, settings: Settings) -> None:
+    """Make the temporary tables `needed_records` (record_id) of records whose crystals are to be read, and
+    `added_bounds` (composition, most_candidates, close_pairs), from those of `find_additions`."""
     window, k = near_window(settings.tolerances), settings.fingerprint_k
     # Of the first and the last species of each crystal; one without mean distances is ruled out by none.
     places = [c + 1 for c in TREE_COLUMNS if c < k] + [c - k for c in TREE_COLUMNS if c < k]

@@ -6,7 +6,9 @@ from collections.abc import Iterator
 
 from ..settings import Settings
 from ..store.parts import raw_and_part
+from ..store.rows import one_number
 from ..store.workspace import Workspace
+from .additions import find_needed
 from .digest import PAIR_PINS
 from .work import GroupJob, PairPin
 
@@ -21,6 +23,12 @@ FEW_RECORDS = 2_000
 READ_RECORDS = 100_000
 """So many records are read for jobs to come; they are held in memory until those are given out."""
 
+FIRST_JOBS = 4
+"""So many jobs are read first, so that workers can begin."""
+
+Pack = list[tuple[str, str]]
+"""Compositions of one job, with their digests."""
+
 CRYSTAL = ("cell_angstrom", "species", "positions_fractional", "matrix")
 """Columns of a canonical form, for records whose crystal is asked for."""
 
@@ -29,16 +37,31 @@ KNOWN = ("record_a", "record_b", "grade", "largest_shift_angstrom", "strain", "p
 
 
 def jobs(workspace: Workspace, settings: Settings) -> Iterator[GroupJob]:
-    """Jobs of whole compositions, the largest first, so that the last ones to end are short."""
-    rows = workspace.connection.execute(
-        "SELECT composition, digest, keys, records FROM changed_compositions WHERE NOT plain "
-        "ORDER BY keys DESC, composition"
-    ).fetchall()
-    most = min(MOST_RECORDS, max(FEW_RECORDS, sum(row[3] for row in rows) // 16))
-    packs: list[list[tuple[str, str]]] = []
-    pack: list[tuple[str, str]] = []
-    pairs = held = waiting = 0
+    """Jobs of whole compositions: first those in which all pairs are compared, then those in which pairs of added
+    records are, whose crystals are looked for while workers have the others. Of each the largest first, so that the
+    last ones to end are short."""
+    connection = workspace.connection
+    most = one_number(connection, "SELECT coalesce(sum(records), 0) FROM changed_compositions WHERE NOT plain") // 16
+    most = min(MOST_RECORDS, max(FEW_RECORDS, most))
     number = 0
+    for added in (False, True):
+        rows = connection.execute(
+            "SELECT composition, digest, keys, records FROM changed_compositions WHERE NOT plain "
+            "AND (composition IN (SELECT composition FROM added_compositions)) = ? ORDER BY keys DESC, composition",
+            [added],
+        ).fetchall()
+        if added and rows:
+            find_needed(connection, settings)
+        for packs in _packs(rows, most):
+            yield from _read_jobs(workspace, settings, number, packs)
+            number += len(packs)
+
+
+def _packs(rows: list[tuple[str, str, int, int]], most: int) -> Iterator[list[Pack]]:
+    """The compositions of each job, of as many jobs as are read at once."""
+    packs: list[Pack] = []
+    pack: Pack = []
+    pairs = held = waiting = given = 0
     for composition, digest, keys, records in rows:
         pack.append((composition, digest))
         pairs += keys * keys
@@ -47,19 +70,16 @@ def jobs(workspace: Workspace, settings: Settings) -> Iterator[GroupJob]:
             packs.append(pack)
             waiting += held
             pack, pairs, held = [], 0, 0
-        if waiting >= READ_RECORDS:
-            yield from _read_jobs(workspace, settings, number, packs)
-            number += len(packs)
-            packs, waiting = [], 0
+        if waiting >= READ_RECORDS or (not given and len(packs) == FIRST_JOBS):
+            yield packs
+            given, packs, waiting = given + 1, [], 0
     if pack:
         packs.append(pack)
     if packs:
-        yield from _read_jobs(workspace, settings, number, packs)
+        yield packs
 
 
-def _read_jobs(
-    workspace: Workspace, settings: Settings, number: int, packs: list[list[tuple[str, str]]]
-) -> Iterator[GroupJob]:
+def _read_jobs(workspace: Workspace, settings: Settings, number: int, packs: list[Pack]) -> Iterator[GroupJob]:
     """The jobs of some packs, numbered from `number`: their rows are read at once, since each query goes through all
     records."""
     connection = workspace.connection

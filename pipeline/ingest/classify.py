@@ -52,8 +52,9 @@ def classify_keys(workspace: Workspace, settings: Settings, pool: Engine, progre
     if not total:
         return 0
     progress.start("lattice types and space groups", total)
+    again = one_number(connection, "SELECT count(*) FROM to_classify JOIN crystal_types USING (crystal_key)") > 0
     for job, count in done_in_order(pool, _classify, _jobs(workspace, settings, total), workspace.manifest):
-        _commit(connection, str(accepted_part(workspace.manifest.checked(job.part))))
+        _commit(connection, str(accepted_part(workspace.manifest.checked(job.part))), again)
         job.raw.unlink()
         workspace.manifest.drop(job.part)
         progress.advance(count)
@@ -152,12 +153,14 @@ def _point_group_order(groups: dict[str, int | None]) -> int | None:
     return point_group_order(groups["layer_group"], layer=True) if groups["layer_group"] is not None else None
 
 
-def _commit(connection: duckdb.DuckDBPyConnection, part: str) -> None:
+def _commit(connection: duckdb.DuckDBPyConnection, part: str, again: bool) -> None:
+    """again: there may be rows of these keys."""
     connection.execute("BEGIN")
     try:
-        connection.execute(
-            "DELETE FROM crystal_types WHERE crystal_key IN (SELECT crystal_key FROM read_parquet(?))", [part]
-        )
+        if again:
+            connection.execute(
+                "DELETE FROM crystal_types WHERE crystal_key IN (SELECT crystal_key FROM read_parquet(?))", [part]
+            )
         connection.execute("INSERT INTO crystal_types SELECT * FROM read_parquet(?)", [part])
         connection.execute("COMMIT")
     except BaseException:
