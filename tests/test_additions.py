@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 from contextlib import closing
+from dataclasses import replace
 from pathlib import Path
 from typing import Any
 
@@ -13,7 +14,7 @@ from lattice_census.cell.canonical import canonicalise
 from lattice_census.flows.deciding import pin, withdraw
 from lattice_census.grouping import additions, composition, jobs, stage, work
 from lattice_census.grouping.composition import Grouping, Options, group_composition
-from lattice_census.grouping.earlier import Earlier
+from lattice_census.grouping.earlier import Earlier, MayBeCrowded
 from lattice_census.model.batch import select
 from lattice_census.output.check import check_store
 from lattice_census.store.connect import open_for_reading
@@ -97,6 +98,49 @@ def test_of_crowds_nothing_is_taken_over():
     found = group_composition(result.crystals, result.crystal_key, ids, rank, T, options, None, earlier)
     assert not found.added and not len(found.dropped)
     assert rows(found, np.ones(20, bool)) == rows(whole, np.ones(20, bool))
+
+
+def test_what_could_be_crowded_is_compared_as_a_whole():
+    """Of 20 records, some without their crystals: bounds that leave no crowd give the result of all pairs."""
+    rng = np.random.default_rng(19)
+    base = [draw.random_crystal(rng, kind, 4, ("Si", "O")) for kind in ("oP", "mP", "aP", "tI")]
+    result = canonicalise(draw.batch([noisy(rng, base[i % 4], 0.02) for i in range(20)]), T)
+    ids, rank = [f"r{i:02d}" for i in rng.permutation(20)], rng.permutation(20)
+    old = np.arange(15)
+    keys = result.crystal_key
+    for crowded in (4, 5, 6, 9):
+        options = Options(crowded=crowded)
+        before = group_composition(select(result.crystals, old), keys[:15], ids[:15], rank[:15], T, options)
+        there = np.ones(20, bool)
+        there[[i for i in range(15) if i % 4 != 1]] = False  # new are three of the first kinds: of kind 1, two
+        new = [i for i in range(20) if i >= 15 and i % 4 == 1] + old.tolist()
+        part = [i for i in range(20) if i in new]
+        earlier = replace(known_of(before, [ids[i] for i in part], there[part], False), crowding=before.crowding)
+        rows_there = np.array([i for i in part if there[i]])
+        arguments = (
+            select(result.crystals, rows_there), [keys[i] for i in part], [ids[i] for i in part], rank[part], T, options,
+            None, earlier,
+        )  # fmt: skip
+        expected = group_composition(
+            select(result.crystals, np.array(part)),
+            [keys[i] for i in part],
+            [ids[i] for i in part],
+            rank[part],
+            T,
+            options,
+        )
+        if expected.crowding[0] > crowded:
+            with pytest.raises(MayBeCrowded):
+                group_composition(*arguments)
+        else:
+            found = group_composition(*arguments)
+            assert found.crowding is not None and found.crowding >= expected.crowding
+            mine = rows(found, np.ones(len(part), bool)) | {
+                k: v for k, v in rows(before, np.ones(15, bool)).items() if k.startswith("r")
+            }
+            assert mine == rows(expected, np.ones(len(part), bool))
+    with pytest.raises(MayBeCrowded):
+        group_composition(*arguments[:-1], replace(earlier, crowding=None))
 
 
 @pytest.fixture(scope="module")

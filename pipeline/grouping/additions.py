@@ -1,8 +1,8 @@
 """Compositions to which records were only added since they were grouped: what was found of the old ones still holds.
 
 Of those, pairs with a new record alone are compared, and only crystals are read that could match a new one by size and
-by some of the stored mean distances (candidates.py, steps 1 and 2); but all of a composition that could have become
-crowded (composition.py), which is told by bounds on the numbers of candidates.
+by some of the stored mean distances (candidates.py, steps 1 and 2); but all of a large composition of which nothing
+tells whether it was about to be crowded. Where it could have become so (composition.py), it is compared as a whole.
 """
 
 from __future__ import annotations
@@ -13,8 +13,7 @@ import duckdb
 
 from ..ingest.touched import settings_changed
 from ..settings import Settings
-from .candidates import TREE_COLUMNS
-from .composition import CROWDED, DENSE
+from .composition import CROWDED
 from .outdated import COMPLETE, PINNED
 from .preparation import transform_offset, transform_slack
 from .window import near_window
@@ -22,13 +21,17 @@ from .window import near_window
 SIZE = "coalesce({0}.volume_angstrom3_per_site, {0}.area_angstrom2_per_site)"
 """Volume per site, of layers area per site, of a row of `canonical_forms`."""
 
+COLUMNS = (0, 1, 3, 5, 8, 11, 14, 20, 26, 33, 43, 53, 63)
+"""Mean distances that are looked at, of the first and the last species."""
+
 EQUAL_KEYS = 1e-4
 """What transformed mean distances of two crystals of one key may differ by: those of a key are stored once."""
 
 
 def find_additions(connection: duckdb.DuckDBPyConnection, settings: Settings, everything: bool) -> None:
-    """Make the temporary tables `added_compositions` (composition) of those in temp.changed_compositions, and
-    `old_records` (record_id) of their records that were grouped.
+    """Make the temporary tables `added_compositions` (composition, records, most_candidates, close_pairs: of the
+    earlier grouping) of those in temp.changed_compositions, and `old_records` (record_id) of their records that were
+    grouped.
 
     Where everything is to be made anew, or with other settings, nothing counts as added.
     """
@@ -47,24 +50,22 @@ def find_additions(connection: duckdb.DuckDBPyConnection, settings: Settings, ev
         "FROM records WHERE composition IN (SELECT composition FROM earlier_compositions)))"
     )
     connection.execute(
-        "CREATE OR REPLACE TEMP TABLE added_compositions AS SELECT c.composition, c.records "
+        "CREATE OR REPLACE TEMP TABLE added_compositions AS "
+        "SELECT c.composition, c.records, o.most_candidates, o.close_pairs "
         "FROM changed_compositions c JOIN earlier_compositions o USING (composition) "
         "JOIN (SELECT composition, count(*) AS records FROM old_records GROUP BY composition) k USING (composition) "
         f"WHERE NOT c.plain AND k.records = o.records AND c.composition NOT IN ({PINNED})"
     )
     connection.execute("DELETE FROM old_records WHERE composition NOT IN (SELECT composition FROM added_compositions)")
     connection.execute("CREATE OR REPLACE TEMP TABLE needed_records (record_id VARCHAR)")
-    connection.execute(
-        "CREATE OR REPLACE TEMP TABLE added_bounds (composition VARCHAR, most_candidates BIGINT, close_pairs BIGINT)"
-    )
 
 
 def find_needed(connection: duckdb.DuckDBPyConnection, settings: Settings) -> None:
-    """Make the temporary tables `needed_records` (record_id) of records whose crystals are to be read, and
-    `added_bounds` (composition, most_candidates, close_pairs), from those of `find_additions`."""
+    """Make the temporary table `needed_records` (record_id) of records whose crystals are to be read, from those of
+    `find_additions`."""
     window, k = near_window(settings.tolerances), settings.fingerprint_k
     # Of the first and the last species of each crystal; one without mean distances is ruled out by none.
-    places = [c + 1 for c in TREE_COLUMNS if c < k] + [c - k for c in TREE_COLUMNS if c < k]
+    places = [c + 1 for c in COLUMNS if c < k] + [c - k for c in COLUMNS if c < k]
     means = [f"ln(t.mean_distances_angstrom[{place}] + $offset) AS y{i}" for i, place in enumerate(places)]
     agree = " AND ".join(f"coalesce(abs(n.y{i} - o.y{i}) <= $slack, true)" for i in range(len(places)))
     connection.execute(
@@ -86,24 +87,11 @@ def find_needed(connection: duckdb.DuckDBPyConnection, settings: Settings) -> No
             "slack": transform_slack(window.strain) + EQUAL_KEYS,
         },
     )
-    # A key is crowded with over CROWDED candidates, and keys may be with over DENSE close ones on average: where the
-    # pairs above cannot bring that about, no crystals but theirs are needed.
-    connection.execute(
-        "CREATE OR REPLACE TEMP TABLE added_bounds AS SELECT c.composition, c.records, k.keys, "
-        "o.most_candidates + coalesce(m.most, 0) AS most_candidates, "
-        "o.close_pairs + coalesce(n.pairs, 0) AS close_pairs "
-        "FROM added_compositions c JOIN earlier_compositions o USING (composition) "
-        "JOIN (SELECT composition, count(*) AS keys FROM added_nodes GROUP BY composition) k USING (composition) "
-        "LEFT JOIN (SELECT composition, count(*) AS pairs FROM added_pairs GROUP BY composition) n USING (composition) "
-        "LEFT JOIN (SELECT composition, max(number) AS most FROM (SELECT composition, count(*) AS number FROM "
-        "(SELECT composition, new AS id FROM added_pairs UNION ALL SELECT composition, other FROM added_pairs) "
-        "GROUP BY composition, id) GROUP BY composition) m USING (composition)"
-    )
     connection.execute(
         "CREATE OR REPLACE TEMP TABLE needed_records AS "
         "SELECT new AS record_id FROM added_pairs UNION SELECT other FROM added_pairs "
-        "UNION SELECT record_id FROM added_nodes WHERE new OR composition IN (SELECT composition FROM added_bounds "
-        "WHERE records > $crowded AND NOT coalesce(most_candidates <= $crowded AND 2 * close_pairs <= $dense * keys, "
-        "false)) UNION SELECT min(record_id) FROM added_nodes GROUP BY composition",  # that there is a crystal at all
-        {"crowded": CROWDED, "dense": DENSE},
+        "UNION SELECT n.record_id FROM added_nodes n JOIN added_compositions c USING (composition) "
+        "WHERE n.new OR (c.records > $crowded AND c.most_candidates IS NULL) "
+        "UNION SELECT min(record_id) FROM added_nodes GROUP BY composition",  # so that there is a crystal at all
+        {"crowded": CROWDED},
     )

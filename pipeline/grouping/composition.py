@@ -19,9 +19,9 @@ from ..fingerprint.distributions import NEIGHBOURS
 from ..kernels.rows_filter import close_counts, close_pairs
 from ..model.batch import CrystalBatch, Ints, select
 from ..tolerances import Tolerances
-from .candidates import ROUNDING, filtered, spread_first
+from .candidates import ROUNDING, coordinates_agree, filtered, spread_first
 from .crowds import kept_nodes, nearest_pairs
-from .earlier import Earlier
+from .earlier import Earlier, MayBeCrowded
 from .graph import components, spanning_forest
 from .hubs import find_frames
 from .members import Members, members_of, selection
@@ -125,7 +125,8 @@ def group_composition(
     parts are not compared. earlier: what is known of some of the records; the result is the same without it, with all
     crystals, but for the matches that are known and need not be given again. Deterministic under any order of the
     records, and whatever other parts there are.
-    Raises UsageError for repeated or unknown ids.
+    Raises UsageError for repeated or unknown ids, MayBeCrowded where not all crystals are there and crowds cannot be
+    ruled out.
     """
     chosen = options or Options()
     if parts is not None and (chosen.search != "near" or np.bincount(parts).max(initial=0) > chosen.crowded):
@@ -150,7 +151,10 @@ def group_composition(
         candidates = candidates[~old[candidates].all(axis=1)]
     else:
         of = np.zeros(len(nodes), np.int64) if part is None else part
-        crowded, candidates, crowding = np.zeros(0, np.int64), _candidates_of_parts(by, of, old), None
+        candidates, close = _candidates_of_parts(by, of, old)
+        crowded, crowding = np.zeros(0, np.int64), None
+        if part is None and len(nodes) > chosen.crowded:
+            crowding = _not_crowded(earlier, candidates, close, len(nodes), old, chosen.crowded)
     if earlier is None:
         store = PairStore(len(nodes), by.verify, nodes.together, nodes.apart)
     else:
@@ -208,8 +212,9 @@ def group_composition(
     )
 
 
-def _candidates_of_parts(by: Searcher, part: Ints, old: NDArray[np.bool_]) -> Ints:
-    """Every candidate pair of nodes of one part but those of two old ones. Small parts need no search."""
+def _candidates_of_parts(by: Searcher, part: Ints, old: NDArray[np.bool_]) -> tuple[Ints, int]:
+    """Every candidate pair of nodes of one part but those of two old ones, and the number of pairs that the coordinates
+    alone leave. Small parts need no search."""
     part, old = part[by.owner], old[by.owner]
     by_part = np.lexsort((old, part))  # of each part the new ones first
     sizes = np.bincount(part)
@@ -218,7 +223,23 @@ def _candidates_of_parts(by: Searcher, part: Ints, old: NDArray[np.bool_]) -> In
     first = np.repeat(np.arange(len(part)), others)
     second = first + 1 + np.arange(len(first)) - np.repeat(np.cumsum(others) - others, others)
     pairs = np.sort(np.stack([by_part[first], by_part[second]], axis=1), axis=1)
-    return by.owner[filtered(by.search.prepared, by.search.coordinates, pairs, by.search.slack)]
+    close = pairs[coordinates_agree(by.search.coordinates, pairs, by.search.slack)]
+    return by.owner[filtered(by.search.prepared, by.search.coordinates, close, by.search.slack)], len(close)
+
+
+def _not_crowded(
+    earlier: Earlier | None, candidates: Ints, close: int, nodes: int, old: NDArray[np.bool_], crowded_at: int
+) -> tuple[int, int]:
+    """Bounds for Grouping.crowding from those of the earlier grouping and the pairs of new nodes. Raises MayBeCrowded
+    where they do not rule crowds out."""
+    if earlier is None or earlier.crowding is None:
+        raise MayBeCrowded
+    number = np.bincount(candidates.ravel(), minlength=nodes)
+    most = int(np.where(old, earlier.crowding[0] + number, number).max(initial=0))
+    close += earlier.crowding[1]
+    if most > crowded_at or 2 * close > DENSE * nodes:
+        raise MayBeCrowded
+    return most, close
 
 
 def _candidates_plain(by: Searcher, nodes: int, crowded_at: int) -> tuple[Ints, Ints, tuple[int, int]]:

@@ -16,6 +16,10 @@ from .nodes import Nodes
 from .verification import NO_MATCH, Verified
 
 
+class MayBeCrowded(Exception):
+    """With what was added there could be crowds: which pairs of those are compared depends on all crystals."""
+
+
 @dataclass(frozen=True, slots=True)
 class Earlier:
     """An earlier grouping of n records and those added since, in the order they are given in."""
@@ -40,6 +44,9 @@ class Earlier:
     """(q,): of the best proper match; NaN where there is none."""
 
     proper_strain: Floats
+
+    crowding: tuple[int, int] | None = None
+    """Grouping.crowding of one composition then, where that was asked."""
 
     def matches(self, nodes: Nodes) -> tuple[Verified, Ints]:
         """Its matches between nodes that stand by the same records as then, with only those columns filled that groups

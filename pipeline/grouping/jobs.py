@@ -36,10 +36,10 @@ KNOWN = ("record_a", "record_b", "grade", "largest_shift_angstrom", "strain", "p
 """Columns of `matches` that groups are made from."""
 
 
-def jobs(workspace: Workspace, settings: Settings) -> Iterator[GroupJob]:
+def jobs(workspace: Workspace, settings: Settings, only: str = "changed_compositions") -> Iterator[GroupJob]:
     """Jobs of whole compositions: first those in which all pairs are compared, then those in which pairs of added
     records are, whose crystals are looked for while workers have the others. Of each the largest first, so that the
-    last ones to end are short."""
+    last ones to end are short. only: a table of compositions that are given out alone."""
     connection = workspace.connection
     most = one_number(connection, "SELECT coalesce(sum(records), 0) FROM changed_compositions WHERE NOT plain") // 16
     most = min(MOST_RECORDS, max(FEW_RECORDS, most))
@@ -47,6 +47,7 @@ def jobs(workspace: Workspace, settings: Settings) -> Iterator[GroupJob]:
     for added in (False, True):
         rows = connection.execute(
             "SELECT composition, digest, keys, records FROM changed_compositions WHERE NOT plain "
+            f"AND composition IN (SELECT composition FROM {only}) "
             "AND (composition IN (SELECT composition FROM added_compositions)) = ? ORDER BY keys DESC, composition",
             [added],
         ).fetchall()
@@ -92,9 +93,10 @@ def _read_jobs(workspace: Workspace, settings: Settings, number: int, packs: lis
     crystal = ", ".join(f"CASE WHEN there THEN {c} END AS {c}" for c in CRYSTAL)
     frame = connection.sql(
         "SELECT job, composition, digest, record_id, label, source, crystal_key, rank, periodicity, old, "
+        "most_candidates, close_pairs, "
         f"{crystal} FROM ("
         "SELECT p.job, r.composition, p.digest, r.record_id, r.label, r.source, r.periodicity, k.rank, "
-        "f.* EXCLUDE (record_id), "
+        "f.* EXCLUDE (record_id), a.most_candidates, a.close_pairs, "
         "o.record_id IS NOT NULL AS old, a.composition IS NULL OR n.record_id IS NOT NULL AS there "
         "FROM packed p JOIN current_records r USING (composition) JOIN canonical_forms f USING (record_id) "
         "JOIN ranks k USING (record_id) LEFT JOIN added_compositions a ON a.composition = p.composition "

@@ -62,6 +62,9 @@ class GroupCounts:
 TOGETHER = 8
 """Jobs whose rows are written in one transaction where rows that are there are compared with them."""
 
+AGAIN = "again_compositions"
+"""Temporary table (composition) of those that must be compared as a whole after all."""
+
 
 def group_records(
     workspace: Workspace,
@@ -81,6 +84,7 @@ def group_records(
     find_former(connection)
     _in_transaction(connection, partial(forget_gone, connection, run_id))
     _in_transaction(connection, partial(_write_single, connection, run_id))
+    connection.execute(f"CREATE OR REPLACE TEMP TABLE {AGAIN} (composition VARCHAR)")
     records = one_number(connection, "SELECT coalesce(sum(records), 0) FROM changed_compositions WHERE NOT plain")
     if records:
         progress.start("comparing and grouping", records)
@@ -100,17 +104,25 @@ def group_records(
                 manifest.drop(job.part)
             held.clear()
 
-        for job, done in done_in_order(pool, group_chunk, jobs(workspace, settings), manifest, few):
-            held.append(job)
-            if len(held) >= together:
+        only = "changed_compositions"
+        while True:
+            for job, done in done_in_order(pool, group_chunk, jobs(workspace, settings, only), manifest, few):
+                held.append(job)
+                if len(held) >= together:
+                    write()
+                if only != AGAIN:
+                    progress.advance(done)
+                if settle:
+                    # What was read is worked into the file while workers compare: publishing waits for the rest alone.
+                    connection.execute("CHECKPOINT")
+                    settle = False
+            if held:
                 write()
-            progress.advance(done)
-            if settle:
-                # What was read is worked into the file while workers compare: publishing waits for the rest alone.
-                connection.execute("CHECKPOINT")
-                settle = False
-        if held:
-            write()
+            if only == AGAIN or not one_number(connection, f"SELECT count(*) FROM {AGAIN}"):
+                break
+            only = AGAIN
+            for table in ("added_compositions", "old_records"):
+                connection.execute(f"DELETE FROM {table} WHERE composition IN (SELECT composition FROM {AGAIN})")
     _in_transaction(connection, partial(forget_outdated, connection))
     return _counts(connection, run_id)
 
@@ -197,7 +209,9 @@ def _write_single(connection: duckdb.DuckDBPyConnection, run_id: int) -> None:
 
 def _commit(connection: duckdb.DuckDBPyConnection, parts: Sequence[Part], run_id: int) -> None:
     matches, members, summary, dropped = (list(map(str, files)) for files in zip(*map(parts_of, parts), strict=True))
-    connection.execute("CREATE OR REPLACE TEMP TABLE done AS SELECT * FROM read_parquet(?)", [summary])
+    connection.execute("CREATE OR REPLACE TEMP TABLE told AS SELECT * FROM read_parquet(?)", [summary])
+    connection.execute("CREATE OR REPLACE TEMP TABLE done AS SELECT * FROM told WHERE NOT again")
+    connection.execute(f"INSERT INTO {AGAIN} SELECT composition FROM told WHERE again")
     connection.execute("CREATE OR REPLACE TEMP TABLE grouped AS SELECT * FROM read_parquet(?)", [members])
     connection.execute("CREATE OR REPLACE TEMP TABLE dropped AS SELECT * FROM read_parquet(?)", [dropped])
     clear_former(connection, "done")
@@ -218,7 +232,6 @@ def _commit(connection: duckdb.DuckDBPyConnection, parts: Sequence[Part], run_id
     replace_members(connection, run_id, GRADES)
     connection.execute(
         "INSERT INTO grouped_compositions SELECT d.composition, d.digest, ?, d.records, d.keys, d.candidates, "
-        "d.verified, coalesce(d.most_candidates, b.most_candidates), coalesce(d.close_pairs, b.close_pairs) "
-        "FROM done d LEFT JOIN added_bounds b USING (composition) ORDER BY d.composition",
+        "d.verified, d.most_candidates, d.close_pairs FROM done d ORDER BY d.composition",
         [run_id],
     )

@@ -17,7 +17,7 @@ from ..settings import Settings
 from ..store.manifest import Done
 from ..store.parts import Part, files_there
 from .composition import CROWDED, Grouping, Options, group_composition
-from .earlier import Earlier
+from .earlier import Earlier, MayBeCrowded
 from .pinned_matches import by_key, measured, verified_together
 from .reasons import reasons
 from .verification import NO_MATCH, Verified
@@ -94,7 +94,7 @@ def _bundles(frame: pl.DataFrame, pinned: set[str]) -> Iterator[pl.DataFrame]:
 
 
 def _grouped(rows: pl.DataFrame, known: pl.DataFrame, job: GroupJob) -> tuple[pl.DataFrame, ...]:
-    """The rows of PARTS of one bundle."""
+    """The rows of PARTS of one bundle; of a composition that must be compared as a whole, that it must."""
     there = rows["species"].is_not_null().to_numpy()
     crystals = rows.filter(there)
     batch = stored_batch(crystals)
@@ -104,23 +104,27 @@ def _grouped(rows: pl.DataFrame, known: pl.DataFrame, job: GroupJob) -> tuple[pl
     of_part = rows.group_by("composition").agg(*told, pl.col("old").any().alias("added")).sort("composition")
     pins = [pin for pin in job.pins if pin.composition in set(of_part["composition"])] if job.pins else []
     together, refused = verified_together(batch, ids, pins, job.settings)
-    found = group_composition(
-        batch,
-        rows["crystal_key"].to_list(),
-        ids,
-        rows["rank"].to_list(),
-        job.settings.tolerances,
-        Options(
-            job.settings.mirror_images,
-            "near",
-            job.settings.fingerprint_k,
-            job.settings.matches_per_record,
-            together=tuple(pair.ids for pair in together),
-            apart=tuple((pin.record_a, pin.record_b) for pin in pins if pin.kind == "apart"),
-        ),
-        part if len(of_part) > 1 else None,
-        _earlier(rows, known, there) if rows["old"].any() else None,
+    options = Options(
+        job.settings.mirror_images,
+        "near",
+        job.settings.fingerprint_k,
+        job.settings.matches_per_record,
+        together=tuple(pair.ids for pair in together),
+        apart=tuple((pin.record_a, pin.record_b) for pin in pins if pin.kind == "apart"),
     )
+    try:
+        found = group_composition(
+            batch,
+            rows["crystal_key"].to_list(),
+            ids,
+            rows["rank"].to_list(),
+            job.settings.tolerances,
+            options,
+            part if len(of_part) > 1 else None,
+            _earlier(rows, known, there) if rows["old"].any() else None,
+        )
+    except MayBeCrowded:
+        return _NO_MATCHES, _NO_MEMBERS, _summary(of_part, None, refused), _NO_PAIRS
     place = np.cumsum(there) - 1
     new = replace(found.matches, pairs=place[found.matches.pairs])
     matches = _matches_frame(crystals, batch, new, found.witnesses, job.settings)
@@ -129,19 +133,25 @@ def _grouped(rows: pl.DataFrame, known: pl.DataFrame, job: GroupJob) -> tuple[pl
         more = [_matches_frame(rows[p.places], p.batch, p.match, p.witness, job.settings) for p in together]
         matches = by_key(pl.concat([matches, *more]), rows)
         members = measured(members, matches, rows, job.settings.mirror_images == "separate")
-    summary = of_part.with_columns(
-        added=pl.col("added") & found.added,
-        candidates=found.candidates,
-        verified=found.verified,
-        most_candidates=pl.lit(found.crowding and found.crowding[0], pl.Int64),
-        close_pairs=pl.lit(found.crowding and found.crowding[1], pl.Int64),
-        refused=pl.Series([refused] * len(of_part), dtype=pl.List(pl.Int64)),
-    )
     dropped = pl.DataFrame(
         {f"record_{end}": found.ids[found.dropped[:, i]].tolist() for i, end in enumerate("ab")},
-        schema={"record_a": pl.String, "record_b": pl.String},
+        schema=_NO_PAIRS.schema,
     )
-    return matches, members, summary, dropped
+    return matches, members, _summary(of_part, found, refused), dropped
+
+
+def _summary(of_part: pl.DataFrame, found: Grouping | None, refused: list[int]) -> pl.DataFrame:
+    """One row a composition; found: None where it is to be compared as a whole."""
+    most, close = (None, None) if found is None or found.crowding is None else found.crowding
+    return of_part.with_columns(
+        again=pl.lit(found is None),
+        added=pl.col("added") & (found is not None and found.added),
+        candidates=pl.Series(np.zeros(len(of_part), np.int64) if found is None else found.candidates),
+        verified=pl.Series(np.zeros(len(of_part), np.int64) if found is None else found.verified),
+        most_candidates=pl.lit(most, pl.Int64),
+        close_pairs=pl.lit(close, pl.Int64),
+        refused=pl.Series([refused] * len(of_part), dtype=pl.List(pl.Int64)),
+    )
 
 
 def _earlier(rows: pl.DataFrame, known: pl.DataFrame, there: NDArray[np.bool_]) -> Earlier:
@@ -154,13 +164,16 @@ def _earlier(rows: pl.DataFrame, known: pl.DataFrame, there: NDArray[np.bool_]) 
         )  # fmt: skip
     grades = known["grade"].replace_strict(_GRADE_NAMES.tolist(), [0, 1, 2], default=NO_MATCH, return_dtype=pl.Int64)
     measures = ("largest_shift_angstrom", "strain", "proper_shift_angstrom", "proper_strain")
-    return Earlier(
-        rows["old"].to_numpy(),
-        there,
-        known.select("place_a", "place_b").to_numpy(),
-        grades.to_numpy(),
-        *(known[name].fill_null(np.nan).to_numpy() for name in measures),
-    )
+    shift, strain, proper_shift, proper_strain = (known[name].fill_null(np.nan).to_numpy() for name in measures)
+    pairs = known.select("place_a", "place_b").to_numpy()
+    old = rows["old"].to_numpy()
+    return Earlier(old, there, pairs, grades.to_numpy(), shift, strain, proper_shift, proper_strain, _crowding(rows))
+
+
+def _crowding(rows: pl.DataFrame) -> tuple[int, int] | None:
+    """Of a bundle of one composition, Grouping.crowding of the earlier grouping."""
+    most, close = rows["most_candidates"][0], rows["close_pairs"][0]
+    return None if most is None or close is None or rows["composition"].n_unique() > 1 else (int(most), int(close))
 
 
 def _members_frame(found: Grouping) -> pl.DataFrame:
@@ -209,6 +222,22 @@ _SCHEMA: dict[str, Any] = {
     "pairing": pl.List(pl.Int32),
 }
 _NO_MATCHES = pl.DataFrame(schema=_SCHEMA)
+_NO_MEMBERS = pl.DataFrame(
+    schema={
+        "record_id": pl.String,
+        "more": pl.Boolean,
+        **{
+            f"{grade}_{name}": kind
+            for grade in ("same", "near")
+            for name, kind in zip(
+                ("family", "group", "shift", "strain"), (pl.String, pl.String, pl.Float64, pl.Float64), strict=True
+            )
+        },
+        "label": pl.String,
+        "source": pl.String,
+    }
+)
+_NO_PAIRS = pl.DataFrame(schema={"record_a": pl.String, "record_b": pl.String})
 
 
 def _matches_frame(
