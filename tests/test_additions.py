@@ -117,18 +117,9 @@ def test_what_could_be_crowded_is_compared_as_a_whole():
         part = [i for i in range(20) if i in new]
         earlier = replace(known_of(before, [ids[i] for i in part], there[part], False), crowding=before.crowding)
         rows_there = np.array([i for i in part if there[i]])
-        arguments = (
-            select(result.crystals, rows_there), [keys[i] for i in part], [ids[i] for i in part], rank[part], T, options,
-            None, earlier,
-        )  # fmt: skip
-        expected = group_composition(
-            select(result.crystals, np.array(part)),
-            [keys[i] for i in part],
-            [ids[i] for i in part],
-            rank[part],
-            T,
-            options,
-        )
+        told = [keys[i] for i in part], [ids[i] for i in part], rank[part], T, options
+        arguments = (select(result.crystals, rows_there), *told, None, earlier)
+        expected = group_composition(select(result.crystals, np.array(part)), *told)
         if expected.crowding[0] > crowded:
             with pytest.raises(MayBeCrowded):
                 group_composition(*arguments)

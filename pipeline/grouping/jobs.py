@@ -6,7 +6,6 @@ from collections.abc import Iterator
 
 from ..settings import Settings
 from ..store.parts import raw_and_part
-from ..store.rows import one_number
 from ..store.workspace import Workspace
 from .additions import find_needed
 from .digest import PAIR_PINS
@@ -41,8 +40,6 @@ def jobs(workspace: Workspace, settings: Settings, only: str = "changed_composit
     records are, whose crystals are looked for while workers have the others. Of each the largest first, so that the
     last ones to end are short. only: a table of compositions that are given out alone."""
     connection = workspace.connection
-    most = one_number(connection, "SELECT coalesce(sum(records), 0) FROM changed_compositions WHERE NOT plain") // 16
-    most = min(MOST_RECORDS, max(FEW_RECORDS, most))
     number = 0
     for added in (False, True):
         rows = connection.execute(
@@ -53,13 +50,14 @@ def jobs(workspace: Workspace, settings: Settings, only: str = "changed_composit
         ).fetchall()
         if added and rows:
             find_needed(connection, settings)
-        for packs in _packs(rows, most):
+        for packs in _packs(rows):
             yield from _read_jobs(workspace, settings, number, packs)
             number += len(packs)
 
 
-def _packs(rows: list[tuple[str, str, int, int]], most: int) -> Iterator[list[Pack]]:
+def _packs(rows: list[tuple[str, str, int, int]]) -> Iterator[list[Pack]]:
     """The compositions of each job, of as many jobs as are read at once."""
+    most = min(MOST_RECORDS, max(FEW_RECORDS, sum(row[3] for row in rows) // 16))
     packs: list[Pack] = []
     pack: Pack = []
     pairs = held = waiting = given = 0
