@@ -25,6 +25,7 @@ from lattice_census.store.connect import open_for_reading
 from lattice_census.store.rows import one_row
 from lattice_census.store.runs import begin_run, end_run
 from lattice_census.store.stages import stored_settings
+from lattice_census.store.transaction import transaction
 from lattice_census.store.workspace import Workspace
 
 from .ingest import finish
@@ -114,28 +115,21 @@ def _act(
         settings = Settings.model_validate(stored_settings(connection))
         # An act is never resumed: it is one transaction, so its plan hash is its own.
         run = begin_run(connection, command, arguments, uuid.uuid4().hex, settings.model_dump(mode="json"))
-        connection.execute("BEGIN")
         try:
-            done = act(connection, run.run_id)
-            waiting = update_groups(connection, run.run_id, settings)
-            connection.execute("COMMIT")
+            with transaction(connection):
+                done = act(connection, run.run_id)
+                waiting = update_groups(connection, run.run_id, settings)
         except BaseException:
-            connection.execute("ROLLBACK")
             connection.execute("DELETE FROM runs WHERE run_id = ?", [run.run_id])
             raise
         if waiting:
             find_changed(connection, settings)
             with WorkerPool(1) as pool:
                 group_records(workspace, run.run_id, settings, pool, Silent())
-        connection.execute("BEGIN")
-        try:
+        with transaction(connection):
             lapse(connection, run.run_id)
             done |= after(connection, run.run_id)
             find_all(connection, settings)
             end_run(connection, run, done)
-            connection.execute("COMMIT")
-        except BaseException:
-            connection.execute("ROLLBACK")
-            raise
         finish(workspace, settings, call_directly)
     return {"run": run.run_id, **done}

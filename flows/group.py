@@ -16,6 +16,7 @@ from lattice_census.output.findings import find_all
 from lattice_census.settings import Settings
 from lattice_census.store.runs import Run, begin_run, end_run
 from lattice_census.store.stages import record_settings, refuse_mixed
+from lattice_census.store.transaction import transaction
 from lattice_census.store.workspace import Workspace
 
 from .engine import engine_for
@@ -77,8 +78,7 @@ def group_into(workspace: Workspace, job: GroupJob, pool: Engine, step: Step, pr
 
 def _close(workspace: Workspace, run: Run, settings: Settings, done: GroupCounts) -> dict[str, Any]:
     connection = workspace.connection
-    connection.execute("BEGIN")
-    try:
+    with transaction(connection):
         update_groups(connection, run.run_id, settings, compared=True)
         note_grouped(connection, run.run_id)
         lapse(connection, run.run_id)
@@ -94,8 +94,4 @@ def _close(workspace: Workspace, run: Run, settings: Settings, done: GroupCounts
             "findings": findings,
         }
         end_run(connection, run, counts)
-        connection.execute("COMMIT")
-    except BaseException:
-        connection.execute("ROLLBACK")
-        raise
     return {"run": run.run_id, **counts}

@@ -28,6 +28,7 @@ from lattice_census.settings import Settings
 from lattice_census.store.rows import one_number
 from lattice_census.store.runs import end_run
 from lattice_census.store.stages import record_settings
+from lattice_census.store.transaction import transaction
 from lattice_census.store.workspace import Workspace
 
 from .engine import engine_for
@@ -117,16 +118,11 @@ def compile_kernels(settings: Settings, progress: Progress) -> None:
 def _close(workspace: Workspace, work: IngestWork, group_next: bool) -> dict[str, Any]:
     """Exact groups, settings and the end of the run in one transaction; the findings are due when it is published."""
     connection = workspace.connection
-    connection.execute("BEGIN")
-    try:
+    with transaction(connection):
         waiting = update_groups(connection, work.run.run_id, work.settings, group_next)
         lapse(connection, work.run.run_id)
         note_findings_due(connection)
         record_settings(connection, work.settings, ("parse", "canonical", "fingerprint", "keep"))
         counts = ingest_counts(connection, work) | {"compositions_waiting": waiting}
         end_run(connection, work.run, counts)
-        connection.execute("COMMIT")
-    except BaseException:
-        connection.execute("ROLLBACK")
-        raise
     return {"run": work.run.run_id, **counts}

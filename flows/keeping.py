@@ -23,6 +23,7 @@ from lattice_census.ingest.progress import Silent, Step
 from lattice_census.settings import Settings
 from lattice_census.store.runs import begin_run, end_run
 from lattice_census.store.stages import changed_stages, refuse_mixed, stored_settings
+from lattice_census.store.transaction import transaction
 from lattice_census.store.workspace import Workspace
 
 from .ingest import finish
@@ -81,16 +82,11 @@ def keep_into(workspace: Workspace, job: KeepJob, step: Step) -> dict[str, Any]:
         return {"nothing_new": True, **_counts(plan)}
     arguments = {"grade": grade, "note": job.note, "again": again}
     run = begin_run(connection, "keep", arguments, plan.digest, job.settings.model_dump(mode="json"))
-    connection.execute("BEGIN")
-    try:
+    with transaction(connection):
         decide(connection, run.run_id, plan, job.note)
         release(connection, run.run_id, again, grade)
         make_holds(connection, job.settings)
         end_run(connection, run, _counts(plan))
-        connection.execute("COMMIT")
-    except BaseException:
-        connection.execute("ROLLBACK")
-        raise
     return {"run": run.run_id, **_counts(plan)}
 
 

@@ -19,6 +19,7 @@ from ..ingest.withdraw import user_name
 from ..settings import Settings
 from ..store.find import find_record
 from ..store.rows import one_number, one_row
+from ..store.transaction import transaction
 from .holds import make_holds
 
 
@@ -257,10 +258,5 @@ def restore_ended(connection: duckdb.DuckDBPyConnection, run_id: int, of_run: in
 
 def current_holds(connection: duckdb.DuckDBPyConnection, settings: Settings) -> None:
     """Make `holds` anew outside of a transaction of the caller: the same rows wherever nothing changed."""
-    connection.execute("BEGIN")
-    try:
+    with transaction(connection):
         make_holds(connection, settings)
-        connection.execute("COMMIT")
-    except BaseException:
-        connection.execute("ROLLBACK")
-        raise

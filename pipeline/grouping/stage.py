@@ -10,18 +10,18 @@ from __future__ import annotations
 
 import hashlib
 import json
-from collections.abc import Callable, Sequence
+from collections.abc import Sequence
 from dataclasses import dataclass
-from functools import partial
 
 import duckdb
 
 from ..ingest.engine import Engine, done_in_order
-from ..ingest.progress import Progress
+from ..ingest.progress import Progress, Silent
 from ..ingest.touched import STAGES, find_touched, grouped_until
 from ..settings import Settings
 from ..store.parts import Part
 from ..store.rows import one_number
+from ..store.transaction import transaction
 from ..store.workspace import Workspace
 from .additions import find_additions
 from .digest import digest_compositions
@@ -79,52 +79,59 @@ def group_records(
     The compositions to work on are those of temp.changed_compositions (find_changed); everything: they are all there
     are. What was grouped of one is replaced in the transaction that writes its digest.
     """
-    connection, manifest = workspace.connection, workspace.manifest
+    connection = workspace.connection
     find_additions(connection, settings, everything)
     find_former(connection)
-    _in_transaction(connection, partial(forget_gone, connection, run_id))
-    _in_transaction(connection, partial(_write_single, connection, run_id))
+    with transaction(connection):
+        forget_gone(connection, run_id)
+        _write_single(connection, run_id)
     connection.execute(f"CREATE OR REPLACE TEMP TABLE {AGAIN} (composition VARCHAR)")
     records = one_number(connection, "SELECT coalesce(sum(records), 0) FROM changed_compositions WHERE NOT plain")
     if records:
         progress.start("comparing and grouping", records)
-        pairs = one_number(connection, "SELECT sum(keys * keys) FROM changed_compositions WHERE keys > 1")
-        few = 4 if pairs < LITTLE_WORK else 1
-        settle = pairs >= LITTLE_WORK and workspace.mostly_in_log
-        together = TOGETHER if one_number(connection, "SELECT count(*) FROM former_members") else 1
-        held: list[GroupJob] = []
-
-        def write() -> None:
-            parts = [manifest.checked(job.part) for job in held]
-            _in_transaction(connection, partial(_commit, connection, parts, run_id))
-            for job in held:
-                job.raw.unlink()
-                if job.known is not None:
-                    job.known.unlink()
-                manifest.drop(job.part)
-            held.clear()
-
-        only = "changed_compositions"
-        while True:
-            for job, done in done_in_order(pool, group_chunk, jobs(workspace, settings, only), manifest, few):
-                held.append(job)
-                if len(held) >= together:
-                    write()
-                if only != AGAIN:
-                    progress.advance(done)
-                if settle:
-                    # What was read is worked into the file while workers compare: publishing waits for the rest alone.
-                    connection.execute("CHECKPOINT")
-                    settle = False
-            if held:
-                write()
-            if only == AGAIN or not one_number(connection, f"SELECT count(*) FROM {AGAIN}"):
-                break
-            only = AGAIN
+        _work_through(workspace, run_id, settings, pool, progress, "changed_compositions")
+        if one_number(connection, f"SELECT count(*) FROM {AGAIN}"):
             for table in ("added_compositions", "old_records"):
                 connection.execute(f"DELETE FROM {table} WHERE composition IN (SELECT composition FROM {AGAIN})")
-    _in_transaction(connection, partial(forget_outdated, connection))
+            _work_through(workspace, run_id, settings, pool, Silent(), AGAIN)
+    with transaction(connection):
+        forget_outdated(connection)
     return _counts(connection, run_id)
+
+
+def _work_through(
+    workspace: Workspace, run_id: int, settings: Settings, pool: Engine, progress: Progress, only: str
+) -> None:
+    """Have the compositions of a table worked on, and write what comes."""
+    connection, manifest = workspace.connection, workspace.manifest
+    pairs = one_number(connection, "SELECT sum(keys * keys) FROM changed_compositions WHERE keys > 1")
+    few = 4 if pairs < LITTLE_WORK else 1
+    settle = pairs >= LITTLE_WORK and workspace.mostly_in_log
+    together = TOGETHER if one_number(connection, "SELECT count(*) FROM former_members") else 1
+    held: list[GroupJob] = []
+
+    def write() -> None:
+        parts = [manifest.checked(job.part) for job in held]
+        with transaction(connection):
+            _commit(connection, parts, run_id)
+        for job in held:
+            job.raw.unlink()
+            if job.known is not None:
+                job.known.unlink()
+            manifest.drop(job.part)
+        held.clear()
+
+    for job, done in done_in_order(pool, group_chunk, jobs(workspace, settings, only), manifest, few):
+        held.append(job)
+        if len(held) >= together:
+            write()
+        progress.advance(done)
+        if settle:
+            # What was read is worked into the file while workers compare: publishing waits for the rest alone.
+            connection.execute("CHECKPOINT")
+            settle = False
+    if held:
+        write()
 
 
 def find_work(connection: duckdb.DuckDBPyConnection, settings: Settings, everything: bool = False) -> str | None:
@@ -157,16 +164,6 @@ def _counts(connection: duckdb.DuckDBPyConnection, run_id: int) -> GroupCounts:
         {grade: groups for grade, _, groups, _ in rows},
         {grade: aside for grade, _, _, aside in rows},
     )
-
-
-def _in_transaction(connection: duckdb.DuckDBPyConnection, work: Callable[[], None]) -> None:
-    connection.execute("BEGIN")
-    try:
-        work()
-        connection.execute("COMMIT")
-    except BaseException:
-        connection.execute("ROLLBACK")
-        raise
 
 
 def find_changed(connection: duckdb.DuckDBPyConnection, settings: Settings, everything: bool = False) -> None:

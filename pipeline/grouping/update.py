@@ -7,6 +7,7 @@ import duckdb
 from ..ingest.touched import COMPARED, EXACT, find_touched, note_grouped, settings_changed
 from ..settings import Settings
 from ..store.rows import one_number
+from ..store.transaction import transaction
 from .exact import group_exact
 from .outdated import GROUPED, WAITING, set_outdated_aside
 from .rank import rank_records
@@ -42,10 +43,5 @@ def update_groups(
 
 def settle_groups(connection: duckdb.DuckDBPyConnection, settings: Settings) -> None:
     """`update_groups` in a transaction of its own, for what an interrupted run left."""
-    connection.execute("BEGIN")
-    try:
+    with transaction(connection):
         update_groups(connection, one_number(connection, "SELECT max(run_id) FROM runs"), settings)
-        connection.execute("COMMIT")
-    except BaseException:
-        connection.execute("ROLLBACK")
-        raise

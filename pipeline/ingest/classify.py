@@ -18,6 +18,7 @@ from ..settings import Settings
 from ..store.manifest import Done
 from ..store.parts import files_there
 from ..store.rows import one_number
+from ..store.transaction import transaction
 from ..store.workspace import Workspace
 from .engine import Engine, done_in_order
 from .progress import Progress
@@ -155,14 +156,9 @@ def _point_group_order(groups: dict[str, int | None]) -> int | None:
 
 def _commit(connection: duckdb.DuckDBPyConnection, part: str, again: bool) -> None:
     """again: there may be rows of these keys."""
-    connection.execute("BEGIN")
-    try:
+    with transaction(connection):
         if again:
             connection.execute(
                 "DELETE FROM crystal_types WHERE crystal_key IN (SELECT crystal_key FROM read_parquet(?))", [part]
             )
         connection.execute("INSERT INTO crystal_types SELECT * FROM read_parquet(?)", [part])
-        connection.execute("COMMIT")
-    except BaseException:
-        connection.execute("ROLLBACK")
-        raise

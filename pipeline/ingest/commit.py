@@ -11,6 +11,7 @@ import polars as pl
 from ..model.columns import TABLES
 from ..store.parts import Part
 from ..store.rows import one_number, one_row
+from ..store.transaction import transaction
 from .reduce import accepted_part, rejects_part
 from .split import RawChunk
 
@@ -40,14 +41,8 @@ def commit_chunk(connection: duckdb.DuckDBPyConnection, work: ChunkToCommit, par
 
     Returns the counts of the chunk's row in `chunks`.
     """
-    connection.execute("BEGIN")
-    try:
-        counts = _commit(connection, work, part)
-        connection.execute("COMMIT")
-    except BaseException:
-        connection.execute("ROLLBACK")
-        raise
-    return counts
+    with transaction(connection):
+        return _commit(connection, work, part)
 
 
 def is_committed(connection: duckdb.DuckDBPyConnection, run_id: int, source: str, chunk: RawChunk) -> bool:

@@ -8,6 +8,7 @@ import duckdb
 
 from ..errors import WorkError
 from ..store.rows import one_number, one_row
+from ..store.transaction import transaction
 from .scan import SourceToRead
 
 
@@ -19,8 +20,7 @@ def finish_source(
     found: raw records by file on disk, counted while reading. Raises WorkError where found <> accepted + rejected.
     """
     name = source.source
-    connection.execute("BEGIN")
-    try:
+    with transaction(connection):
         for file in source.files:
             if not file.changed:
                 continue
@@ -66,7 +66,3 @@ def finish_source(
             [name, str(source.root), source.kind, json.dumps(source.settings.model_dump(), sort_keys=True),
              first[0] if first else run_id, run_id],
         )  # fmt: skip
-        connection.execute("COMMIT")
-    except BaseException:
-        connection.execute("ROLLBACK")
-        raise

@@ -17,6 +17,7 @@ from ..store.parts import Part
 from ..store.rows import one_number, one_row
 from ..store.runs import Run, begin_run
 from ..store.stages import changed_stages, record_settings, refuse_mixed, stored_settings
+from ..store.transaction import transaction
 from ..store.workspace import Workspace
 from .commit import ChunkToCommit, commit_chunk, is_committed
 from .engine import Engine, done_in_order
@@ -58,9 +59,8 @@ def prepare_ingest(workspace: Workspace, request: IngestRequest, settings: Setti
     if run.resumed:
         log.info("Run %d was interrupted; going on with it.", run.run_id)
     if not stored_settings(connection):
-        connection.execute("BEGIN")
-        record_settings(connection, settings, ("parse", "canonical", "fingerprint"))
-        connection.execute("COMMIT")
+        with transaction(connection):
+            record_settings(connection, settings, ("parse", "canonical", "fingerprint"))
     return IngestWork(run, plan, settings, request.recompute and bool({"canonical", "fingerprint"} & set(changed)))
 
 

@@ -16,6 +16,7 @@ from ..settings import Settings
 from ..store.manifest import Done
 from ..store.parts import Part, files_there
 from ..store.rows import one_number
+from ..store.transaction import transaction
 from ..store.workspace import Workspace
 from .commit import insert_canonical_forms
 from .engine import Engine, done_in_order
@@ -89,8 +90,7 @@ def _reduce_stored(job: ReduceJob) -> Done:
 
 
 def _replace(connection: duckdb.DuckDBPyConnection, part: Part) -> None:
-    connection.execute("BEGIN")
-    try:
+    with transaction(connection):
         connection.execute("CREATE OR REPLACE TEMP TABLE again AS SELECT * FROM read_parquet(?)", [str(part)])
         connection.execute("DELETE FROM canonical_forms WHERE record_id IN (SELECT record_id FROM again)")
         insert_canonical_forms(connection, "again i")
@@ -98,7 +98,3 @@ def _replace(connection: duckdb.DuckDBPyConnection, part: Part) -> None:
             "UPDATE records SET sites_primitive = again.sites_primitive FROM again "
             "WHERE records.record_id = again.record_id AND records.sites_primitive <> again.sites_primitive"
         )
-        connection.execute("COMMIT")
-    except BaseException:
-        connection.execute("ROLLBACK")
-        raise

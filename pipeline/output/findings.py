@@ -11,6 +11,7 @@ from ..decisions.holds import make_holds
 from ..grouping.rank import rank_records
 from ..settings import Settings
 from ..store.rows import one_row
+from ..store.transaction import transaction
 
 
 @cache
@@ -37,13 +38,8 @@ def findings_due(connection: duckdb.DuckDBPyConnection) -> bool:
 
 def find_due(connection: duckdb.DuckDBPyConnection, settings: Settings) -> None:
     """`find_all` in a transaction of its own."""
-    connection.execute("BEGIN")
-    try:
+    with transaction(connection):
         find_all(connection, settings)
-        connection.execute("COMMIT")
-    except BaseException:
-        connection.execute("ROLLBACK")
-        raise
 
 
 _RANKED = (

@@ -11,6 +11,7 @@ import duckdb
 from .. import __version__
 from ..errors import UsageError
 from .rows import one_number, one_row
+from .transaction import transaction
 
 
 @dataclass(frozen=True, slots=True)
@@ -35,31 +36,28 @@ def begin_run(
     recomputes: until the run ends the store holds rows of two settings, so no other run may begin before it is taken
     up and ended (UsageError).
     """
-    connection.execute("BEGIN")
-    halfway = one_row(connection, "SELECT value FROM store_facts WHERE name = 'recomputing'")
-    if halfway is not None and halfway[0] != plan_hash:
-        connection.execute("ROLLBACK")
-        raise UsageError(
-            "A recomputation of this store was interrupted, and its rows are of two settings until it is done. Give "
-            "the same command with the same settings and --recompute again."
+    with transaction(connection):
+        halfway = one_row(connection, "SELECT value FROM store_facts WHERE name = 'recomputing'")
+        if halfway is not None and halfway[0] != plan_hash:
+            raise UsageError(
+                "A recomputation of this store was interrupted, and its rows are of two settings until it is done. "
+                "Give the same command with the same settings and --recompute again."
+            )
+        open_run = one_row(
+            connection, "SELECT run_id, plan_hash FROM runs WHERE status = 'running' ORDER BY run_id DESC LIMIT 1"
         )
-    open_run = one_row(
-        connection, "SELECT run_id, plan_hash FROM runs WHERE status = 'running' ORDER BY run_id DESC LIMIT 1"
-    )
-    if open_run is not None and open_run[1] == plan_hash:
-        connection.execute("COMMIT")
-        return Run(int(open_run[0]), True)
-    connection.execute("UPDATE runs SET status = 'interrupted' WHERE status = 'running'")
-    connection.execute("DELETE FROM seen")
-    run_id = 1 + one_number(connection, "SELECT max(run_id) FROM runs")
-    connection.execute(
-        "INSERT INTO runs VALUES (?, ?, ?, ?, 'running', now() AT TIME ZONE 'UTC', NULL, ?, ?, NULL)",
-        [run_id, command, json.dumps(arguments, sort_keys=True), plan_hash, __version__,
-         json.dumps(settings, sort_keys=True)],
-    )  # fmt: skip
-    if recomputes and halfway is None:
-        connection.execute("INSERT INTO store_facts VALUES ('recomputing', ?)", [plan_hash])
-    connection.execute("COMMIT")
+        if open_run is not None and open_run[1] == plan_hash:
+            return Run(int(open_run[0]), True)
+        connection.execute("UPDATE runs SET status = 'interrupted' WHERE status = 'running'")
+        connection.execute("DELETE FROM seen")
+        run_id = 1 + one_number(connection, "SELECT max(run_id) FROM runs")
+        connection.execute(
+            "INSERT INTO runs VALUES (?, ?, ?, ?, 'running', now() AT TIME ZONE 'UTC', NULL, ?, ?, NULL)",
+            [run_id, command, json.dumps(arguments, sort_keys=True), plan_hash, __version__,
+             json.dumps(settings, sort_keys=True)],
+        )  # fmt: skip
+        if recomputes and halfway is None:
+            connection.execute("INSERT INTO store_facts VALUES ('recomputing', ?)", [plan_hash])
     return Run(run_id, False)
 
 

@@ -8,6 +8,7 @@ from importlib.resources import files
 import duckdb
 
 from .rows import one_number
+from .transaction import transaction
 
 
 @cache
@@ -53,13 +54,8 @@ def migrate(connection: duckdb.DuckDBPyConnection) -> int:
     for number, name, sql in migrations():
         if number <= have:
             continue
-        connection.execute("BEGIN")
-        try:
+        with transaction(connection):
             connection.execute(sql)
             connection.execute("INSERT INTO schema_migrations VALUES (?, ?, now() AT TIME ZONE 'UTC')", [number, name])
-            connection.execute("COMMIT")
-        except BaseException:
-            connection.execute("ROLLBACK")
-            raise
         applied += 1
     return applied

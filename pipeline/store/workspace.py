@@ -23,6 +23,7 @@ from .publish import mark_of, publish
 from .rows import one_number, one_row
 from .schema import migrate
 from .stages import stored_settings
+from .transaction import transaction
 
 
 class Workspace:
@@ -140,11 +141,10 @@ class Workspace:
     def publish(self) -> None:
         """Count the publication, checkpoint, and put a copy in the place of the published file."""
         connection = self.connection
-        connection.execute("BEGIN")
-        number = 1 + one_number(connection, "SELECT value FROM store_facts WHERE name = 'publication'")
-        connection.execute("DELETE FROM store_facts WHERE name = 'publication'")
-        connection.execute("INSERT INTO store_facts VALUES ('publication', ?)", [str(number)])
-        connection.execute("COMMIT")
+        with transaction(connection):
+            number = 1 + one_number(connection, "SELECT value FROM store_facts WHERE name = 'publication'")
+            connection.execute("DELETE FROM store_facts WHERE name = 'publication'")
+            connection.execute("INSERT INTO store_facts VALUES ('publication', ?)", [str(number)])
         newest = one_number(connection, "SELECT max(run_id) FROM runs")
         settings = stored_settings(connection)
         connection.execute("CHECKPOINT")
