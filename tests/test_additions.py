@@ -139,9 +139,15 @@ def listed() -> list[dict[str, Any]]:
     return collection(9)
 
 
-@pytest.mark.parametrize("settings", [{}, {"matches_per_record": 2}, {"mirror_images": "separate"}])
-@pytest.mark.parametrize("large", [False, True])
-@pytest.mark.parametrize("by_night", [False, True])
+@pytest.mark.parametrize(
+    ("settings", "large", "by_night"),
+    [
+        ({}, False, False),
+        ({"matches_per_record": 2}, False, True),
+        ({"matches_per_record": 2}, True, False),
+        ({"mirror_images": "separate"}, True, True),
+    ],
+)
 def test_a_store_that_grew_equals_one_made_at_once(
     tmp_path: Path, ingest, listed, monkeypatch, settings: dict[str, Any], large: bool, by_night: bool
 ):

@@ -146,6 +146,8 @@ def group_composition(
         old = earlier.old_nodes(nodes)
     if part is None and len(shown) == len(nodes):
         crowded, candidates, crowding = _candidates_plain(by, len(nodes), chosen.crowded)
+        if len(nodes) <= chosen.crowded:
+            crowding = None  # as where several compositions are looked at together
         if len(crowded):  # which pairs of crowds are verified depends on all of them
             earlier, old = None, np.zeros(len(nodes), bool)
         candidates = candidates[~old[candidates].all(axis=1)]
@@ -242,7 +244,7 @@ def _not_crowded(
     return most, close
 
 
-def _candidates_plain(by: Searcher, nodes: int, crowded_at: int) -> tuple[Ints, Ints, tuple[int, int]]:
+def _candidates_plain(by: Searcher, nodes: int, crowded_at: int) -> tuple[Ints, Ints, tuple[int, int] | None]:
     """The crowded nodes, every candidate pair but those that are not listed for crowds, and Grouping.crowding.
 
     Where the coordinates alone leave over DENSE pairs a node, its pairs are not even listed between nodes that have

@@ -24,13 +24,8 @@ J = TypeVar("J")
 R = TypeVar("R")
 
 
-LESS_URGENT = 5
-"""By so much workers are nicer than the process that feeds them: where it has to share a core with them, all wait."""
-
-
-def _begin_worker(parent: int) -> None:
-    """Give way to the process that made this worker, and end when it is gone (a kill leaves no time to tell)."""
-    os.nice(LESS_URGENT)
+def _leave_with_parent(parent: int) -> None:
+    """End this worker when the process that made it is gone (a kill leaves no time to tell the workers)."""
 
     def watch() -> None:
         while os.getppid() == parent:
@@ -108,7 +103,7 @@ class WorkerPool:
             self._executor = ProcessPoolExecutor(
                 self._workers,
                 multiprocessing.get_context("spawn"),
-                initializer=_begin_worker,
+                initializer=_leave_with_parent,
                 initargs=(os.getpid(),),
             )
         return self._executor
