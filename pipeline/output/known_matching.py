@@ -17,6 +17,7 @@ import polars as pl
 from scipy.spatial import cKDTree
 
 from ..fingerprint.distributions import column_means, distributions
+from ..grouping.additions import SIZE
 from ..grouping.candidates import coordinates_agree, filtered, mean_coordinates, start_search, tree_columns
 from ..grouping.preparation import transform_slack
 from ..grouping.verification import NO_MATCH, Verified, verify
@@ -32,9 +33,6 @@ NAMES = ("same", "near", "window")
 FIRST_TRIED = 200
 """Candidates of one new crystal that are verified at first, nearest in the fingerprint first; the others only where
 none of these matches at the grade asked for."""
-
-SIZE = "coalesce({0}.volume_angstrom3_per_site, {0}.area_angstrom2_per_site)"
-"""What limits the stretches of two crystals of one composition, which are both bulk crystals or both layers."""
 
 TOGETHER = 500
 """New crystals of one composition that are prepared together."""
