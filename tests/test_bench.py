@@ -239,7 +239,10 @@ def test_heavy_libraries_are_seen(monkeypatch):
 
 @pytest.mark.slow
 @pytest.mark.parametrize("name", ["ingest", "workers", "copies", "grow", "memory", "nightly", "start"])
-def test_part_that_makes_processes_on_few_records(name, scratch):
+def test_part_that_makes_processes_on_few_records(name, scratch, monkeypatch):
+    """But for compiling all kernels, which takes a minute of both cores: test_kernel_cache compiles, and asks the
+    same."""
+    monkeypatch.setattr(start, "compile_all", lambda options: (20.0, 0))
     reports, wrong = command.run_parts([name], Options(records=200, repeat=1, scratch=scratch))
     assert not wrong
     assert all(np.isfinite(f.value) for f in reports[0].figures)
