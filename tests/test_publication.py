@@ -166,6 +166,17 @@ def test_a_copy_that_cannot_be_made_is_none(tmp_path: Path):
         assert not copy.brought_up_to(tmp_path / "work")
 
 
+def test_a_copy_that_does_not_fit_gives_the_room_back(tmp_path: Path, monkeypatch):
+    def full(file: int) -> None:
+        raise OSError(28, "No space left on device")
+
+    monkeypatch.setattr("lattice_census.store.copy_ahead.os.fdatasync", full)
+    (tmp_path / "published").write_bytes(b"store")
+    with CopyAhead(tmp_path / "published", tmp_path / "next") as copy:
+        assert not copy.brought_up_to(tmp_path / "published")
+        assert not (tmp_path / "next").exists()
+
+
 def test_what_is_published_from_a_copy_made_ahead_is_the_work_store(tmp_path: Path, ingest, monkeypatch):
     """Also where nothing is published in the end, and in a dry run: no copy is left behind."""
     monkeypatch.setattr(workspaces, "LEAST", 0)

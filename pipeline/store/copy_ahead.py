@@ -8,7 +8,6 @@ from __future__ import annotations
 
 import os
 import threading
-from contextlib import suppress
 from pathlib import Path
 from types import TracebackType
 
@@ -42,19 +41,27 @@ class CopyAhead:
         self._target.unlink(missing_ok=True)
 
     def _copy(self) -> None:
-        # What goes wrong here (a full disk, say) is met again, and said, when the store is published without a copy.
-        with suppress(OSError), self._source.open("rb") as source, self._target.open("wb") as target:
+        try:
+            self._whole = self._copied()
+        except OSError:
+            # It is met again, and said, when the store is published without a copy. Until then a disk that is full
+            # has the room back, which the run may need.
+            self._target.unlink(missing_ok=True)
+
+    def _copied(self) -> bool:
+        """Copy, and tell whether it was not stopped before the end."""
+        with self._source.open("rb") as source, self._target.open("wb") as target:
             while not self._stop.is_set():
                 piece = source.read(PIECE)
                 if not piece:
                     target.flush()
                     os.fsync(target.fileno())
-                    self._whole = True
-                    return
+                    return True
                 target.write(piece)
                 # Piece by piece, so that nobody else's wait for the disk is one for the whole file.
                 target.flush()
                 os.fdatasync(target.fileno())
+        return False
 
     def brought_up_to(self, work: Path) -> bool:
         """Wait for the copy and make it equal to a closed file, durably; False where there is no whole copy."""
