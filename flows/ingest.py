@@ -3,11 +3,12 @@
 from __future__ import annotations
 
 from dataclasses import dataclass
+from functools import partial
 from pathlib import Path
 from typing import Any
 
 from lattice_census.decisions.ledger import lapse
-from lattice_census.grouping.update import update_groups
+from lattice_census.grouping.update import update_exact_groups, update_groups
 from lattice_census.ingest.classify import classify_keys
 from lattice_census.ingest.engine import Engine
 from lattice_census.ingest.ingest import (
@@ -80,7 +81,8 @@ def ingest_into(
     for source in work.plan.sources:
         if source.stale:
             step(f"read {source.source}", read_source, workspace, work, source, pool, progress)
-    step("classify", classify_keys, workspace, job.settings, pool, progress)
+    exact = partial(_group_exactly, workspace, work)
+    step("classify", classify_keys, workspace, job.settings, pool, progress, exact)
     counts = step("close the run", _close, workspace, work, group_next)
     counts["no_unit"] = energies_without_unit(workspace.connection, work.plan)
     return counts
@@ -100,14 +102,11 @@ def finish(workspace: Workspace, settings: Settings, step: Step) -> None:
 
 
 def compile_kernels(settings: Settings, progress: Progress) -> None:
-    """Compile the kernels or take them from the cache; a compilation is said before and after.
+    """Compile the kernels where they are not in the cache; a compilation is said before and after.
 
-    Workers elsewhere do it themselves.
+    Workers elsewhere do it themselves. Each process takes from the cache what it needs when it needs it.
     """
-    if settings.scheduler:
-        return
-    if all_kept():
-        warm_up()
+    if settings.scheduler or all_kept():
         return
     progress.note("Compiling the kernels, once; this takes about half a minute.")
     seconds = warm_up()
@@ -115,8 +114,15 @@ def compile_kernels(settings: Settings, progress: Progress) -> None:
     progress.note(f"Compiled the kernels in {seconds:.0f} s; later runs take them from {place}.")
 
 
+def _group_exactly(workspace: Workspace, work: IngestWork) -> None:
+    """The groups that need no comparison; which compositions changed stays noted until all is classified."""
+    with transaction(workspace.connection):
+        update_exact_groups(workspace.connection, work.run.run_id, work.settings)
+
+
 def _close(workspace: Workspace, work: IngestWork, group_next: bool) -> dict[str, Any]:
-    """Exact groups, settings and the end of the run in one transaction; the findings are due when it is published."""
+    """What is left of the groups, settings and the end of the run in one transaction; the findings are due when it is
+    published."""
     connection = workspace.connection
     with transaction(connection):
         waiting = update_groups(connection, work.run.run_id, work.settings, group_next)

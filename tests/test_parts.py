@@ -11,12 +11,14 @@ import polars as pl
 import pytest
 
 from lattice_census.errors import UsageError, WorkError
+from lattice_census.ingest import classify, reduce
 from lattice_census.ingest import ingest as ingest_stage
-from lattice_census.ingest import reduce
 from lattice_census.ingest.engine import done_in_order
 from lattice_census.ingest.pool import WorkerPool
+from lattice_census.store.connect import open_for_reading
 from lattice_census.store.manifest import Done, Manifest
 from lattice_census.store.parts import Part, empty_place, files_there, make_place, place_named, raw_and_part
+from lattice_census.store.rows import one_number
 
 from .tables_of_structures import crystals, rows_of, whole_store, write_csv
 
@@ -269,3 +271,29 @@ def test_a_run_that_died_reuses_its_parts_and_refuses_a_damaged_one(tmp_path: Pa
     calls.clear()
     ingest(table, chunk_records=10)
     assert len(calls) == 2 and comparable(store) == comparable(other)
+
+
+@pytest.mark.parametrize("written", [0, 1, 2])
+def test_types_that_a_run_died_before_are_made_by_the_next(tmp_path: Path, ingest, rows, monkeypatch, written: int):
+    table = write_csv(tmp_path / "t.csv", rows)
+    store, other = tmp_path / "census.duckdb", tmp_path / "other.duckdb"
+    ingest(table, store=other)
+    commit, calls = classify._commit, []
+
+    def dying(*arguments: Any) -> None:
+        if len(calls) == written:
+            raise KeyboardInterrupt
+        calls.append(1)
+        commit(*arguments)
+
+    monkeypatch.setattr(classify, "FEW_KEYS", 5)
+    monkeypatch.setattr(classify, "_commit", dying)
+    with pytest.raises(KeyboardInterrupt):
+        ingest(table)
+    monkeypatch.setattr(classify, "_commit", commit)
+    ingest(table)
+    assert comparable(store) == comparable(other)
+    connection = open_for_reading(store)
+    untyped = "SELECT count(*) FROM canonical_forms WHERE crystal_key NOT IN (SELECT crystal_key FROM crystal_types)"
+    assert one_number(connection, untyped) == 0
+    connection.close()

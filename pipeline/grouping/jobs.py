@@ -4,6 +4,7 @@ from __future__ import annotations
 
 from collections.abc import Iterator
 
+from ..ingest.engine import share
 from ..settings import Settings
 from ..store.parts import raw_and_part
 from ..store.workspace import Workspace
@@ -15,14 +16,14 @@ MOST_PAIRS = 30_000_000
 """A job ends at so many possible pairs of keys (the square of the keys of its compositions)."""
 
 MOST_RECORDS = 10_000
-"""A job ends at so many records, or at a sixteenth of all where that is fewer and still FEW_RECORDS."""
+"""A job ends at so many records, or at its share of those that are left (engine.share)."""
 
-FEW_RECORDS = 2_000
+FEW_RECORDS = 800
 
 READ_RECORDS = 100_000
 """So many records are read for jobs to come; they are held in memory until those are given out."""
 
-FIRST_JOBS = 4
+FIRST_JOBS = 2
 """So many jobs are read first, so that workers can begin."""
 
 Pack = list[tuple[str, str]]
@@ -57,7 +58,8 @@ def jobs(workspace: Workspace, settings: Settings, only: str = "changed_composit
 
 def _packs(rows: list[tuple[str, str, int, int]]) -> Iterator[list[Pack]]:
     """The compositions of each job, of as many jobs as are read at once."""
-    most = min(MOST_RECORDS, max(FEW_RECORDS, sum(row[3] for row in rows) // 16))
+    left = sum(row[3] for row in rows)
+    most = share(left, FEW_RECORDS, MOST_RECORDS)
     packs: list[Pack] = []
     pack: Pack = []
     pairs = held = waiting = given = 0
@@ -68,6 +70,8 @@ def _packs(rows: list[tuple[str, str, int, int]]) -> Iterator[list[Pack]]:
         if pairs >= MOST_PAIRS or held >= most:
             packs.append(pack)
             waiting += held
+            left -= held
+            most = share(left, FEW_RECORDS, MOST_RECORDS)
             pack, pairs, held = [], 0, 0
         if waiting >= READ_RECORDS or (not given and len(packs) == FIRST_JOBS):
             yield packs

@@ -10,7 +10,7 @@ from __future__ import annotations
 
 import hashlib
 import json
-from collections.abc import Sequence
+from collections.abc import Callable, Sequence
 from dataclasses import dataclass
 
 import duckdb
@@ -82,14 +82,19 @@ def group_records(
     connection = workspace.connection
     find_additions(connection, settings, everything)
     find_former(connection)
-    with transaction(connection):
-        forget_gone(connection, run_id)
-        _write_single(connection, run_id)
     connection.execute(f"CREATE OR REPLACE TEMP TABLE {AGAIN} (composition VARCHAR)")
     records = one_number(connection, "SELECT coalesce(sum(records), 0) FROM changed_compositions WHERE NOT plain")
-    if records:
+
+    def without_comparison() -> None:
+        with transaction(connection):
+            forget_gone(connection, run_id)
+            _write_single(connection, run_id)
+
+    if not records:
+        without_comparison()
+    else:
         progress.start("comparing and grouping", records)
-        _work_through(workspace, run_id, settings, pool, progress, "changed_compositions")
+        _work_through(workspace, run_id, settings, pool, progress, "changed_compositions", without_comparison)
         if one_number(connection, f"SELECT count(*) FROM {AGAIN}"):
             for table in ("added_compositions", "old_records"):
                 connection.execute(f"DELETE FROM {table} WHERE composition IN (SELECT composition FROM {AGAIN})")
@@ -100,9 +105,15 @@ def group_records(
 
 
 def _work_through(
-    workspace: Workspace, run_id: int, settings: Settings, pool: Engine, progress: Progress, only: str
+    workspace: Workspace,
+    run_id: int,
+    settings: Settings,
+    pool: Engine,
+    progress: Progress,
+    only: str,
+    meanwhile: Callable[[], None] | None = None,
 ) -> None:
-    """Have the compositions of a table worked on, and write what comes."""
+    """Have the compositions of a table worked on, and write what comes. meanwhile: done once while workers compare."""
     connection, manifest = workspace.connection, workspace.manifest
     pairs = one_number(connection, "SELECT sum(keys * keys) FROM changed_compositions WHERE keys > 1")
     few = 4 if pairs < LITTLE_WORK else 1
@@ -123,6 +134,9 @@ def _work_through(
 
     for job, done in done_in_order(pool, group_chunk, jobs(workspace, settings, only), manifest, few):
         held.append(job)
+        if meanwhile is not None:
+            meanwhile()
+            meanwhile = None
         if len(held) >= together:
             write()
         progress.advance(done)

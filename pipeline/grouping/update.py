@@ -15,6 +15,15 @@ from .rank import rank_records
 TOUCHED = "SELECT count(*) FROM touched"
 
 
+def update_exact_groups(connection: duckdb.DuckDBPyConnection, run_id: int, settings: Settings) -> None:
+    """Make the groups of equal content and key anew where records changed; inside the caller's transaction."""
+    find_touched(connection, settings, EXACT)
+    if one_number(connection, TOUCHED):
+        rank_records(connection, settings, "touched")
+        group_exact(connection, run_id)
+        note_grouped(connection, run_id, EXACT)
+
+
 def update_groups(
     connection: duckdb.DuckDBPyConnection, run_id: int, settings: Settings, compared: bool = False
 ) -> int:
@@ -25,11 +34,7 @@ def update_groups(
     compared: `group` has just compared what was to be compared, or will before anything else is done or published;
     in the second case the run is noted when it has.
     """
-    find_touched(connection, settings, EXACT)
-    if one_number(connection, TOUCHED):
-        rank_records(connection, settings, "touched")
-        group_exact(connection, run_id)
-        note_grouped(connection, run_id, EXACT)
+    update_exact_groups(connection, run_id, settings)
     if compared and not settings_changed(connection, settings):
         return 0
     find_touched(connection, settings, COMPARED)

@@ -2,7 +2,7 @@
 
 from __future__ import annotations
 
-from collections.abc import Iterator
+from collections.abc import Callable, Iterator
 
 import duckdb
 import numpy as np
@@ -20,7 +20,7 @@ from ..store.parts import files_there
 from ..store.rows import one_number
 from ..store.transaction import transaction
 from ..store.workspace import Workspace
-from .engine import Engine, done_in_order
+from .engine import Engine, done_in_order, share
 from .progress import Progress
 from .recompute import stored_batch
 from .reduce import ReduceJob, accepted_part, fixed, ragged, stored_job, token_lists
@@ -40,10 +40,13 @@ _LEFT = (
 )
 
 
-def classify_keys(workspace: Workspace, settings: Settings, pool: Engine, progress: Progress) -> int:
+def classify_keys(
+    workspace: Workspace, settings: Settings, pool: Engine, progress: Progress, meanwhile: Callable[[], None]
+) -> int:
     """Classify every key that needs it, and drop the types of keys that no record has any more; returns how many.
 
-    Each chunk is committed by itself; after a kill what is missing is found again.
+    Each chunk is committed by itself; after a kill what is missing is found again. meanwhile: done once, while workers
+    have chunks.
     """
     connection = workspace.connection
     find_touched(connection, settings)
@@ -51,10 +54,13 @@ def classify_keys(workspace: Workspace, settings: Settings, pool: Engine, progre
     connection.execute(f"CREATE OR REPLACE TEMP TABLE to_classify AS {TO_CLASSIFY} ORDER BY f.crystal_key")
     total = one_number(connection, "SELECT count(*) FROM to_classify")
     if not total:
+        meanwhile()
         return 0
     progress.start("lattice types and space groups", total)
     again = one_number(connection, "SELECT count(*) FROM to_classify JOIN crystal_types USING (crystal_key)") > 0
     for job, count in done_in_order(pool, _classify, _jobs(workspace, settings, total), workspace.manifest):
+        if job.number == 0:
+            meanwhile()
         _commit(connection, str(accepted_part(workspace.manifest.checked(job.part))), again)
         job.raw.unlink()
         workspace.manifest.drop(job.part)
@@ -65,21 +71,27 @@ def classify_keys(workspace: Workspace, settings: Settings, pool: Engine, progre
 READ_AT_ONCE = 16_000
 """Rows that are read by one query: each runs through the whole table, so that chunk by chunk costs the square."""
 
+FEW_KEYS = 400
+"""A chunk has no fewer keys, but for the last one."""
+
 
 def _jobs(workspace: Workspace, settings: Settings, total: int) -> Iterator[ReduceJob]:
-    size = settings.chunk_records
-    together = max(1, READ_AT_ONCE // size) * size
-    number = 0
-    for start in range(0, total, together):
+    """The first query is for one chunk alone, so that a worker can begin."""
+    start = number = 0
+    while start < total:
+        size = share(total - start, FEW_KEYS, settings.chunk_records)
         frame = workspace.connection.sql(
             "SELECT f.crystal_key, f.record_id, f.cell_angstrom, f.species, f.positions_fractional, r.periodicity "
             "FROM (SELECT record_id, crystal_key FROM to_classify ORDER BY crystal_key "
-            f"LIMIT {together} OFFSET {start}) w "
+            f"LIMIT {max(size, READ_AT_ONCE) if start else size} OFFSET {start}) w "
             "JOIN canonical_forms f USING (record_id) JOIN records r USING (record_id) ORDER BY f.crystal_key"
         ).pl()
-        for chunk in frame.iter_slices(size):
-            yield stored_job(workspace.place, "types", number, chunk, settings)
-            number += 1
+        done = 0
+        while done < len(frame):
+            size = share(total - start - done, FEW_KEYS, settings.chunk_records)
+            yield stored_job(workspace.place, "types", number, frame.slice(done, size), settings)
+            number, done = number + 1, done + size
+        start += len(frame)
 
 
 def _classify(job: ReduceJob) -> Done:

@@ -2,7 +2,7 @@
 
 from __future__ import annotations
 
-from collections.abc import Sequence
+from collections.abc import Mapping, Sequence
 from dataclasses import dataclass
 
 import duckdb
@@ -10,7 +10,7 @@ import polars as pl
 
 from ..model.columns import TABLES
 from ..store.parts import Part
-from ..store.rows import one_number, one_row
+from ..store.rows import one_row
 from ..store.transaction import transaction
 from .reduce import accepted_part, rejects_part
 from .split import RawChunk
@@ -35,14 +35,19 @@ class ChunkToCommit:
     recompute: bool
     """Canonical rows of known records are replaced even where the content is equal."""
 
+    all_new: bool
+    """The store has no record of the source but those of other chunks of this run."""
 
-def commit_chunk(connection: duckdb.DuckDBPyConnection, work: ChunkToCommit, part: Part) -> dict[str, int]:
-    """Write the chunk, whose part is on this machine and as the manifest lists it.
+
+def commit_chunk(
+    connection: duckdb.DuckDBPyConnection, work: ChunkToCommit, part: Part, rows: Mapping[str, int]
+) -> dict[str, int]:
+    """Write the chunk, whose part is on this machine and as the manifest lists it. rows: of each file of the part.
 
     Returns the counts of the chunk's row in `chunks`.
     """
     with transaction(connection):
-        return _commit(connection, work, part)
+        return _commit(connection, work, part, rows[rejects_part(part).name], rows[accepted_part(part).name])
 
 
 def is_committed(connection: duckdb.DuckDBPyConnection, run_id: int, source: str, chunk: RawChunk) -> bool:
@@ -55,22 +60,23 @@ def is_committed(connection: duckdb.DuckDBPyConnection, run_id: int, source: str
     return row is not None
 
 
-def _commit(connection: duckdb.DuckDBPyConnection, work: ChunkToCommit, part: Part) -> dict[str, int]:
+def _commit(
+    connection: duckdb.DuckDBPyConnection, work: ChunkToCommit, part: Part, rejected: int, accepted: int
+) -> dict[str, int]:
     run, source = work.run_id, work.source
     for file in work.chunk.begins:
         connection.execute(
             "DELETE FROM rejects WHERE source = $1 AND (file = $2 OR starts_with(file, $2 || '/'))", [source, file]
         )
-    parquet = str(rejects_part(part))
-    connection.execute(
-        "INSERT INTO rejects SELECT ?, file, position, label, stage, reason, message, ? FROM read_parquet(?)",
-        [source, run, parquet],
-    )
-    rejected = one_number(connection, "SELECT count(*) FROM read_parquet(?)", [parquet])
+    if rejected:
+        connection.execute(
+            "INSERT INTO rejects SELECT ?, file, position, label, stage, reason, message, ? FROM read_parquet(?)",
+            [source, run, str(rejects_part(part))],
+        )
     counts = {"found": len(work.chunk.records), "rejected": rejected, "unchanged": len(work.unchanged)}
     worked = {"new": 0, "amended": 0, "replaced": 0, "unchanged": 0}
-    if one_number(connection, "SELECT count(*) FROM read_parquet(?)", [str(accepted_part(part))]):
-        worked = _commit_incoming(connection, work, str(accepted_part(part)))
+    if accepted:
+        worked = _commit_incoming(connection, work, str(accepted_part(part)), accepted)
     if len(work.unchanged):
         connection.register("unchanged_frame", work.unchanged.to_arrow())
         connection.execute(
@@ -93,11 +99,14 @@ def _commit(connection: duckdb.DuckDBPyConnection, work: ChunkToCommit, part: Pa
     return counts
 
 
-def _commit_incoming(connection: duckdb.DuckDBPyConnection, work: ChunkToCommit, part: str) -> dict[str, int]:
+def _commit_incoming(
+    connection: duckdb.DuckDBPyConnection, work: ChunkToCommit, part: str, accepted: int
+) -> dict[str, int]:
     run, source = work.run_id, work.source
     ours = "SELECT 1 FROM records WHERE record_id IN (SELECT record_id FROM read_parquet(?)) LIMIT 1"
-    if one_row(connection, ours, [part]) is None:
-        return _commit_new(connection, work, part)
+    if work.all_new or one_row(connection, ours, [part]) is None:
+        _commit_new(connection, work, part)
+        return {"new": accepted, "amended": 0, "replaced": 0, "unchanged": 0}
     same_facts = " AND ".join(f"r.{c} IS NOT DISTINCT FROM i.{c}" for c in FACT_COLUMNS)
     connection.execute(
         "CREATE OR REPLACE TEMP TABLE change AS SELECT i.record_id, "
@@ -133,7 +142,7 @@ def _commit_incoming(connection: duckdb.DuckDBPyConnection, work: ChunkToCommit,
     return counts
 
 
-def _commit_new(connection: duckdb.DuckDBPyConnection, work: ChunkToCommit, part: str) -> dict[str, int]:
+def _commit_new(connection: duckdb.DuckDBPyConnection, work: ChunkToCommit, part: str) -> None:
     """Write a chunk of which the store knows no record: nothing is compared. The rows of a part are in their order."""
     connection.execute(
         f"INSERT INTO records (record_id, source, {RECORD_COLUMNS}, first_run, content_run, changed_run, "
@@ -147,8 +156,6 @@ def _commit_new(connection: duckdb.DuckDBPyConnection, work: ChunkToCommit, part
     )
     insert_canonical_forms(connection, "read_parquet(?) i", [part])
     connection.execute("INSERT INTO seen SELECT ?, file, record_id FROM read_parquet(?)", [work.source, part])
-    return {"new": one_number(connection, "SELECT count(*) FROM read_parquet(?)", [part]), "amended": 0, "replaced": 0,
-            "unchanged": 0}  # fmt: skip
 
 
 def _set_known_aside(connection: duckdb.DuckDBPyConnection, run: int, written: str) -> None:

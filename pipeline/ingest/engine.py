@@ -16,6 +16,12 @@ FEW = 4
 """So many chunks of ordinary size take less time than a worker needs to start."""
 
 
+def share(left: int, few: int, most: int) -> int:
+    """How many of the records that are left the next job gets: fewer towards the end, so that all workers end at about
+    the same time, but not below `few`, where a job costs more than what it does."""
+    return min(most, max(few, left // 6))
+
+
 class Engine(Protocol):
     """The processes of this machine (pool.py), or workers elsewhere."""
 

@@ -72,7 +72,7 @@ def read_source(workspace: Workspace, work: IngestWork, source: SourceToRead, po
 
     waiting: dict[int, ChunkToCommit] = {}
     # Asked before the first chunk is in: later every source has records, and each chunk would run through all of them.
-    compare = not source.force and one_row(connection, _KNOWN, [source.source]) is not None
+    known = one_row(connection, _KNOWN, [source.source]) is not None
 
     def jobs() -> Iterator[ReduceJob]:
         for chunk in raw_chunks(source, work.settings):
@@ -80,11 +80,12 @@ def read_source(workspace: Workspace, work: IngestWork, source: SourceToRead, po
             if is_committed(connection, work.run.run_id, source.source, chunk):
                 progress.advance(len(chunk.records))
                 continue
-            yield _job(workspace, work, source, chunk, compare, waiting)
+            yield _job(workspace, work, source, chunk, known, waiting)
 
     for job, _ in done_in_order(pool, reduce_chunk, jobs(), workspace.manifest):
         todo = waiting.pop(job.number)
-        commit_chunk(connection, todo, workspace.manifest.checked(job.part))
+        part = workspace.manifest.checked(job.part)
+        commit_chunk(connection, todo, part, workspace.manifest.rows(job.part))
         job.raw.unlink()
         workspace.manifest.drop(job.part)
         progress.advance(len(todo.chunk.records))
@@ -96,12 +97,12 @@ def _job(
     work: IngestWork,
     source: SourceToRead,
     chunk: RawChunk,
-    compare: bool,
+    known: bool,
     waiting: dict[int, ChunkToCommit],
 ) -> ReduceJob:
     """Leave out what the store holds just so, write the rest for a worker, and remember what to commit."""
     unchanged = chunk.records.clear().select("record_id", "file", "position")
-    if compare:
+    if known and not source.force:
         unchanged = _unchanged(workspace.connection, chunk)
     todo = chunk.records.join(unchanged, on="record_id", how="anti", maintain_order="left")
     name = part_name(chunk.digest, unchanged["record_id"].to_list(), work.settings, source.settings)
@@ -110,7 +111,7 @@ def _job(
     light = RawChunk(
         chunk.number, chunk.records.select("record_id"), chunk.begins, chunk.found, chunk.digest
     )  # the texts are on disk now: do not hold them while the chunk is in flight
-    waiting[chunk.number] = ChunkToCommit(work.run.run_id, source.source, light, unchanged, source.force)
+    waiting[chunk.number] = ChunkToCommit(work.run.run_id, source.source, light, unchanged, source.force, not known)
     return ReduceJob(chunk.number, raw, raw.with_name(name), work.settings, source.settings)
 
 

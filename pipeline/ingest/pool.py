@@ -67,7 +67,7 @@ class WorkerPool:
             self._executor = None
 
     def ordered_results(self, work: Callable[[J], R], jobs: Iterable[J], few: int = FEW) -> Iterator[tuple[J, R]]:
-        """(job, work(job)) in the order of the jobs; at most 2 x workers jobs are in flight.
+        """(job, work(job)) in the order of the jobs; at most 4 x workers jobs are in flight.
 
         `work` and the jobs must be picklable and small: paths and ids, no arrays. Up to `few` jobs are done in this
         process where there are no workers yet: making them would take longer. Raises WorkError when a worker dies; an
@@ -85,7 +85,8 @@ class WorkerPool:
                 with _deaf_to_interruption():
                     future = self._processes().submit(work, job)
                 flying.append((job, future))
-                if len(flying) >= 2 * self._workers:
+                # What is done is handed out before more is asked for, else it would pile up until the end.
+                while flying and (flying[0][1].done() or len(flying) >= 4 * self._workers):
                     first, future = flying.popleft()
                     yield first, future.result()
             while flying:

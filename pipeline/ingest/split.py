@@ -28,6 +28,9 @@ RAW_SCHEMA = {
     "message": pl.String,
 }
 
+FEW_RECORDS = 400
+"""No chunk is made smaller than this for the sake of the workers."""
+
 CHUNK_BYTES = 32_000_000
 """A chunk ends at this much text, however few its records."""
 
@@ -69,12 +72,17 @@ def raw_chunks(source: SourceToRead, settings: Settings) -> Iterator[RawChunk]:
             rows.append(row)
             found[file.file] += 1
             size += len(str(row[5] or "")) + len(str(row[6]))
-            if len(rows) >= settings.chunk_records or size >= CHUNK_BYTES:
+            if len(rows) >= _most_records(number, settings) or size >= CHUNK_BYTES:
                 yield _chunk(number, rows, begins, found)
                 number, rows, size, begins, found = number + 1, [], 0, [], {file.file: 0}
         _still_the_same(file)
     if begins or rows:
         yield _chunk(number, rows, begins, found)
+
+
+def _most_records(number: int, settings: Settings) -> int:
+    """Records of a chunk: the first chunks are smaller, so that workers can begin."""
+    return max(min(FEW_RECORDS, settings.chunk_records), settings.chunk_records >> max(0, 2 - number))
 
 
 def _file_rows(source: SourceToRead, file: FileToRead, options: SplitOptions) -> Iterator[tuple[object, ...]]:

@@ -39,6 +39,10 @@ class Manifest:
         """The entry of a part, None where it is not listed."""
         return self._entries.get(str(part))
 
+    def rows(self, part: Part) -> dict[str, int]:
+        """Rows of each file of a listed part, by its name."""
+        return {file.name: file.rows for file in self._entries[str(part)].files}
+
     def add(self, part: Part, done: Done) -> None:
         """List a part as done."""
         self._entries[str(part)] = done

@@ -91,8 +91,12 @@ class Part:
         system, root = _open_place(self.place)
         return bytes(system.cat_file(f"{root}/{self.name}"))
 
-    def put(self, data: bytes | memoryview) -> None:
-        """Write all bytes, or nothing that anybody sees under this name."""
+    def put(self, data: bytes | memoryview, durable: bool = True) -> None:
+        """Write all bytes, or nothing that anybody sees under this name.
+
+        durable: also where the power fails. What is written anew in any case when a run is taken up need not wait for
+        the disk.
+        """
         # Two machines, or a worker that was thought dead and its successor, may write one part at the same time.
         temporary = f"{self.name}.{uuid.uuid4().hex[:12]}.new"
         if not self.is_remote:
@@ -100,8 +104,9 @@ class Part:
             try:
                 with begun.open("wb") as f:
                     f.write(data)
-                    f.flush()
-                    os.fsync(f.fileno())
+                    if durable:
+                        f.flush()
+                        os.fsync(f.fileno())
                 begun.replace(self.path)
             except BaseException:
                 begun.unlink(missing_ok=True)
@@ -115,16 +120,16 @@ class Part:
         system.mv(f"{root}/{temporary}", f"{root}/{self.name}")
 
     def write(self, table: pa.Table) -> PartFile:
-        """Write a table as Parquet."""
+        """Write a table as Parquet; a part is read once and as a whole, which neither dictionaries nor bounds help."""
         sink = pa.BufferOutputStream()
-        pq.write_table(table, sink, compression="lz4")
+        pq.write_table(table, sink, compression="lz4", use_dictionary=False, write_statistics=False)
         data = memoryview(sink.getvalue())
         self.put(data)
         return PartFile(self.name, table.num_rows, len(data), hashlib.sha256(data).hexdigest())
 
     def write_frame(self, frame: pl.DataFrame) -> None:
-        """Write a frame as Parquet."""
-        self.put(_parquet(frame))
+        """Write rows down for a worker, as Parquet; who gives out the job again writes them again."""
+        self.put(_parquet(frame), durable=False)
 
     def frame(self) -> pl.DataFrame:
         """Read it. Raises FileNotFoundError."""
@@ -140,13 +145,13 @@ def raw_and_part(place: str, kind: str, frame: pl.DataFrame, *decisive: object) 
     named = hashlib.sha256(f"{__version__}\0{kind}\0{hashlib.sha256(data).hexdigest()}\0{decisive!r}".encode())
     part = Part(place, f"{kind}-{named.hexdigest()[:32]}")
     raw = part.with_name(part.name + ".raw.parquet")
-    raw.put(data)
+    raw.put(data, durable=False)
     return raw, part
 
 
 def _parquet(frame: pl.DataFrame) -> memoryview:
     sink = io.BytesIO()
-    frame.write_parquet(sink, compression="lz4")
+    frame.write_parquet(sink, compression="lz4", statistics=False)
     return sink.getbuffer()
 
 

@@ -7,6 +7,7 @@ import os
 import shutil
 import subprocess
 import sys
+from contextlib import nullcontext
 from dataclasses import dataclass
 from functools import cache
 from pathlib import Path
@@ -62,16 +63,20 @@ class Night:
 
 def run_night(
     path: Path, store: Path, workers: int, ready_workers: bool = False, environment: dict[str, str] | None = None,
-    **settings: Any,
+    watch_memory: bool = True, **settings: Any,
 ) -> Night:  # fmt: skip
-    """`run PATH` into a store, new or not. Raises AssertionError where the run fails."""
+    """`run PATH` into a store, new or not. Raises AssertionError where the run fails.
+
+    watch_memory: sample it meanwhile, which takes a few hundredths of a core and halts each process for a moment.
+    """
     given = {"workers": workers, **settings}
     asked = {"path": str(path), "store": str(store), "settings": given, "ready_workers": ready_workers}
     command = [sys.executable, "-m", "tests.bench.night_child", json.dumps(asked)]
     process = subprocess.Popen(
         command, cwd=ROOT, env={**os.environ, **(environment or {})}, stdout=subprocess.PIPE, text=True
     )
-    with MemoryOfTree(process.pid) as memory:
+    memory = MemoryOfTree(process.pid)
+    with memory if watch_memory else nullcontext():
         told, _ = process.communicate()
     assert process.returncode == 0, f"the night on {path.name} ended with exit code {process.returncode}"
     found = json.loads(told)

@@ -12,8 +12,13 @@ from typing import Any
 
 
 def ready(number: int) -> int:
-    """Let a worker load the kernels, and hold it long enough for the others to get their turn."""
+    """Let a worker load the kernels and the libraries, and hold it long enough for the others to get their turn."""
+    import gemmi  # noqa: F401
+
+    from lattice_census.grouping import work  # noqa: F401
+    from lattice_census.ingest import classify, reduce  # noqa: F401
     from lattice_census.kernels import warm_up
+    from lattice_census.readers import cif, table_csv  # noqa: F401
 
     warm_up()
     time.sleep(0.2)

@@ -29,7 +29,7 @@ def run(options: Options) -> Report:
     for _ in range(options.times(3)):
         for workers, done in nights.items():
             store = fresh(options.scratch / f"workers-{workers}.duckdb")
-            done.append(run_night(path, store, workers, ready_workers=True, chunk_records=chunk))
+            done.append(run_night(path, store, workers, ready_workers=True, watch_memory=False, chunk_records=chunk))
     compare(nights[1][-1].store, nights[2][-1].store)
     one, two = (Seconds(tuple(n.work_s for n in nights[w])) for w in (1, 2))
     gain = [a / b for a, b in zip(one.taken, two.taken, strict=True)]
