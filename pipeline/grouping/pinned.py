@@ -38,14 +38,15 @@ def part_pinned(connection: duckdb.DuckDBPyConnection, grade: str) -> None:
         apart = {(a, b) for of, a, b in rows if of == family}
         kept = _stars([record for record, _ in sorted(listed, key=lambda row: row[1])], apart)
         families = _families(ids, apart)
-        connection.executemany(
-            "UPDATE now_members SET group_id = ?, family_id = ?, kept = ? WHERE grade = ? AND record_id = ?",
-            [
-                (kept[record], families[record], kept[record] == record, grade, record)
-                for record in ids
-                if families[record] != family or kept[record] != best
-            ],
-        )
+        other = [
+            (kept[record], families[record], kept[record] == record, grade, record)
+            for record in ids
+            if families[record] != family or kept[record] != best
+        ]
+        if other:
+            connection.executemany(
+                "UPDATE now_members SET group_id = ?, family_id = ?, kept = ? WHERE grade = ? AND record_id = ?", other
+            )
 
 
 def _stars(order: list[str], apart: set[tuple[str, str]]) -> dict[str, str]:
