@@ -35,10 +35,12 @@ _RECORDS = (
 )
 
 
-def rank_records(connection: duckdb.DuckDBPyConnection, settings: Settings, within: str | None = None) -> None:
+def rank_records(
+    connection: duckdb.DuckDBPyConnection, settings: Settings, within: str | None = None, by: str = "composition"
+) -> None:
     """Make the temporary table `ranks` (record_id, rank from 1) of all current records.
 
-    within: a table of compositions; only their records are ranked, in the same order.
+    within: a table of compositions, or of record ids, as `by` says; only their records are ranked, in the same order.
 
     Records pinned to be kept come first; then the rules are applied in their order; the record id comes last, so that
     no two records have one rank. When a record arrived has no part in it: the same records have the same ranks however
@@ -48,7 +50,7 @@ def rank_records(connection: duckdb.DuckDBPyConnection, settings: Settings, with
     connection.execute(
         "CREATE OR REPLACE TEMP TABLE ranks AS "
         f"SELECT r.record_id, row_number() OVER (ORDER BY {', '.join([*terms, 'r.record_id'])}) AS rank {_RECORDS}"
-        + (f" WHERE r.composition IN (SELECT composition FROM {within})" if within else ""),
+        + (f" WHERE r.{by} IN (SELECT {by} FROM {within})" if within else ""),
         _bound(settings, terms),
     )
 

@@ -4,7 +4,7 @@ from __future__ import annotations
 
 import duckdb
 
-from ..ingest.touched import COMPARED, EXACT, find_touched, note_grouped, settings_changed
+from ..ingest.touched import COMPARED, EXACT, find_touched, find_touched_keys, note_grouped, settings_changed
 from ..settings import Settings
 from ..store.rows import one_number
 from ..store.transaction import transaction
@@ -17,9 +17,9 @@ TOUCHED = "SELECT count(*) FROM touched"
 
 def update_exact_groups(connection: duckdb.DuckDBPyConnection, run_id: int, settings: Settings) -> None:
     """Make the groups of equal content and key anew where records changed; inside the caller's transaction."""
-    find_touched(connection, settings, EXACT)
-    if one_number(connection, TOUCHED):
-        rank_records(connection, settings, "touched")
+    find_touched_keys(connection, settings, EXACT)
+    if one_number(connection, "SELECT count(*) FROM touched_keys"):
+        rank_records(connection, settings, "touched_keys", "record_id")
         group_exact(connection, run_id)
         note_grouped(connection, run_id, EXACT)
 

@@ -24,19 +24,14 @@ from .engine import Engine, done_in_order, share
 from .progress import Progress
 from .recompute import stored_batch
 from .reduce import ReduceJob, accepted_part, fixed, ragged, stored_job, token_lists
-from .touched import find_touched
+from .touched import find_touched_keys
 
 # The record with the smallest id of each key, where the types of that key are missing or came from another record: so
 # the types are a function of the records that are there, whatever order they came in.
 TO_CLASSIFY = (
-    "SELECT f.crystal_key, f.record_id FROM (SELECT crystal_key, min(record_id) AS record_id FROM canonical_forms "
-    "WHERE record_id IN (SELECT record_id FROM records WHERE composition IN (SELECT composition FROM touched)) "
-    "GROUP BY crystal_key) f LEFT JOIN crystal_types t USING (crystal_key) "
+    "SELECT f.crystal_key, f.record_id FROM (SELECT crystal_key, min(record_id) AS record_id FROM touched_keys "
+    "GROUP BY crystal_key HAVING min(record_id) IS NOT NULL) f LEFT JOIN crystal_types t USING (crystal_key) "
     "WHERE t.typed_record_id IS DISTINCT FROM f.record_id"
-)
-_LEFT = (
-    "SELECT crystal_key FROM record_versions WHERE composition IN (SELECT composition FROM touched) "
-    "AND crystal_key NOT IN (SELECT crystal_key FROM canonical_forms)"
 )
 
 
@@ -49,8 +44,10 @@ def classify_keys(
     have chunks.
     """
     connection = workspace.connection
-    find_touched(connection, settings)
-    connection.execute(f"DELETE FROM crystal_types WHERE crystal_key IN ({_LEFT})")
+    find_touched_keys(connection, settings)
+    connection.execute(
+        "DELETE FROM crystal_types WHERE crystal_key IN (SELECT crystal_key FROM touched_keys WHERE record_id IS NULL)"
+    )
     connection.execute(f"CREATE OR REPLACE TEMP TABLE to_classify AS {TO_CLASSIFY} ORDER BY f.crystal_key")
     total = one_number(connection, "SELECT count(*) FROM to_classify")
     if not total:
