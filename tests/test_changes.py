@@ -180,6 +180,18 @@ def test_a_changed_setting_is_never_mixed_with_old_rows(tmp_path: Path, ingest):
     assert query(store, "SELECT count(*) FROM crystals WHERE lattice_type IS NULL") == [(0,)]
 
 
+def test_another_fingerprint_types_every_key_anew(tmp_path: Path, ingest):
+    """Also of a source that is not read again, and of other compositions than its own."""
+    store = tmp_path / "census.duckdb"
+    path = write_csv(tmp_path / "t.csv", rows_of(crystals(4)))
+    ingest(path)
+    path.unlink()
+    ingest(write_csv(tmp_path / "o.csv", rows_of(crystals(2, sites=3))), recompute=True, fingerprint_k=32)
+    assert query(store, "SELECT count(DISTINCT composition) FROM records") == [(2,)]
+    lengths = "SELECT count(*), min(len(mean_distances_angstrom)), max(len(mean_distances_angstrom)) FROM crystal_types"
+    assert query(store, lengths) == [(6, 64, 64)]
+
+
 def test_a_table_read_in_several_chunks_is_the_same_store(tmp_path: Path, ingest):
     path = write_csv(tmp_path / "t.csv", rows_of(crystals(23)))
     ingest(path, store=tmp_path / "one.duckdb")
