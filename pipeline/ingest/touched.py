@@ -15,7 +15,7 @@ from ..store.rows import one_row
 from ..store.stages import changed_stages
 
 STAGES = ("canonical", "fingerprint", "verify", "keep")
-"""Stages whose settings decide keys, their types, ranks and groups: where one changed, all keys and compositions did."""
+"""Stages whose settings decide keys, types, ranks and groups: where one changed, all keys and compositions did."""
 
 _RECORDS = """
     SELECT record_id FROM records WHERE changed_run > $since
