@@ -4,6 +4,7 @@ from __future__ import annotations
 
 import duckdb
 
+from ..ingest.withdraw import NOT_CURRENT
 from ..settings import Settings
 
 _NAME = "r.source || ':' || r.label"
@@ -55,7 +56,7 @@ _UNDONE = (
     "SELECT DISTINCT d.grade, NULL, d.record_id, 'undone', "
     "format('taken back in run {}; `keep --again` lets it be decided again', max(d.undone_by_run)) FROM decisions d "
     "WHERE d.ending = 'undone' AND d.released_by_run IS NULL "
-    "AND d.record_id IN (SELECT record_id FROM current_records) GROUP BY d.grade, d.record_id"
+    f"AND d.record_id NOT IN (SELECT record_id FROM {NOT_CURRENT}) GROUP BY d.grade, d.record_id"
 )
 
 

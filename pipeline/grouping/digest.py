@@ -6,13 +6,16 @@ import json
 
 import duckdb
 
+from ..ingest.withdraw import NOT_CURRENT
 from ..settings import Settings
 
 PAIR_PINS = (
     "(SELECT p.kind, p.pin_id, least(p.record_id, p.other_record_id) AS record_a, "
     "greatest(p.record_id, p.other_record_id) AS record_b, a.composition FROM pins_in_force p "
-    "JOIN current_records a ON a.record_id = p.record_id JOIN current_records b ON b.record_id = p.other_record_id "
+    "JOIN records a ON a.record_id = p.record_id JOIN records b ON b.record_id = p.other_record_id "
     "WHERE p.kind IN ('apart', 'together') AND a.composition = b.composition "
+    f"AND p.record_id NOT IN (SELECT record_id FROM {NOT_CURRENT}) "
+    f"AND p.other_record_id NOT IN (SELECT record_id FROM {NOT_CURRENT}) "
     "AND NOT EXISTS (SELECT 1 FROM pins_in_force q WHERE q.kind IN ('apart', 'together') AND q.kind <> p.kind "
     "AND least(q.record_id, q.other_record_id) = least(p.record_id, p.other_record_id) "
     "AND greatest(q.record_id, q.other_record_id) = greatest(p.record_id, p.other_record_id)))"

@@ -8,23 +8,32 @@ from __future__ import annotations
 
 import duckdb
 
+from ..ingest.withdraw import NOT_CURRENT
 from ..store.rows import one_number
 from .outdated import GRADES
 from .replaced import COLUMNS
 
-_NOT_CURRENT = "record_id NOT IN (SELECT record_id FROM current_records)"
-_LEFT_EMPTY = (
-    "(SELECT composition FROM touched EXCEPT SELECT composition FROM current_records "
-    "WHERE composition IN (SELECT composition FROM touched))"
-)
+_OUTDATED = f"FROM outdated_members WHERE record_id IN (SELECT record_id FROM {NOT_CURRENT})"
+_LEFT_EMPTY = "(SELECT composition FROM left_empty)"
 
 
 def any_gone(connection: duckdb.DuckDBPyConnection) -> bool:
     """Whether something grouped is left of records that take no part in results any more. Read-only."""
-    return bool(
-        one_number(connection, f"SELECT count(*) FROM outdated_members WHERE {_NOT_CURRENT}")
-        or one_number(connection, f"SELECT count(*) FROM grouped_compositions WHERE composition IN {_LEFT_EMPTY}")
+    return bool(one_number(connection, f"SELECT count(*) {_OUTDATED}") or _any_left_empty(connection))
+
+
+def _any_left_empty(connection: duckdb.DuckDBPyConnection) -> bool:
+    """Whether a grouped composition in temp.touched has no current record; such are in the temporary table `left_empty`
+    (composition), found among those that a record left."""
+    connection.execute(
+        "CREATE OR REPLACE TEMP TABLE left_empty AS WITH left_ones AS MATERIALIZED (SELECT composition FROM touched "
+        f"WHERE composition IN (SELECT composition FROM {NOT_CURRENT} "
+        "UNION SELECT composition FROM record_versions WHERE change = 'replaced')) "
+        "SELECT composition FROM left_ones EXCEPT SELECT composition FROM current_records "
+        "WHERE composition IN (SELECT composition FROM left_ones)"
     )
+    empty = one_number(connection, f"SELECT count(*) FROM grouped_compositions WHERE composition IN {_LEFT_EMPTY}")
+    return empty > 0
 
 
 def find_former(connection: duckdb.DuckDBPyConnection) -> None:
@@ -45,9 +54,8 @@ def find_former(connection: duckdb.DuckDBPyConnection) -> None:
 def forget_gone(connection: duckdb.DuckDBPyConnection, run_id: int) -> None:
     """Note and forget what was grouped of records that take no part in results any more; inside a transaction."""
     gone = (
-        f"(SELECT record_id FROM records WHERE composition IN (SELECT composition FROM touched) EXCEPT "
-        "SELECT record_id FROM current_records WHERE composition IN (SELECT composition FROM touched)) "
-        f"UNION SELECT record_id FROM outdated_members WHERE {_NOT_CURRENT}"
+        f"SELECT record_id FROM {NOT_CURRENT} WHERE composition IN (SELECT composition FROM touched) "
+        f"UNION SELECT record_id {_OUTDATED}"
     )
     connection.execute(f"CREATE OR REPLACE TEMP TABLE gone AS {gone}")
     if one_number(connection, "SELECT count(*) FROM gone"):
@@ -62,7 +70,7 @@ def forget_gone(connection: duckdb.DuckDBPyConnection, run_id: int) -> None:
         connection.execute(f"DELETE FROM members {where} AND grade IN {GRADES}")
         for table in ("outdated_members", "more_matches"):
             connection.execute(f"DELETE FROM {table} {where}")
-    if one_number(connection, f"SELECT count(*) FROM grouped_compositions WHERE composition IN {_LEFT_EMPTY}"):
+    if _any_left_empty(connection):
         for table in ("matches", "refused_pins", "grouped_compositions"):
             connection.execute(f"DELETE FROM {table} WHERE composition IN {_LEFT_EMPTY}")
 

@@ -11,6 +11,15 @@ from ..errors import UsageError
 from ..store.find import find_record
 from ..store.rows import one_number, one_row
 
+NOT_CURRENT = (
+    "(SELECT record_id, composition FROM records WHERE missing_since_run IS NOT NULL "
+    "UNION SELECT r.record_id, r.composition FROM records r JOIN withdrawals w USING (record_id) "
+    "WHERE w.undone_by_run IS NULL "
+    "UNION SELECT r.record_id, r.composition FROM records r JOIN withdrawals w USING (source) "
+    "WHERE w.undone_by_run IS NULL)"
+)
+"""Query of the records that `current_records` leaves out: few, so that it is cheaper than all those that it holds."""
+
 
 def withdraw(connection: duckdb.DuckDBPyConnection, run_id: int, what: str, reason: str) -> dict[str, Any]:
     """Note the withdrawal of a source (by name) or a record (by id or source:label); inside the caller's transaction.
