@@ -58,6 +58,9 @@ def test_every_record_that_repeats_another_has_one_decision(store: Path):
     aside = query(store, "SELECT record_id, group_id FROM members WHERE grade = 'near' AND NOT kept ORDER BY ALL")
     assert len(aside) == 8
     assert query(store, "SELECT record_id, kept_record_id FROM decisions_in_force ORDER BY ALL") == aside
+    told = "SELECT record_id, kept_record_id, reason, witness_shift_angstrom, witness_strain FROM"
+    repeats = query(store, f"{told} repeats WHERE grade = 'near' ORDER BY ALL")
+    assert query(store, f"{told} decisions ORDER BY ALL") == repeats and len({row[2] for row in repeats}) > 1
     assert query(store, "SELECT DISTINCT grade, made_by IS NOT NULL, ending FROM decisions") == [("near", True, None)]
     counts = json.loads(query(store, "SELECT counts FROM runs WHERE command = 'keep'")[0][0])
     assert counts["set_aside"] == counts["in_force"] == 8

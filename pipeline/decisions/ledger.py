@@ -15,7 +15,7 @@ import duckdb
 
 from ..errors import UsageError
 from ..grouping.rank import deciding_rules
-from ..ingest.withdraw import user_name
+from ..ingest.withdraw import NOT_CURRENT, user_name
 from ..settings import Settings
 from ..store.find import find_record
 from ..store.rows import one_number, one_row
@@ -74,6 +74,22 @@ def require_grade(connection: duckdb.DuckDBPyConnection, grade: str) -> None:
         )
 
 
+# The rows of the view `repeats` that are wanted. Asked for some, the view is made for all: no condition gets below its
+# choice of a reason.
+_NEW = (
+    "WITH new AS (SELECT * FROM keep_state WHERE free AND NOT kept AND kept_record_id IS DISTINCT FROM group_id), "
+    "told AS (SELECT f.record_id, f.crystal_key, f.supercell_index, r.content_hash, s.cell_angstrom "
+    "FROM canonical_forms f JOIN records r USING (record_id) JOIN structures s USING (record_id) "
+    "WHERE f.record_id IN (SELECT record_id FROM new UNION SELECT group_id FROM new)) "
+    "SELECT $grade AS grade, n.record_id, n.group_id AS kept_record_id, n.witness_shift_angstrom, n.witness_strain, "
+    "CASE WHEN x.crystal_key = y.crystal_key THEN equal_key_reason(x.content_hash, y.content_hash, x.supercell_index, "
+    "y.supercell_index, x.cell_angstrom, y.cell_angstrom) ELSE w.reason END AS reason "
+    "FROM new n JOIN told x ON x.record_id = n.record_id JOIN told y ON y.record_id = n.group_id LEFT JOIN matches w "
+    "ON least(w.crystal_key_a, w.crystal_key_b) = least(x.crystal_key, y.crystal_key) "
+    "AND greatest(w.crystal_key_a, w.crystal_key_b) = greatest(x.crystal_key, y.crystal_key)"
+)
+
+
 def plan_keep(
     connection: duckdb.DuckDBPyConnection, settings: Settings, grade: str, again: Sequence[str] = ()
 ) -> KeepPlan:
@@ -90,16 +106,12 @@ def plan_keep(
     )
     connection.execute(
         "CREATE OR REPLACE TEMP TABLE keep_state AS SELECT m.record_id, m.group_id, m.kept, d.decision_id, "
-        f"d.kept_record_id, {free} AS free FROM members m "
+        f"d.kept_record_id, m.witness_shift_angstrom, m.witness_strain, {free} AS free FROM members m "
         "LEFT JOIN (SELECT * FROM decisions_in_force WHERE grade = $grade) d USING (record_id) "
         "WHERE m.grade = $grade AND (NOT m.kept OR d.record_id IS NOT NULL)",
         {"grade": grade, "again": list(again)},
     )
-    connection.execute(
-        "CREATE OR REPLACE TEMP TABLE keep_new AS SELECT w.* FROM repeats w WHERE w.grade = $grade AND w.record_id IN "
-        "(SELECT record_id FROM keep_state WHERE free AND NOT kept AND kept_record_id IS DISTINCT FROM group_id)",
-        {"grade": grade},
-    )
+    connection.execute(f"CREATE OR REPLACE TEMP TABLE keep_new AS {_NEW}", {"grade": grade})
     connection.execute(
         "CREATE OR REPLACE TEMP TABLE keep_ended AS SELECT decision_id, record_id, kept_record_id, "
         "CASE WHEN kept THEN 'lapsed' ELSE 'superseded' END AS ending "
@@ -199,15 +211,19 @@ def lapse(connection: duckdb.DuckDBPyConnection, run_id: int) -> int:
 
     Inside the caller's transaction; returns how many.
     """
+    either = " UNION ".join(
+        f"SELECT d.decision_id FROM decisions_in_force d JOIN gone g ON g.record_id = d.{record} "
+        f"UNION SELECT d.decision_id FROM decisions_in_force d JOIN newer n ON n.record_id = d.{record} "
+        "WHERE n.content_run > d.run_id"
+        for record in ("record_id", "kept_record_id")
+    )
     connection.execute(
-        "CREATE OR REPLACE TEMP TABLE lapsing AS SELECT d.decision_id FROM decisions_in_force d "
-        "LEFT JOIN current_records r ON r.record_id = d.record_id "
-        "LEFT JOIN current_records k ON k.record_id = d.kept_record_id "
-        "WHERE r.record_id IS NULL OR k.record_id IS NULL "
-        "OR r.content_run > d.run_id OR k.content_run > d.run_id "
-        "OR EXISTS (SELECT 1 FROM pins_in_force p WHERE p.kind = 'apart' "
+        f"CREATE OR REPLACE TEMP TABLE lapsing AS WITH gone AS {NOT_CURRENT}, "
+        "newer AS (SELECT record_id, content_run FROM records "
+        "WHERE content_run > (SELECT min(run_id) FROM decisions_in_force)) "
+        f"{either} UNION SELECT d.decision_id FROM decisions_in_force d JOIN pins_in_force p ON p.kind = 'apart' "
         "AND p.record_id = least(d.record_id, d.kept_record_id) "
-        "AND p.other_record_id = greatest(d.record_id, d.kept_record_id))"
+        "AND p.other_record_id = greatest(d.record_id, d.kept_record_id)"
     )
     connection.execute(
         "UPDATE decisions SET undone_by_run = ?, ending = 'lapsed' "
