@@ -42,17 +42,25 @@ def find_due(connection: duckdb.DuckDBPyConnection, settings: Settings) -> None:
         find_all(connection, settings)
 
 
-_RANKED = (
-    "SELECT DISTINCT composition FROM records WHERE split IS NOT NULL OR record_id IN (SELECT family_id FROM members "
-    "WHERE grade IN ('same', 'near') AND kept GROUP BY grade, family_id HAVING count(*) > 1)"
+_CHAINS = (
+    "SELECT grade, family_id FROM members WHERE grade IN ('same', 'near') AND kept AND family_id IN "
+    "(SELECT family_id FROM members WHERE grade IN ('same', 'near') AND kept AND record_id <> family_id) "
+    "GROUP BY grade, family_id HAVING count(*) > 1"
 )
-"""Query of the compositions whose records findings ask for by rank: those with splits or with chains."""
+"""Query of the families of several groups. Of two kept records one is not that with the smallest id."""
+
+_RANKED = (
+    "SELECT record_id FROM records WHERE split IS NOT NULL "
+    "UNION SELECT record_id FROM members JOIN chains USING (grade, family_id)"
+)
+"""Query of the records that findings ask for by rank: those with splits or in chains."""
 
 
 def find_all(connection: duckdb.DuckDBPyConnection, settings: Settings) -> dict[str, int]:
     """Make `holds` and `findings` anew, inside the caller's transaction; the number of each code that was met."""
+    connection.execute(f"CREATE OR REPLACE TEMP TABLE chains AS {_CHAINS}")
     connection.execute(f"CREATE OR REPLACE TEMP TABLE to_rank AS {_RANKED}")
-    rank_records(connection, settings, "to_rank")
+    rank_records(connection, settings, "to_rank", "record_id")
     make_holds(connection, settings)
     connection.execute("DELETE FROM store_facts WHERE name = 'findings_due'")
     connection.execute("DELETE FROM findings")

@@ -1,12 +1,4 @@
 -- A family of several groups: nearness is not transitive, and its ends do not match each other directly.
-WITH chains AS (
-    SELECT grade, family_id
-    FROM members
-    WHERE grade IN ('same', 'near')
-      AND family_id IN (SELECT family_id FROM members WHERE record_id <> family_id)
-    GROUP BY grade, family_id
-    HAVING count(*) FILTER (kept) > 1
-)
 SELECT
     'chain' AS code,
     min_by(m.group_id, x.rank) AS record_id,
