@@ -141,27 +141,28 @@ def group_composition(
     by = searcher(select(batch, place), tolerances, chosen.search, chosen.mirror_images, chosen.neighbours)
     by = by if len(shown) == len(nodes) else shown_as(by, shown, len(nodes))
     part = None if parts is None else parts[rows]
-    old, gone = np.zeros(len(nodes), bool), np.zeros((0, 2), np.int64)
-    if earlier is not None:
-        old = earlier.old_nodes(nodes)
-    if part is None and len(shown) == len(nodes):
+    gone = np.zeros((0, 2), np.int64)
+    old, unsure = (np.zeros(len(nodes), bool),) * 2 if earlier is None else earlier.old_nodes(nodes)
+    everything = len(nodes) if earlier is None else max(len(nodes), earlier.nodes)
+    if part is None and len(shown) == everything:
         crowded, candidates, crowding = _candidates_plain(by, len(nodes), chosen.crowded)
         if len(nodes) <= chosen.crowded:
             crowding = None  # as where several compositions are looked at together
         if len(crowded):  # which pairs of crowds are verified depends on all of them
-            earlier, old = None, np.zeros(len(nodes), bool)
-        candidates = candidates[~old[candidates].all(axis=1)]
+            earlier, old, unsure = None, np.zeros(len(nodes), bool), np.zeros(len(nodes), bool)
+        candidates = candidates[~old[candidates].all(axis=1) | unsure[candidates].all(axis=1)]
     else:
         of = np.zeros(len(nodes), np.int64) if part is None else part
-        candidates, close = _candidates_of_parts(by, of, old)
+        candidates, close = _candidates_of_parts(by, of, old, unsure)
         crowded, crowding = np.zeros(0, np.int64), None
-        if part is None and len(nodes) > chosen.crowded:
-            crowding = _not_crowded(earlier, candidates, close, len(nodes), old, chosen.crowded)
+        if part is None and everything > chosen.crowded:
+            crowding = _not_crowded(earlier, candidates, close, everything, old, chosen.crowded)
     if earlier is None:
         store = PairStore(len(nodes), by.verify, nodes.together, nodes.apart)
     else:
         known, gone = earlier.matches(nodes)
-        store = PairStore(len(nodes), by.verify, nodes.together, nodes.apart, known, old)
+        store = PairStore(len(nodes), by.verify, nodes.together, nodes.apart, known, old, unsure)
+        candidates = candidates[~store.has(candidates[:, 0] * len(nodes) + candidates[:, 1])]
     is_crowded = np.zeros(len(nodes), bool)
     is_crowded[crowded] = True
     store.ensure(candidates[~is_crowded[candidates].all(axis=1)])
@@ -183,7 +184,9 @@ def group_composition(
         found = by.verify(np.zeros((0, 2), np.int64))
     wanted, more = selection(len(nodes), found, keep_pairs, chosen.matches_per_record)
     more[crowded] = True
-    is_new = ~old[found.pairs].all(axis=1)
+    is_new = np.ones(len(found), bool)
+    if earlier is not None:
+        is_new = ~np.isin(found.pairs @ [len(nodes), 1], known.pairs @ [len(nodes), 1])
     matches = found.take(wanted & is_new)
     counts = {
         "records": len(ids),
@@ -214,19 +217,25 @@ def group_composition(
     )
 
 
-def _candidates_of_parts(by: Searcher, part: Ints, old: NDArray[np.bool_]) -> tuple[Ints, int]:
-    """Every candidate pair of nodes of one part but those of two old ones, and the number of pairs that the coordinates
-    alone leave. Small parts need no search."""
-    part, old = part[by.owner], old[by.owner]
-    by_part = np.lexsort((old, part))  # of each part the new ones first
-    sizes = np.bincount(part)
+def _candidates_of_parts(
+    by: Searcher, part: Ints, old: NDArray[np.bool_], unsure: NDArray[np.bool_]
+) -> tuple[Ints, int]:
+    """Every candidate pair of nodes of one part but those of two old ones that are not both unsure, and the number of
+    pairs with a new one that the coordinates alone leave. Small parts need no search."""
+    part, old, unsure = part[by.owner], old[by.owner], unsure[by.owner]
+    kind = np.where(~old, 0, np.where(unsure, 1, 2))
+    by_part = np.lexsort((kind, part))  # of each part the new ones first, then the unsure ones
+    kind = kind[by_part]
+    sizes, unknown = np.bincount(part), np.bincount(part, ~old | unsure).astype(np.int64)
     place = np.arange(len(part)) - np.repeat(np.cumsum(sizes) - sizes, sizes)
-    others = np.where(old[by_part], 0, sizes[part[by_part]] - place - 1)  # those that follow in the part
+    partners = np.where(kind == 0, sizes[part[by_part]], np.where(kind == 1, unknown[part[by_part]], 0))
+    others = np.maximum(partners - place - 1, 0)  # those that follow in the part
     first = np.repeat(np.arange(len(part)), others)
     second = first + 1 + np.arange(len(first)) - np.repeat(np.cumsum(others) - others, others)
     pairs = np.sort(np.stack([by_part[first], by_part[second]], axis=1), axis=1)
     close = pairs[coordinates_agree(by.search.coordinates, pairs, by.search.slack)]
-    return by.owner[filtered(by.search.prepared, by.search.coordinates, close, by.search.slack)], len(close)
+    new = int((~old[close].all(axis=1)).sum())
+    return by.owner[filtered(by.search.prepared, by.search.coordinates, close, by.search.slack)], new
 
 
 def _not_crowded(
@@ -236,8 +245,9 @@ def _not_crowded(
     where they do not rule crowds out."""
     if earlier is None or earlier.crowding is None:
         raise MayBeCrowded
-    number = np.bincount(candidates.ravel(), minlength=nodes)
-    most = int(np.where(old, earlier.crowding[0] + number, number).max(initial=0))
+    new = candidates[~old[candidates].all(axis=1)]
+    number = np.bincount(new.ravel(), minlength=len(old))
+    most = max(earlier.crowding[0], int(np.where(old, earlier.crowding[0] + number, number).max(initial=0)))
     close += earlier.crowding[1]
     if most > crowded_at or 2 * close > DENSE * nodes:
         raise MayBeCrowded

@@ -1,7 +1,8 @@
 """What an earlier grouping of the same compositions found, so that only pairs with a new record are compared again.
 
-A grouping whose `matches` are complete (no record has more of them) tells of every pair of its keys whether it matches,
-and how: where records were only added since, a pair of keys that still stand by the same records is as it was.
+A grouping tells of every pair of its keys whether it matches, and how, but of pairs of two records that both have more
+matches than are stored: where records were only added since, a pair of keys that still stand by the same records is as
+it was.
 """
 
 from __future__ import annotations
@@ -45,12 +46,19 @@ class Earlier:
 
     proper_strain: Floats
 
+    more: NDArray[np.bool_]
+    """(n,): the record has matches that are not among these."""
+
+    nodes: int
+    """Keys of the composition, or of the largest of several: those of the n records and of others, which no match ties
+    to them and nothing added can match."""
+
     crowding: tuple[int, int] | None = None
     """Grouping.crowding of one composition then, where that was asked."""
 
     def matches(self, nodes: Nodes) -> tuple[Verified, Ints]:
-        """Its matches between nodes that stand by the same records as then, with only those columns filled that groups
-        are made from; and the others, as pairs of indices into the ids."""
+        """Its matches between nodes that stand by the same records as then, ascending by pair, with only those columns
+        filled that groups are made from; and the others, as pairs of indices into the ids."""
         given = np.empty(len(nodes.names), np.int64)
         given[nodes.order] = np.arange(len(nodes.names))
         ends = np.sort(given[self.pairs], axis=1)
@@ -78,6 +86,7 @@ class Earlier:
         )
         return matches, ends[~rows]
 
-    def old_nodes(self, nodes: Nodes) -> NDArray[np.bool_]:
-        """(nodes,): the node stood by the same record then."""
-        return np.asarray(self.old[nodes.order[nodes.stands]])
+    def old_nodes(self, nodes: Nodes) -> tuple[NDArray[np.bool_], NDArray[np.bool_]]:
+        """(nodes,): the node stood by the same record then; and not all matches with others of this kind are known."""
+        stands = nodes.order[nodes.stands]
+        return np.asarray(self.old[stands]), np.asarray(self.old[stands] & self.more[stands])

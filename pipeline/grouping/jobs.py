@@ -7,8 +7,9 @@ from collections.abc import Iterator
 from ..ingest.engine import share
 from ..settings import Settings
 from ..store.parts import raw_and_part
+from ..store.rows import one_number
 from ..store.workspace import Workspace
-from .additions import find_needed
+from .additions import find_concerned
 from .digest import PAIR_PINS
 from .work import GroupJob, PairPin
 
@@ -26,8 +27,8 @@ READ_RECORDS = 100_000
 FIRST_JOBS = 2
 """So many jobs are read first, so that workers can begin."""
 
-Pack = list[tuple[str, str]]
-"""Compositions of one job, with their digests."""
+Pack = list[tuple[str, str, int]]
+"""Compositions of one job, with their digests and numbers of records."""
 
 CRYSTAL = ("cell_angstrom", "species", "positions_fractional", "matrix")
 """Columns of a canonical form, for records whose crystal is asked for."""
@@ -43,28 +44,32 @@ def jobs(workspace: Workspace, settings: Settings, only: str = "changed_composit
     connection = workspace.connection
     number = 0
     for added in (False, True):
+        here = f"composition IN (SELECT composition FROM {only})"
+        if added and one_number(connection, f"SELECT count(*) FROM added_compositions WHERE {here}"):
+            find_concerned(connection, settings)
         rows = connection.execute(
-            "SELECT composition, digest, keys, records FROM changed_compositions WHERE NOT plain "
-            f"AND composition IN (SELECT composition FROM {only}) "
-            "AND (composition IN (SELECT composition FROM added_compositions)) = ? ORDER BY keys DESC, composition",
+            "SELECT c.composition, c.digest, least(c.keys, coalesce(t.records, c.keys)) AS keys, "
+            "coalesce(t.records, c.records), c.records FROM changed_compositions c LEFT JOIN (SELECT composition, "
+            "count(*) AS records FROM concerned_records GROUP BY composition) t USING (composition) "
+            f"WHERE NOT c.plain AND c.{here} AND (c.composition IN (SELECT composition FROM added_compositions)) = ? "
+            "ORDER BY keys DESC, c.composition",
             [added],
         ).fetchall()
-        if added and rows:
-            find_needed(connection, settings)
         for packs in _packs(rows):
             yield from _read_jobs(workspace, settings, number, packs)
             number += len(packs)
 
 
-def _packs(rows: list[tuple[str, str, int, int]]) -> Iterator[list[Pack]]:
-    """The compositions of each job, of as many jobs as are read at once."""
+def _packs(rows: list[tuple[str, str, int, int, int]]) -> Iterator[list[Pack]]:
+    """The compositions of each job, of as many jobs as are read at once. rows: composition, digest, keys and records
+    that take part, and all records."""
     left = sum(row[3] for row in rows)
     most = share(left, FEW_RECORDS, MOST_RECORDS)
     packs: list[Pack] = []
     pack: Pack = []
     pairs = held = waiting = given = 0
-    for composition, digest, keys, records in rows:
-        pack.append((composition, digest))
+    for composition, digest, keys, records, whole in rows:
+        pack.append((composition, digest, whole))
         pairs += keys * keys
         held += records
         if pairs >= MOST_PAIRS or held >= most:
@@ -86,7 +91,7 @@ def _read_jobs(workspace: Workspace, settings: Settings, number: int, packs: lis
     """The jobs of some packs, numbered from `number`: their rows are read at once, since each query goes through all
     records."""
     connection = workspace.connection
-    names, digests = zip(*(both for pack in packs for both in pack), strict=True)
+    names, digests, _ = zip(*(row for pack in packs for row in pack), strict=True)
     numbers = [number + i for i, pack in enumerate(packs) for _ in pack]
     connection.execute(
         "CREATE OR REPLACE TEMP TABLE packed AS SELECT unnest(?::INTEGER[]) AS job, unnest(?::VARCHAR[]) AS "
@@ -94,21 +99,24 @@ def _read_jobs(workspace: Workspace, settings: Settings, number: int, packs: lis
     )  # fmt: skip
     crystal = ", ".join(f"CASE WHEN there THEN {c} END AS {c}" for c in CRYSTAL)
     frame = connection.sql(
-        "SELECT job, composition, digest, record_id, label, source, crystal_key, rank, periodicity, old, "
-        "most_candidates, close_pairs, "
-        f"{crystal} FROM ("
-        "SELECT p.job, r.composition, p.digest, r.record_id, r.label, r.source, r.periodicity, k.rank, "
-        "f.* EXCLUDE (record_id), a.most_candidates, a.close_pairs, "
-        "o.record_id IS NOT NULL AS old, a.composition IS NULL OR n.record_id IS NOT NULL AS there "
-        "FROM packed p JOIN current_records r USING (composition) JOIN canonical_forms f USING (record_id) "
+        "SELECT job, composition, digest, records, keys, record_id, label, source, crystal_key, rank, periodicity, "
+        f"added, old, more, most_candidates, close_pairs, {crystal} FROM ("
+        "SELECT p.job, r.composition, p.digest, c.records, c.keys, r.record_id, r.label, r.source, r.periodicity, "
+        "k.rank, f.* EXCLUDE (record_id), a.most_candidates, a.close_pairs, "
+        "a.composition IS NOT NULL AS added, o.record_id IS NOT NULL AS old, m.record_id IS NOT NULL AS more, "
+        "a.composition IS NULL OR n.record_id IS NOT NULL AS there "
+        "FROM packed p JOIN changed_compositions c USING (composition) JOIN current_records r USING (composition) "
+        "JOIN canonical_forms f USING (record_id) "
         "JOIN ranks k USING (record_id) LEFT JOIN added_compositions a ON a.composition = p.composition "
-        "LEFT JOIN needed_records n ON n.record_id = r.record_id LEFT JOIN old_records o ON o.record_id = r.record_id) "
+        "LEFT JOIN needed_records n ON n.record_id = r.record_id LEFT JOIN old_records o ON o.record_id = r.record_id "
+        "LEFT JOIN more_matches m ON m.record_id = o.record_id "
+        "WHERE a.composition IS NULL OR r.record_id IN (SELECT record_id FROM concerned_records)) "
         "ORDER BY job, composition, record_id"
     ).pl()
     known = connection.sql(
         f"SELECT p.job, {', '.join(f'm.{c}' for c in KNOWN)} FROM (FROM outdated_matches UNION ALL FROM matches) m "
-        "JOIN packed p USING (composition) "
-        "WHERE m.composition IN (SELECT composition FROM added_compositions) ORDER BY p.job, m.record_a, m.record_b"
+        "JOIN packed p USING (composition) WHERE m.record_a IN (SELECT record_id FROM concerned_records) "
+        "ORDER BY p.job, m.record_a, m.record_b"
     ).pl()
     pins = connection.execute(
         f"SELECT job, composition, pin_id, kind, record_a, record_b FROM {PAIR_PINS} JOIN packed USING (composition) "
@@ -121,4 +129,5 @@ def _read_jobs(workspace: Workspace, settings: Settings, number: int, packs: lis
         told = known_of.get((job,))
         matches = None if told is None else raw_and_part(workspace.place, "known", told)[0]
         raw, part = raw_and_part(workspace.place, "group", rows, decisive, own, matches and matches.name)
-        yield GroupJob(job, raw, matches, part, settings, tuple(PairPin(*pin) for pin in own))
+        records = sum(row[2] for row in packs[job - number])
+        yield GroupJob(job, records, raw, matches, part, settings, tuple(PairPin(*pin) for pin in own))

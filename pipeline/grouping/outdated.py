@@ -28,12 +28,18 @@ PINNED = (
 )
 """Query of compositions in which pairs were ever pinned: their matches may stand by other records than the smallest."""
 
-COMPLETE = (
+LISTED = (
     "SELECT composition, run_id, records, most_candidates, close_pairs FROM grouped_compositions "
-    f"WHERE composition NOT IN ({PINNED}) AND composition NOT IN "
+    f"WHERE composition NOT IN ({PINNED})"
+)
+"""Query of the grouped compositions whose lists of matches tell of every pair, but of those of two records in
+`more_matches`."""
+
+COMPLETE = (
+    f"{LISTED} AND composition NOT IN "
     "(SELECT composition FROM records WHERE record_id IN (SELECT record_id FROM more_matches))"
 )
-"""Query of the grouped compositions whose lists of matches are complete, as `outdated_compositions` has them."""
+"""Query of those whose lists of matches are complete, as `outdated_compositions` has them."""
 
 
 def set_outdated_aside(connection: duckdb.DuckDBPyConnection, settings: Settings) -> int:

@@ -29,7 +29,7 @@ class Limit:
 class PairStore:
     """Verified pairs (first < second) of n nodes; `together` and `apart` force and forbid pairs whatever was measured.
 
-    known: the matches among the nodes `old` (n,), whose other pairs are known to be none.
+    known: matches among the nodes `old` (n,), whose other pairs are known to be none but where both are `unsure` (n,).
     """
 
     def __init__(
@@ -40,6 +40,7 @@ class PairStore:
         apart: Ints,
         known: Verified | None = None,
         old: NDArray[np.bool_] | None = None,
+        unsure: NDArray[np.bool_] | None = None,
     ) -> None:
         self.nodes = nodes
         self._verify = verify
@@ -49,6 +50,7 @@ class PairStore:
         self.apart = self._code(apart)
         self.computed = 0
         self._old = np.zeros(nodes, bool) if old is None else old
+        self._unsure = np.zeros(nodes, bool) if unsure is None else unsure
         if known is not None and len(known):
             self._append(known)
 
@@ -75,7 +77,9 @@ class PairStore:
     def has(self, codes: Ints) -> NDArray[np.bool_]:
         """Which pairs, as first * nodes + second, have been verified or are known."""
         done = np.fromiter((c in self._grades for c in codes.tolist()), bool, len(codes))
-        return np.asarray(done | (self._old[codes // self.nodes] & self._old[codes % self.nodes]))
+        first, second = codes // self.nodes, codes % self.nodes
+        known = self._old[first] & self._old[second] & ~(self._unsure[first] & self._unsure[second])
+        return np.asarray(done | known)
 
     def neighbours(self, pairs: Ints, limit: Limit, node: int) -> Ints:
         """The other end of those of the verified pairs (p, 2) of `node` that are neighbours at a grade."""

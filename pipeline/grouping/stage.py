@@ -132,14 +132,14 @@ def _work_through(
             manifest.drop(job.part)
         held.clear()
 
-    for job, done in done_in_order(pool, group_chunk, jobs(workspace, settings, only), manifest, few):
+    for job, _ in done_in_order(pool, group_chunk, jobs(workspace, settings, only), manifest, few):
         held.append(job)
         if meanwhile is not None:
             meanwhile()
             meanwhile = None
         if len(held) >= together:
             write()
-        progress.advance(done)
+        progress.advance(job.records)
         if settle:
             # What was read is worked into the file while workers compare: publishing waits for the rest alone.
             connection.execute("CHECKPOINT")
@@ -232,6 +232,8 @@ def _commit(connection: duckdb.DuckDBPyConnection, parts: Sequence[Part], run_id
         "INSERT INTO matches SELECT m.* FROM outdated_matches m ANTI JOIN dropped d USING (record_a, record_b) "
         "WHERE m.composition IN (SELECT composition FROM done WHERE added)"
     )
+    if one_number(connection, "SELECT count(*) FROM more_matches"):
+        connection.execute("DELETE FROM more_matches WHERE record_id IN (SELECT record_id FROM grouped)")
     connection.execute("INSERT INTO more_matches SELECT record_id FROM grouped WHERE more ORDER BY record_id")
     rows = " UNION ALL ".join(
         f"SELECT '{grade}' AS grade, {grade}_group AS group_id, {grade}_family AS family_id, record_id, label, source, "

@@ -44,9 +44,13 @@ class GroupJob:
     """One job: names and settings only."""
 
     number: int
+    records: int
+    """Of its compositions, whether or not they take part."""
+
     raw: Part
-    """Parquet of records: composition, digest, record_id, label, source, crystal_key, rank, whether it was grouped
-    before (old), and canonical form and matrix where they are asked for."""
+    """Parquet of the records that take part: composition, with its digest and number of records and keys, record_id,
+    label, source, crystal_key, rank, whether the composition was grouped before and only added to, whether the record
+    was grouped (old) and has more matches than are stored, and canonical form and matrix where they are asked for."""
 
     known: Part | None
     """Parquet of the matches that old records had, if any."""
@@ -85,7 +89,7 @@ def _bundles(frame: pl.DataFrame, pinned: set[str]) -> Iterator[pl.DataFrame]:
     """The rows of what is grouped in one call: a composition that is large or has pins by itself, all others with those
     of equally many species. Ascending by record id."""
     told = frame.with_columns(
-        pl.len().over("composition").gt(CROWDED).or_(pl.col("composition").is_in(list(pinned))).alias("alone"),
+        pl.col("records").gt(CROWDED).or_(pl.col("composition").is_in(list(pinned))).alias("alone"),
         pl.col("species").list.n_unique().max().over("composition").alias("kinds"),
     )
     alone = told.filter("alone").partition_by("composition", maintain_order=True)
@@ -100,8 +104,8 @@ def _grouped(rows: pl.DataFrame, known: pl.DataFrame, job: GroupJob) -> tuple[pl
     batch = stored_batch(crystals)
     ids = rows["record_id"].to_list()
     part = rows["composition"].rank("dense").to_numpy().astype(np.int64) - 1
-    told = pl.col("digest").first(), pl.len().alias("records"), pl.col("crystal_key").n_unique().alias("keys")
-    of_part = rows.group_by("composition").agg(*told, pl.col("old").any().alias("added")).sort("composition")
+    told = (pl.col(name).first() for name in ("digest", "records", "keys"))
+    of_part = rows.group_by("composition").agg(*told, pl.col("added").first()).sort("composition")
     pins = [pin for pin in job.pins if pin.composition in set(of_part["composition"])] if job.pins else []
     together, refused = verified_together(batch, ids, pins, job.settings)
     options = Options(
@@ -121,7 +125,7 @@ def _grouped(rows: pl.DataFrame, known: pl.DataFrame, job: GroupJob) -> tuple[pl
             job.settings.tolerances,
             options,
             part if len(of_part) > 1 else None,
-            _earlier(rows, known, there) if rows["old"].any() else None,
+            _earlier(rows, known, there) if rows["added"].any() else None,
         )
     except MayBeCrowded:
         return _NO_MATCHES, _NO_MEMBERS, _summary(of_part, None, refused), _NO_PAIRS
@@ -166,8 +170,10 @@ def _earlier(rows: pl.DataFrame, known: pl.DataFrame, there: NDArray[np.bool_]) 
     measures = ("largest_shift_angstrom", "strain", "proper_shift_angstrom", "proper_strain")
     shift, strain, proper_shift, proper_strain = (known[name].fill_null(np.nan).to_numpy() for name in measures)
     pairs = known.select("place_a", "place_b").to_numpy()
-    old = rows["old"].to_numpy()
-    return Earlier(old, there, pairs, grades.to_numpy(), shift, strain, proper_shift, proper_strain, _crowding(rows))
+    return Earlier(
+        rows["old"].to_numpy(), there, pairs, grades.to_numpy(), shift, strain, proper_shift, proper_strain,
+        rows["more"].to_numpy(), int(rows["keys"].to_numpy().max()), _crowding(rows),
+    )  # fmt: skip
 
 
 def _crowding(rows: pl.DataFrame) -> tuple[int, int] | None:
