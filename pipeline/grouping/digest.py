@@ -27,21 +27,21 @@ def digest_compositions(
     connection: duckdb.DuckDBPyConnection, settings: Settings, within: str, everything: bool = False
 ) -> None:
     """The temporary table `changed_compositions` (composition, digest, records, keys, plain) of the compositions in
-    the table `within`, whose records are ranked, that have another digest than they were grouped with. Plain ones have
-    one key and no pins, and need no comparison."""
+    the table `within` that have another digest than they were grouped with; temp.ranks holds their current records and
+    no other record of theirs. Plain ones have one key and no pins, and need no comparison."""
     verify = json.dumps(settings.of_stage("verify") | settings.of_stage("canonical"), sort_keys=True)
     connection.execute(
         "CREATE OR REPLACE TEMP TABLE changed_compositions AS SELECT n.* FROM ("
-        "SELECT r.composition, count(*) AS records, count(DISTINCT f.crystal_key) AS keys, "
-        "count(DISTINCT f.crystal_key) = 1 AND any_value(p.pins) IS NULL AS plain, "
-        "sha256($settings || string_agg(r.record_id || f.crystal_key || x.place, '' ORDER BY r.record_id) "
+        "SELECT r.composition, count(*) AS records, count(DISTINCT r.crystal_key) AS keys, "
+        "count(DISTINCT r.crystal_key) = 1 AND any_value(p.pins) IS NULL AS plain, "
+        "sha256($settings || string_agg(r.record_id || r.crystal_key || r.place, '' ORDER BY r.record_id) "
         "|| coalesce(any_value(p.pins), '')) AS digest "
-        "FROM current_records r JOIN canonical_forms f USING (record_id) "
-        "JOIN (SELECT k.record_id, row_number() OVER (PARTITION BY i.composition ORDER BY k.rank) AS place "
-        "FROM ranks k JOIN records i USING (record_id)) x USING (record_id) "
+        "FROM (SELECT i.composition, i.record_id, f.crystal_key, "
+        "row_number() OVER (PARTITION BY i.composition ORDER BY k.rank) AS place "
+        "FROM ranks k JOIN records i USING (record_id) JOIN canonical_forms f USING (record_id) "
+        f"WHERE i.composition IN (SELECT composition FROM {within})) r "
         "LEFT JOIN (SELECT composition, string_agg(kind || pin_id || record_a || record_b, '' ORDER BY pin_id) AS pins "
-        f"FROM {PAIR_PINS} GROUP BY composition) p ON p.composition = r.composition "
-        f"WHERE r.composition IN (SELECT composition FROM {within}) GROUP BY r.composition) n "
+        f"FROM {PAIR_PINS} GROUP BY composition) p ON p.composition = r.composition GROUP BY r.composition) n "
         "LEFT JOIN grouped_compositions g USING (composition) "
         "WHERE $everything OR g.digest IS DISTINCT FROM n.digest",
         {"settings": verify, "everything": everything},
