@@ -55,14 +55,14 @@ def jobs(workspace: Workspace, settings: Settings, only: str = "changed_composit
             "ORDER BY keys DESC, c.composition",
             [added],
         ).fetchall()
-        for packs in _packs(rows):
+        for packs in _packs(rows, None if added else FIRST_JOBS):
             yield from _read_jobs(workspace, settings, number, packs)
             number += len(packs)
 
 
-def _packs(rows: list[tuple[str, str, int, int, int]]) -> Iterator[list[Pack]]:
-    """The compositions of each job, of as many jobs as are read at once. rows: composition, digest, keys and records
-    that take part, and all records."""
+def _packs(rows: list[tuple[str, str, int, int, int]], first: int | None) -> Iterator[list[Pack]]:
+    """The compositions of each job, of as many jobs as are read at once, which are `first` ones to begin with, if any.
+    rows: composition, digest, keys and records that take part, and all records."""
     left = sum(row[3] for row in rows)
     most = share(left, FEW_RECORDS, MOST_RECORDS)
     packs: list[Pack] = []
@@ -78,7 +78,7 @@ def _packs(rows: list[tuple[str, str, int, int, int]]) -> Iterator[list[Pack]]:
             left -= held
             most = share(left, FEW_RECORDS, MOST_RECORDS)
             pack, pairs, held = [], 0, 0
-        if waiting >= READ_RECORDS or (not given and len(packs) == FIRST_JOBS):
+        if waiting >= READ_RECORDS or (not given and len(packs) == first):
             yield packs
             given, packs, waiting = given + 1, [], 0
     if pack:
