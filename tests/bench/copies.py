@@ -31,6 +31,9 @@ linear and half quadratic has 1.5."""
 MOST_COPIES = 5000
 """Copies of one crystal."""
 
+OFTEN = 0.02
+"""Seconds between samples of the memory: the smallest grouping takes a quarter of a second."""
+
 BRUTE = 150
 """Copies that are compared pair by pair."""
 
@@ -94,7 +97,7 @@ def grouped(kind: Kind, count: int) -> Grouped:
     ready = process.stdout.readline()  # everything is loaded and made; now it waits for a word
     with MemoryOfTree(process.pid) as before:
         pass
-    with MemoryOfTree(process.pid) as memory:
+    with MemoryOfTree(process.pid, OFTEN) as memory:
         told, errors = process.communicate("go\n")
     assert ready and process.returncode == 0, f"grouping {count} records failed: {errors.strip().splitlines()[-1:]}"
     found = json.loads(told)

@@ -21,8 +21,10 @@ class MemoryOfTree:
     elsewhere resident sizes are added up, which counts them several times.
     """
 
-    def __init__(self, root: int) -> None:
+    def __init__(self, root: int, interval: float = INTERVAL) -> None:
+        """interval: seconds between samples."""
         self.root = root
+        self._interval = interval
         self.peak_bytes = 0
         self.peak_processes = 0
         self.measure = "PSS" if (PROC / "self" / "smaps_rollup").exists() else "RSS"
@@ -42,7 +44,7 @@ class MemoryOfTree:
             sizes = self._sizes()
             self.peak_bytes = max(self.peak_bytes, sum(sizes))
             self.peak_processes = max(self.peak_processes, len(sizes))
-            if self._end.wait(INTERVAL):
+            if self._end.wait(self._interval):
                 return
 
     def _sizes(self) -> list[int]:
