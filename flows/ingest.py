@@ -115,7 +115,8 @@ def compile_kernels(settings: Settings, progress: Progress) -> None:
 
 
 def _group_exactly(workspace: Workspace, work: IngestWork) -> None:
-    """The groups that need no comparison; which compositions changed stays noted until all is classified."""
+    """The groups that need no comparison; which compositions changed stays noted until all is classified. Types have no
+    part in them: records of one key have one type, so that none of them is kept for it."""
     with transaction(workspace.connection):
         update_exact_groups(workspace.connection, work.run.run_id, work.settings)
 

@@ -96,7 +96,7 @@ def group_records(
         progress.start("comparing and grouping", records)
         _work_through(workspace, run_id, settings, pool, progress, "changed_compositions", without_comparison)
         if one_number(connection, f"SELECT count(*) FROM {AGAIN}"):
-            for table in ("added_compositions", "old_records"):
+            for table in ("added_compositions", "old_records", "concerned_records"):
                 connection.execute(f"DELETE FROM {table} WHERE composition IN (SELECT composition FROM {AGAIN})")
             _work_through(workspace, run_id, settings, pool, Silent(), AGAIN)
     with transaction(connection):
