@@ -227,6 +227,40 @@ def test_of_crowds_in_a_store_nothing_is_taken_over(tmp_path: Path, ingest, monk
 
 
 @pytest.mark.parametrize("by_night", [False, True])
+def test_what_a_worker_cannot_take_over_is_compared_whole_in_a_second_pass(
+    tmp_path: Path, ingest, listed, monkeypatch, by_night: bool
+):
+    """Every worker says that there may be crowds: the result is that of all pairs; no earlier match is sent again."""
+    table, one, grown = tmp_path / "t.csv", tmp_path / "one.duckdb", tmp_path / "grown.duckdb"
+    shuffled = [listed[i] for i in np.random.default_rng(2).permutation(len(listed))]
+    run_night(grown, write_csv(table, shuffled[:45]))
+    whole, chunk, told = composition.group_composition, work.group_chunk, []
+
+    def unsure(*arguments: Any) -> Grouping:
+        if arguments[7] is not None:
+            raise MayBeCrowded
+        return whole(*arguments)
+
+    def seen(job: work.GroupJob) -> Any:
+        told.append(job.known is not None)
+        return chunk(job)
+
+    monkeypatch.setattr(work, "group_composition", unsure)
+    monkeypatch.setattr(stage, "group_chunk", seen)
+    write_csv(table, shuffled)
+    if by_night:
+        run_night(grown, table)
+    else:
+        ingest(table, store=grown)
+        run_group(grown)
+    assert told == [True, False]
+    ingest(table, store=one)
+    run_group(one)
+    for asked in STATE:
+        assert query(grown, asked) == query(one, asked)
+
+
+@pytest.mark.parametrize("by_night", [False, True])
 def test_ids_that_change_are_noted_however_the_store_grew(tmp_path: Path, ingest, listed, by_night: bool):
     """Each step's changes are those between the members before and after it."""
     table, store = tmp_path / "t.csv", tmp_path / "census.duckdb"
